@@ -1,0 +1,78 @@
+"""Every choice of an analysis, with its default, unit and range: the only home of defaults."""
+
+from __future__ import annotations
+
+from typing import Annotated, Literal
+
+from pydantic import BaseModel, ConfigDict, Field
+
+
+class _Step(BaseModel):
+    model_config = ConfigDict(frozen=True, extra="forbid", validate_default=True)
+
+
+class RecordingSettings(_Step):
+    """Reading the movie, movement and light."""
+
+    channel: Annotated[int | None, Field(ge=0, description="channel to analyse, from 0, where the movie has several")] = None
+    correct_motion: Annotated[bool, Field(description="follow the sample's movement")] = True
+    max_shift_px: Annotated[float, Field(gt=0, description="largest movement expected, px")] = 12.0
+
+
+class DetectionSettings(_Step):
+    """Finding boutons."""
+
+    bouton_um: Annotated[float, Field(gt=0, description="full width at half maximum of a bouton's image, µm")] = 0.6
+    spacing_um: Annotated[float, Field(gt=0, description="smallest distance between two boutons, µm")] = 0.7
+    false_discovery: Annotated[
+        float, Field(gt=0, lt=1, description="expected share of false ones among boutons found by their responses")
+    ] = 0.05
+    shape_candidates: Annotated[bool, Field(description="also take spots of the mean image, silent or not")] = True
+
+
+class ResponseSettings(_Step):
+    """Traces and amplitudes."""
+
+    background_um: Annotated[float, Field(gt=0, description="radius within which the local background is fitted, µm")] = 2.5
+    baseline_s: Annotated[float | None, Field(gt=0, description="time before the first pulse that a trial's fit uses, s")] = None
+    slope: Annotated[bool, Field(description="let the baseline of each trial slope")] = False
+    baseline: Annotated[
+        Literal["bleaching", "trial", "percentile"],
+        Field(description="F0: smooth bleaching curve, mean before each trial, or running percentile"),
+    ] = "bleaching"
+
+
+class CallSettings(_Step):
+    """Which responses count as a release."""
+
+    threshold_sd: Annotated[float, Field(gt=0, description="call threshold, in noise_sd")] = 2.5
+    threshold_rule: Annotated[
+        Literal["sd", "balanced"],
+        Field(description="sd: threshold_sd × noise_sd; balanced: expected misses equal expected false calls"),
+    ] = "sd"
+
+
+class QuantalSettings(_Step):
+    """The binomial release model."""
+
+    n_max: Annotated[int, Field(ge=1, le=30, description="largest number of release sites tried")] = 8
+    q_cv: Annotated[float, Field(gt=0, lt=1.5, description="expected variation of one vesicle's size (CV)")] = 0.3
+    bootstrap: Annotated[int, Field(ge=0, description="simulated repeats for the goodness of fit; 0 leaves it out")] = 200
+
+
+class PairSettings(_Step):
+    """Pulse pairs."""
+
+    bootstrap: Annotated[int, Field(ge=100, description="resamplings of the trials for the ratio's interval")] = 4000
+
+
+class Settings(_Step):
+    """All settings of one analysis."""
+
+    recording: RecordingSettings = RecordingSettings()
+    detection: DetectionSettings = DetectionSettings()
+    responses: ResponseSettings = ResponseSettings()
+    calls: CallSettings = CallSettings()
+    quanta: QuantalSettings = QuantalSettings()
+    pairs: PairSettings = PairSettings()
+    seed: Annotated[int, Field(ge=0, description="seed of every random number")] = 1
