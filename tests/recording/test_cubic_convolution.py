@@ -1,0 +1,49 @@
+"""Cubic convolution reads between pixels, and says where it cannot."""
+
+import numpy as np
+import pytest
+
+from napari_boutonrelease.errors import InputError
+from napari_boutonrelease.recording.cubic_convolution import shift_frame_block, taps
+
+
+def test_taps_at_a_pixel_are_that_pixel_and_always_sum_to_one():
+    np.testing.assert_allclose(taps([0.0, 1.0]), [[0, 1, 0, 0], [0, 0, 1, 0]], atol=1e-15)
+    np.testing.assert_allclose(taps(np.linspace(0, 1, 17)).sum(axis=-1), 1.0, atol=1e-14)
+
+
+def test_a_parabola_is_read_exactly():
+    y, x = np.mgrid[0:20, 0:24].astype(float)
+
+    def surface(y, x):
+        return 3.0 + 0.5 * y - 0.2 * x + 0.03 * y**2 - 0.02 * x**2 + 0.01 * y * x
+
+    dy, dx = np.array([0.3, -1.7]), np.array([-0.6, 2.25])
+    shifted = shift_frame_block(np.stack([surface(y, x)] * 2), dy=dy, dx=dx)
+    for k in range(2):
+        np.testing.assert_allclose(shifted[k, 4:-4, 4:-4], surface(y + dy[k], x + dx[k])[4:-4, 4:-4], rtol=1e-5)
+
+
+def test_a_moved_spot_is_brought_back_where_it_was():
+    y, x = np.mgrid[0:24, 0:30].astype(float)
+    dy, dx = np.array([1.4, -3.0]), np.array([-2.3, 0.0])
+    moved = np.exp(-((y - 11 - dy[:, None, None]) ** 2 + (x - 14 - dx[:, None, None]) ** 2) / 8.0)
+    still = np.exp(-((y - 11) ** 2 + (x - 14) ** 2) / 8.0)
+    back = shift_frame_block(moved, dy=dy, dx=dx)
+    assert back.dtype == np.float32
+    np.testing.assert_allclose(back[0], still, atol=1e-2)
+    np.testing.assert_allclose(back[1], still, atol=1e-6)
+
+
+def test_beyond_the_border_the_nearest_pixel_stands_in():
+    frame = np.arange(12, dtype=np.uint16).reshape(1, 3, 4)
+    np.testing.assert_array_equal(shift_frame_block(frame, dy=[5.0], dx=[0.0])[0], [[8, 9, 10, 11]] * 3)
+
+
+@pytest.mark.parametrize(
+    ("dy", "dx", "message"),
+    [([0.0], [0.0, 0.0], "one dy and one dx per frame"), ([np.nan], [0.0], "must be finite")],
+)
+def test_unusable_drift_is_refused(dy, dx, message):
+    with pytest.raises(InputError, match=message):
+        shift_frame_block(np.zeros((1, 4, 4)), dy=dy, dx=dx)
