@@ -124,3 +124,10 @@ def test_parameters_out_of_range_are_named(change, message):
 def test_amplitudes_that_are_all_missing_are_refused():
     with pytest.raises(InputError, match="at least one finite amplitude"):
         poisson_gaussian_loglikelihood([np.nan], mean_vesicles=1.0, q_dff=0.1, q_cv=0.3, noise_sd_dff=0.02)
+
+
+def test_nulls_with_a_noise_of_each_amplitude_are_refused():
+    with pytest.raises(InputError, match="need one noise_sd_dff"):
+        poisson_gaussian_loglikelihood(
+            AMPLITUDES, mean_vesicles=1.0, q_dff=0.1, q_cv=0.3, noise_sd_dff=NOISE, null_amplitudes_dff=[0.0]
+        )

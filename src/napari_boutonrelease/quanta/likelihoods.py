@@ -256,4 +256,9 @@ def _score(
         raise InputError(f"amplitudes_dff must hold at least one finite amplitude (given {observed.size}, all NaN).")
     components = component_logpdf(observed, noise_sd=noise, q=q_dff, q_cv=q_cv, m_max=log_weights.size - 1)
     score = np.where(np.isnan(observed), 0.0, mixture_loglikelihood(log_weights, components)).sum()
-    return float(score) + null_loglikelihood(null_amplitudes, noise_sd=noise)
+    nulls = np.asarray(null_amplitudes, dtype=np.float64)
+    if not nulls.size:
+        return float(score)
+    if noise.ndim:
+        raise InputError(f"null_amplitudes_dff need one noise_sd_dff for all (given {noise.size}); score them apart.")
+    return float(score) + null_loglikelihood(nulls, noise_sd=noise)
