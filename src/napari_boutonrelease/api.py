@@ -1,0 +1,118 @@
+"""The whole analysis of one recording as one call, for scripts and notebooks and the command line alike."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from dataclasses import fields
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from .analysis.results import AnalysisResult
+
+if TYPE_CHECKING:
+    import numpy as np
+    from numpy.typing import NDArray
+
+    from .analysis.settings import Settings
+    from .recording import Movie, Protocol
+
+    MovieSource = str | Path | Sequence[str | Path] | NDArray[np.generic] | Movie
+
+
+class Analysis(AnalysisResult):
+    """Everything found in one recording, as in `AnalysisResult`, and able to write itself."""
+
+    __slots__ = ()
+
+    def write(self, folder: str | Path, *, overwrite: bool = False) -> Path:
+        """Write tables, traces, footprints, figures and report into a folder, whole or not at all.
+
+        Parameters
+        ----------
+        folder : path
+            Folder to write; its parent must exist.
+        overwrite : bool
+            Replace results that are already there.
+
+        Returns
+        -------
+        Path
+            The folder.
+
+        Raises
+        ------
+        OutputError
+            If the folder holds results and `overwrite` is false, or cannot be written.
+        """
+        from .reports import write_result
+
+        write_result(self, Path(folder), overwrite=overwrite)
+        return Path(folder)
+
+
+def analyse(
+    movie: MovieSource,
+    protocol: str | Path | Protocol,
+    *,
+    settings: Settings | None = None,
+    boutons: str | Path | None = None,
+    axon: str | Path | None = None,
+    progress: Callable[[int, int], None] | None = None,
+) -> Analysis:
+    """Analyse one recording from the movie to the axon's release map.
+
+    Parameters
+    ----------
+    movie : path, sequence of paths, (frame, y, x) ndarray or Movie
+        A TIFF file, a folder or list of files with one trial each, or the frames themselves.
+    protocol : path or Protocol
+        When the axon was stimulated.
+    settings : Settings, optional
+        Choices of the analysis; the defaults of `Settings` where left out.
+    boutons : path, optional
+        CSV of positions or label TIFF, instead of finding the boutons.
+    axon : path, optional
+        CSV of points along the axon.
+    progress : callable, optional
+        Called with (done, total) steps.
+
+    Returns
+    -------
+    Analysis
+        Tables, arrays and provenance.
+
+    Raises
+    ------
+    InputError
+        If an input cannot be used; the message says which, where and what to do.
+
+    Examples
+    --------
+    >>> analysis = analyse("axon.tif", "axon.protocol.toml")  # doctest: +SKIP
+    >>> analysis.boutons[["bouton", "p_release", "p_release_lo", "p_release_hi"]]  # doctest: +SKIP
+    >>> analysis.write("axon.release")  # doctest: +SKIP
+    """
+    from .analysis.run import run_analysis
+    from .analysis.settings import Settings
+    from .recording import Protocol, read_protocol
+
+    settings = Settings() if settings is None else settings
+    result = run_analysis(
+        _as_movie(movie, channel=settings.recording.channel),
+        protocol if isinstance(protocol, Protocol) else read_protocol(protocol),
+        settings=settings,
+        boutons=boutons,
+        axon=axon,
+        progress=progress,
+    )
+    return Analysis(**{field.name: getattr(result, field.name) for field in fields(AnalysisResult)})
+
+
+def _as_movie(source: MovieSource, *, channel: int | None) -> Movie:
+    import numpy as np
+
+    from .recording import Movie, movie_from_array, open_movie
+
+    if isinstance(source, Movie):
+        return source
+    return movie_from_array(source) if isinstance(source, np.ndarray) else open_movie(source, channel=channel)

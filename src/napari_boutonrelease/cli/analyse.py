@@ -1,0 +1,78 @@
+"""`boutonrelease analyse`: the whole analysis of one recording."""
+
+import argparse
+
+from ..errors import InputError
+from .options import add_settings_options, read_settings
+
+TYPE_CHECKING = False
+if TYPE_CHECKING:
+    from pathlib import Path
+
+    from ..api import Analysis
+
+EPILOG = """\
+positions: y_px,x_px in pixels from 0 (centre of the first pixel) or y_um,x_um; a label TIFF has one number a bouton.
+A setting on the command line wins over the same one in --settings or --from.
+
+boutonrelease analyse axon.tif --protocol axon.protocol.toml
+boutonrelease analyse trials/ --protocol pairs.toml --threshold-sd 3 --out axon3.release
+boutonrelease analyse --from axon.release/analysis.json --out again.release"""
+
+
+def add_arguments(parser: argparse.ArgumentParser) -> None:
+    """Options of `analyse`."""
+    parser.usage = "%(prog)s MOVIE --protocol FILE [--boutons FILE] [--axon FILE] [--out DIR] [settings]"
+    parser.epilog = EPILOG
+    parser.add_argument("movie", nargs="*", metavar="MOVIE", help="TIFF movie, a folder, or one file a trial in order")
+    parser.add_argument("--protocol", metavar="FILE", help="stimulation protocol (TOML)")
+    parser.add_argument("--boutons", metavar="FILE", help="positions (CSV) or label TIFF, instead of finding boutons")
+    parser.add_argument("--axon", metavar="FILE", help="points along the axon (CSV)")
+    parser.add_argument("--from", dest="saved", metavar="FILE", help="repeat a saved analysis (its analysis.json)")
+    parser.add_argument("--settings", metavar="FILE", help="settings from a TOML file or an analysis.json")
+    parser.add_argument("--out", metavar="DIR", help="folder for the results (default: MOVIE.release beside the movie)")
+    parser.add_argument("--overwrite", action="store_true", help="replace results that are already there")
+    add_settings_options(parser)
+
+
+def run(args: argparse.Namespace) -> None:
+    """Analyse, write, and say in a few lines what was found."""
+    from ..api import analyse
+    from ..recording import open_movie, read_protocol
+    from ..reports import check_can_write
+    from .progress import progress_bar
+    from .summary import summary_lines
+
+    if args.saved:
+        raise NotImplementedError
+    if not args.movie:
+        raise InputError("Give the MOVIE to analyse, or --from a saved analysis.")
+    if not args.protocol:
+        raise InputError(f"When was the axon stimulated in {args.movie[0]}? Give --protocol FILE.toml.")
+    out = out_folder(args.out, movie=args.movie[0])
+    check_can_write(out, overwrite=args.overwrite)
+    settings = read_settings(args)
+    movie = open_movie(
+        args.movie[0] if len(args.movie) == 1 else args.movie,
+        channel=settings.recording.channel,
+    )
+    protocol = read_protocol(args.protocol)
+    with progress_bar("analysing") as progress:
+        analysis: Analysis = analyse(
+            movie, protocol, settings=settings, boutons=args.boutons, axon=args.axon, progress=progress
+        )
+    analysis.write(out, overwrite=args.overwrite)
+    print("\n".join(summary_lines(analysis, folder=out)))
+
+
+def out_folder(given: str | None, *, movie: str) -> "Path":
+    """Return the folder asked for, else `MOVIE.release` beside the movie."""
+    from pathlib import Path
+
+    if given:
+        return Path(given)
+    path = Path(movie)
+    stem = path.name
+    for suffix in (".tif", ".tiff", ".ome"):
+        stem = stem.removesuffix(suffix)
+    return path.with_name(f"{stem}.release")
