@@ -1,0 +1,354 @@
+"""The data dictionary: every table's columns with type, unit and meaning, and the keys of the summary.
+
+This is the one home of the names. Analyses build their tables from it, reports describe the files with it.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, field
+from typing import TYPE_CHECKING, Any, Literal
+
+from ..errors import OutputError
+from ..flags import FLAGS
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+ColumnType = Literal["integer", "number", "string"]
+
+_DFF = "dF/F"
+_INTERVAL = "95 % interval"
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Column:
+    """One column of a table.
+
+    Attributes
+    ----------
+    name : str
+        Header in the CSV file and name in the DataFrame.
+    type : {"integer", "number", "string"}
+        Type of a cell that is not empty.
+    unit : str
+        Unit of the values, empty where they have none.
+    meaning : str
+        What a cell says, in one line.
+    constraints : mapping
+        Frictionless constraints (`required`, `unique`, `minimum`, `maximum`, `enum`, `pattern`).
+    decimals : int or None
+        Digits after the point that are written; None writes six significant digits.
+    """
+
+    name: str
+    type: ColumnType
+    unit: str
+    meaning: str
+    constraints: Mapping[str, Any] = field(default_factory=dict)
+    decimals: int | None = None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class TableDefinition:
+    """One table.
+
+    Attributes
+    ----------
+    name : str
+        Attribute of the result and stem of the CSV file.
+    meaning : str
+        What a row is.
+    key : tuple of str
+        Columns that together name a row; empty where rows have no name.
+    columns : tuple of Column
+        In the order of the file.
+    """
+
+    name: str
+    meaning: str
+    key: tuple[str, ...]
+    columns: tuple[Column, ...]
+
+    @property
+    def names(self) -> tuple[str, ...]:
+        """Names of the columns, in order."""
+        return tuple(column.name for column in self.columns)
+
+
+def _column(
+    name: str,
+    type_: ColumnType,
+    unit: str,
+    meaning: str,
+    decimals: int | None = None,
+    **constraints: Any,
+) -> Column:
+    return Column(name=name, type=type_, unit=unit, meaning=meaning, constraints=constraints, decimals=decimals)
+
+
+def _number(name: str, unit: str, meaning: str, **constraints: Any) -> Column:
+    return _column(name, "number", unit, meaning, **constraints)
+
+
+def _count(name: str, meaning: str, **constraints: Any) -> Column:
+    return _column(name, "integer", "", meaning, **{"minimum": 0, **constraints})
+
+
+def _probability(name: str, meaning: str) -> Column:
+    return _column(name, "number", "", meaning, minimum=0, maximum=1)
+
+
+def _time(name: str, meaning: str) -> Column:
+    # Microseconds whatever the length of the recording: six significant digits would lose them after a second.
+    return _column(name, "number", "s", meaning, decimals=6, required=True)
+
+
+def _choice(name: str, meaning: str, *choices: str | int) -> Column:
+    kind: ColumnType = "integer" if isinstance(choices[0], int) else "string"
+    return _column(name, kind, "", meaning, enum=list(choices))
+
+
+def _limits(column: Column) -> tuple[Column, Column, Column]:
+    """Return the column and the two limits of its interval."""
+    lower, upper = (
+        Column(
+            name=f"{column.name}_{side}",
+            type=column.type,
+            unit=column.unit,
+            meaning=f"{end} end of the {_INTERVAL} of {column.name}",
+            constraints=column.constraints,
+        )
+        for side, end in (("lo", "lower"), ("hi", "upper"))
+    )
+    return column, lower, upper
+
+
+def _codes_pattern(codes: Iterable[str]) -> str:
+    one = "(" + "|".join(codes) + ")"
+    return f"{one}(;{one})*"
+
+
+_BOUTON = _count("bouton", "bouton id, from 1", minimum=1, required=True)
+_TRIAL = _count("trial", "trial number, from 1", minimum=1, required=True)
+_PULSE = _count("pulse", "number of the pulse within its trial, from 1", minimum=1, required=True)
+
+BOUTONS = TableDefinition(
+    name="boutons",
+    meaning="a row a bouton",
+    key=("bouton",),
+    columns=(
+        _count("bouton", _BOUTON.meaning, minimum=1, required=True, unique=True),
+        _number("y_px", "px", "row position in the mean image, 0 at the centre of the first pixel", required=True),
+        _number("x_px", "px", "column position in the mean image, 0 at the centre of the first pixel", required=True),
+        _number("y_um", "µm", "y_px in µm"),
+        _number("x_um", "µm", "x_px in µm"),
+        _number("axon_um", "µm", "distance along the axon path from its start", minimum=0),
+        _number("axon_offset_um", "µm", "distance from the axon path", minimum=0),
+        _count("footprint_px", "pixels of the footprint"),
+        _choice("found_by", "how the bouton was found", "responses", "shape", "both", "hand", "file"),
+        _number("f0", "counts", "baseline fluorescence above background, mean over the recording"),
+        _number("noise_sd", _DFF, "SD of the amplitude estimator where nothing was stimulated", minimum=0),
+        _choice("noise_from", "where noise_sd was measured", "gaps", "residuals"),
+        _number("snr", "", "q divided by noise_sd: one vesicle in units of the noise", minimum=0),
+        _number("threshold", _DFF, "amplitude above which a response is called a release"),
+        _count("trials", "usable trials for pulse 1"),
+        *_limits(_probability("p_called", "called fraction of pulse 1")),
+        _number("false_calls_expected", "", "calls of pulse 1 expected from noise alone", minimum=0),
+        *_limits(_probability("p_release", "probability that pulse 1 releases at least one vesicle")),
+        _number("amplitude_mean", _DFF, "mean amplitude of pulse 1, failures included"),
+        _number("amplitude_se", _DFF, "standard error of amplitude_mean", minimum=0),
+        _number("potency", _DFF, "mean amplitude of the first pulses that released"),
+        _probability("p2_release", "probability that pulse 2 releases at least one vesicle"),
+        *_limits(_number("ppr", "", "paired-pulse ratio: mean amplitude of pulse 2 over that of pulse 1")),
+        _number("ppf", "", "paired-pulse facilitation: ppr - 1"),
+        _number("ppr_release", "", "p2_release over p_release", minimum=0),
+        _choice(
+            "paired_pulse",
+            "verdict on ppr over all boutons",
+            "facilitation",
+            "depression",
+            "unresolved",
+        ),
+        _probability("p2_given_release", "called fraction of pulse 2 after a called pulse 1"),
+        _probability("p2_given_failure", "called fraction of pulse 2 after a failed pulse 1"),
+        _probability("history_p", "Fisher's exact p that pulse 2 does not depend on the outcome of pulse 1"),
+        *_limits(_count("n_sites", "most likely number of release sites", minimum=1)),
+        *_limits(_probability("p_site", "release probability of one site at pulse 1")),
+        *_limits(_number("q", _DFF, "response to one vesicle", minimum=0)),
+        _choice("q_from", "whether q rests on the bouton's own amplitudes or on the axon's", "own", "axon"),
+        _number("q_cv", "", "coefficient of variation of one vesicle's response", minimum=0),
+        _choice("quantal_model", "release model of the fit", "binomial", "poisson", "none"),
+        _probability("fit_p", "goodness-of-fit p of the release model"),
+        _number("spontaneous_per_min", "1/min", "releases without stimulus a minute", minimum=0),
+        _number("crosstalk", "", "share of the amplitude explained by releases of neighbours", minimum=0),
+        *_limits(
+            _probability("p_corrected", "called fraction freed of false calls and misses (Rogan and Gladen 1978)")
+        ),
+        _number("noise_photon_limit_sd", _DFF, "noise_sd that photon and read noise alone would give", minimum=0),
+        _number("noise_excess", "", "noise_sd over noise_photon_limit_sd", minimum=0),
+        _column("n_set", "string", "", "numbers of release sites that the data cannot exclude", pattern=r"\d+(;\d+)*"),
+        _number("q_own", _DFF, "q of the bouton fitted alone", minimum=0),
+        _probability("p_release_own", "p_release of the bouton fitted alone"),
+        _column("flags", "string", "", "reasons for doubt, codes joined by ;", pattern=_codes_pattern(FLAGS)),
+    ),
+)
+
+PULSES = TableDefinition(
+    name="pulses",
+    meaning="a row a bouton and pulse number",
+    key=("bouton", "pulse"),
+    columns=(
+        _BOUTON,
+        _PULSE,
+        _count("trials", "usable trials for this pulse"),
+        _count("called", "trials in which this pulse was called a release"),
+        *_limits(_probability("p_called", "called fraction")),
+        *_limits(_probability("p_release", "probability that this pulse releases at least one vesicle")),
+        _number("amplitude_mean", _DFF, "mean amplitude, failures included"),
+        _number("amplitude_se", _DFF, "standard error of amplitude_mean", minimum=0),
+        _number("amplitude_sd", _DFF, "SD of the amplitudes over the trials", minimum=0),
+        _number("potency", _DFF, "mean amplitude of the pulses that released"),
+    ),
+)
+
+RESPONSES = TableDefinition(
+    name="responses",
+    meaning="a row a bouton, trial and pulse",
+    key=("bouton", "trial", "pulse"),
+    columns=(
+        _BOUTON,
+        _TRIAL,
+        _PULSE,
+        _time("stimulus_s", "time of the stimulus on the recording's clock"),
+        _number("amplitude", _DFF, "fitted height of the response"),
+        _number("amplitude_se", _DFF, "standard error of the amplitude", minimum=0),
+        _choice("called", "1 where the amplitude exceeds the threshold, else 0", 0, 1),
+        _probability("p_released", "posterior probability that the pulse released"),
+        _choice("used", "1 where the response counts in every estimate, else 0", 0, 1),
+        _column("reason", "string", "", "why the response was left out"),
+    ),
+)
+
+SPONTANEOUS = TableDefinition(
+    name="spontaneous",
+    meaning="a row a spontaneous release",
+    key=(),
+    columns=(
+        _BOUTON,
+        _time("time_s", "time of the release on the recording's clock"),
+        _number("amplitude", _DFF, "fitted height"),
+        _number("amplitude_se", _DFF, "standard error of the amplitude", minimum=0),
+        _number("score", "", "amplitude over its standard error under noise alone"),
+    ),
+)
+
+DRIFT = TableDefinition(
+    name="drift",
+    meaning="a row a frame",
+    key=("frame",),
+    columns=(
+        _count("frame", "frame number, from 0", required=True, unique=True),
+        _time("time_s", "start of the frame on the recording's clock"),
+        _number("dy_px", "px", "movement in y: a thing at y in the reference lies at y + dy in this frame"),
+        _number("dx_px", "px", "movement in x: a thing at x in the reference lies at x + dx in this frame"),
+        _number("match", "", "agreement with the reference, 1 is perfect"),
+        _choice("used", "1 where the frame counts in every fit, else 0", 0, 1),
+    ),
+)
+
+TABLES: dict[str, TableDefinition] = {table.name: table for table in (BOUTONS, PULSES, RESPONSES, SPONTANEOUS, DRIFT)}
+
+SUMMARY: dict[str, str] = {
+    "recording.frames": "frames of the movie",
+    "recording.height_px": "rows of a frame, px",
+    "recording.width_px": "columns of a frame, px",
+    "recording.duration_s": "length of the recording, s",
+    "recording.frame_interval_s": "time from one frame to the next, s",
+    "recording.exposure_s": "exposure of a frame, s",
+    "recording.row_time_s": "time from one row to the next, s",
+    "recording.pixel_size_um": "side of a pixel, µm",
+    "recording.trials": "trials of the protocol",
+    "recording.pulses": "pulses of a trial",
+    "recording.pulse_interval_s": "time from pulse 1 to pulse 2, s",
+    "population.boutons": "boutons that the population's mean rests on",
+    "population.selection": "how those boutons were chosen, in words",
+    "population.p_release": "mean p_release of those boutons",
+    "population.p_release_lo": "lower end of its 95 % interval",
+    "population.p_release_hi": "upper end of its 95 % interval",
+    "population.q": "typical response to one vesicle, dF/F",
+    "population.q_lo": "lower end of its 95 % interval",
+    "population.q_hi": "upper end of its 95 % interval",
+    "population.ppr": "paired-pulse ratio of the population",
+    "population.ppr_lo": "lower end of its 95 % interval",
+    "population.ppr_hi": "upper end of its 95 % interval",
+    "heterogeneity.sd": "true SD of p_release between boutons, sampling taken out",
+    "heterogeneity.sd_lo": "lower end of its 95 % interval",
+    "heterogeneity.sd_hi": "upper end of its 95 % interval",
+    "heterogeneity.p": "p that all boutons share one p_release",
+    "morans_i.value": "Moran's I of p_release along the axon",
+    "morans_i.p": "its permutation p",
+    "co_release.value": "mean pairwise correlation of calls between boutons",
+    "co_release.p": "p that boutons release independently of each other",
+    "stimulus_failures.trials": "trials in which every bouton failed",
+    "stimulus_failures.expected": "such trials expected if boutons are independent",
+    "stimulus_failures.p": "p of so many such trials",
+    "quality.gain": "counts per electron",
+    "quality.read_noise_counts": "read noise, counts",
+    "quality.bleaching": "share of the light lost from first to last frame",
+    "quality.drift_max_px": "largest movement, px",
+    "quality.frames_left_out": "frames left out of every fit",
+    "quality.saturated_px": "pixels that reach the detector's ceiling",
+}
+"""Keys of the summary that reports put into words, as dotted paths; each may be missing or null."""
+
+
+def check_columns(table: str, names: Iterable[str]) -> None:
+    """Raise unless `names` are the columns of `table`, in order.
+
+    Parameters
+    ----------
+    table : str
+        A key of `TABLES`.
+    names : iterable of str
+        Names found.
+
+    Raises
+    ------
+    OutputError
+        If a column is missing, unknown, or out of order.
+    """
+    found, wanted = tuple(names), TABLES[table].names
+    if found == wanted:
+        return
+    missing = [name for name in wanted if name not in found]
+    unknown = [name for name in found if name not in wanted]
+    problem = "; ".join(
+        text
+        for text, wrong in (
+            (f"missing: {', '.join(missing)}", missing),
+            (f"unknown: {', '.join(unknown)}", unknown),
+            ("the order differs or a name comes twice", not missing and not unknown),
+        )
+        if wrong
+    )
+    raise OutputError(f"Table {table} does not have the columns of the data dictionary ({problem}).")
+
+
+def empty_table(table: str) -> pd.DataFrame:
+    """Return the table with its columns and no row.
+
+    Parameters
+    ----------
+    table : str
+        A key of `TABLES`.
+
+    Returns
+    -------
+    DataFrame
+        Numbers are float64, integers `Int64`, text `string`.
+    """
+    import pandas as pd
+
+    types = {"integer": "Int64", "number": "float64", "string": "string"}
+    return pd.DataFrame({c.name: pd.Series(dtype=types[c.type]) for c in TABLES[table].columns})
