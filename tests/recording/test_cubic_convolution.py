@@ -32,7 +32,7 @@ def test_a_moved_spot_is_brought_back_where_it_was():
     back = shift_frame_block(moved, dy=dy, dx=dx)
     assert back.dtype == np.float32
     np.testing.assert_allclose(back[0], still, atol=1e-2)
-    np.testing.assert_allclose(back[1], still, atol=1e-6)
+    np.testing.assert_allclose(back[1, 3:], still[3:], atol=1e-6)  # a move by whole pixels loses nothing inside
 
 
 def test_beyond_the_border_the_nearest_pixel_stands_in():
