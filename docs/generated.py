@@ -55,13 +55,15 @@ def flags() -> str:
 
 def columns() -> str:
     """Every column of every table."""
-    from napari_boutonrelease.reports.columns import TABLES
+    from napari_boutonrelease.analysis.columns import SUMMARY, TABLES
 
     parts = []
-    for table, entries in TABLES.items():
-        rows = ((f"`{c.name}`", c.type, c.unit or "", c.meaning) for c in entries)
-        parts.append(f"## {table}.csv\n\n" + _table(("column", "type", "unit", "meaning"), rows))
-    return "\n".join(parts)
+    for table in TABLES.values():
+        rows = ((f"`{column.name}`", column.type, column.unit, column.meaning) for column in table.columns)
+        heading = f"## {table.name}.csv\n\n{table.meaning[0].upper()}{table.meaning[1:]}.\n\n"
+        parts.append(heading + _table(("column", "type", "unit", "meaning"), rows))
+    facts = _table(("key", "meaning"), ((f"`{key}`", meaning) for key, meaning in SUMMARY.items()))
+    return "\n".join([*parts, "## summary.json\n\nEach key may be missing or null.\n\n" + facts])
 
 
 def _default(field: dict[str, object]) -> str:

@@ -21,16 +21,8 @@ if TYPE_CHECKING:
         ProtocolError,
         SavedAnalysisError,
     )
-    from .recording import (
-        Movie,
-        Protocol,
-        RegularStimuli,
-        StimulusTable,
-        movie_from_array,
-        open_movie,
-        read_protocol,
-        write_protocol,
-    )
+    from .recording.movie import Movie, movie_from_array, open_movie
+    from .recording.protocol import Protocol, RegularStimuli, StimulusTable, read_protocol, write_protocol
     from .response_shape import ResponseShape
 
 _ROOMS = ("analysis", "boutons", "quanta", "recording", "reports", "responses", "simulation")

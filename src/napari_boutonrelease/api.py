@@ -14,7 +14,8 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from .analysis.settings import Settings
-    from .recording import Movie, Protocol
+    from .recording.movie import Movie
+    from .recording.protocol import Protocol
 
     MovieSource = str | Path | Sequence[str | Path] | NDArray[np.generic] | Movie
 
@@ -46,8 +47,7 @@ class Analysis(AnalysisResult):
         """
         from .reports import write_result
 
-        write_result(self, Path(folder), overwrite=overwrite)
-        return Path(folder)
+        return write_result(self, Path(folder), overwrite=overwrite)
 
 
 def analyse(
@@ -94,7 +94,7 @@ def analyse(
     """
     from .analysis.run import run_analysis
     from .analysis.settings import Settings
-    from .recording import Protocol, read_protocol
+    from .recording.protocol import Protocol, read_protocol
 
     settings = Settings() if settings is None else settings
     result = run_analysis(
@@ -111,7 +111,7 @@ def analyse(
 def _as_movie(source: MovieSource, *, channel: int | None) -> Movie:
     import numpy as np
 
-    from .recording import Movie, movie_from_array, open_movie
+    from .recording.movie import Movie, movie_from_array, open_movie
 
     if isinstance(source, Movie):
         return source

@@ -38,7 +38,8 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 def run(args: argparse.Namespace) -> None:
     """Analyse, write, and say in a few lines what was found."""
     from ..api import analyse
-    from ..recording import open_movie, read_protocol
+    from ..recording.movie import open_movie
+    from ..recording.protocol import read_protocol
     from ..reports import check_can_write
     from .progress import progress_bar
     from .summary import summary_lines

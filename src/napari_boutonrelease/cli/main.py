@@ -99,7 +99,7 @@ def _failed(sentence: str, *, code: int, debug: bool) -> int:
     return code
 
 
-def _show_warning(message: Warning | str, category: type[Warning], *_: object) -> None:
+def _show_warning(message: Warning | str, category: type[Warning], *_: object, **__: object) -> None:
     """Print doubts about the recording as sentences; keep other libraries' warnings to --debug."""
     if issubclass(category, AnalysisWarning):
         print(f"boutonrelease: note: {message}", file=sys.stderr)
