@@ -1,0 +1,202 @@
+"""Places found so far: refined together, and taken out of the maps so that what they hid can be seen."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from .evidence import MatchedMaps, matched_filter, mixture_evidence, release_posterior
+from .spots import Patch, fit_spot, gaussian_patch, read_maps, separated_weights, window
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+_WINDOW_SIGMAS = 6.0  # radius within which heights are read against a constant background
+_FIT_SIGMAS = 3.5  # half width of the image a position is fitted to
+_SWEEPS = 3
+
+
+class SpotModel:
+    """Releasing spots with their sub-pixel places, heights in every trial, and the maps without them.
+
+    Parameters
+    ----------
+    evoked, null : (n, y, x) ndarray
+        Responses (counts) with noise factor 1.
+    matched : MatchedMaps
+        The same through the matched filter; `matched.evoked` is changed in place.
+    spot_sigma_px : float
+        Gaussian sigma of a bouton's image (px); replaced by a measured one when the spots allow it.
+    """
+
+    def __init__(
+        self,
+        *,
+        evoked: NDArray[np.float32],
+        null: NDArray[np.float32],
+        matched: MatchedMaps,
+        spot_sigma_px: float,
+    ) -> None:
+        self._evoked, self._null, self._matched = evoked, null, matched
+        self._shape = (evoked.shape[1], evoked.shape[2])
+        finite = np.isfinite(matched.pixel_variance)
+        self._inverse_variance = np.where(finite, 1.0 / matched.pixel_variance, 0.0)
+        self._filter_sigma = spot_sigma_px
+        self._taken_out: list[tuple[NDArray[np.float64], Patch]] = []
+        self.spot_sigma_px = spot_sigma_px
+        self.y_px: NDArray[np.float64] = np.empty(0)
+        self.x_px: NDArray[np.float64] = np.empty(0)
+        self.heights: NDArray[np.float64] = np.empty((0, len(evoked)))
+        self.standardised: NDArray[np.float64] = np.empty((0, len(evoked)))
+        self.null_standardised: NDArray[np.float64] = np.empty((0, len(null)))
+        self.position_se_px: NDArray[np.float64] = np.empty(0)
+
+    def set_places(self, y_px: NDArray[np.float64], x_px: NDArray[np.float64]) -> None:
+        """Replace all places and refine them."""
+        self.y_px, self.x_px = np.array(y_px, dtype=np.float64), np.array(x_px, dtype=np.float64)
+        for _ in range(_SWEEPS):
+            self._read()
+            self._move()
+        self._read()
+        self._take_out()
+
+    def evidence(self) -> NDArray[np.float64]:
+        """Evidence of release of each spot, with what its nearest neighbour's heights explain taken out."""
+        values = np.empty(len(self.y_px))
+        for index in range(len(values)):
+            z = self.standardised[index]
+            distance = np.hypot(self.y_px - self.y_px[index], self.x_px - self.x_px[index])
+            for other in np.nonzero((distance > 0) & (distance < 4 * self.spot_sigma_px))[0]:
+                if np.mean(self.standardised[other]) > np.mean(z):
+                    z = _without_copy(z[:, None], self.heights[other])[:, 0]
+            values[index] = mixture_evidence(z[:, None].astype(np.float32)).item()
+        return values
+
+    def null_evidence(self) -> NDArray[np.float64]:
+        """Evidence of the same readings where nothing was stimulated."""
+        return mixture_evidence(self.null_standardised.T.astype(np.float32)).astype(np.float64)
+
+    def residual_evidence(self, evidence: NDArray[np.float32], *, reach_px: float) -> NDArray[np.float32]:
+        """Evidence map with the spots taken out, recomputed within `reach_px` of them."""
+        updated = evidence.copy()
+        z = self._matched.evoked
+        for y, x in zip(self.y_px, self.x_px, strict=True):
+            y0, y1, x0, x1 = window(y, x, radius_px=reach_px, shape=self._shape)
+            local = z[:, y0:y1, x0:x1].reshape(len(z), -1).astype(np.float64)
+            near = np.hypot(self.y_px - y, self.x_px - x) < reach_px + 2 * self.spot_sigma_px
+            for heights in self.heights[near]:
+                local = _without_copy(local, heights)
+            updated[y0:y1, x0:x1] = mixture_evidence(local.astype(np.float32)).reshape(y1 - y0, x1 - x0)
+        return updated
+
+    def _profiles(self) -> list[Patch]:
+        return [
+            gaussian_patch(y, x, sigma_px=self.spot_sigma_px, shape=self._shape)
+            for y, x in zip(self.y_px, self.x_px, strict=True)
+        ]
+
+    def _read(self) -> None:
+        """Heights of all spots in all maps, neighbours separated."""
+        weights = separated_weights(
+            y_px=self.y_px,
+            x_px=self.x_px,
+            profiles=self._profiles(),
+            inverse_variance=self._inverse_variance,
+            radius_px=_WINDOW_SIGMAS * self.spot_sigma_px,
+            separate=True,
+        )
+        weights = [Patch(y0=w.y0, x0=w.x0, values=np.nan_to_num(w.values)) for w in weights]
+        self.heights = read_maps(self._evoked, weights)
+        null = read_maps(self._null, weights)
+        photon_sd = [
+            np.sqrt(np.sum(w.values**2 / np.maximum(self._inverse_variance[w.slices], 1e-30), where=w.values != 0))
+            for w in weights
+        ]
+        measured_sd = 1.482602 * np.median(np.abs(null), axis=1)
+        # Fewer than a hundred null maps say less about the noise of one place than the pixels' variances do.
+        sd = np.maximum(np.asarray(photon_sd), measured_sd * (1 - 1.2 / np.sqrt(null.shape[1])))
+        sd = np.where(sd > 0, sd, np.inf)[:, None]
+        self.standardised, self.null_standardised = self.heights / sd, null / sd
+
+    def _move(self) -> None:
+        """Fit each place to the mean of its own releases, the neighbours taken out."""
+        profiles = self._profiles()
+        fitted = np.empty((len(profiles), 4))
+        strength = np.empty(len(profiles))
+        for index, (y, x) in enumerate(zip(self.y_px, self.x_px, strict=True)):
+            posterior, _, _ = release_posterior(self.standardised[index])
+            share = posterior * np.clip(self.standardised[index], 0.0, None)
+            strength[index] = np.sqrt(np.sum(share * self.standardised[index]))
+            total = max(float(share.sum()), 1e-12)
+            y0, y1, x0, x1 = window(y, x, radius_px=_FIT_SIGMAS * self.spot_sigma_px, shape=self._shape)
+            image = np.tensordot((share / total).astype(np.float32), self._evoked[:, y0:y1, x0:x1], axes=1)
+            frame = Patch(y0=y0, x0=x0, values=image.astype(np.float64))
+            own = frame.values.copy()
+            for other, profile in enumerate(profiles):
+                if other != index:
+                    own -= float(share @ self.heights[other]) / total * profile.onto(frame)
+            y_new, x_new, sigma, height = fit_spot(
+                own,
+                inverse_variance=self._inverse_variance[y0:y1, x0:x1],
+                y=y - y0,
+                x=x - x0,
+                sigma=self.spot_sigma_px,
+                free_sigma=False,
+            )
+            free_sigma = self.spot_sigma_px
+            if strength[index] > 20 and self._isolated(index):
+                _, _, free_sigma, height = fit_spot(
+                    own,
+                    inverse_variance=self._inverse_variance[y0:y1, x0:x1],
+                    y=y_new,
+                    x=x_new,
+                    sigma=sigma,
+                    free_sigma=True,
+                )
+            fitted[index] = y_new + y0, x_new + x0, free_sigma, height
+        self.y_px, self.x_px = fitted[:, 0], fitted[:, 1]
+        self.position_se_px = np.sqrt(2.0) * self.spot_sigma_px / np.maximum(strength, 1e-6)
+        clear = [i for i in range(len(profiles)) if strength[i] > 20 and self._isolated(i) and fitted[i, 3] > 0]
+        if len(clear) >= 3:
+            measured = float(np.median(fitted[clear, 2]))
+            self.spot_sigma_px = float(np.clip(measured, 0.6 * self._filter_sigma, 1.7 * self._filter_sigma))
+
+    def _isolated(self, index: int) -> bool:
+        distance = np.hypot(self.y_px - self.y_px[index], self.x_px - self.x_px[index])
+        return bool(np.sum(distance < 5 * self.spot_sigma_px) == 1)
+
+    def _take_out(self) -> None:
+        """Subtract every spot, at its height in each trial, from the filtered maps."""
+        z = self._matched.evoked
+        for heights, patch in self._taken_out:
+            rows, columns = patch.slices
+            z[:, rows, columns] += np.multiply.outer(heights, patch.values).astype(np.float32)
+        self._taken_out = []
+        for y, x, heights in zip(self.y_px, self.x_px, self.heights, strict=True):
+            y0, y1, x0, x1 = window(y, x, radius_px=8 * self.spot_sigma_px, shape=self._shape)
+            inner = (slice(y0, y1), slice(x0, x1))
+            spot = gaussian_patch(y, x, sigma_px=self.spot_sigma_px, shape=self._shape)
+            image = spot.onto(Patch(y0=y0, x0=x0, values=np.zeros((y1 - y0, x1 - x0))))
+            filtered = matched_filter(
+                image[None].astype(np.float32),
+                inverse_variance=self._inverse_variance[inner],
+                spot_sigma_px=self._filter_sigma,
+            )[0]
+            patch = Patch(y0=y0, x0=x0, values=filtered * self._matched.scale[inner])
+            z[:, inner[0], inner[1]] -= np.multiply.outer(heights, patch.values).astype(np.float32)
+            self._taken_out.append((heights.copy(), patch))
+
+
+def _without_copy(z: NDArray[np.float64], heights: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Responses (n, pixels) less their positive regression on a neighbour's heights.
+
+    A spot that is not quite the shape assumed leaves a copy of each of its releases beside it. A neighbour with releases
+    of its own does not follow it trial by trial, and loses nothing but chance correlation.
+    """
+    centred = heights - heights.mean()
+    power = float(centred @ centred)
+    if power <= 0:
+        return z
+    slope = np.maximum(centred @ z / power, 0.0)
+    return np.asarray(z - np.outer(heights, slope))

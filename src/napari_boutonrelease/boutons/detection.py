@@ -1,0 +1,298 @@
+"""Finding boutons: by their responses, and by their shape in the mean image."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from .deflation import SpotModel
+from .evidence import mixture_evidence, standardise
+from .false_discovery import FalseRate, local_maxima, measure_false_rate
+from .shape_candidates import ShapeCandidates, find_shape_candidates
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+    from .maps import ResponseStack
+
+_FIRST_SHARE = 0.1  # of false_discovery: how unlikely the first bouton must be where nothing may release at all
+_MAX_ROUNDS = 12
+_CLOSEST = 0.75  # of the spacing: nearer than that two fitted places are one bouton
+_SHAPE_POSITION_ERROR = 0.25  # of the spot's sigma: the shaft and unequal neighbours pull a maximum of the mean image
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Detection:
+    """Boutons found in one recording, top to bottom.
+
+    Attributes
+    ----------
+    y_px, x_px : (n,) ndarray
+        Centres in reference coordinates (px).
+    found_by : (n,) tuple of str
+        `responses`, `shape` or `both`.
+    score : (n,) ndarray
+        Evidence of release at the place, neighbours taken out (log-likelihood ratio, nats).
+    shape_contrast : (n,) ndarray
+        How far the spot stands out of the mean image (SD of its background); NaN where not found by shape.
+    evidence : (y, x) ndarray
+        Evidence map before any bouton was taken out (nats).
+    cut : float
+        Evidence above which a maximum anywhere counted as a bouton (nats); where the mean image shows a spot,
+        `cut_at_shape` was enough.
+    cut_at_shape : float
+    expected_false : float
+        False ones expected among those found by responses.
+    spot_sigma_px : float
+        Gaussian sigma of a bouton's image, measured where at least three clear boutons stand alone, else as given (px).
+    """
+
+    y_px: NDArray[np.float64]
+    x_px: NDArray[np.float64]
+    found_by: tuple[str, ...]
+    score: NDArray[np.float64]
+    shape_contrast: NDArray[np.float64]
+    evidence: NDArray[np.float32]
+    cut: float
+    cut_at_shape: float
+    expected_false: float
+    spot_sigma_px: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Cuts:
+    """Evidence demanded of a maximum anywhere and of one where the mean image shows a spot.
+
+    The expected false ones are shared in halves (weighted hypotheses; Genovese, Roeder & Wasserman 2006): the few spots
+    of the mean image are a small part of the image, so there a smaller evidence is as convincing.
+    """
+
+    rate: FalseRate
+    near_shape: NDArray[np.bool_]
+
+    def at(self, expected: float) -> tuple[float, float]:
+        share = float(np.mean(self.near_shape))
+        if share == 0:
+            return self.rate.cut(expected), np.inf
+        anywhere = self.rate.cut(expected / 2 / max(1 - share, 1e-9))
+        return anywhere, min(anywhere, self.rate.cut(expected / 2 / share))
+
+    def map(self, expected: float) -> NDArray[np.float64]:
+        anywhere, at_shape = self.at(expected)
+        return np.where(self.near_shape, min(at_shape, anywhere), anywhere)
+
+
+def detect_boutons(
+    stack: ResponseStack,
+    *,
+    spot_sigma_px: float,
+    spacing_px: float,
+    false_discovery: float,
+    shape_candidates: bool,
+    exclude: NDArray[np.bool_],
+    rng: np.random.Generator,
+    progress: Callable[[int, int], None] | None,
+) -> Detection:
+    """Find boutons by stimulus-locked release and by shape.
+
+    Strong boutons are found first, fitted together trial by trial and taken out of the maps; then what they hid is looked
+    for (Högbom 1974), until nothing exceeds the cut. The cut keeps the expected number of false ones, measured on noise
+    maps, below `false_discovery` times the number found; the very first one must be ten times less likely to be false
+    than that, so that a recording without release stays empty.
+
+    Parameters
+    ----------
+    stack : ResponseStack
+        Response and null maps.
+    spot_sigma_px : float
+        Gaussian sigma of a bouton's image (px).
+    spacing_px : float
+        Smallest distance of two boutons (px).
+    false_discovery : float
+        Expected share of false ones among those found by responses.
+    shape_candidates : bool
+        Also take round spots of the mean image, silent or not.
+    exclude : (y, x) ndarray of bool
+        Pixels without information: saturated, dead, or moved out of the image.
+    rng : Generator
+        Draws the noise stacks.
+    progress : callable or None
+        Called with (done, total).
+
+    Returns
+    -------
+    Detection
+    """
+    advance = progress or (lambda done, total: None)
+    steps = 4
+    matched = standardise(
+        evoked=stack.evoked,
+        null=stack.null,
+        evoked_factor=stack.evoked_factor,
+        null_factor=stack.null_factor,
+        spot_sigma_px=spot_sigma_px,
+        exclude=exclude,
+    )
+    advance(1, steps)
+    evidence = mixture_evidence(matched.evoked)
+    rate = measure_false_rate(matched.null, n_maps=len(stack.evoked), spacing_px=spacing_px, rng=rng)
+    advance(2, steps)
+    shapes = (
+        find_shape_candidates(
+            stack.mean_image, spot_sigma_px=spot_sigma_px, spacing_px=spacing_px, exclude=exclude
+        )
+        if shape_candidates
+        else ShapeCandidates(y_px=np.empty(0), x_px=np.empty(0), contrast=np.empty(0))
+    )
+    cuts = _Cuts(rate=rate, near_shape=_near(shapes, radius_px=max(spacing_px / 2, 1.0), shape=evidence.shape))
+    model = SpotModel(
+        evoked=stack.evoked / stack.evoked_factor[:, None, None].astype(np.float32),
+        null=stack.null / stack.null_factor[:, None, None].astype(np.float32),
+        matched=matched,
+        spot_sigma_px=spot_sigma_px,
+    )
+    score = _find_releasing(
+        model, evidence, cuts=cuts, spacing_px=spacing_px, false_discovery=false_discovery, null_is_silent=stack.null_from == "gaps"
+    )
+    advance(3, steps)
+    allowed = _allowed(len(score), false_discovery)
+    anywhere, at_shape = cuts.at(allowed)
+    detection = _merge(
+        model, score, shapes, spacing_px=spacing_px, evidence=evidence, cut=anywhere, cut_at_shape=at_shape, expected_false=allowed if len(score) else 0.0
+    )
+    advance(4, steps)
+    return detection
+
+
+def _allowed(n_found: int, false_discovery: float) -> float:
+    """Expected false ones allowed with `n_found` boutons in hand."""
+    return false_discovery * (n_found if n_found else _FIRST_SHARE)
+
+
+def _find_releasing(
+    model: SpotModel,
+    evidence: NDArray[np.float32],
+    *,
+    cuts: _Cuts,
+    spacing_px: float,
+    false_discovery: float,
+    null_is_silent: bool,
+) -> NDArray[np.float64]:
+    """Fill `model` with releasing spots; returns their evidence."""
+    score = np.empty(0)
+    residual = evidence
+    refused: list[tuple[float, float]] = []
+    for _ in range(_MAX_ROUNDS):
+        excess = residual / cuts.map(_allowed(len(score), false_discovery))
+        # Only the highest of each neighbourhood: its own flanks must be gone before the next one is believed.
+        y, x = local_maxima(excess, spacing_px=3 * spacing_px, above=1.0)
+        new = [
+            (float(a), float(b))
+            for a, b in zip(y, x, strict=True)
+            if _distance(model, a, b) >= _CLOSEST * spacing_px
+            and all(np.hypot(a - c, b - d) >= _CLOSEST * spacing_px for c, d in refused)
+        ]
+        if not new:
+            break
+        before = len(model.y_px)
+        model.set_places(np.append(model.y_px, [a for a, _ in new]), np.append(model.x_px, [b for _, b in new]))
+        score = _scores(model, null_is_silent=null_is_silent)
+        keep = _keep(model, score, cuts=cuts, expected=_allowed(len(score), false_discovery), spacing_px=spacing_px)
+        refused += [place for place, kept in zip(new, keep[before:], strict=True) if not kept]
+        if not np.all(keep):
+            model.set_places(model.y_px[keep], model.x_px[keep])
+            score = _scores(model, null_is_silent=null_is_silent)
+        residual = model.residual_evidence(evidence, reach_px=3 * spacing_px)
+    return score
+
+
+def _scores(model: SpotModel, *, null_is_silent: bool) -> NDArray[np.float64]:
+    """Evidence of each spot, less what the same place shows without a stimulus."""
+    score = model.evidence()
+    if null_is_silent:
+        ratio = model.standardised.shape[1] / model.null_standardised.shape[1]
+        score = score - np.maximum(model.null_evidence() - 4.0, 0.0) * ratio
+    return np.maximum(score, 0.0)
+
+
+def _keep(
+    model: SpotModel, score: NDArray[np.float64], *, cuts: _Cuts, expected: float, spacing_px: float
+) -> NDArray[np.bool_]:
+    """Spots that hold their evidence beside their neighbours and do not sit on a stronger one."""
+    height, width = cuts.near_shape.shape
+    needed = cuts.map(expected)
+    rows = np.clip(np.round(model.y_px).astype(int), 0, height - 1)
+    columns = np.clip(np.round(model.x_px).astype(int), 0, width - 1)
+    keep = score >= needed[rows, columns]
+    for index in np.argsort(-score):
+        if keep[index]:
+            near = np.hypot(model.y_px - model.y_px[index], model.x_px - model.x_px[index]) < _CLOSEST * spacing_px
+            keep[near & (score <= score[index])] = False
+            keep[index] = True
+    return keep
+
+
+def _distance(model: SpotModel, y: float, x: float) -> float:
+    return float(np.min(np.hypot(model.y_px - y, model.x_px - x), initial=np.inf))
+
+
+def _near(shapes: ShapeCandidates, *, radius_px: float, shape: tuple[int, ...]) -> NDArray[np.bool_]:
+    rows, columns = np.mgrid[: shape[0], : shape[1]]
+    near = np.zeros(shape, dtype=np.bool_)
+    for y, x in zip(shapes.y_px, shapes.x_px, strict=True):
+        near |= (rows - y) ** 2 + (columns - x) ** 2 <= radius_px**2
+    return near
+
+
+def _merge(
+    model: SpotModel,
+    score: NDArray[np.float64],
+    shapes: ShapeCandidates,
+    *,
+    spacing_px: float,
+    evidence: NDArray[np.float32],
+    cut: float,
+    cut_at_shape: float,
+    expected_false: float,
+) -> Detection:
+    """Join what was found by responses with what was found by shape, pair by pair from the closest."""
+    distance = np.hypot(model.y_px[:, None] - shapes.y_px, model.x_px[:, None] - shapes.x_px)
+    partner = np.full(len(score), -1)
+    for flat in np.argsort(distance, axis=None):
+        i, j = np.unravel_index(flat, distance.shape)
+        if distance[i, j] > spacing_px / 2:
+            break
+        if partner[i] < 0 and j not in partner:
+            partner[i] = j
+    rows: list[tuple[float, float, str, float, float]] = []
+    for i, j in enumerate(partner):
+        y, x, contrast = float(model.y_px[i]), float(model.x_px[i]), np.nan
+        if j >= 0:
+            trust_shape = (_SHAPE_POSITION_ERROR * model.spot_sigma_px) ** -2.0
+            trust_responses = model.position_se_px[i] ** -2.0
+            y = (y * trust_responses + shapes.y_px[j] * trust_shape) / (trust_responses + trust_shape)
+            x = (x * trust_responses + shapes.x_px[j] * trust_shape) / (trust_responses + trust_shape)
+            contrast = float(shapes.contrast[j])
+        rows.append((y, x, "both" if j >= 0 else "responses", float(score[i]), contrast))
+    for j in range(len(shapes.y_px)):
+        y, x = float(shapes.y_px[j]), float(shapes.x_px[j])
+        if j not in partner and _distance(model, y, x) > spacing_px / 2:
+            at = evidence[round(y), round(x)] if _distance(model, y, x) > 3 * spacing_px else 0.0
+            rows.append((y, x, "shape", float(at), float(shapes.contrast[j])))
+    rows.sort()
+    y_px, x_px, found_by, scores, contrasts = zip(*rows, strict=True) if rows else ((),) * 5
+    return Detection(
+        y_px=np.asarray(y_px, dtype=np.float64),
+        x_px=np.asarray(x_px, dtype=np.float64),
+        found_by=tuple(str(value) for value in found_by),
+        score=np.asarray(scores, dtype=np.float64),
+        shape_contrast=np.asarray(contrasts, dtype=np.float64),
+        evidence=evidence,
+        cut=cut,
+        cut_at_shape=cut_at_shape,
+        expected_false=expected_false,
+        spot_sigma_px=model.spot_sigma_px,
+    )
