@@ -1,0 +1,428 @@
+"""How much light, how much noise: the photon-transfer line, bleaching, and the pixels and frames not to trust.
+
+One pass over the movie. The noise of a pixel is taken from the *falling* half of its frame-to-frame differences: a
+release makes a pixel rise at once and fall slowly, so that responses hardly touch the falling half, and with noise
+alone both halves are alike whatever the light level.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from napari_boutonrelease.errors import InputError
+
+if TYPE_CHECKING:
+    from collections.abc import Callable
+
+    from numpy.typing import ArrayLike, NDArray
+
+    from .movie import Movie
+
+    FloatArray = NDArray[np.float64]
+
+__all__ = ["Light", "measure_light"]
+
+LIGHT_OFF, BLANK, NOT_FINITE, FLASH = "light off", "blank", "not finite", "flash"
+
+_CONTEXT_FRAMES = 100  # frames before a block that its frames are compared with
+_LOOK_AHEAD_FRAMES = 8  # frames after it, to see whether a flash ends
+_STRETCHES = 15  # stretches of the recording whose median noise counts, so that one jump of the sample does not
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Light:
+    """Light and noise of a recording.
+
+    Attributes
+    ----------
+    gain, gain_lo, gain_hi : float
+        Counts per electron with its 95 % interval; NaN where the pixels' brightness is too alike to tell. A camera
+        that multiplies electrons before reading them doubles the variance, and with it this number: counts divided by
+        it are then the photons that would give the same noise on a camera without that excess.
+    read_variance : float
+        Variance (counts²) where the photon-transfer line meets 0 raw counts. Negative where the camera's offset
+        is large.
+    offset_counts : float
+        Counts at no light; 0 where unknown.
+    offset_known : bool
+        Whether the offset was given.
+    saturated, dead : (y, x) ndarray of bool
+        Pixels at the detector's ceiling in more than 1 of 1,000 frames; pixels that never change or hold no number.
+    bad_frame : (n_frames,) ndarray of bool
+        Frames to leave out of everything.
+    bad_reason : tuple of str
+        For each frame "light off", "blank", "not finite", "flash" (a stimulation artefact over the whole field), or
+        "" for a good one.
+    mean_image : (y, x) ndarray of float
+        Mean of the good frames, counts.
+    frame_mean : (n_frames,) ndarray of float
+        Mean of each frame, counts.
+    bleaching : float
+        Share of the light above the offset that is lost between the first and the last twentieth of the good frames.
+    typical_variance, least_variance : float
+        Median variance over the pixels, counts²; the smallest that `variance_at` returns.
+    """
+
+    gain: float
+    gain_lo: float
+    gain_hi: float
+    read_variance: float
+    offset_counts: float
+    offset_known: bool
+    saturated: NDArray[np.bool_]
+    dead: NDArray[np.bool_]
+    bad_frame: NDArray[np.bool_]
+    bad_reason: tuple[str, ...]
+    mean_image: FloatArray
+    frame_mean: FloatArray
+    bleaching: float
+    typical_variance: float
+    least_variance: float
+
+    def variance_at(self, mean_counts: ArrayLike) -> FloatArray:
+        """Variance (counts²) of a pixel whose mean is `mean_counts` (raw counts, any shape); always above 0."""
+        mean = np.asarray(mean_counts, dtype=np.float64)
+        if not np.isfinite(self.gain):
+            return np.full(mean.shape, max(self.typical_variance, self.least_variance))
+        return np.maximum(self.gain * mean + self.read_variance, self.least_variance)
+
+    @property
+    def read_noise_counts(self) -> float:
+        """SD of a pixel in darkness, counts; NaN where the offset or the gain is unknown."""
+        in_darkness = self.gain * self.offset_counts + self.read_variance
+        return float(np.sqrt(max(in_darkness, 0.0))) if self.offset_known and np.isfinite(self.gain) else float("nan")
+
+
+def measure_light(
+    movie: Movie,
+    *,
+    camera_offset: float | None,
+    block_frames: int,
+    progress: Callable[[int, int], None] | None = None,
+) -> Light:
+    """Measure light and noise of a movie in one pass.
+
+    The photon-transfer line is the variance of half the difference of successive good frames against the mean,
+    pixel by pixel (EMVA 1288, release 4.0, 2021), as a robust line through bins of pixels of like brightness.
+
+    Parameters
+    ----------
+    movie : Movie
+        The recording.
+    camera_offset : float or None
+        Counts at no light, or None where unknown.
+    block_frames : int
+        Frames held in memory at a time, at least 2.
+    progress : callable, optional
+        Called with (frames done, frames in all).
+
+    Returns
+    -------
+    Light
+        Gain and its interval are NaN where they cannot be measured; nothing raises for bad data.
+
+    Raises
+    ------
+    InputError
+        If `block_frames` is less than 2.
+    """
+    if block_frames < 2:
+        raise InputError(f"block_frames must be 2 or more (given {block_frames}).")
+    n_frames, n_y, n_x = movie.shape
+    levels = _FrameLevels(n_frames=n_frames, n_y=n_y, n_x=n_x)
+    n_blocks = -(-n_frames // block_frames)
+    stretches = [_Stretch.empty(n_y, n_x) for _ in range(min(_STRETCHES, n_blocks))]
+    extremes = _Extremes.empty(n_y, n_x)
+    missing = np.zeros((n_y, n_x), dtype=np.intp)
+    reasons: list[str] = []
+    before: NDArray[np.float32] | None = None
+    for block, start in enumerate(range(0, n_frames, block_frames)):
+        stop = min(start + block_frames, n_frames)
+        raw = movie.read(start, min(stop + _LOOK_AHEAD_FRAMES, n_frames))
+        missing_here = levels.add(raw, start)
+        missing += missing_here
+        here = levels.bad_reasons(start, stop, camera_offset)
+        reasons += here
+        good = np.array([not reason for reason in here], dtype=np.bool_)
+        frames = raw[: stop - start]
+        extremes.add(frames[good])
+        before = stretches[block * len(stretches) // n_blocks].add(frames, good, before)
+        if progress is not None:
+            progress(stop, n_frames)
+    bad = np.array([bool(reason) for reason in reasons], dtype=np.bool_)
+    n_good = int(np.sum(~bad))
+    dead = (extremes.low >= extremes.high) | (missing > 0) if n_good > 1 else missing > 0
+    saturated = extremes.saturated(n_good, movie.full_scale) & ~dead
+    mean_image = sum((part.total for part in stretches), np.zeros((n_y, n_x))) / max(n_good, 1)
+    usable = ~(saturated | dead)
+    mean, variance = (np.nanmedian(np.stack(parts), axis=0)[usable] for parts in _per_stretch(stretches, n_y, n_x))
+    known = np.isfinite(mean) & np.isfinite(variance)
+    gain, gain_se, read_variance = photon_transfer_line(mean[known], variance[known], n_frames=n_good)
+    step = 1e-9 if movie.full_scale is None else 1.0 / 12.0  # rounding to integers is noise, too
+    variance = variance[known]
+    return Light(
+        gain=gain,
+        gain_lo=gain - 1.96 * gain_se,
+        gain_hi=gain + 1.96 * gain_se,
+        read_variance=read_variance,
+        offset_counts=0.0 if camera_offset is None else float(camera_offset),
+        offset_known=camera_offset is not None,
+        saturated=saturated,
+        dead=dead,
+        bad_frame=bad,
+        bad_reason=tuple(reasons),
+        mean_image=mean_image,
+        frame_mean=levels.mean,
+        bleaching=_bleaching(levels.mean[~bad], camera_offset or 0.0),
+        typical_variance=float(np.median(variance)) if variance.size else float("nan"),
+        least_variance=max(0.5 * float(np.percentile(variance, 1)), step) if variance.size else step,
+    )
+
+
+def photon_transfer_line(mean: FloatArray, variance: FloatArray, *, n_frames: int) -> tuple[float, float, float]:
+    """Fit variance = gain * mean + read_variance through pixels, robustly.
+
+    Pixels are gathered in bins of like brightness; the median variance of each bin enters a line whose outlying bins
+    lose weight (Tukey's biweight).
+
+    Parameters
+    ----------
+    mean, variance : (n_pixels,) ndarray of float
+        Temporal mean (counts) and variance (counts²) of each pixel.
+    n_frames : int
+        Frames behind each mean.
+
+    Returns
+    -------
+    gain, gain_se, read_variance : float
+        Slope, its standard error, intercept; NaN where the pixels are too alike in brightness.
+    """
+    unknown = (float("nan"),) * 3
+    if mean.size < 16 or n_frames < 8:
+        return unknown
+    dark, bright = np.percentile(mean, [1, 99])
+    if bright - dark < 5.0 * np.sqrt(np.median(variance) / n_frames) or bright <= dark:
+        return unknown
+    edges = np.union1d(np.linspace(mean.min(), mean.max(), 41), np.quantile(mean, np.linspace(0, 1, 41)))
+    which = np.clip(np.searchsorted(edges, mean, side="right") - 1, 0, edges.size - 2)
+    order = np.argsort(which, kind="stable")
+    pieces = np.split(order, np.flatnonzero(np.diff(which[order])) + 1)
+    pieces = [piece for piece in pieces if piece.size >= 4]
+    if len(pieces) < 5:
+        return unknown
+    x = np.array([mean[piece].mean() for piece in pieces])
+    y = np.array([np.median(variance[piece]) for piece in pieces])
+    n = np.array([min(piece.size, 200) for piece in pieces])  # a bin is never surer than the line is straight
+    design = np.stack([x, np.ones_like(x)], axis=1)
+    expected, trust = np.maximum(y, 1e-3 * y.max() + 1e-300), np.ones_like(x)
+    for _ in range(30):
+        scale = np.sqrt(n) / expected
+        rows = design * scale[:, None]
+        normal = rows.T @ (rows * trust[:, None])
+        line = np.linalg.lstsq(normal, rows.T @ (trust * y * scale), rcond=None)[0]
+        residual = y * scale - rows @ line
+        spread = 1.4826 * np.median(np.abs(residual)) + 1e-12
+        trust = np.maximum(1.0 - (residual / (6.0 * spread)) ** 2, 0.0) ** 2
+        expected = np.maximum(design @ line, 0.05 * np.median(y) + 1e-300)
+    free = max(float(np.sum(trust > 0)) - 2.0, 1.0)
+    scatter = float(np.sum(trust * residual**2)) / free
+    gain, read_variance = map(float, line)
+    gain_se = float(np.sqrt(scatter * np.linalg.pinv(normal)[0, 0]))
+    return (gain, gain_se, read_variance) if gain > 3.0 * gain_se else unknown
+
+
+@dataclass(slots=True)
+class _Stretch:
+    """Sums over the good frames of one stretch of the recording."""
+
+    total: FloatArray
+    falling: FloatArray
+    n_frames: int = 0
+    n_pairs: int = 0
+
+    @classmethod
+    def empty(cls, n_y: int, n_x: int) -> _Stretch:
+        return cls(total=np.zeros((n_y, n_x)), falling=np.zeros((n_y, n_x)))
+
+    def add(
+        self, frames: NDArray[np.generic], good: NDArray[np.bool_], before: NDArray[np.float32] | None
+    ) -> NDArray[np.float32] | None:
+        """Take in frames; `before` is the good frame just before them, and the last one is returned if good."""
+        for frame, is_good in zip(frames, good, strict=True):
+            if not is_good:
+                before = None
+                continue
+            now = frame.astype(np.float32)
+            self.total += now
+            self.n_frames += 1
+            if before is not None:
+                fall = np.minimum(now - before, 0.0)
+                self.falling += fall * fall
+                self.n_pairs += 1
+            before = now
+        return before
+
+
+def _per_stretch(stretches: list[_Stretch], n_y: int, n_x: int) -> tuple[list[FloatArray], list[FloatArray]]:
+    """Mean and variance of each stretch that has frames. Half of E[d²] is the variance, and falls are half of E[d²].
+
+    Medians follow, and the median of such a mean over n pairs lies below it by 1.1 / n (a third of its relative
+    variance, as for chi-square; 3.3 / n by simulation).
+    """
+    filled = [part for part in stretches if part.n_pairs]
+    nothing = np.full((n_y, n_x), np.nan)
+    means = [part.total / part.n_frames for part in filled] or [nothing]
+    variances = [part.falling * ((1.0 + 1.1 / part.n_pairs) / part.n_pairs) for part in filled] or [nothing]
+    return means, variances
+
+
+@dataclass(slots=True)
+class _Extremes:
+    """Lowest and highest value of each pixel, and how often it sat at the highest value of the movie."""
+
+    low: NDArray[np.float64]
+    high: NDArray[np.float64]
+    at_top: NDArray[np.intp]
+    top: float = -np.inf
+
+    @classmethod
+    def empty(cls, n_y: int, n_x: int) -> _Extremes:
+        shape = (n_y, n_x)
+        return cls(low=np.full(shape, np.inf), high=np.full(shape, -np.inf), at_top=np.zeros(shape, dtype=np.intp))
+
+    def add(self, frames: NDArray[np.generic]) -> None:
+        if not len(frames):
+            return
+        high = frames.max(axis=0)
+        self.low = np.minimum(self.low, frames.min(axis=0))
+        self.high = np.maximum(self.high, high)
+        top = float(np.nanmax(high))
+        if top > self.top:
+            self.top = top
+            self.at_top[:] = 0
+        if top == self.top:
+            touched = high == top
+            self.at_top[touched] += np.sum(frames[:, touched] == top, axis=0)
+
+    def saturated(self, n_frames: int, full_scale: float | None) -> NDArray[np.bool_]:
+        """Pixels at a ceiling: the end of the type's range, or a value many pixels stop at (a 12-bit camera's 4095)."""
+        integer = full_scale is not None
+        full = full_scale is not None and self.top >= full_scale
+        often = self.at_top > max(0.001 * n_frames, 0 if full else 4)
+        # counts of a few photons share their largest value by chance: a ceiling lies well above the darkest value
+        piled_up = self.at_top.sum() >= 20 and self.top - float(np.min(self.low)) >= 16
+        return often if full or (integer and piled_up) else np.zeros_like(often)
+
+
+@dataclass(slots=True)
+class _FrameLevels:
+    """Mean of every frame over a grid of tiles: enough to tell darkness, blanks and flashes from responses."""
+
+    n_frames: int
+    n_y: int
+    n_x: int
+    mean: FloatArray = field(init=False)
+    tiles: FloatArray = field(init=False)
+    blank: NDArray[np.bool_] = field(init=False)
+    broken: NDArray[np.bool_] = field(init=False)
+
+    def __post_init__(self) -> None:
+        rows, columns = (min(8, max(1, n // 4)) for n in (self.n_y, self.n_x))
+        self.tiles = np.full((self.n_frames, rows, columns), np.nan)
+        self.mean = np.full(self.n_frames, np.nan)
+        self.blank, self.broken = np.zeros(self.n_frames, dtype=np.bool_), np.zeros(self.n_frames, dtype=np.bool_)
+
+    def add(self, raw: NDArray[np.generic], start: int) -> NDArray[np.intp]:
+        """Note the levels of `raw`; pixels that hold no number in most of its frames are returned as 1."""
+        n = len(raw)
+        here = slice(start, start + n)
+        missing = np.zeros((self.n_y, self.n_x), dtype=np.intp)
+        if np.issubdtype(raw.dtype, np.floating):
+            lost = ~np.isfinite(raw)
+            if lost.any():
+                missing = (2 * lost.sum(axis=0) > n).astype(np.intp)
+                self.broken[here] = (lost & (missing == 0)).any(axis=(1, 2))
+                raw = np.where(lost, np.nanmedian(np.where(lost, np.nan, raw)) if not lost.all() else 0.0, raw)
+        rows, columns = self.tiles.shape[1:]
+        high, wide = self.n_y // rows, self.n_x // columns
+        tiled = raw[:, : rows * high, : columns * wide].reshape(n, rows, high, columns, wide)
+        self.tiles[here] = tiled.mean(axis=(2, 4), dtype=np.float64)
+        self.mean[here] = raw.mean(axis=(1, 2), dtype=np.float64)
+        self.blank[here] = raw.reshape(n, -1).max(axis=1) == raw.reshape(n, -1).min(axis=1)
+        return missing
+
+    def bad_reasons(self, start: int, stop: int, offset: float | None) -> list[str]:
+        """Why each of the frames start..stop is bad, or ""."""
+        first = max(0, start - _CONTEXT_FRAMES)
+        last = min(stop + _LOOK_AHEAD_FRAMES, self.n_frames)
+        tiles = self.tiles[first:last].reshape(last - first, -1)
+        blank, broken = self.blank[first:last], self.broken[first:last]
+        sound = ~(blank | broken)
+        dark, flash = np.zeros_like(blank), np.zeros_like(blank)
+        if sound.sum() >= 3:
+            dark[sound] = _is_dark(tiles[sound], offset)
+            lit = sound & ~dark
+            if lit.sum() >= 5:
+                flash[lit] = _is_flash(tiles[lit], offset)
+        named = zip(
+            *(flags[start - first : stop - first] for flags in (broken, blank, dark, flash)),
+            strict=True,
+        )
+        reasons = (NOT_FINITE, BLANK, LIGHT_OFF, FLASH)
+        return [next((reason for reason, is_so in zip(reasons, flags, strict=True) if is_so), "") for flags in named]
+
+
+def _robust_sd(values: FloatArray) -> float:
+    return 1.4826 * float(np.median(np.abs(values - np.median(values))))
+
+
+def _is_dark(tiles: FloatArray, offset: float | None) -> NDArray[np.bool_]:
+    """Frames whose light fell under half of what the others have. Without an offset the darkest tile stands for it."""
+    mean = tiles.mean(axis=1)
+    full = float(np.percentile(mean, 90))
+    picture = np.median(tiles[mean >= np.median(mean)], axis=0)
+    floor = float(picture.min()) if offset is None else offset
+    if offset is None and np.ptp(picture) < 0.2 * abs(full):
+        floor = 0.0  # no dark place to compare with: only a loss of half of the counts is sure
+    above = mean - floor
+    bright = above >= 0.25 * (full - floor)
+    if full <= floor or not bright.any():
+        return np.zeros(len(mean), dtype=np.bool_)
+    lost = float(np.median(above[bright])) - above
+    noise = _robust_sd(np.diff(mean)) if len(mean) > 2 else 0.0
+    dark: NDArray[np.bool_] = (above < 0.5 * np.median(above[bright])) & (lost > 8.0 * noise)
+    return dark
+
+
+def _is_flash(tiles: FloatArray, offset: float | None) -> NDArray[np.bool_]:
+    """One to three frames in which the whole field is brighter by the same amount. Responses are neither."""
+    from scipy.ndimage import label, median_filter
+
+    usual = median_filter(tiles, size=(15, 1), mode="nearest")
+    change = tiles - usual
+    level = np.median(change, axis=1)
+    picture = np.median(tiles, axis=0)
+    middle = float(np.median(picture))
+    floor = float(picture.min()) if offset is None else offset
+    least = max(8.0 * _robust_sd(level), 0.2 * (middle - floor), 0.02 * abs(middle), 1e-9)
+    even = np.percentile(change, 10, axis=1) > 0.5 * level
+    high: NDArray[np.bool_] = (level > least) & even
+    runs, n_runs = label(high)
+    for run in range(1, n_runs + 1):
+        where = np.flatnonzero(runs == run)
+        beside = [level[k] for k in (where[0] - 1, where[-1] + 1) if 0 <= k < len(level)]
+        if where.size > 3 or max(beside, default=0.0) > 0.25 * level[where].max():
+            high[where] = False
+    return high
+
+
+def _bleaching(frame_mean: FloatArray, offset: float) -> float:
+    light = frame_mean[np.isfinite(frame_mean)] - offset
+    if light.size < 2:
+        return float("nan")
+    edge = max(1, light.size // 20)
+    first = float(np.median(light[:edge]))
+    return 1.0 - float(np.median(light[-edge:])) / first if first > 0 else float("nan")
