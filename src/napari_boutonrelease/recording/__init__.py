@@ -3,5 +3,24 @@
 from __future__ import annotations
 
 from .movie import Movie, content_digest, movie_from_array, open_movie
+from .protocol import Protocol, read_protocol, write_protocol
+from .stimuli import RegularStimuli, StimulusTable, read_stimulus_table
+from .timing import Timing, frame_times_s, resolve_timing, segment_frames, stimulus_frame
 
-__all__ = ["Movie", "content_digest", "movie_from_array", "open_movie"]
+__all__ = [
+    "Movie",
+    "Protocol",
+    "RegularStimuli",
+    "StimulusTable",
+    "Timing",
+    "content_digest",
+    "frame_times_s",
+    "movie_from_array",
+    "open_movie",
+    "read_protocol",
+    "read_stimulus_table",
+    "resolve_timing",
+    "segment_frames",
+    "stimulus_frame",
+    "write_protocol",
+]
