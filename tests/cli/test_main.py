@@ -32,8 +32,8 @@ def command(monkeypatch):
     """Replace the command `inspect` by one that raises or warns as told."""
 
     def replace(act):
-        fake = SimpleNamespace(add_arguments=lambda parser: None, run=lambda args: act())
-        monkeypatch.setattr(program, "command_module", lambda name: fake)
+        fake = SimpleNamespace(add_arguments=lambda _: None, run=lambda _: act())
+        monkeypatch.setattr(program, "command_module", lambda _: fake)
 
     return replace
 

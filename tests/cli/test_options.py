@@ -23,7 +23,11 @@ def defaults() -> dict[str, object]:
     """Dotted path and default of every setting, from the models themselves."""
     flat = {}
     for section, value in Settings().model_dump().items():
-        flat |= {f"{section}.{name}": entry for name, entry in value.items()} if isinstance(value, dict) else {section: value}
+        flat |= (
+            {f"{section}.{name}": entry for name, entry in value.items()}
+            if isinstance(value, dict)
+            else {section: value}
+        )
     return flat
 
 
@@ -97,8 +101,16 @@ def test_settings_build_on_those_of_an_earlier_analysis():
 @pytest.mark.parametrize(
     ("name", "text", "message"),
     [
-        ("a.toml", "[calls]\nthreshold = 3", r"a\.toml: there is no setting calls\.threshold; the settings are .*calls\.threshold_sd"),
-        ("a.toml", "[calls]\nthreshold_sd = 'high'", r"a\.toml: calls\.threshold_sd must be a valid number.*\(given 'high'\)"),
+        (
+            "a.toml",
+            "[calls]\nthreshold = 3",
+            r"a\.toml: there is no setting calls\.threshold; .*calls\.threshold_sd",
+        ),
+        (
+            "a.toml",
+            "[calls]\nthreshold_sd = 'high'",
+            r"a\.toml: calls\.threshold_sd must be a valid number.*'high'\)",
+        ),
         ("a.toml", "[calls", r"a\.toml: the settings are not valid TOML"),
         ("a.json", "{", r"a\.json: the settings are not valid JSON"),
         ("a.json", "[1]", r"a\.json: expected sections of settings, found a list"),

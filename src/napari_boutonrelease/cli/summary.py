@@ -45,14 +45,14 @@ def summary_lines(result: AnalysisResult, *, folder: Path) -> list[str]:
     return lines
 
 
-def with_interval(value: float, lo: float, hi: float) -> str:
+def with_interval(value: float, lo: float, hi: float, *, digits: int = 2) -> str:
     """Write an estimate with its interval: `0.41 (0.33 to 0.50)`; a dash where there is none."""
     if not math.isfinite(value):
         return "-"
     if not (math.isfinite(lo) or math.isfinite(hi)):
-        return f"{value:.2f}"
-    ends = [f"{end:.2f}" if math.isfinite(end) else "unbounded" for end in (lo, hi)]
-    return f"{value:.2f} ({ends[0]} to {ends[1]})"
+        return f"{value:.{digits}f}"
+    ends = [f"{end:.{digits}f}" if math.isfinite(end) else "unbounded" for end in (lo, hi)]
+    return f"{value:.{digits}f} ({ends[0]} to {ends[1]})"
 
 
 def _boutons(result: AnalysisResult) -> str:
