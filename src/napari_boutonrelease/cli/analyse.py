@@ -7,9 +7,11 @@ from .options import add_settings_options, read_settings
 
 TYPE_CHECKING = False
 if TYPE_CHECKING:
+    from collections.abc import Sequence
     from pathlib import Path
+    from typing import Any
 
-    from ..api import Analysis
+    from ..analysis.settings import Settings
 
 EPILOG = """\
 positions: y_px,x_px in pixels from 0 (centre of the first pixel) or y_um,x_um; a label TIFF has one number a bouton.
@@ -38,32 +40,59 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 def run(args: argparse.Namespace) -> None:
     """Analyse, write, and say in a few lines what was found."""
     from ..api import analyse
-    from ..recording.movie import open_movie
-    from ..recording.protocol import read_protocol
     from ..reports import check_can_write
     from .progress import progress_bar
     from .summary import summary_lines
 
-    if args.saved:
-        raise NotImplementedError
+    settings, source, inputs = _saved_inputs(args) if args.saved else _given_inputs(args)
+    out = out_folder(args.out, movie=source)
+    check_can_write(out, overwrite=args.overwrite)
+    with progress_bar("analysing") as progress:
+        analysis = analyse(**inputs, settings=settings, progress=progress)
+    analysis.write(out, overwrite=args.overwrite)
+    print(*summary_lines(analysis, folder=out), sep="\n")
+
+
+def _given_inputs(args: argparse.Namespace) -> "tuple[Settings, str, dict[str, Any]]":
+    """Return settings, the movie's path and the inputs that the command line names."""
+    from ..recording.movie import open_movie
+    from ..recording.protocol import read_protocol
+
     if not args.movie:
         raise InputError("Give the MOVIE to analyse, or --from a saved analysis.")
     if not args.protocol:
         raise InputError(f"When was the axon stimulated in {args.movie[0]}? Give --protocol FILE.toml.")
-    out = out_folder(args.out, movie=args.movie[0])
-    check_can_write(out, overwrite=args.overwrite)
     settings = read_settings(args)
-    movie = open_movie(
-        args.movie[0] if len(args.movie) == 1 else args.movie,
-        channel=settings.recording.channel,
-    )
-    protocol = read_protocol(args.protocol)
-    with progress_bar("analysing") as progress:
-        analysis: Analysis = analyse(
-            movie, protocol, settings=settings, boutons=args.boutons, axon=args.axon, progress=progress
-        )
-    analysis.write(out, overwrite=args.overwrite)
-    print("\n".join(summary_lines(analysis, folder=out)))
+    inputs = {
+        "movie": open_movie(_source(args.movie), channel=settings.recording.channel),
+        "protocol": read_protocol(args.protocol),
+        "boutons": args.boutons,
+        "axon": args.axon,
+    }
+    return settings, args.movie[0], inputs
+
+
+def _saved_inputs(args: argparse.Namespace) -> "tuple[Settings, str, dict[str, Any]]":
+    """Return the same from a saved analysis, in which the command line may replace parts."""
+    from ..analysis.savefile import read_saved
+    from ..recording.movie import open_movie
+    from ..recording.protocol import read_protocol
+
+    saved = read_saved(args.saved)
+    settings = read_settings(args, base=saved.settings)
+    movie = open_movie(_source(args.movie or saved.movie_files), channel=settings.recording.channel)
+    saved.check_movie(movie)
+    inputs = {
+        "movie": movie,
+        "protocol": read_protocol(args.protocol) if args.protocol else saved.protocol,
+        "boutons": args.boutons or saved.boutons,
+        "axon": args.axon or saved.axon,
+    }
+    return settings, str(movie.files[0]), inputs
+
+
+def _source(paths: "Sequence[str | Path]") -> "str | Path | list[str | Path]":
+    return paths[0] if len(paths) == 1 else list(paths)
 
 
 def out_folder(given: str | None, *, movie: str) -> "Path":

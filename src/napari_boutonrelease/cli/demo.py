@@ -2,10 +2,13 @@
 
 import argparse
 
+EPILOG = "The recording is invented: release is drawn vesicle by vesicle and light photon by photon, from --seed."
+
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """Options of `demo`."""
     parser.usage = "%(prog)s [--out DIR] [--seed N] [--overwrite]"
+    parser.epilog = EPILOG
     parser.add_argument(
         "--out",
         default="boutonrelease-demo",
@@ -18,3 +21,31 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 
 def run(args: argparse.Namespace) -> None:
     """Simulate, analyse, write, compare."""
+    from pathlib import Path
+
+    from ..api import analyse
+    from ..reports import check_can_write
+    from ..simulation import preset_recipe, read_truth, write_simulation
+    from .comparison import comparison_lines
+    from .progress import progress_bar
+    from .summary import summary_lines
+
+    folder = Path(args.out)
+    results = folder / "demo.release"
+    check_can_write(results, overwrite=args.overwrite)
+    folder.mkdir(parents=True, exist_ok=True)
+    with progress_bar("simulating") as progress:
+        recording = write_simulation(
+            preset_recipe("fast-pair"),
+            folder / "demo.tif",
+            seed=args.seed,
+            overwrite=args.overwrite,
+            progress=progress,
+        )
+    print(f"recording: {recording.movie} (simulated, seed {args.seed})")
+    with progress_bar("analysing") as progress:
+        analysis = analyse(recording.movie, recording.protocol, progress=progress)
+    analysis.write(results, overwrite=args.overwrite)
+    print(*summary_lines(analysis, folder=results), sep="\n")
+    print("", "estimates (95 % interval) beside the truth", sep="\n")
+    print(*comparison_lines(analysis.boutons, read_truth(recording.truth)), sep="\n")

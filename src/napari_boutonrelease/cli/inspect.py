@@ -31,7 +31,7 @@ def run(args: argparse.Namespace) -> None:
     from . import inspection as say
     from .progress import progress_bar
 
-    movie = open_movie(args.movie[0] if len(args.movie) == 1 else args.movie, channel=args.channel)
+    movie = open_movie(args.movie if len(args.movie) > 1 else args.movie[0], channel=args.channel)
     protocol = read_protocol(args.protocol) if args.protocol else None
     timing, missing = _resolved(movie, protocol)
     print(args.movie[0] if len(args.movie) == 1 else f"{args.movie[0]} and {len(args.movie) - 1} more")

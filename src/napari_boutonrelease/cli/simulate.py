@@ -2,11 +2,23 @@
 
 import argparse
 
+from ..errors import InputError
+
 TYPE_CHECKING = False
 if TYPE_CHECKING:
-    pass
+    from ..simulation import Recipe
 
-PRESETS = ("fast-pair", "slow-single")
+PRESETS = (
+    "fast-pair",
+    "fast-single",
+    "fast-train",
+    "slow-single",
+    "crowded",
+    "silent",
+    "dim",
+    "file-per-trial",
+    "rolling",
+)
 _RECIPE_OPTIONS = {
     "trials": (int, "N", "repeats of the protocol"),
     "trial_interval_s": (float, "S", "from one trial to the next, s"),
@@ -37,7 +49,8 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         "--preset",
         choices=PRESETS,
         default="fast-pair",
-        help="what kind of recording (default: fast-pair)",
+        metavar="NAME",
+        help=f"what kind of recording: {', '.join(PRESETS)} (default: fast-pair)",
     )
     parser.add_argument("--seed", type=int, default=1, metavar="N", help="seed of every random number (default: 1)")
     parser.add_argument("--file-per-trial", action="store_true", help="write a folder OUT with one file a trial")
@@ -58,3 +71,46 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 
 def run(args: argparse.Namespace) -> None:
     """Simulate and write."""
+    from ..simulation import write_simulation
+    from .progress import progress_bar
+
+    recipe = requested_recipe(args)
+    with progress_bar("simulating") as progress:
+        paths = write_simulation(recipe, args.out, seed=args.seed, overwrite=args.overwrite, progress=progress)
+    print(*paths, sep="\n")
+
+
+def requested_recipe(args: argparse.Namespace) -> "Recipe":
+    """Return the preset's recipe with the changes that the command line asks for.
+
+    Raises
+    ------
+    InputError
+        If a setting is unknown or a value is refused.
+    """
+    from ..simulation import preset_recipe, recipe_from_dict
+
+    values = preset_recipe(args.preset).as_dict()
+    values |= {name: getattr(args, name) for name in _RECIPE_OPTIONS if getattr(args, name) is not None}
+    values |= dict(map(_assignment, args.set))
+    if args.file_per_trial and values["file_s"] is None:
+        values["file_s"] = values["trial_interval_s"]
+    try:
+        return recipe_from_dict(values)
+    except InputError:
+        raise
+    except (TypeError, ValueError) as error:
+        raise InputError(f"A value of --set has the wrong kind ({error}).") from error
+
+
+def _assignment(text: str) -> "tuple[str, object]":
+    """Take `name=value` apart; a value that is no number, list or true/false is a word."""
+    import json
+
+    name, sign, value = text.partition("=")
+    if not (name and sign):
+        raise InputError(f"--set {text}: expected NAME=VALUE, as in --set drift_jumps=2.")
+    try:
+        return name.replace("-", "_"), json.loads(value)
+    except ValueError:
+        return name.replace("-", "_"), value
