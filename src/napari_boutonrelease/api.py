@@ -31,7 +31,7 @@ class Analysis(AnalysisResult):
         Parameters
         ----------
         folder : path
-            Folder to write; its parent must exist.
+            Folder to make, or to replace if it holds results.
         overwrite : bool
             Replace results that are already there.
 
@@ -43,7 +43,7 @@ class Analysis(AnalysisResult):
         Raises
         ------
         OutputError
-            If the folder holds results and `overwrite` is false, or cannot be written.
+            If the folder holds results and `overwrite` is false, holds anything else, or cannot be written.
         """
         from .reports import write_result
 
