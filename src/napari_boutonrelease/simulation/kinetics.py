@@ -25,13 +25,12 @@ class Reporter:
 
     def __init__(self, recipe: Recipe) -> None:
         rise, decay, slow, share = recipe.rise_s, recipe.decay_s, recipe.slow_decay_s, recipe.slow_fraction
-        shorten = lambda tau: tau * rise / (tau + rise)  # noqa: E731
         self._weight = np.array([1 - share, share, share - 1, -share])
-        self._tau_s = np.array([decay, slow, shorten(decay), shorten(slow)])
+        self._tau_s = np.array([decay, slow, decay * rise / (decay + rise), slow * rise / (slow + rise)])
         longest = slow if share > 0 else decay
         self._scale = 1.0
-        # The single maximum lies before a few rise times past log(decay / rise); two passes find it to 1e-8 of the span.
-        span = np.linspace(0.0, rise * np.log1p(longest / rise) + 1e-12, 20_001)
+        # A single decay peaks at rise * log(1 + decay / rise), a mixed one before the slower's; two passes find it.
+        span = np.linspace(0.0, rise * np.log1p(longest / rise), 20_001)
         around = int(np.argmax(self.height(span)))
         fine = np.linspace(span[max(around - 1, 0)], span[min(around + 1, span.size - 1)], 20_001)
         self.peak_s = float(fine[np.argmax(self.height(fine))])
@@ -42,7 +41,8 @@ class Reporter:
         """Height of the response at instants after the release (s, any shape); 0 before it."""
         elapsed = np.asarray(since_release_s, dtype=np.float64)[..., None]
         terms = self._weight * np.exp(-np.maximum(elapsed, 0.0) / self._tau_s)
-        return self._scale * terms.sum(axis=-1) * (elapsed[..., 0] >= 0)
+        height: NDArray[np.float64] = self._scale * terms.sum(axis=-1) * (elapsed[..., 0] >= 0)
+        return height
 
     def gathered(self, since_release_s: ArrayLike, *, exposure_s: float) -> NDArray[np.float64]:
         """Mean height over exposures that begin at the given times after the release (s, any shape)."""
@@ -52,7 +52,9 @@ class Reporter:
     def _area(self, since_release_s: NDArray[np.float64]) -> NDArray[np.float64]:
         """Integral of the response from its release to the given times."""
         elapsed = np.maximum(since_release_s, 0.0)[..., None]
-        return self._scale * np.sum(-self._weight * self._tau_s * np.expm1(-elapsed / self._tau_s), axis=-1)
+        terms = -self._weight * self._tau_s * np.expm1(-elapsed / self._tau_s)
+        area: NDArray[np.float64] = self._scale * terms.sum(axis=-1)
+        return area
 
 
 def activity(

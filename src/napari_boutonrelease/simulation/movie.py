@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from ..recording.protocol import Protocol, RegularStimuli, StimulusTable
 from .kinetics import Reporter, activity
 from .plan import plan_recording, shaft_of, spot_of
 
@@ -30,10 +31,13 @@ class Simulation:
         The movie, in counts; of several files one after the other.
     truth : Truth
         What it shows.
+    protocol : Protocol
+        What its experimenter would state: all but the response shape.
     """
 
     frames: NDArray[Any]
     truth: Truth
+    protocol: Protocol
 
 
 def simulate_recording(
@@ -71,7 +75,36 @@ def simulate_recording(
         done += len(block)
         if progress is not None:
             progress(done, recipe.n_frames)
-    return Simulation(frames=frames, truth=truth)
+    return Simulation(frames=frames, truth=truth, protocol=protocol_of(recipe))
+
+
+def protocol_of(recipe: Recipe) -> Protocol:
+    """State the protocol of a recipe as an experimenter would; the response shape is left to the analysis."""
+    stimuli: RegularStimuli | StimulusTable
+    if recipe.pulse_table_s is None:
+        stimuli = RegularStimuli(
+            first_s=recipe.first_s,
+            trials=recipe.trials,
+            trial_interval_s=recipe.trial_interval_s,
+            pulses=recipe.pulses,
+            pulse_interval_s=recipe.pulse_interval_s,
+        )
+    else:
+        rows = [
+            (trial, pulse, time_s)
+            for trial, times in enumerate(recipe.pulse_table_s, start=1)
+            for pulse, time_s in enumerate(times, start=1)
+        ]
+        trial, pulse, time_s = (np.array(column) for column in zip(*rows, strict=True))
+        stimuli = StimulusTable(trial=trial, pulse=pulse, time_s=time_s, source="simulation")
+    return Protocol(
+        frame_interval_s=recipe.frame_interval_s,
+        exposure_s=recipe.exposure,
+        row_time_s=recipe.row_time_s,
+        pixel_size_um=recipe.pixel_size_um,
+        camera_offset=recipe.offset_counts,
+        stimuli=stimuli,
+    )
 
 
 def frame_blocks(truth: Truth, *, rng: np.random.Generator) -> Iterator[NDArray[Any]]:
@@ -161,7 +194,8 @@ class _Haze:
             self._state = self._kept * self._state + fresh[frame]
             states[frame] = self._state
         field = np.matmul(np.matmul(self._over_y, states), self._over_x.T)
-        return self._recipe.background_photons * np.maximum(1.0 + self._recipe.background_cv * field, 0.0)
+        light: NDArray[np.float64] = np.maximum(1.0 + self._recipe.background_cv * field, 0.0)
+        return self._recipe.background_photons * light
 
 
 def _bumps(size_px: int, length_px: float) -> NDArray[np.float64]:

@@ -9,7 +9,8 @@ import numpy as np
 if TYPE_CHECKING:
     from numpy.typing import ArrayLike, NDArray
 
-# A disc as seven points: centre 1/4, six on the ring sqrt(2/3) R with 1/8 each; exact up to degree 5 (Stroud 1971, S2 5-1).
+# A disc as seven points: the centre with 1/4, six on the ring sqrt(2/3) R with 1/8 each; exact up to degree 5
+# (Stroud 1971, formula S2 5-1).
 _RING = np.arange(6) * np.pi / 3
 _DISC_Y = np.concatenate([[0.0], np.sqrt(2 / 3) * np.sin(_RING)])
 _DISC_X = np.concatenate([[0.0], np.sqrt(2 / 3) * np.cos(_RING)])
@@ -111,7 +112,8 @@ class Lattice:
             self._shares(n_px, n_nodes, shift)
             for n_px, n_nodes, shift in zip(self.shape, self.sources.shape, (dy_px, dx_px), strict=True)
         )
-        return np.matmul(np.matmul(by_row.transpose(0, 2, 1), self.sources), by_column)
+        images: NDArray[np.float64] = np.matmul(np.matmul(by_row.transpose(0, 2, 1), self.sources), by_column)
+        return images
 
     def _shares(self, n_px: int, n_nodes: int, shift_px: NDArray[np.float64]) -> NDArray[np.float64]:
         """Share of every node's light in every pixel, (n, n_nodes, n_px): one row of shares, slid from node to node."""

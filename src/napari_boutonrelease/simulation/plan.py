@@ -124,27 +124,27 @@ def plan_recording(recipe: Recipe, *, rng: np.random.Generator) -> Truth:
 
 def frame_times(recipe: Recipe) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.int64]]:
     """Start of each frame on the recording's and on the laboratory's clock (s), and the file it belongs to."""
-    start_s = np.arange(recipe.n_frames) * recipe.frame_interval_s
-    segment = np.repeat(np.arange(len(recipe.file_frames)), recipe.file_frames)
+    start_s: NDArray[np.float64] = np.arange(recipe.n_frames) * recipe.frame_interval_s
+    segment: NDArray[np.int64] = np.repeat(np.arange(len(recipe.file_frames)), recipe.file_frames)
     if recipe.file_s is None:
         return start_s, start_s.copy(), segment
     first = np.concatenate([[0], np.cumsum(recipe.file_frames)[:-1]])
-    within_s = (np.arange(recipe.n_frames) - first[segment]) * recipe.frame_interval_s
+    within_s: NDArray[np.float64] = (np.arange(recipe.n_frames) - first[segment]) * recipe.frame_interval_s
     return start_s, segment * recipe.trial_interval_s + within_s, segment
 
 
 def _stimulus_times(recipe: Recipe) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Stimulus times on the recording's and on the laboratory's clock, (n_trials, n_pulses), NaN where there is none."""
+    """Stimulus times (s) on the recording's and the laboratory's clock, (n_trials, n_pulses); NaN for no such pulse."""
     table = recipe.stimulus_table_s
     within_s = np.full((len(table), max(len(times) for times in table)), np.nan)
     for trial, times in enumerate(table):
         within_s[trial, : len(times)] = times
     if recipe.file_s is None:
         return within_s, within_s.copy()
-    trial = np.arange(len(table))[:, None]
-    return within_s + trial * recipe.file_frames[
+    number = np.arange(len(table))[:, None]
+    return within_s + number * recipe.file_frames[
         0
-    ] * recipe.frame_interval_s, within_s + trial * recipe.trial_interval_s
+    ] * recipe.frame_interval_s, within_s + number * recipe.trial_interval_s
 
 
 def _draw_boutons(
@@ -215,7 +215,8 @@ def _light(recipe: Recipe) -> NDArray[np.float64]:
     lit = np.ones(recipe.n_frames)
     lit[[frame for frame in recipe.dark_frames if frame < recipe.n_frames]] = 0.0
     exposed = np.cumsum(lit) - 1.0
-    return lit * (1.0 - recipe.bleached) ** (exposed / max(lit.sum() - 1.0, 1.0))
+    light: NDArray[np.float64] = lit * (1.0 - recipe.bleached) ** (exposed / max(lit.sum() - 1.0, 1.0))
+    return light
 
 
 def _draw_movement(

@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from dataclasses import dataclass, fields
+from itertools import pairwise
 from typing import Any, Literal
 
 from ..checks import check_fraction, check_not_negative, check_positive
@@ -69,8 +71,8 @@ class Recipe:
     pulse_interval_s : float
         Time from one pulse to the next, in s.
     pulse_table_s : tuple of tuples of float or None
-        Stimulus times trial by trial instead of the regular protocol, from the start of the movie (of each file, where a
-        trial is a file), in s. Trials may hold different numbers of pulses.
+        Stimulus times trial by trial instead of the regular protocol, from the start of the movie (of each file, where
+        a trial is a file), in s. Trials may hold different numbers of pulses.
     file_s : float or None
         Where given, each trial is a file of this length, in s, and nothing is recorded (nor bleached) between files.
         Files begin `trial_interval_s` apart.
@@ -119,8 +121,8 @@ class Recipe:
     q_shape : {"gamma", "normal"}
         Distribution of single vesicles; the normal one is cut off at zero.
     facilitation : float
-        Share of the way to certain release by which a pulse raises the release probability of a site (Tsodyks &
-        Markram 1997).
+        A pulse raises the release probability u of a site that has p at rest by facilitation x p x (1 - u), at most to
+        1. With 1 it is the rule of Tsodyks & Markram (1997).
     facilitation_s : float
         Time constant with which that wears off, in s.
     recovery_s : float
@@ -246,12 +248,11 @@ class Recipe:
             _check_at_least(name, getattr(self, name), 16)
         for name in ("trials", "pulses", "bit_depth"):
             _check_at_least(name, getattr(self, name), 1)
-        for name in _POSITIVE:
-            check_positive(name, getattr(self, name))
-        for name in _NOT_NEGATIVE:
-            check_not_negative(name, getattr(self, name))
-        for name in _FRACTIONS:
-            check_fraction(name, getattr(self, name))
+        for field in fields(self):
+            value = getattr(self, field.name)
+            if isinstance(value, int | float):
+                check = _CHECKS.get(field.name, check_not_negative)
+                check(field.name, value)
         self._check_choices()
         self._check_times()
 
@@ -276,19 +277,17 @@ class Recipe:
             )
 
     def _check_times(self) -> None:
-        if self.exposure_s is not None:
-            check_positive("exposure_s", self.exposure_s, unit="s")
-            if self.exposure_s > self.frame_interval_s * (1 + 1e-9):
-                raise InputError(
-                    f"exposure_s must not exceed frame_interval_s = {self.frame_interval_s:g} s (given {self.exposure_s:g})."
-                )
+        if self.exposure > self.frame_interval_s * (1 + 1e-9):
+            raise InputError(
+                f"exposure_s must not exceed frame_interval_s = {self.frame_interval_s:g} s (given {self.exposure:g})."
+            )
         if self.row_time_s * self.height_px > self.frame_interval_s * (1 + 1e-9):
             raise InputError(
                 f"row_time_s x height_px must not exceed frame_interval_s = {self.frame_interval_s:g} s "
                 f"(given {self.row_time_s:g} s x {self.height_px} rows)."
             )
         for number, times in enumerate(self.stimulus_table_s, start=1):
-            if not times or any(late <= early for early, late in zip(times, times[1:], strict=False)) or times[0] < 0:
+            if not times or any(late <= early for early, late in pairwise(times)) or times[0] < 0:
                 raise InputError(f"Trial {number}: stimulus times must be 0 or later and increase (given {times}).")
             if self.file_s is not None and times[-1] >= self.file_s:
                 raise InputError(
@@ -367,14 +366,11 @@ def _check_at_least(name: str, value: int, smallest: int) -> None:
         raise InputError(f"{name} must be a whole number of {smallest} or more (given {value}).")
 
 
-_POSITIVE = (
-    "pixel_size_um frame_interval_s trial_interval_s pulse_interval_s rise_s decay_s slow_decay_s psf_sigma_um spacing_um "
-    "photons q_dff facilitation_s background_um background_s drift_wave_s gain"
-).split()
-_NOT_NEGATIVE = (
-    "row_time_s first_s latency_s jitter_s bouton_radius_um spacing_sd_um wander_um shaft_fraction photons_cv n_boutons "
-    "silent_boutons dim_boutons q_spread q_cv recovery_s spontaneous_per_s specks_on_axon specks_off_axon "
-    "saturated_specks background_photons background_cv drift_walk_px drift_wave_px drift_jumps drift_jump_px "
-    "flash_photons read_noise_e offset_counts dead_pixels"
-).split()
-_FRACTIONS = "slow_fraction facilitation rundown failed_stimuli bleached".split()
+# Numbers must be 0 or more, and those named here more than that.
+_CHECKS: dict[str, Callable[[str, float], float]] = {
+    **dict.fromkeys(("slow_fraction", "rundown", "failed_stimuli", "bleached"), check_fraction),
+    **dict.fromkeys(("pixel_size_um", "frame_interval_s", "trial_interval_s", "pulse_interval_s"), check_positive),
+    **dict.fromkeys(("rise_s", "decay_s", "slow_decay_s", "facilitation_s"), check_positive),
+    **dict.fromkeys(("exposure_s", "saturation_dff", "psf_sigma_um", "spacing_um"), check_positive),
+    **dict.fromkeys(("photons", "q_dff", "background_um", "background_s", "drift_wave_s", "gain"), check_positive),
+}

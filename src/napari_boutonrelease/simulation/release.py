@@ -62,8 +62,8 @@ def site_probability(
 ) -> NDArray[np.float64]:
     """Chance that a site that holds a vesicle releases it at each stimulus.
 
-    Every trial starts from rest. A pulse raises the probability by `facilitation` of what is left to 1, and the rise
-    wears off with `facilitation_s` (Tsodyks & Markram 1997).
+    Every trial starts from rest. A pulse raises u by `facilitation` x p x (1 - u), p being the value at rest, and the
+    rise wears off with `facilitation_s` (Tsodyks & Markram 1997).
 
     Returns
     -------
@@ -78,8 +78,8 @@ def site_probability(
     for pulse in range(n_pulses):
         if pulse:
             left = np.exp(-(stimulus_s[:, pulse] - stimulus_s[:, pulse - 1]) / recipe.facilitation_s)
-            raised = current + recipe.facilitation * (1.0 - current)
-            current = np.where(rest > 0, rest + (raised - rest) * left, 0.0)
+            raised = np.minimum(current + recipe.facilitation * rest * (1.0 - current), 1.0)
+            current = rest + (raised - rest) * left
         probability[:, :, pulse] = np.where(np.isfinite(stimulus_s[:, pulse]), current, np.nan)
     return probability
 
@@ -208,4 +208,5 @@ def draw_sizes(*, mean_dff: NDArray[np.float64], recipe: Recipe, rng: np.random.
 
 def _mean_over_trials(values: NDArray[np.float64]) -> NDArray[np.float64]:
     present = np.isfinite(values)
-    return np.where(present, values, 0.0).sum(axis=1) / present.sum(axis=1)
+    mean: NDArray[np.float64] = np.where(present, values, 0.0).sum(axis=1) / present.sum(axis=1)
+    return mean

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
@@ -67,7 +68,7 @@ def draw_scene(recipe: Recipe, rng: np.random.Generator) -> Scene:
 
 def margin_px(recipe: Recipe) -> float:
     """Distance from the image border inside which no bouton is drawn: a spot and some drift."""
-    return 2.5 * np.hypot(recipe.psf_sigma_um, recipe.bouton_radius_um / 2) / recipe.pixel_size_um + 2.0
+    return 2.5 * math.hypot(recipe.psf_sigma_um, recipe.bouton_radius_um / 2) / recipe.pixel_size_um + 2.0
 
 
 def _long_axis(recipe: Recipe) -> int:
@@ -123,8 +124,7 @@ def _at(where: NDArray[np.float64], path: NDArray[np.float64], along: NDArray[np
 def _inside(recipe: Recipe, points: NDArray[np.float64]) -> NDArray[np.bool_]:
     margin = margin_px(recipe)
     far = np.array([recipe.height_px - 1 - margin, recipe.width_px - 1 - margin])
-    inside: NDArray[np.bool_] = np.all((points >= margin) & (points <= far), axis=1)
-    return inside
+    return np.all((points >= margin) & (points <= far), axis=1)
 
 
 def _draw_along(
@@ -138,8 +138,8 @@ def _draw_along(
     needed_um = (recipe.n_boutons - 1) * recipe.spacing_um
     if needed_um > room_um or not visible.size:
         raise InputError(
-            f"n_boutons = {recipe.n_boutons} at spacing_um = {recipe.spacing_um:g} need {needed_um:.1f} um of axon, but the "
-            f"image shows {room_um:.1f} um of it; use fewer boutons, a smaller spacing or a larger image."
+            f"n_boutons = {recipe.n_boutons} at spacing_um = {recipe.spacing_um:g} need {needed_um:.1f} um of axon, "
+            f"but the image shows {room_um:.1f} um of it; use fewer boutons, a smaller spacing or a larger image."
         )
     mean_px = recipe.spacing_um / recipe.pixel_size_um
     gaps = rng.normal(mean_px, recipe.spacing_sd_um / recipe.pixel_size_um, recipe.n_boutons - 1)
@@ -148,7 +148,7 @@ def _draw_along(
     if slack < 0:  # an unusually long chain is pressed into the image
         chain *= float(np.ptp(visible)) / chain[-1]
         slack = 0.0
-    return visible.min() + slack * rng.uniform(0.4, 0.6) + chain
+    return chain + float(visible.min()) + slack * rng.uniform(0.4, 0.6)
 
 
 def _draw_on_axon(
@@ -165,13 +165,16 @@ def _draw_on_axon(
         free = visible[np.all(np.abs(visible[:, None] - taken[None, :]) > apart, axis=1)]
         if not free.size:
             raise InputError(
-                f"specks_on_axon = {recipe.specks_on_axon} do not fit between the boutons; use fewer, or a wider spacing_um."
+                f"specks_on_axon = {recipe.specks_on_axon} do not fit between the boutons; use fewer of them or a "
+                "wider spacing_um."
             )
         taken = np.append(taken, rng.choice(free))
     return _at(taken[bouton_along.size :], path, along)
 
 
 def _draw_off_axon(recipe: Recipe, path: NDArray[np.float64], rng: np.random.Generator) -> NDArray[np.float64]:
+    from scipy.spatial import cKDTree
+
     apart = 1.5 / recipe.pixel_size_um
     wanted = recipe.specks_off_axon + recipe.saturated_specks
     rows, columns = np.mgrid[0 : recipe.height_px, 0 : recipe.width_px]
@@ -179,12 +182,11 @@ def _draw_off_axon(recipe: Recipe, path: NDArray[np.float64], rng: np.random.Gen
     places = places[_inside(recipe, places)]
     taken = path
     for _ in range(wanted):
-        nearest = np.min(np.hypot(places[:, :1] - taken[:, 0], places[:, 1:] - taken[:, 1]), axis=1)
-        places = places[nearest > apart]
+        places = places[cKDTree(taken).query(places)[0] > apart]
         if not places.size:
             raise InputError(
-                f"{wanted} specks off the axon do not fit into {recipe.height_px} x {recipe.width_px} px; use fewer, or a "
-                "larger image."
+                f"{wanted} specks off the axon do not fit into {recipe.height_px} x {recipe.width_px} px; use fewer, "
+                "or a larger image."
             )
         chosen = rng.choice(places) + rng.uniform(-0.5, 0.5, 2)
         taken = chosen[None, :] if taken is path else np.vstack([taken, chosen])

@@ -164,16 +164,18 @@ def read_truth(source: str | Path) -> Truth:
         )
     except (KeyError, AttributeError, TypeError, json.JSONDecodeError, UnicodeDecodeError) as error:
         raise InputError(
-            f"{path} is not the truth of a simulated recording ({error!r}); give the .truth.json file written with the movie."
+            f"{path} is not the truth of a simulated recording ({error!r}); give the .truth.json file that was written "
+            "with the movie."
         ) from error
 
 
 def _plain(value: Any) -> Any:
     if isinstance(value, tuple):
         return list(value)
+    plain = value.astype(object)
     if value.dtype.kind == "f":
-        return np.where(np.isfinite(value), value.astype(object), None).tolist()
-    return value.tolist()
+        plain[~np.isfinite(value)] = None
+    return plain.tolist()
 
 
 def _array(value: Any, kind: Any) -> Any:
