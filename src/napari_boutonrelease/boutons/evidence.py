@@ -50,9 +50,17 @@ def robust_variance(maps: NDArray[np.float32]) -> NDArray[np.float64]:
 
 
 def pixel_variance(
-    null: NDArray[np.float32], *, noise_factor: NDArray[np.float64], smooth_px: float, exclude: NDArray[np.bool_]
+    null: NDArray[np.float32],
+    *,
+    noise_factor: NDArray[np.float64],
+    mean_image: NDArray[np.floating],
+    smooth_px: float,
+    exclude: NDArray[np.bool_],
 ) -> NDArray[np.float64]:
     """Noise variance of each pixel of a map with noise factor 1, measured on the null maps.
+
+    Photon noise follows the mean image along a straight line, which is fitted over all pixels; what a place has beyond
+    it, by moving or flickering, is measured as a ratio to that line, pooled over neighbouring pixels.
 
     Parameters
     ----------
@@ -60,8 +68,10 @@ def pixel_variance(
         Responses where nothing was stimulated (counts).
     noise_factor : (n_null,) ndarray
         SD of a map in units of the SD of one frame's pixel.
+    mean_image : (y, x) ndarray
+        Mean of the frames (counts).
     smooth_px : float
-        Gaussian sigma by which the variances of neighbouring pixels are pooled (px).
+        Gaussian sigma of the pooling (px).
     exclude : (y, x) ndarray of bool
         Pixels without information.
 
@@ -74,9 +84,32 @@ def pixel_variance(
 
     variance = robust_variance(null / noise_factor[:, None, None].astype(np.float32))
     usable = ~exclude & (variance > 0)
+    if not np.any(usable):
+        return np.full(variance.shape, np.inf)
+    line = _photon_line(np.asarray(mean_image, dtype=np.float64), variance, usable)
     weight = gaussian_filter(usable.astype(np.float64), smooth_px)
-    pooled = gaussian_filter(np.where(usable, variance, 0.0), smooth_px) / np.maximum(weight, 1e-9)
-    return np.where(usable, pooled, np.inf)
+    ratio = gaussian_filter(np.where(usable, variance / line, 0.0), smooth_px) / np.maximum(weight, 1e-9)
+    return np.where(usable, line * ratio, np.inf)
+
+
+def _photon_line(
+    mean_image: NDArray[np.float64], variance: NDArray[np.float64], usable: NDArray[np.bool_]
+) -> NDArray[np.float64]:
+    """Variance of each pixel as a straight line of its mean, from medians over pixels of like brightness."""
+    mean, seen = mean_image[usable], variance[usable]
+    order = np.argsort(mean, kind="stable")
+    # Equal steps of brightness, not of rank: the few bright pixels decide the slope.
+    edges = np.linspace(mean[order[0]], mean[order[-1]], 41)
+    parts = np.split(order, np.searchsorted(mean[order], edges[1:-1]))
+    parts = [part for part in parts if len(part) >= 5]
+    level = float(np.median(seen))
+    if len(parts) < 3:
+        return np.full(mean_image.shape, level)
+    x = np.array([np.median(mean[part]) for part in parts])
+    y = np.array([np.median(seen[part]) for part in parts])
+    # The relative error of a median of variances falls with the root of their number.
+    slope, intercept = np.polyfit(x, y, 1, w=np.sqrt([len(part) for part in parts]) / np.maximum(y, 1e-6 * level))
+    return np.maximum(intercept + max(float(slope), 0.0) * mean_image, 0.2 * level)
 
 
 def matched_filter(
@@ -126,6 +159,7 @@ def standardise(
     null: NDArray[np.float32],
     evoked_factor: NDArray[np.float64],
     null_factor: NDArray[np.float64],
+    mean_image: NDArray[np.floating],
     spot_sigma_px: float,
     exclude: NDArray[np.bool_],
 ) -> MatchedMaps:
@@ -137,6 +171,8 @@ def standardise(
         Responses (counts).
     evoked_factor, null_factor : (n,) ndarray
         SD of each map in units of the SD of one frame's pixel.
+    mean_image : (y, x) ndarray
+        Mean of the frames (counts).
     spot_sigma_px : float
         Gaussian sigma of a bouton's image (px).
     exclude : (y, x) ndarray of bool
@@ -148,7 +184,9 @@ def standardise(
     """
     from scipy.ndimage import gaussian_filter
 
-    variance = pixel_variance(null, noise_factor=null_factor, smooth_px=spot_sigma_px, exclude=exclude)
+    variance = pixel_variance(
+        null, noise_factor=null_factor, mean_image=mean_image, smooth_px=1.5 * spot_sigma_px, exclude=exclude
+    )
     inverse = np.where(np.isfinite(variance), 1.0 / variance, 0.0)
 
     def read(maps: NDArray[np.float32], factor: NDArray[np.float64]) -> NDArray[np.float32]:
