@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from functools import partial
 from importlib.metadata import entry_points
 from importlib.util import find_spec
 from pathlib import Path
@@ -9,6 +10,11 @@ from pathlib import Path
 import numpy as np
 import pytest
 from npe2 import PluginManifest
+from npe2.manifest.utils import import_python_name
+
+from napari_boutonrelease import movie_from_array
+from napari_boutonrelease.recording.timing import resolve_timing
+from napari_boutonrelease.simulation import presets
 
 NAME = "napari-boutonrelease"
 
@@ -38,3 +44,22 @@ def test_every_command_can_be_imported(manifest):
 
 def test_sample_keys_are_pinned(manifest):
     assert {sample.key for sample in manifest.contributions.sample_data} == {"fast-pair", "slow-single"}
+
+
+@pytest.mark.parametrize("key", ["fast-pair", "slow-single"])
+def test_sample_layers_carry_calibration_and_protocol(manifest, key, monkeypatch):
+    """What napari makes of a sample: one image in s and µm, with the protocol that its frames obey (here of 3 trials)."""
+    monkeypatch.setattr(presets, "preset_recipe", partial(presets.preset_recipe, trials=3))
+    (sample,) = (entry for entry in manifest.contributions.sample_data if entry.key == key)
+    (command,) = (entry for entry in manifest.contributions.commands if entry.id == sample.command)
+    ((frames, layer, kind),) = import_python_name(command.python_name)()
+    protocol = layer["metadata"]["protocol"]
+    recipe = layer["metadata"]["truth"].recipe
+    assert kind == "image"
+    assert frames.shape == (recipe.n_frames, recipe.height_px, recipe.width_px)
+    assert layer["scale"] == (protocol.frame_interval_s, protocol.pixel_size_um, protocol.pixel_size_um)
+    assert (layer["units"], layer["axis_labels"]) == (("s", "um", "um"), ("t", "y", "x"))
+    timing = resolve_timing(movie_from_array(frames), protocol)
+    assert protocol.stimuli.trials == 3
+    assert timing.stimulus_s.shape == (protocol.stimuli.trials, protocol.stimuli.pulses)
+    assert np.ptp(frames) > 0

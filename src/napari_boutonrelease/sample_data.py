@@ -22,7 +22,8 @@ def slow_single() -> list[LayerData]:
 def _sample(preset: str) -> list[LayerData]:
     import numpy as np
 
-    from .simulation import preset_recipe, protocol_of, simulate_recording
+    from .simulation.movie import protocol_of, simulate_recording
+    from .simulation.presets import preset_recipe
 
     recipe = preset_recipe(preset)
     simulation = simulate_recording(recipe, rng=np.random.default_rng(_SEED))

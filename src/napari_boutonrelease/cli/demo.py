@@ -2,6 +2,8 @@
 
 import argparse
 
+from .options import add_seed_option
+
 EPILOG = "The recording is invented: release is drawn vesicle by vesicle and light photon by photon, from --seed."
 
 
@@ -15,7 +17,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         metavar="DIR",
         help="folder for the recording and its results (default: boutonrelease-demo)",
     )
-    parser.add_argument("--seed", type=int, default=1, metavar="N", help="seed of the recording (default: 1)")
+    add_seed_option(parser)
     parser.add_argument("--overwrite", action="store_true", help="replace a demo that is already there")
 
 
@@ -23,9 +25,13 @@ def run(args: argparse.Namespace) -> None:
     """Simulate, analyse, write, compare."""
     from pathlib import Path
 
+    import numpy as np
+
     from ..api import analyse
     from ..reports import check_can_write
-    from ..simulation import preset_recipe, read_truth, write_simulation
+    from ..simulation.presets import preset_recipe
+    from ..simulation.truth import read_truth
+    from ..simulation.write import write_simulation
     from .comparison import comparison_lines
     from .progress import progress_bar
     from .summary import summary_lines
@@ -33,12 +39,11 @@ def run(args: argparse.Namespace) -> None:
     folder = Path(args.out)
     results = folder / "demo.release"
     check_can_write(results, overwrite=args.overwrite)
-    folder.mkdir(parents=True, exist_ok=True)
     with progress_bar("simulating") as progress:
         recording = write_simulation(
-            preset_recipe("fast-pair"),
             folder / "demo.tif",
-            seed=args.seed,
+            preset_recipe("fast-pair"),
+            rng=np.random.default_rng(args.seed),
             overwrite=args.overwrite,
             progress=progress,
         )

@@ -19,6 +19,17 @@ _TYPES = {"number": float, "integer": int, "string": str}
 _PREFIX = "settings."
 
 
+def add_seed_option(parser: argparse.ArgumentParser) -> None:
+    """Give the parser the option --seed of a simulation."""
+
+    def seed(text: str) -> int:
+        if not text.isdecimal():
+            raise argparse.ArgumentTypeError(f"must be a whole number of 0 or more (given {text})")
+        return int(text)
+
+    parser.add_argument("--seed", type=seed, default=1, metavar="N", help="seed of every random number (default: 1)")
+
+
 def add_settings_options(parser: argparse.ArgumentParser) -> None:
     """Give the parser one option a setting, in a group a section. Only options that are given leave a trace."""
     import json

@@ -3,6 +3,7 @@
 import argparse
 
 from ..errors import InputError
+from .options import add_seed_option
 
 TYPE_CHECKING = False
 if TYPE_CHECKING:
@@ -52,7 +53,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         metavar="NAME",
         help=f"what kind of recording: {', '.join(PRESETS)} (default: fast-pair)",
     )
-    parser.add_argument("--seed", type=int, default=1, metavar="N", help="seed of every random number (default: 1)")
+    add_seed_option(parser)
     parser.add_argument("--file-per-trial", action="store_true", help="write a folder OUT with one file a trial")
     parser.add_argument("--overwrite", action="store_true", help="replace files that are already there")
     recording = parser.add_argument_group("recording (default: the preset's)")
@@ -71,13 +72,15 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 
 def run(args: argparse.Namespace) -> None:
     """Simulate and write."""
-    from ..simulation import write_simulation
+    import numpy as np
+
+    from ..simulation.write import write_simulation
     from .progress import progress_bar
 
-    recipe = requested_recipe(args)
+    recipe, rng = requested_recipe(args), np.random.default_rng(args.seed)
     with progress_bar("simulating") as progress:
-        paths = write_simulation(recipe, args.out, seed=args.seed, overwrite=args.overwrite, progress=progress)
-    print(*paths, sep="\n")
+        files = write_simulation(args.out, recipe, rng=rng, overwrite=args.overwrite, progress=progress)
+    print(files.movie, files.protocol, files.truth, sep="\n")
 
 
 def requested_recipe(args: argparse.Namespace) -> "Recipe":
@@ -88,7 +91,8 @@ def requested_recipe(args: argparse.Namespace) -> "Recipe":
     InputError
         If a setting is unknown or a value is refused.
     """
-    from ..simulation import preset_recipe, recipe_from_dict
+    from ..simulation.presets import preset_recipe
+    from ..simulation.recipe import recipe_from_dict
 
     values = preset_recipe(args.preset).as_dict()
     values |= {name: getattr(args, name) for name in _RECIPE_OPTIONS if getattr(args, name) is not None}
