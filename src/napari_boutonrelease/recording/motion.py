@@ -1,0 +1,302 @@
+"""Movement of the sample: one rigid sub-pixel shift per frame, against a reference built from the recording itself.
+
+First a sample of frames, spread over the recording, is aligned and averaged, coarsely and then finely; then every
+frame is located on that average (`registration`). What noise adds to a slow drift is taken out again by following
+the drift through time (`random_walk`). No frame is resampled but for the reference image.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from napari_boutonrelease.checks import check_positive
+from napari_boutonrelease.errors import InputError
+
+from .cubic_convolution import shift_frame_block
+from .random_walk import smooth_random_walk
+from .registration import Fit, Reference
+
+if TYPE_CHECKING:
+    from collections.abc import Callable
+
+    from numpy.typing import NDArray
+
+    from .light import Light
+    from .movie import Movie
+
+    FloatArray = NDArray[np.float64]
+
+__all__ = ["Drift", "measure_drift", "no_drift"]
+
+_MATCH = 0.5  # a frame that holds less than half of the structure it should does not show this reference
+_SAMPLE_PIXELS = 60_000_000  # pixels of all frames that the reference is built from
+_MOST_NOISE_PX = 1.0  # where photon noise leaves more doubt than this, a correction does not help
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Drift:
+    """Rigid movement of every frame. What lies at (y, x) in the reference lies at (y + dy, x + dx) in the frame.
+
+    Attributes
+    ----------
+    dy_px, dx_px : (n_frames,) ndarray of float
+        Drift, px; its median over the used frames is 0. Frames not used hold what their neighbours suggest.
+    match : (n_frames,) ndarray of float
+        How much of the reference's structure the frame shows: 1 as much as its light and noise let expect, 0 none.
+    used : (n_frames,) ndarray of bool
+        Frames that are good and match. The others must be left out of every fit.
+    reference : (y, x) ndarray of float
+        Mean of aligned frames, counts, in the coordinates that drift refers to.
+    noise_px : float
+        Typical standard error of one frame's shift along one axis before following the drift through time, px.
+    corrected : bool
+        False where nothing was corrected: not asked for, or nothing in the image to hold on to.
+    """
+
+    dy_px: FloatArray
+    dx_px: FloatArray
+    match: FloatArray
+    used: NDArray[np.bool_]
+    reference: FloatArray
+    noise_px: float
+    corrected: bool
+
+
+def no_drift(*, light: Light) -> Drift:
+    """Drift of 0 in every frame: no correction. Frames that `light` calls bad are not used."""
+    n_frames = len(light.bad_frame)
+    return Drift(
+        dy_px=np.zeros(n_frames),
+        dx_px=np.zeros(n_frames),
+        match=np.where(light.bad_frame, 0.0, 1.0),
+        used=~light.bad_frame,
+        reference=light.mean_image,
+        noise_px=float("nan"),
+        corrected=False,
+    )
+
+
+def measure_drift(
+    movie: Movie,
+    *,
+    light: Light,
+    max_shift_px: float,
+    block_frames: int,
+    progress: Callable[[int, int], None] | None = None,
+) -> Drift:
+    """Measure the rigid movement of every frame.
+
+    Where the image holds nothing to register on, or photon noise leaves a doubt of more than a pixel, the result is
+    that of `no_drift`: a correction would do harm.
+
+    Parameters
+    ----------
+    movie : Movie
+        The recording.
+    light : Light
+        Its noise, and the pixels and frames not to trust.
+    max_shift_px : float
+        Largest movement expected from the middle position along each axis, px, greater than 0.
+    block_frames : int
+        Frames held in memory at a time, at least 1.
+    progress : callable, optional
+        Called with (frames done, frames in all).
+
+    Returns
+    -------
+    Drift
+
+    Raises
+    ------
+    InputError
+        If a setting is out of range.
+    """
+    check_positive("max_shift_px", max_shift_px, unit="px")
+    if block_frames < 1:
+        raise InputError(f"block_frames must be 1 or more (given {block_frames}).")
+    n_frames, n_y, n_x = movie.shape
+    max_shift_px = min(max_shift_px, n_y / 3, n_x / 3)
+    sample = _sample_frames(light, n_y * n_x)
+    if len(sample) < 4 or min(n_y, n_x) < 8:
+        return no_drift(light=light)
+    frames = np.concatenate([_numbers(movie.read(int(k), int(k) + 1)) for k in sample])
+    if not _share_structure(frames, sample, light):
+        return no_drift(light=light)
+    reference = _build_reference(frames, sample, light, max_shift_px)
+
+    fits: list[Fit] = []
+    good = np.flatnonzero(~light.bad_frame)
+    for start in range(0, n_frames, block_frames):
+        stop = min(start + block_frames, n_frames)
+        here = ~light.bad_frame[start:stop]
+        if here.any():
+            block = _numbers(movie.read(start, stop))
+            fits.append(_locate(reference, block if here.all() else block[here], max_shift_px))
+        if progress is not None:
+            progress(stop, n_frames)
+    fit = Fit(**{name: np.concatenate([getattr(part, name) for part in fits]) for name in Fit.__slots__})
+    noise_px = float(np.median(np.hypot(fit.dy_sd_px, fit.dx_sd_px)) / np.sqrt(2.0))
+    if not noise_px <= _MOST_NOISE_PX:
+        return no_drift(light=light)
+
+    match, matched = _judge(fit)
+    inside = np.maximum(np.abs(fit.dy_px), np.abs(fit.dx_px)) < max_shift_px
+    used = np.zeros(n_frames, dtype=np.bool_)
+    used[good] = matched & inside
+    whole_match, drift = np.zeros(n_frames), []
+    whole_match[good] = match
+    for measured, sd in ((fit.dy_px, fit.dy_sd_px), (fit.dx_px, fit.dx_sd_px)):
+        raw, raw_sd = np.zeros(n_frames), np.ones(n_frames)
+        raw[good], raw_sd[good] = measured, sd
+        smooth = smooth_random_walk(raw, raw_sd, known=used)
+        drift.append(smooth - np.median(smooth[used]) if used.any() else smooth)
+    shown = used[sample]
+    if not shown.any():
+        return no_drift(light=light)
+    image, _ = _aligned_mean(frames[shown], drift[0][sample][shown], drift[1][sample][shown])
+    return Drift(
+        dy_px=drift[0],
+        dx_px=drift[1],
+        match=whole_match,
+        used=used,
+        reference=image,
+        noise_px=noise_px,
+        corrected=True,
+    )
+
+
+def _sample_frames(light: Light, n_pixels: int) -> NDArray[np.intp]:
+    """Frames for the reference: pairs of successive good frames, spread evenly over the recording."""
+    good = ~light.bad_frame
+    firsts = np.flatnonzero(good[:-1] & good[1:])
+    n_pairs = int(np.clip(_SAMPLE_PIXELS // n_pixels, 100, 1000)) // 2
+    if len(firsts) > n_pairs:
+        firsts = firsts[np.linspace(0, len(firsts) - 1, n_pairs).round().astype(int)]
+    return np.union1d(firsts, firsts + 1)
+
+
+def _numbers(frames: NDArray[np.generic]) -> NDArray[np.generic]:
+    """Return frames without NaN or infinity; pixels that hold them are dead and have no weight."""
+    if np.issubdtype(frames.dtype, np.floating):
+        return np.where(np.isfinite(frames), frames, 0)
+    return frames
+
+
+def _share_structure(frames: NDArray[np.generic], sample: NDArray[np.intp], light: Light) -> bool:
+    """Whether successive frames have more in common than a smooth background: else there is nothing to register."""
+    from scipy.ndimage import gaussian_filter
+
+    usable = ~(light.dead | light.saturated)
+    if not usable.any():
+        return False
+    weights = usable / light.variance_at(light.mean_image)
+    pairs = np.flatnonzero(np.diff(sample) == 1)
+    pairs = pairs[np.linspace(0, len(pairs) - 1, min(len(pairs), 100)).round().astype(int)]
+
+    def fine(frame: NDArray[np.generic]) -> FloatArray:
+        values = frame.astype(np.float64)
+        values[~usable] = np.median(values[usable])
+        result: FloatArray = gaussian_filter(values, 1.0) - gaussian_filter(values, 6.0)
+        return result
+
+    common = np.array([np.sum(weights * fine(frames[k]) * fine(frames[k + 1])) for k in pairs])
+    doubt = common.std(ddof=1) / np.sqrt(len(common)) if len(common) > 2 else np.inf
+    return bool(common.mean() > 5.0 * doubt)
+
+
+def _build_reference(
+    frames: NDArray[np.generic], sample: NDArray[np.intp], light: Light, max_shift_px: float
+) -> Reference:
+    """Align the sampled frames with each other, in three rounds, and average them."""
+    middle = int(np.argmin(np.abs(sample - np.median(sample))))
+    seed = frames[max(0, middle - 4) : middle + 4]
+    image, seen = _aligned_mean(seed, np.zeros(len(seed)), np.zeros(len(seed)))
+    reach = 2.0 * max_shift_px  # the middle frame may itself lie at one end of the drift
+    for round_ in range(3):
+        reference = _reference(image, seen, light)
+        if round_ < 2:
+            dy, dx = reference.find(frames, max_shift_px=reach)
+        factor = np.ones(len(frames))
+        if round_ > 0:
+            fit = reference.locate(frames, dy=dy, dx=dx, max_shift_px=reach)
+            dy, dx, factor = fit.dy_px, fit.dx_px, np.clip(fit.brightness, 0.25, 4.0)
+        dy, dx = dy - np.median(dy), dx - np.median(dx)
+        near = np.maximum(np.abs(dy), np.abs(dx)) <= max_shift_px
+        offset = light.offset_counts
+        image, seen = _aligned_mean(frames[near], dy[near], dx[near], factor=factor[near], offset=offset)
+    return _reference(image, seen, light)
+
+
+def _reference(image: FloatArray, seen: FloatArray, light: Light) -> Reference:
+    from scipy.ndimage import binary_dilation
+
+    return Reference(
+        image=image,
+        variance=light.variance_at(image),
+        known=seen > 0.2,
+        usable=~(binary_dilation(light.saturated) | light.dead),
+    )
+
+
+def _aligned_mean(
+    frames: NDArray[np.generic],
+    dy: FloatArray,
+    dx: FloatArray,
+    *,
+    factor: FloatArray | None = None,
+    offset: float = 0.0,
+) -> tuple[FloatArray, FloatArray]:
+    """Mean of frames in reference coordinates at their mean brightness, and the share of them that saw each pixel."""
+    n, n_y, n_x = frames.shape
+    factor = np.ones(n) if factor is None else factor / np.mean(factor)
+    total, seen, filled = np.zeros((n_y, n_x)), np.zeros((n_y, n_x)), np.zeros((n_y, n_x))
+    for k in range(n):
+        image = shift_frame_block(frames[k : k + 1], dy=dy[k : k + 1], dx=dx[k : k + 1])[0]
+        image = (image - np.float32(offset)) / np.float32(factor[k]) + np.float32(offset)
+        y, x = np.arange(n_y) + dy[k], np.arange(n_x) + dx[k]
+        inside = np.outer((y >= 0) & (y <= n_y - 1), (x >= 0) & (x <= n_x - 1))
+        total += np.where(inside, image, 0.0)
+        filled += image
+        seen += inside
+    return np.where(seen > 0, total / np.maximum(seen, 1.0), filled / n), seen / n
+
+
+def _locate(reference: Reference, frames: NDArray[np.generic], max_shift_px: float) -> Fit:
+    """Find and locate frames; those that lie apart from their neighbours are tried from there, too."""
+    from scipy.ndimage import median_filter
+
+    dy, dx = reference.find(frames, max_shift_px=max_shift_px)
+    fit = reference.locate(frames, dy=dy, dx=dx, max_shift_px=max_shift_px)
+    usual_y, usual_x = (median_filter(shift, size=9, mode="nearest") for shift in (fit.dy_px, fit.dx_px))
+    apart = np.flatnonzero(np.hypot(fit.dy_px - usual_y, fit.dx_px - usual_x) > 1.0)
+    if apart.size:
+        again = reference.locate(frames[apart], dy=usual_y[apart], dx=usual_x[apart], max_shift_px=max_shift_px)
+        better = again.misfit < fit.misfit[apart]
+        for name in Fit.__slots__:
+            getattr(fit, name)[apart[better]] = getattr(again, name)[better]
+    return fit
+
+
+def _judge(fit: Fit) -> tuple[FloatArray, NDArray[np.bool_]]:
+    """Match of each frame, from the correlation found over that expected at the light of its part of the recording."""
+    n = len(fit.dy_px)
+    parts = np.array_split(np.arange(n), int(np.clip(n // 50, 1, 20)))
+    centres = [float(part.mean()) for part in parts]
+    usual_brightness, usual_misfit = (
+        np.interp(np.arange(n), centres, [float(np.median(values[part])) for part in parts])
+        for values in (fit.brightness, fit.misfit)
+    )
+
+    def correlation(brightness: FloatArray, misfit: FloatArray) -> FloatArray:
+        explained = np.maximum(brightness, 0.0) ** 2 * fit.signal
+        result: FloatArray = np.sqrt(explained / np.maximum(explained + misfit * fit.n_pixels, 1e-300))
+        return result
+
+    expected = correlation(usual_brightness, usual_misfit)
+    match = np.clip(correlation(fit.brightness, fit.misfit) / np.maximum(expected, 1e-12), 0.0, 1.0)
+    # photon noise alone scatters the match of dim frames: no frame is given up for it
+    scatter = np.sqrt(usual_misfit / np.maximum(fit.signal, 1e-300)) / np.maximum(usual_brightness, 1e-12)
+    return match, match >= np.clip(1.0 - 5.0 * scatter, 0.0, _MATCH)
