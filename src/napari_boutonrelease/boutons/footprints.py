@@ -1,0 +1,424 @@
+"""Footprints: the linear weights with which a bouton's brightness is read from any frame.
+
+Weights come from a least-squares fit of the bouton's profile, its neighbours' profiles and a constant background, each
+pixel weighted by the inverse of its photon noise. One sum of products per frame then gives the height of the profile's
+peak in counts, with the background subtracted and the neighbours separated.
+
+At rest the bare axon shines under the bouton, too. It does not respond, so that it does not bias a response, but it
+would be read as part of the baseline. `shaft_counts` is what the weights see of it in the mean image, found by a second
+fit with two rays of axon; subtracted from the baseline, it leaves the brightness of the bouton itself.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Literal
+
+import numpy as np
+
+from ..errors import InputError
+from .shaft import shaft_rays
+from .spots import Patch, fit_spot, gaussian_patch, separated_weights, window
+
+if TYPE_CHECKING:
+    from numpy.typing import ArrayLike, NDArray
+
+FootprintMode = Literal["weighted", "disc", "adaptive"]
+
+_CORE = 0.5  # of the peak: pixels that the label image and `footprint_px` count
+_SEEN = 0.25  # of the peak: a saturated or dead pixel in here matters
+_CUT_SHARE = 0.02  # of the profile's energy: more than that beyond the border is an edge
+_ADAPTIVE_REACH = 2.5  # sigmas
+_RIM_SIGMAS = 1.5  # light of a drawn mask spills so far and must not count as background
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Footprints:
+    """How each bouton is read.
+
+    Attributes
+    ----------
+    y_px, x_px : (n,) ndarray
+        Centres in reference coordinates (px).
+    y0, x0 : (n,) ndarray of int
+        First row and column of each patch of weights.
+    weights : tuple of n (h, w) ndarray
+        The sum of weights times frame is the height of the profile's peak above background (counts). NaN where nothing
+        of the bouton can be seen.
+    naive_weights : tuple of n (h, w) ndarray
+        The same patches without separation from neighbours.
+    profiles : tuple of n (h, w) ndarray
+        Brightness of each bouton on the pixels of its own patch, peak 1.
+    label : (y, x) ndarray of int32
+        Core pixels; bouton i is i + 1, 0 is background.
+    footprint_px : (n,) ndarray of int
+        Number of core pixels.
+    shaft_counts : (n,) ndarray
+        What the weights read of the bare axon in the mean image (counts).
+    spot_sigma_px : float
+        Gaussian sigma of the profiles (px).
+    flags : tuple of n frozenset of str
+        `edge`, `saturated`, `dead_pixels`.
+    """
+
+    y_px: NDArray[np.float64]
+    x_px: NDArray[np.float64]
+    y0: NDArray[np.intp]
+    x0: NDArray[np.intp]
+    weights: tuple[NDArray[np.float64], ...]
+    naive_weights: tuple[NDArray[np.float64], ...]
+    profiles: tuple[NDArray[np.float64], ...]
+    label: NDArray[np.int32]
+    footprint_px: NDArray[np.intp]
+    shaft_counts: NDArray[np.float64]
+    spot_sigma_px: float
+    flags: tuple[frozenset[str], ...]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Optics:
+    """What the pixels around the boutons look like.
+
+    Attributes
+    ----------
+    mean_image : (y, x) ndarray
+        Mean of the movement-corrected frames (counts).
+    variance_image : (y, x) ndarray
+        Noise variance of one frame's pixel (counts²), greater than 0.
+    saturated, dead : (y, x) ndarray of bool
+        Pixels that cannot be used.
+    dy_range_px, dx_range_px : (float, float)
+        Smallest and largest drift over the used frames (px).
+    """
+
+    mean_image: NDArray[np.float64]
+    variance_image: NDArray[np.float64]
+    saturated: NDArray[np.bool_]
+    dead: NDArray[np.bool_]
+    dy_range_px: tuple[float, float]
+    dx_range_px: tuple[float, float]
+
+    def always_inside(self) -> NDArray[np.bool_]:
+        """Reference pixels that every frame shows, with the two pixels beside them that interpolation needs."""
+        height, width = self.mean_image.shape
+        rows = _inside(height, *self.dy_range_px)
+        columns = _inside(width, *self.dx_range_px)
+        return rows[:, None] & columns[None, :]
+
+    def usable(self) -> NDArray[np.bool_]:
+        """Pixels that carry information in every frame."""
+        return self.always_inside() & ~self._on_sample(self.saturated) & ~self._on_sample(self.dead)
+
+    def _on_sample(self, mask: NDArray[np.bool_]) -> NDArray[np.bool_]:
+        """A mask of the detector in reference coordinates, at mid drift."""
+        shift = tuple(-round((low + high) / 2) for low, high in (self.dy_range_px, self.dx_range_px))
+        moved = np.zeros_like(mask)
+        height, width = mask.shape
+        rows, columns = np.nonzero(mask)
+        rows, columns = rows + shift[0], columns + shift[1]
+        inside = (rows >= 0) & (rows < height) & (columns >= 0) & (columns < width)
+        moved[rows[inside], columns[inside]] = True
+        return moved
+
+
+def _inside(size: int, low: float, high: float) -> NDArray[np.bool_]:
+    index = np.arange(size)
+    if low == high == 0:
+        return np.ones(size, dtype=np.bool_)
+    return (index + low >= 1) & (index + high <= size - 2)
+
+
+def build_footprints(
+    *,
+    y_px: ArrayLike,
+    x_px: ArrayLike,
+    optics: Optics,
+    spot_sigma_px: float,
+    background_radius_px: float,
+    mode: FootprintMode,
+    response_image: NDArray[np.floating] | None,
+    response_variance: NDArray[np.floating] | None,
+) -> Footprints:
+    """Extraction weights of boutons at given places.
+
+    Parameters
+    ----------
+    y_px, x_px : (n,) array_like of float
+        Centres in reference coordinates (px).
+    optics : Optics
+        Mean image, noise, unusable pixels and range of movement.
+    spot_sigma_px : float
+        Gaussian sigma of a bouton's image (px).
+    background_radius_px : float
+        Radius within which the background is constant (px). A small one makes the background, and with it the trace,
+        noisy: at 10 sigmas it costs 4 % of the variance, at 5 sigmas 19 %.
+    mode : {"weighted", "disc", "adaptive"}
+        Gaussian profile with photon-noise weights; plain disc of half-maximum diameter with equal weights; or the
+        profile seen in `response_image`, shrunk towards the Gaussian by as much as it is noise.
+    response_image, response_variance : (y, x) ndarray or None
+        Mean response and its variance, for `adaptive`.
+
+    Returns
+    -------
+    Footprints
+
+    Raises
+    ------
+    InputError
+        If `adaptive` is asked for without a response image.
+    """
+    ys, xs = np.atleast_1d(np.asarray(y_px, dtype=np.float64)), np.atleast_1d(np.asarray(x_px, dtype=np.float64))
+    shape = (optics.mean_image.shape[0], optics.mean_image.shape[1])
+    profiles = [gaussian_patch(y, x, sigma_px=spot_sigma_px, shape=shape) for y, x in zip(ys, xs, strict=True)]
+    precision = np.where(optics.usable(), 1.0 / optics.variance_image, 0.0)
+    if mode == "disc":
+        profiles = [_disc(profile) for profile in profiles]
+        precision = np.where(precision > 0, 1.0, 0.0)
+    elif mode == "adaptive":
+        if response_image is None or response_variance is None:
+            raise InputError("Adaptive footprints need the mean response image and its variance; give both, or use weighted.")
+        profiles = [
+            _adapted(profile, y, x, image=response_image, variance=response_variance, sigma_px=spot_sigma_px)
+            for profile, y, x in zip(profiles, ys, xs, strict=True)
+        ]
+    return _assemble(
+        ys, xs, profiles, optics=optics, precision=precision, spot_sigma_px=spot_sigma_px, radius_px=background_radius_px, label=None
+    )
+
+
+def footprints_from_labels(
+    label: NDArray[np.integer], *, optics: Optics, spot_sigma_px: float, background_radius_px: float
+) -> Footprints:
+    """Extraction weights of drawn masks: the mean over the mask, background and neighbouring masks separated.
+
+    Parameters
+    ----------
+    label : (y, x) ndarray of int
+        0 is background; every other value is a bouton, in ascending order.
+    optics : Optics
+        Mean image, noise, unusable pixels and range of movement.
+    spot_sigma_px : float
+        Gaussian sigma of a bouton's image (px); 1.5 sigmas around the masks do not count as background.
+    background_radius_px : float
+        Radius within which the background is constant (px).
+
+    Returns
+    -------
+    Footprints
+    """
+    from scipy.ndimage import distance_transform_edt, find_objects
+
+    ids, dense = np.unique(label, return_inverse=True)
+    dense = dense.reshape(label.shape) + (0 if ids[0] == 0 else 1)
+    profiles: list[Patch] = []
+    centres: list[tuple[float, float]] = []
+    for index, box in enumerate(find_objects(dense), start=1):
+        mask = (dense[box] == index).astype(np.float64)
+        rows, columns = np.nonzero(mask)
+        centres.append((rows.mean() + box[0].start, columns.mean() + box[1].start))
+        profiles.append(Patch(y0=box[0].start, x0=box[1].start, values=mask))
+    ys, xs = np.array(centres).reshape(-1, 2).T
+    rim = (dense == 0) & (distance_transform_edt(dense == 0) <= _RIM_SIGMAS * spot_sigma_px)
+    precision = np.where(optics.usable() & ~rim, 1.0 / optics.variance_image, 0.0)
+    widest = max((max(profile.values.shape) for profile in profiles), default=0)
+    return _assemble(
+        ys,
+        xs,
+        profiles,
+        optics=optics,
+        precision=precision,
+        spot_sigma_px=spot_sigma_px,
+        radius_px=background_radius_px + widest / 2,
+        label=dense.astype(np.int32),
+    )
+
+
+def _assemble(
+    ys: NDArray[np.float64],
+    xs: NDArray[np.float64],
+    profiles: Sequence[Patch],
+    *,
+    optics: Optics,
+    precision: NDArray[np.float64],
+    spot_sigma_px: float,
+    radius_px: float,
+    label: NDArray[np.int32] | None,
+) -> Footprints:
+    weights, naive = (
+        separated_weights(
+            y_px=ys, x_px=xs, profiles=profiles, inverse_variance=precision, radius_px=radius_px, separate=separate
+        )
+        for separate in (True, False)
+    )
+    label = _core_labels(profiles, optics.mean_image.shape) if label is None else label
+    shaft = [
+        _shaft_counts(i, ys, xs, profiles, weights[i], optics=optics, precision=precision, sigma_px=spot_sigma_px, radius_px=radius_px)
+        for i in range(len(ys))
+    ]
+    return Footprints(
+        y_px=ys,
+        x_px=xs,
+        y0=np.array([patch.y0 for patch in weights], dtype=np.intp),
+        x0=np.array([patch.x0 for patch in weights], dtype=np.intp),
+        weights=tuple(patch.values for patch in weights),
+        naive_weights=tuple(patch.values for patch in naive),
+        profiles=tuple(profile.onto(patch) for profile, patch in zip(profiles, weights, strict=True)),
+        label=label,
+        footprint_px=np.bincount(label.ravel(), minlength=len(ys) + 1)[1 : len(ys) + 1],
+        shaft_counts=np.array(shaft, dtype=np.float64),
+        spot_sigma_px=spot_sigma_px,
+        flags=tuple(_flags(y, x, profile, optics) for y, x, profile in zip(ys, xs, profiles, strict=True)),
+    )
+
+
+def _disc(profile: Patch) -> Patch:
+    return Patch(y0=profile.y0, x0=profile.x0, values=(profile.values >= 0.5).astype(np.float64))
+
+
+def _adapted(
+    profile: Patch,
+    y: float,
+    x: float,
+    *,
+    image: NDArray[np.floating],
+    variance: NDArray[np.floating],
+    sigma_px: float,
+) -> Patch:
+    """The profile seen in an image, moved towards the Gaussian by the share of the difference that noise explains."""
+    seen = image[profile.slices].astype(np.float64)
+    noise = np.maximum(variance[profile.slices].astype(np.float64), 1e-30)
+    energy = np.sum(profile.values**2 / noise)
+    height = np.sum(profile.values * seen / noise) / energy
+    rows, columns = np.mgrid[profile.slices]
+    near = np.hypot(rows - y, columns - x) <= _ADAPTIVE_REACH * sigma_px
+    if height <= 0 or not np.any(near):
+        return profile
+    rest = np.where(near, seen / height - profile.values, 0.0)
+    excess = np.sum(np.where(near, rest**2 * height**2 / noise, 0.0))
+    trust = max(0.0, 1.0 - np.count_nonzero(near) / max(float(excess), 1e-30))
+    return Patch(y0=profile.y0, x0=profile.x0, values=np.maximum(profile.values + trust * rest, 0.0))
+
+
+def _core_labels(profiles: Sequence[Patch], shape: tuple[int, ...]) -> NDArray[np.int32]:
+    """Pixels above half of a profile's peak, each with the profile that is brightest there."""
+    label = np.zeros(shape, dtype=np.int32)
+    best = np.zeros(shape)
+    for index, profile in enumerate(profiles, start=1):
+        wins = (profile.values >= _CORE) & (profile.values > best[profile.slices])
+        label[profile.slices][wins] = index
+        best[profile.slices][wins] = profile.values[wins]
+    return label
+
+
+def _shaft_counts(
+    index: int,
+    ys: NDArray[np.float64],
+    xs: NDArray[np.float64],
+    profiles: Sequence[Patch],
+    weights: Patch,
+    *,
+    optics: Optics,
+    precision: NDArray[np.float64],
+    sigma_px: float,
+    radius_px: float,
+) -> float:
+    """What the weights see of the bare axon: their reading of the mean image, less the height fitted beside two rays."""
+    if not np.all(np.isfinite(weights.values)):
+        return float("nan")
+    near = np.flatnonzero(np.hypot(ys - ys[index], xs - xs[index]) < radius_px + 4 * sigma_px)
+    image = Patch(y0=weights.y0, x0=weights.x0, values=np.asarray(optics.mean_image[weights.slices], dtype=np.float64))
+    # Equal weights: the axon's course is a matter of light, not of noise.
+    used = np.where(precision[weights.slices] > 0, 1.0, 0.0)
+    columns = [profiles[index].onto(weights).ravel(), np.ones(image.values.size)]
+    columns += [profiles[j].onto(weights).ravel() for j in near if j != index]
+    columns = [column for column in columns if np.sum(used.ravel() * column**2) > 1e-6]
+    others = np.stack(columns)
+    rays = shaft_rays(image, y_px=ys[index], x_px=xs[index], precision=used, other_columns=others, sigma_px=sigma_px)
+    design = np.vstack([others, rays]) * used.ravel()
+    height = float(np.linalg.lstsq(design.T, image.values.ravel() * used.ravel(), rcond=1e-8)[0][0])
+    return float(np.sum(weights.values * image.values)) - height
+
+
+def _flags(y: float, x: float, profile: Patch, optics: Optics) -> frozenset[str]:
+    found = set()
+    seen = profile.values >= _SEEN
+    if np.any(optics._on_sample(optics.saturated)[profile.slices] & seen):
+        found.add("saturated")
+    if np.any(optics._on_sample(optics.dead)[profile.slices] & seen):
+        found.add("dead_pixels")
+    energy = profile.values**2
+    inside = optics.always_inside()[profile.slices]
+    height, width = optics.mean_image.shape
+    reach = 0.5 * min(profile.values.shape)
+    beyond = min(y + 0.5, x + 0.5, height - 0.5 - y, width - 0.5 - x) < min(reach, 2.0)
+    if beyond or np.sum(energy * ~inside) > _CUT_SHARE * np.sum(energy):
+        found.add("edge")
+    return frozenset(found)
+
+
+def crosstalk_matrix(footprints: Footprints) -> NDArray[np.float64]:
+    """How much of each bouton's light the others' unseparated weights would read.
+
+    Returns
+    -------
+    (n, n) ndarray
+        Element (i, j): reading of bouton i, with its own profile and a background alone, of a neighbour j of height 1.
+        The diagonal is 1.
+    """
+    n = len(footprints.y_px)
+    matrix = np.eye(n)
+    patches = [
+        Patch(y0=int(y0), x0=int(x0), values=values)
+        for y0, x0, values in zip(footprints.y0, footprints.x0, footprints.profiles, strict=True)
+    ]
+    for i in range(n):
+        frame = Patch(y0=patches[i].y0, x0=patches[i].x0, values=footprints.naive_weights[i])
+        for j in range(n):
+            if i != j:
+                matrix[i, j] = float(np.sum(frame.values * patches[j].onto(frame)))
+    return matrix
+
+
+def estimate_spot_sigma(
+    image: NDArray[np.floating], *, y_px: ArrayLike, x_px: ArrayLike, start_sigma_px: float, usable: NDArray[np.bool_]
+) -> float:
+    """Median Gaussian sigma of the spots that stand alone in an image.
+
+    Each is fitted over 2.5 sigmas with a free width. In a mean image the shaft widens a spot a little; widths from
+    responses, where a detection has them, are to be preferred.
+
+    Parameters
+    ----------
+    image : (y, x) ndarray
+        Mean image or mean response (counts).
+    y_px, x_px : (n,) array_like of float
+        Places (px).
+    start_sigma_px : float
+        First guess (px), returned where no spot stands alone.
+    usable : (y, x) ndarray of bool
+        Pixels to fit.
+
+    Returns
+    -------
+    float
+        Sigma (px), between 0.6 and 1.7 times the first guess.
+    """
+    ys, xs = np.asarray(y_px, dtype=np.float64), np.asarray(x_px, dtype=np.float64)
+    shape = (image.shape[0], image.shape[1])
+    sigmas = []
+    for y, x in zip(ys, xs, strict=True):
+        if np.sum(np.hypot(ys - y, xs - x) < 5 * start_sigma_px) > 1:
+            continue
+        y0, y1, x0, x1 = window(y, x, radius_px=2.5 * start_sigma_px, shape=shape)
+        weight = usable[y0:y1, x0:x1].astype(np.float64)
+        if np.mean(weight) < 0.9:
+            continue
+        _, _, sigma, height = fit_spot(
+            image[y0:y1, x0:x1].astype(np.float64), inverse_variance=weight, y=y - y0, x=x - x0, sigma=start_sigma_px, free_sigma=True
+        )
+        if height > 0:
+            sigmas.append(sigma)
+    if not sigmas:
+        return start_sigma_px
+    return float(np.clip(np.median(sigmas), 0.6 * start_sigma_px, 1.7 * start_sigma_px))
