@@ -63,7 +63,7 @@ class RegularStimuli:
         if self.trials > 1 and self.trial_interval_s is not None and self.train_s >= self.trial_interval_s:
             raise ProtocolError(
                 f"[stimuli] the {self.pulses} pulses of a trial last {self.train_s:g} s, but the next trial begins "
-                f"after trial_interval_s = {self.trial_interval_s:g}: check pulses, pulse_interval_s and trial_interval_s."
+                f"after trial_interval_s = {self.trial_interval_s:g}: check pulses and both intervals."
             )
 
     @property

@@ -16,7 +16,6 @@ from ..errors import MovieError
 from .tiff_layout import TiffLayout, read_layout
 from .tiff_pages import TiffPages, cut_short, list_pages
 
-_NO_COMPRESSION = 1
 _INSTALL = 'pip install "napari-boutonrelease[codecs]"'
 
 
@@ -58,7 +57,7 @@ class TiffFrames:
                 offset=int(self._offsets[start, 0]),
                 strides=(self._stride, width * self._stored.itemsize, self._stored.itemsize),
             )
-            return view if self._stored == self.dtype and self._stored.isnative else view.astype(self.dtype)
+            return view if self._stored == self.dtype else view.astype(self.dtype)
         block = np.zeros((n_frames, height, width), dtype=self.dtype)
         for k in range(n_frames):
             self._read_frame(data, start + k, block[k])
@@ -177,8 +176,8 @@ def _check_gray(pages: TiffPages, name: str) -> None:
 def _plain_frames(pages: TiffPages, frame_bytes: int, itemsize: int) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
     """Offset and length of each page as one piece where it is stored unpacked in one piece; else its segments."""
     image, offsets, byte_counts = pages.image, pages.offsets, pages.byte_counts
-    unpacked = image["compression"] == _NO_COMPRESSION and image["predictor"] == 1 and not image["tile width"]
-    if not unpacked or image["bits per sample"] != 8 * itemsize:
+    as_they_are = {"compression": 1, "predictor": 1, "fill order": 1, "tile width": 0, "bits per sample": 8 * itemsize}
+    if any(image[title] != value for title, value in as_they_are.items()):
         return offsets, byte_counts
     in_one_piece = (np.diff(offsets, axis=1) == byte_counts[:, :-1]).all()
     whole = byte_counts.sum(axis=1) == frame_bytes
@@ -196,6 +195,6 @@ def _constant_stride(offsets: NDArray[np.int64], frame_bytes: int) -> int | None
 
 
 def _decoding_error(name: str, frame: int, error: Exception) -> MovieError:
-    if "imagecodecs" in str(error):
-        return MovieError(f"{name} is packed in a way that needs a further package ({error}): {_INSTALL}")
+    if isinstance(error, ImportError) or "imagecodecs" in str(error):
+        return MovieError(f"{name} is packed in a way that needs the package imagecodecs: {_INSTALL}")
     return MovieError(f"{name}: frame {frame} cannot be unpacked ({error}): the file is damaged. Copy it again.")

@@ -119,10 +119,10 @@ def read_layout(tiff: Any, *, n_pages: int, height: int, width: int, name: str) 
         If the description contradicts the pages.
     """
     page = tiff.pages.first
+    if tiff.is_ome:  # before ImageJ: some programs write both, and OME says more
+        return _ome_layout(page.description, n_pages, name)
     if tiff.is_imagej:
         return _imagej_layout(tiff.imagej_metadata or {}, page, n_pages, name)
-    if tiff.is_ome:
-        return _ome_layout(page.description, n_pages, name)
     pixel = _tag_pixel_size(page, name)
     found_in = {} if pixel is None else {"pixel_size_um": "TIFF resolution"}
     axes = "T"

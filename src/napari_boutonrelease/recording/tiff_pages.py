@@ -25,6 +25,7 @@ _IMAGE_TAGS = {
     "height": (257, 0),
     "bits per sample": (258, 1),
     "compression": (259, 1),
+    "fill order": (266, 1),
     "samples per pixel": (277, 1),
     "planar configuration": (284, 1),
     "predictor": (317, 1),
@@ -111,7 +112,7 @@ def list_pages(data: mmap, *, name: str) -> TiffPages:
 def cut_short(name: str, n_whole: int, n_pages: int, *, needed: int, present: int) -> MovieError:
     """Return the error for a file that ends before its pixels do."""
     return MovieError(
-        f"{name} is cut short: it needs {needed} bytes for {n_pages} frames but has {present}; the first {n_whole} are "
+        f"{name} is cut short: it needs {needed} bytes for {n_pages} images but has {present}; the first {n_whole} are "
         "whole. Copy or export the file again."
     )
 
