@@ -1,0 +1,105 @@
+"""The output folder of one recording, written beside and moved into place whole."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from ..analysis.columns import TABLES
+from .arrays import write_label_image, write_traces, write_weights
+from .datapackage import describe_package
+from .folder import MARK, PACKAGE, replaced_whole
+from .strict_json import write_json
+from .tables import write_table
+
+if TYPE_CHECKING:
+    from matplotlib.figure import Figure
+
+    from ..analysis.results import AnalysisResult
+
+    Writer = Callable[[Path], None]
+
+
+def write_result(
+    result: AnalysisResult,
+    folder: Path,
+    *,
+    overwrite: bool,
+    figures: bool = True,
+    extra_files: Mapping[str, Writer] | None = None,
+    progress: Callable[[int, int], None] | None = None,
+) -> Path:
+    """Write everything found in one recording into a folder, whole or not at all.
+
+    Parameters
+    ----------
+    result : AnalysisResult
+        What was found.
+    folder : Path
+        Folder to be made, or replaced if it holds results.
+    overwrite : bool
+        Whether results that are there may be replaced.
+    figures : bool
+        Whether to draw the report and the figures.
+    extra_files : mapping of str to callable, optional
+        Further files that belong to the results: name and what writes it, given the path.
+    progress : callable, optional
+        Called with (done, total) files.
+
+    Returns
+    -------
+    Path
+        The folder.
+
+    Raises
+    ------
+    OutputError
+        If the folder holds results and `overwrite` is false, holds anything else, or cannot be written. What was
+        there stays as it was.
+    """
+    folder = Path(folder)
+    writers = _writers(result, figures=figures) | dict(extra_files or {})
+    total = len(writers) + 1
+    with replaced_whole(folder, overwrite=overwrite) as work:
+        for done, (name, write) in enumerate(writers.items()):
+            if progress is not None:
+                progress(done, total)
+            path = work / name
+            path.parent.mkdir(exist_ok=True)
+            write(path)
+        created = result.provenance.get("created")
+        package = describe_package(work, name=result.name, created=created if isinstance(created, str) else None)
+        write_json(package, work / PACKAGE)
+    if progress is not None:
+        progress(total, total)
+    return folder
+
+
+def _writers(result: AnalysisResult, *, figures: bool) -> dict[str, Writer]:
+    """Every file by name and what writes it."""
+    writers: dict[str, Writer] = {f"{table}.csv": _table_writer(result, table) for table in TABLES}
+    writers["traces.npz"] = lambda path: write_traces(result, path)
+    writers["footprints.tif"] = lambda path: write_label_image(result, path)
+    if len(result.footprints.weights):
+        writers["footprint_weights.tif"] = lambda path: write_weights(result, path)
+    writers["summary.json"] = lambda path: write_json(result.summary, path)
+    writers[MARK] = lambda path: write_json(result.provenance, path)
+    if figures:
+        from .figures import figures_of
+        from .report import write_report
+
+        writers["report.pdf"] = lambda path: write_report(result, path)
+        for stem, draw in figures_of(result).items():
+            writers[f"figures/{stem}.svg"] = _figure_writer(draw)
+    return writers
+
+
+def _table_writer(result: AnalysisResult, table: str) -> Writer:
+    return lambda path: write_table(getattr(result, table), path, table=table)
+
+
+def _figure_writer(draw: Callable[[], Figure]) -> Writer:
+    from .figures import write_figure
+
+    return lambda path: write_figure(draw(), path)

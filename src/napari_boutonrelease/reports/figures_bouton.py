@@ -1,0 +1,322 @@
+"""One bouton on half a page: its whole trace, its trials overlaid, its amplitudes with the model, its estimates."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+from matplotlib.axes import Axes
+from matplotlib.collections import LineCollection
+from matplotlib.figure import Figure
+from numpy.typing import NDArray
+
+from ..analysis.results import AnalysisResult
+from .facts import amplitude_grid, frame_interval_s, number, texts, values
+from .figures_page import Area, blank_figure, wrapped
+from .figures_style import (
+    EVOKED,
+    FIT,
+    HAIRLINE,
+    HEAD,
+    INK,
+    MUTED,
+    NULL,
+    PULSE_2,
+    SMALL,
+    say_nothing_to_show,
+    styled,
+)
+from .histogram import amplitude_density, bin_edges, fitted_components
+from .words import MISSING, fixed, short, with_limits
+
+BLOCK_MM = (178.0, 126.0)
+_TRACE_BINS = 900
+_MANY_POINTS = 20_000
+_QUANTITIES = {"m": "m (vesicles)", "n_sites": "n_sites", "p_site": "p_site", "q": "q (dF/F)"}
+
+
+@styled
+def figure_bouton(result: AnalysisResult, row: int) -> Figure:
+    """Draw the block of the bouton in row `row` of the table."""
+    figure = blank_figure(BLOCK_MM[0] + 8.0, BLOCK_MM[1] + 8.0)
+    draw_bouton(Area.of(figure, margin=4.0), result, row)
+    return figure
+
+
+def draw_bouton(area: Area, result: AnalysisResult, row: int) -> None:
+    """Draw the block of one bouton."""
+    below = _draw_heading(area, result, row)
+    _draw_trace(area.axes(14.0, below + 6.5, area.width - 30.0, 17.0), result, row)
+    top, high = below + 40.5, 30.0
+    _draw_trials(area.axes(14.0, top, 42.0, high), result, row)
+    _draw_histogram(area.axes(70.0, top, 50.0, high), result, row)
+    _draw_release_estimates(area.axes(148.0, top, 29.0, high), result, row)
+    foot = top + high + 11.0
+    _write_estimates(area.part(0.0, foot, area.width, max(area.height - foot, 0.0)), result, row)
+
+
+def _draw_heading(area: Area, result: AnalysisResult, row: int) -> float:
+    """Write the name, the numbers to quote and the flags; return the y below."""
+    boutons = result.boutons
+    one = {name: float(values(boutons, name)[row]) for name in _HEADING_NUMBERS}
+    area.rule(0.0, 0.0, area.width)
+    area.text(0.0, 2.0, f"Bouton {one['bouton']:g}", size=HEAD + 1.0, weight="bold")
+    place = f"{fixed(one['axon_um'], decimals=1)} µm along the axon" if math.isfinite(one["axon_um"]) else ""
+    place = place or f"y {one['y_px']:.1f}, x {one['x_px']:.1f} px"
+    trials = "" if math.isnan(one["trials"]) else f"{one['trials']:g} usable trials"
+    found = texts(boutons, "found_by")[row]
+    about = [place, f"found by {found}" if found else "", f"F0 {short(one['f0'], digits=3)} counts", trials]
+    area.text(27.0, 2.9, "   ·   ".join(part for part in about if part), color=MUTED)
+    model, fit = texts(boutons, "quantal_model")[row], one["fit_p"]
+    numbers = {
+        "p_release": with_limits(one["p_release"], one["p_release_lo"], one["p_release_hi"]),
+        "one vesicle q (dF/F)": with_limits(one["q"], one["q_lo"], one["q_hi"], decimals=3),
+        "noise_sd (dF/F)": fixed(one["noise_sd"], decimals=3),
+        "paired-pulse ratio": with_limits(one["ppr"], one["ppr_lo"], one["ppr_hi"]),
+        "release model": (model or MISSING) + (f", fit p {short(fit)}" if math.isfinite(fit) else ""),
+    }
+    for x, (name, text) in zip((0.0, 38.0, 79.0, 106.0, 143.0), numbers.items(), strict=True):
+        area.text(x, 8.2, name, size=SMALL, color=MUTED)
+        area.text(x, 11.3, text)
+    flags = texts(boutons, "flags")[row].replace(";", ", ")
+    return area.paragraph(
+        0.0, 15.6, area.width, f"Flags: {flags}" if flags else "No flags.", color=FIT if flags else MUTED
+    )
+
+
+_HEADING_NUMBERS = (
+    *("bouton", "axon_um", "y_px", "x_px", "trials", "f0", "fit_p", "p_release", "p_release_lo", "p_release_hi"),
+    *("q", "q_lo", "q_hi", "noise_sd", "ppr", "ppr_lo", "ppr_hi"),
+)
+
+
+def _draw_trace(axes: Axes, result: AnalysisResult, row: int) -> None:
+    """Draw the whole recording as an envelope, with the stimuli below and the calls above."""
+    trace, unit = result.dff[row], "dF/F"
+    if not np.isfinite(trace).any():
+        trace, unit = result.f[row], "F (counts)"
+    if not np.isfinite(trace).any():
+        say_nothing_to_show(axes, "There is no trace of this bouton.")
+        return
+    axes.plot(*envelope(result.time_s, trace), color=INK, linewidth=0.45)
+    axes.set_ylabel(unit)
+    axes.set_xlabel("time (s)")
+    axes.set_xlim(float(result.time_s[0]), float(result.time_s[-1]) + frame_interval_s(result))
+    calls = amplitude_grid(result, "called")[row]
+    strips = [("stimuli", -0.07, result.stimulus_s[np.isfinite(result.stimulus_s)], NULL)]
+    strips.append(("calls", 1.08, result.stimulus_s[calls == 1], EVOKED))
+    spontaneous = values(result.spontaneous, "bouton") == float(values(result.boutons, "bouton")[row])
+    if spontaneous.any():
+        strips.append(("spontaneous", 1.24, values(result.spontaneous, "time_s")[spontaneous], PULSE_2))
+    axes.spines["bottom"].set_position(("axes", -0.13))
+    for name, height, times, colour in strips:
+        axes.plot(
+            times,
+            np.full(len(times), height),
+            "|",
+            color=colour,
+            markersize=4.2,
+            markeredgewidth=0.7,
+            transform=axes.get_xaxis_transform(),
+            clip_on=False,
+        )
+        axes.text(1.008, height, name, transform=axes.transAxes, va="center", fontsize=SMALL - 0.4, color=MUTED)
+
+
+def envelope(
+    time_s: NDArray[np.float64], trace: NDArray[np.float64]
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Thin a long trace to the least and greatest value of each bin, so that no peak is lost.
+
+    Parameters
+    ----------
+    time_s, trace : (n_frames,) ndarray
+        Times and values; NaN values leave a gap.
+
+    Returns
+    -------
+    times, envelope : (n,) ndarray
+        The trace itself where it is short already.
+    """
+    n_bins = len(trace) // 2 if len(trace) <= 2 * _TRACE_BINS else _TRACE_BINS
+    if len(trace) <= 2 * _TRACE_BINS:
+        return time_s, trace
+    size = -(-len(trace) // n_bins)
+    padded = np.full(size * -(-len(trace) // size), np.nan)
+    padded[: len(trace)] = trace
+    bins = padded.reshape(-1, size)
+    seen = np.isfinite(bins).any(axis=1)
+    limits = np.full((len(bins), 2), np.nan)
+    limits[seen] = np.stack([np.nanmin(bins[seen], axis=1), np.nanmax(bins[seen], axis=1)], axis=1)
+    starts = time_s[::size]
+    step = (time_s[-1] - time_s[0]) / max(len(bins), 1)
+    return np.stack([starts, starts + 0.5 * step], axis=1).ravel(), limits.ravel()
+
+
+def _draw_trials(axes: Axes, result: AnalysisResult, row: int) -> None:
+    """Overlay the trials on their first stimulus, with their mean and the fitted response."""
+    axes.set_title("trials, mean and fitted response", loc="left", color=MUTED, fontsize=SMALL, pad=3)
+    since, level = _aligned(result, row)
+    if not np.isfinite(level).any():
+        say_nothing_to_show(axes, "no usable trial")
+        return
+    lines = [np.column_stack(pair) for pair in zip(1e3 * since, level, strict=True)]
+    lines = [line[np.isfinite(line).all(axis=1)] for line in lines]
+    many = level.size > _MANY_POINTS
+    axes.add_collection(LineCollection(lines, colors=NULL, linewidths=0.35, alpha=0.45, rasterized=many))
+    grid, mean = _binned_mean(since, level, frame_interval_s(result))
+    axes.plot(1e3 * grid, mean, color=INK, linewidth=1.1, label="mean")
+    amplitudes = np.array([_mean(one) for one in amplitude_grid(result, "amplitude")[row].T])
+    delays = result.stimulus_s - result.stimulus_s[:, :1]
+    exposure = number(result, "recording.exposure_s")
+    exposure = exposure if exposure > 0 else frame_interval_s(result)
+    fitted = np.zeros(400)
+    fine = np.linspace(np.nanmin(since), np.nanmax(since), 400)
+    for pulse, amplitude in enumerate(amplitudes):
+        delay = _mean(delays[:, pulse])
+        if math.isfinite(amplitude) and math.isfinite(delay):
+            # As the camera would see it, so that it can be held against the mean.
+            fitted += amplitude * result.shape.frame_average(fine - 0.5 * exposure - delay, exposure_s=exposure)
+            axes.axvline(1e3 * delay, color=HAIRLINE, linewidth=0.8, zorder=0)
+    if np.isfinite(amplitudes).any():
+        axes.plot(1e3 * fine, fitted, color=FIT, linewidth=1.1, label="fit")
+    low, high = np.nanpercentile(level, [0.5, 99.8])
+    axes.set_ylim(low - 0.1 * (high - low), high + 0.12 * (high - low))
+    axes.set_xlim(1e3 * float(np.nanmin(since)), 1e3 * float(np.nanmax(since)))
+    axes.set_xlabel("time from pulse 1 (ms)")
+    axes.set_ylabel("dF/F")
+    axes.legend(loc="upper right", bbox_to_anchor=(1.0, 1.02))
+
+
+def _aligned(result: AnalysisResult, row: int) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Return times since pulse 1 (s) and dF/F less its level before the pulse, a row a usable trial."""
+    interval = frame_interval_s(result)
+    used = np.isfinite(amplitude_grid(result, "amplitude")[row]).any(axis=1)
+    used &= np.isfinite(result.stimulus_s[:, 0])
+    if not used.any() or not interval > 0:
+        return np.empty((0, 0)), np.empty((0, 0))
+    stimuli = result.stimulus_s[used]
+    room = np.diff(result.stimulus_s[np.isfinite(result.stimulus_s[:, 0]), 0])
+    until = float(np.nanmax(stimuli - stimuli[:, :1])) + 4.0 * result.shape.decay_s
+    until = min(until, 0.8 * float(np.min(room))) if room.size else until
+    before, after = math.ceil(0.3 * until / interval), math.ceil(until / interval)
+    exposure = number(result, "recording.exposure_s")
+    middle = 0.5 * (exposure if exposure > 0 else interval)
+    frames = np.searchsorted(result.time_s, stimuli[:, :1]) + np.arange(-before, after)
+    inside = (frames >= 0) & (frames < len(result.time_s))
+    frames = np.clip(frames, 0, len(result.time_s) - 1)
+    since = result.time_s[frames] + middle - stimuli[:, :1]
+    level = np.where(inside, result.dff[row][frames], np.nan)
+    level = np.where((since > -(before + 1) * interval) & (since < (after + 1) * interval), level, np.nan)
+    quiet = [_mean(one[early]) for one, early in zip(level, since < -middle, strict=True)]
+    return np.where(np.isfinite(level), since, np.nan), level - np.array(quiet)[:, None]
+
+
+def _binned_mean(
+    since: NDArray[np.float64], level: NDArray[np.float64], interval: float
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Mean level over trials, in bins of one frame interval."""
+    known = np.isfinite(since) & np.isfinite(level)
+    bins = np.round(since[known] / interval).astype(int)
+    first = int(bins.min())
+    count = np.bincount(bins - first)
+    kept = count > 0
+    time = np.bincount(bins - first, since[known])[kept] / count[kept]
+    return time, np.bincount(bins - first, level[known])[kept] / count[kept]
+
+
+def _mean(numbers: NDArray[np.float64]) -> float:
+    known = numbers[np.isfinite(numbers)]
+    return float(known.mean()) if known.size else math.nan
+
+
+def _draw_histogram(axes: Axes, result: AnalysisResult, row: int) -> None:
+    """Draw amplitudes of pulse 1, amplitudes without stimulus, and the fitted model component by component."""
+    axes.set_title("amplitudes of pulse 1", loc="left", color=MUTED, fontsize=SMALL, pad=3)
+    evoked = amplitude_grid(result, "amplitude")[row, :, 0]
+    evoked, null = evoked[np.isfinite(evoked)], result.null_amplitude[row]
+    null = null[np.isfinite(null)]
+    if not evoked.size:
+        say_nothing_to_show(axes, "no amplitude")
+        return
+    noise_sd, threshold, p_release = (
+        float(values(result.boutons, n)[row]) for n in ("noise_sd", "threshold", "p_release")
+    )
+    edges = bin_edges(evoked, null, noise_sd=noise_sd)
+    axes.stairs(amplitude_density(evoked, edges), edges, fill=True, color=EVOKED, alpha=0.28, label="evoked")
+    if null.size:  # scaled to the share of failures, which it should then explain
+        share = 1.0 - p_release if math.isfinite(p_release) else 1.0
+        axes.stairs(
+            share * amplitude_density(null, edges), edges, color=MUTED, linewidth=0.9, label="no stimulus, scaled"
+        )
+    fine = np.linspace(edges[0], edges[-1], 500)
+    components = fitted_components(result.boutons, row, fine)
+    for component in components:
+        axes.plot(fine, component, color=FIT, linewidth=0.6, linestyle=(0, (3, 1.5)))
+    if len(components):
+        axes.plot(fine, components.sum(axis=0), color=FIT, linewidth=1.2, label="model")
+    if math.isfinite(threshold):
+        axes.axvline(threshold, color=INK, linewidth=0.7, linestyle=":", label="threshold")
+    axes.set_ylim(0.0, 1.25 * axes.dataLim.y1)
+    axes.set_xlim(edges[0], edges[-1])
+    axes.set_xlabel("amplitude (dF/F)")
+    axes.set_ylabel("density")
+    axes.legend(loc="upper right", bbox_to_anchor=(1.02, 1.04))
+
+
+def _draw_release_estimates(axes: Axes, result: AnalysisResult, row: int) -> None:
+    """Draw every estimate of p_release side by side."""
+    axes.set_title("p_release by method", loc="right", color=MUTED, fontsize=SMALL, pad=3)
+    own = _estimates_of(result, row, "p_release")
+    if not own:
+        say_nothing_to_show(axes, "no estimate")
+        return
+    for place, (_, value, low, high) in enumerate(own):
+        colour = EVOKED if place == 0 else MUTED
+        if math.isfinite(low) and math.isfinite(high):
+            axes.plot([low, high], [place, place], color=colour, linewidth=1.2)
+        axes.plot(value, place, "o", color=colour, markersize=3.8)
+    labels = ["\n".join(wrapped(method, 23.0, size=SMALL - 0.2)) for method, *_ in own]
+    axes.set_yticks(range(len(own)), labels, fontsize=SMALL - 0.2)
+    axes.tick_params(axis="y", length=0)
+    axes.spines["left"].set_visible(False)
+    axes.grid(axis="x", color=HAIRLINE, linewidth=0.5)
+    axes.set_xlim(-0.02, 1.02)
+    axes.set_xticks([0, 0.5, 1], ["0", "0.5", "1"])
+    axes.set_ylim(len(own) - 0.5, -0.5)
+    axes.set_xlabel("p_release")
+
+
+def _estimates_of(result: AnalysisResult, row: int, quantity: str) -> list[tuple[str, float, float, float]]:
+    frame = result.estimates
+    if not len(frame):
+        return []
+    bouton = float(values(result.boutons, "bouton")[row])
+    mine = frame[(values(frame, "bouton") == bouton) & (frame["quantity"] == quantity).to_numpy(dtype=bool)]
+    numbers = zip(*(values(mine, name) for name in ("value", "lo", "hi")), strict=True)
+    return [
+        (method, float(value), float(low), float(high))
+        for method, (value, low, high) in zip(texts(mine, "method"), numbers, strict=True)
+        if math.isfinite(value)
+    ]
+
+
+def _write_estimates(area: Area, result: AnalysisResult, row: int) -> None:
+    """Write the estimates of the quantal parameters, a line a method."""
+    found = {quantity: {entry[0]: entry for entry in _estimates_of(result, row, quantity)} for quantity in _QUANTITIES}
+    methods = list(dict.fromkeys(method for entries in found.values() for method in entries))
+    if not methods:
+        return
+    left = [0.0, *(52.0 + 32.0 * i for i in range(len(_QUANTITIES)))]
+    for x, head in zip(left, ("method", *_QUANTITIES.values()), strict=True):
+        area.text(x, 0.0, head, size=SMALL, color=MUTED)
+    area.rule(0.0, 3.6, area.width)
+    room = max(int((area.height - 4.0) / 3.4), 1)
+    for line, method in enumerate(methods[:room]):
+        y = 4.4 + 3.4 * line
+        area.text(left[0], y, wrapped(method, 50.0, size=SMALL)[0], size=SMALL)
+        for x, quantity in zip(left[1:], _QUANTITIES, strict=True):
+            entry = found[quantity].get(method)
+            decimals = {"q": 3, "n_sites": 0}.get(quantity, 2)
+            text = with_limits(*entry[1:], decimals=decimals) if entry else MISSING
+            area.text(x, y, text, size=SMALL, color=INK if entry else NULL)

@@ -1,0 +1,228 @@
+"""The pages of the report, A4 each, in the order in which a person reads them."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Iterator
+from functools import partial
+
+import numpy as np
+from matplotlib.figure import Figure
+
+from ..analysis.results import AnalysisResult
+from .facts import number, texts, values
+from .figures_axon import draw_release_along_axon, selection_words
+from .figures_bouton import BLOCK_MM, draw_bouton
+from .figures_calls import draw_calls
+from .figures_map import draw_evidence, draw_map
+from .figures_page import A4_MM, MARGIN_MM, Area, blank_figure, line_mm, text_width_mm, wrapped
+from .figures_pairs import draw_pulse_pairs, draw_train
+from .figures_quality import draw_quality
+from .figures_style import BODY, HEAD, INK, MUTED, SHADE, SMALL, TITLE, styled
+from .figures_text import caution_pages, flag_blocks, paged, table_pages
+from .words import counted, fixed, headlines, listed, recording_facts, recording_line
+
+Page = Callable[[], Figure]
+
+_HISTOGRAM_CAPTION = (
+    "Grey outline: amplitudes where nothing was stimulated, scaled to the share of failures. Dashed: the model's "
+    "components for 0, 1, 2, ... vesicles. Bars and brackets: 95 % intervals."
+)
+
+
+def pages(result: AnalysisResult) -> list[Page]:
+    """List the pages; each is drawn when it is called, so that one is in memory at a time."""
+    n_boutons, n_pulses = len(result.boutons), result.stimulus_s.shape[1]
+    listing: list[Page] = [partial(title_page, result)]
+    if n_boutons:
+        listing.append(partial(axon_page, result))
+        listing += [partial(_drawn, "Boutons", draw) for draw in table_pages(result)]
+        listing.append(partial(calls_page, result))
+        if n_pulses > 1:
+            listing.append(partial(pairs_page, result))
+        listing += [partial(bouton_page, result, first) for first in range(0, n_boutons, 2)]
+    listing += list(_quality_pages(result))
+    listing += [partial(_drawn, "Cautions and method", draw) for draw in caution_pages(result)]
+    return listing
+
+
+def _new_page(title: str = "") -> tuple[Figure, Area]:
+    figure = blank_figure(*A4_MM)
+    area = Area.of(figure, margin=MARGIN_MM)
+    if title:
+        area.text(0.0, 0.0, title, size=HEAD + 3.0, weight="bold")
+    return figure, area
+
+
+@styled
+def _drawn(title: str, draw: Callable[[Area], None]) -> Figure:
+    figure, area = _new_page(title)
+    draw(area.part(0.0, 10.0, area.width, area.height - 10.0))
+    return figure
+
+
+@styled
+def title_page(result: AnalysisResult) -> Figure:
+    """Draw the first page: what was recorded, the map, the main numbers and what to be careful about."""
+    figure, area = _new_page()
+    area.text(0.0, 0.0, "Vesicle release along one axon", color=MUTED)
+    size = min(TITLE, TITLE * area.width / text_width_mm(result.name, size=TITLE, weight="bold"))
+    area.text(0.0, 4.2, result.name, size=size, weight="bold")
+    area.text(0.0, 13.2, recording_line(result), color=MUTED)
+    area.rule(0.0, 19.5, area.width)
+    _draw_tiles(area.part(0.0, 23.0, area.width, 17.0), result)
+    height, width = result.mean_image.shape
+    map_mm = min((area.width - 22.0) * height / width + 7.0, 92.0)
+    draw_map(area.part(0.0, 43.0, area.width, map_mm), result)
+    top = 43.0 + map_mm + 5.0
+    foot = _write_cautions(area, result, upper=top + 62.0)
+    _write_headlines(area.part(0.0, top, 108.0, foot - top), result)
+    _write_facts(area.part(116.0, top, area.width - 116.0, foot - top), result)
+    return figure
+
+
+def _draw_tiles(area: Area, result: AnalysisResult) -> None:
+    """Write the four numbers that a reader looks for first."""
+    flags = [text.split(";") for text in texts(result.boutons, "flags")]
+    silent = sum("silent" in codes for codes in flags)
+    measured = int(np.isfinite(values(result.boutons, "p_release")).sum())
+    tiles = (
+        ("mean p_release", *_tile_numbers(result, "population.p_release", 2)),
+        ("one vesicle, dF/F", *_tile_numbers(result, "population.q", 3)),
+        ("paired-pulse ratio", *_tile_numbers(result, "population.ppr", 2)),
+        ("boutons measured", f"{measured} of {len(result.boutons)}", f"{silent} silent"),
+    )
+    for index, (name, value, interval) in enumerate(tiles):
+        x = index * area.width / len(tiles)
+        area.text(x, 0.0, name, size=SMALL, color=MUTED)
+        area.text(x, 3.0, value, size=TITLE, weight="bold")
+        area.text(x, 11.5, interval, size=SMALL, color=MUTED)
+
+
+def _tile_numbers(result: AnalysisResult, path: str, decimals: int) -> tuple[str, str]:
+    value, low, high = (number(result, path + end) for end in ("", "_lo", "_hi"))
+    if not math.isfinite(value):
+        return "–", "not available"
+    if not (math.isfinite(low) and math.isfinite(high)):
+        return fixed(value, decimals=decimals), "no interval"
+    limits = f"{fixed(low, decimals=decimals)} to {fixed(high, decimals=decimals)}"
+    return fixed(value, decimals=decimals), f"95 % interval {limits}"
+
+
+def _write_headlines(area: Area, result: AnalysisResult) -> None:
+    area.text(0.0, 0.0, "In short", size=HEAD, weight="bold")
+    y = 6.0
+    for sentence in headlines(result):
+        lines = len(wrapped(sentence, area.width - 4.0))
+        if y + lines * line_mm(BODY) > area.height:
+            break
+        area.text(0.0, y, "•", color=MUTED)
+        y = area.paragraph(4.0, y, area.width - 4.0, sentence) + 1.4
+
+
+def _write_facts(area: Area, result: AnalysisResult) -> None:
+    area.text(0.0, 0.0, "Recording", size=HEAD, weight="bold")
+    y = 6.0
+    for name, value in recording_facts(result):
+        if y + line_mm(SMALL) > area.height:
+            break
+        area.text(0.0, y, name, size=SMALL, color=MUTED)
+        y = area.paragraph(29.0, y, area.width - 29.0, value, size=SMALL) + 0.7
+
+
+def _write_cautions(area: Area, result: AnalysisResult, *, upper: float) -> float:
+    """Write the recording's own cautions into a box at the foot, as many as fit; return the y above the box."""
+    lowest, width = area.height - 3.0, area.width - 10.0
+    paragraphs = [wrapped(caution, width) for caution in result.cautions] or [
+        ["No caution beyond those on the last page."]
+    ]
+    kept = list(paragraphs)
+    while len(kept) > 1 and lowest - _box_mm(kept, more=len(kept) < len(paragraphs)) < upper:
+        kept.pop()
+    left_out = len(paragraphs) - len(kept)
+    box = _box_mm(kept, more=left_out > 0)
+    top = lowest - box
+    area.box(0.0, top, area.width, box, color=SHADE)
+    area.text(5.0, top + 3.5, "Before you quote these numbers", size=HEAD, weight="bold")
+    y = top + 9.5
+    for lines in kept:
+        for line in lines:
+            area.text(5.0, y, line, color=INK)
+            y += line_mm(BODY)
+        y += 1.2
+    if left_out:
+        area.text(5.0, y, f"{counted(left_out, 'more caution')} on the last page.", color=MUTED)
+    return top - 4.0
+
+
+def _box_mm(paragraphs: list[list[str]], *, more: bool) -> float:
+    lines = sum(len(lines) for lines in paragraphs) + more
+    return 11.5 + lines * line_mm(BODY) + 1.2 * len(paragraphs)
+
+
+@styled
+def axon_page(result: AnalysisResult) -> Figure:
+    """Draw release along the axon and the evidence that found the boutons."""
+    figure, area = _new_page("Release along the axon")
+    draw_release_along_axon(area.part(0.0, 8.0, area.width, 138.0), result)
+    y = area.paragraph(0.0, 150.0, area.width, selection_words(result), size=SMALL, color=MUTED)
+    area.text(0.0, y + 5.0, "Evidence of release", size=HEAD, weight="bold")
+    cut = f" Maxima above {result.evidence_cut:.3g} were accepted." if math.isfinite(result.evidence_cut) else ""
+    words = f"Log-likelihood ratio of release against silence, pixel by pixel; darker is more.{cut}"
+    y = area.paragraph(0.0, y + 10.5, area.width, words, size=SMALL, color=MUTED)
+    draw_evidence(area.part(0.0, y + 2.0, area.width, area.height - y - 6.0), result)
+    return figure
+
+
+@styled
+def calls_page(result: AnalysisResult) -> Figure:
+    """Draw the raster of calls."""
+    figure, area = _new_page("Calls, trial by trial")
+    height = min(max(55.0, 35.0 + 7.0 * len(result.boutons)), area.height - 20.0)
+    draw_calls(area.part(0.0, 10.0, area.width, height), result)
+    words = "Below the raster: how many boutons released in each trial."
+    area.paragraph(0.0, 12.0 + height, area.width, words, size=SMALL, color=MUTED)
+    return figure
+
+
+@styled
+def pairs_page(result: AnalysisResult) -> Figure:
+    """Draw pulse pairs, and the train where there are more than two pulses."""
+    figure, area = _new_page("Pulse pairs")
+    draw_pulse_pairs(area.part(0.0, 10.0, area.width, 92.0), result)
+    ratio, ids = values(result.boutons, "ppr"), values(result.boutons, "bouton")
+    without = [f"{bouton:g}" for bouton in ids[~np.isfinite(ratio)]]
+    words = "Ratios of mean amplitudes, bars 95 % intervals, band: all boutons. A verdict needs an interval that excludes 1."
+    words += f" No ratio: bouton{'s' if len(without) > 1 else ''} {listed(without)}." if without else ""
+    y = area.paragraph(0.0, 106.0, area.width, words, size=SMALL, color=MUTED)
+    if result.stimulus_s.shape[1] > 2:
+        draw_train(area.axes(14.0, y + 14.0, area.width - 16.0, 70.0), result)
+    return figure
+
+
+@styled
+def bouton_page(result: AnalysisResult, first: int) -> Figure:
+    """Draw two boutons, from row `first` on."""
+    figure, area = _new_page("Bouton by bouton")
+    area.text(area.width, 1.5, "", size=SMALL)
+    area.paragraph(0.0, 6.4, area.width, _HISTOGRAM_CAPTION, size=SMALL - 0.4, color=MUTED)
+    for place, row in enumerate(range(first, min(first + 2, len(result.boutons)))):
+        draw_bouton(area.part(0.0, 13.5 + place * BLOCK_MM[1], area.width, BLOCK_MM[1]), result, row)
+    return figure
+
+
+def _quality_pages(result: AnalysisResult) -> Iterator[Page]:
+    """Yield the page of panels with the first flags below, and further pages of flags where they do not fit."""
+    room = A4_MM[1] - 2 * MARGIN_MM
+    first, *others = paged(flag_blocks(result), first_mm=room - 146.0, next_mm=room - 12.0)
+
+    @styled
+    def panels() -> Figure:
+        figure, area = _new_page("Quality")
+        draw_quality(area.part(0.0, 10.0, area.width, 122.0), result)
+        first(area.part(0.0, 138.0, area.width, area.height - 138.0))
+        return figure
+
+    yield panels
+    for draw in others:
+        yield partial(_drawn, "Quality", draw)
