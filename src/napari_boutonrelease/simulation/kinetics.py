@@ -110,7 +110,8 @@ def _summed(
     first_row, last_row = by_frame.min(axis=1), by_frame.max(axis=1)
     begin = np.searchsorted(last_row, release_s - exposure_s, side="right")
     end = np.searchsorted(first_row, release_s + reporter.duration_s)
-    for low, high, at, size in zip(begin, end, release_s, size_dff, strict=True):
-        if low < high:
-            total[low:high] += size * reporter.gathered(start_s[low:high] - at, exposure_s=exposure_s)
+    for vesicle in np.flatnonzero(begin < end):
+        during = slice(begin[vesicle], end[vesicle])
+        share = reporter.gathered(start_s[during] - release_s[vesicle], exposure_s=exposure_s)
+        total[during] += size_dff[vesicle] * share
     return total

@@ -18,7 +18,7 @@ if TYPE_CHECKING:
     from .recipe import Recipe
     from .truth import Truth
 
-_BLOCK_FRAMES = 64
+_BLOCK_FRAMES, _BLOCK_PIXELS = 64, 2**20  # largest block that is worked on at once
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -126,8 +126,9 @@ def photon_blocks(truth: Truth, *, rng: np.random.Generator) -> Iterator[NDArray
     haze = _Haze(recipe, rng)
     flash = np.zeros(recipe.n_frames)
     flash[[frame for frame in recipe.flash_frames if frame < recipe.n_frames]] = recipe.flash_photons
-    for start in range(0, recipe.n_frames, _BLOCK_FRAMES):
-        stop = min(start + _BLOCK_FRAMES, recipe.n_frames)
+    step = max(1, min(_BLOCK_FRAMES, _BLOCK_PIXELS // (recipe.height_px * recipe.width_px)))
+    for start in range(0, recipe.n_frames, step):
+        stop = min(start + step, recipe.n_frames)
         canvas = _Canvas(shaft.images(truth.dy_px[start:stop], truth.dx_px[start:stop]), spot.reach_px)
         for index in range(len(truth.kind)):
             y0, x0, patch = spot.patches(
@@ -213,8 +214,8 @@ def _camera(electrons: NDArray[np.int64], recipe: Recipe, rng: np.random.Generat
         signal += recipe.read_noise_e * rng.standard_normal(signal.shape)
     signal *= recipe.gain
     signal += recipe.offset_counts
-    if recipe.dtype == "float32":
-        return signal.astype(np.float32)
-    np.rint(signal, out=signal)
-    np.clip(signal, 0, 2**recipe.bit_depth - 1, out=signal)
+    np.minimum(signal, 2.0**recipe.bit_depth - 1, out=signal)
+    if recipe.dtype != "float32":
+        np.rint(signal, out=signal)
+        np.maximum(signal, 0, out=signal)
     return signal.astype(recipe.dtype)

@@ -124,7 +124,7 @@ def plan_recording(recipe: Recipe, *, rng: np.random.Generator) -> Truth:
 
 def frame_times(recipe: Recipe) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.int64]]:
     """Start of each frame on the recording's and on the laboratory's clock (s), and the file it belongs to."""
-    start_s: NDArray[np.float64] = np.arange(recipe.n_frames) * recipe.frame_interval_s
+    start_s = np.arange(recipe.n_frames, dtype=np.float64) * recipe.frame_interval_s
     segment: NDArray[np.int64] = np.repeat(np.arange(len(recipe.file_frames)), recipe.file_frames)
     if recipe.file_s is None:
         return start_s, start_s.copy(), segment

@@ -124,7 +124,8 @@ def _at(where: NDArray[np.float64], path: NDArray[np.float64], along: NDArray[np
 def _inside(recipe: Recipe, points: NDArray[np.float64]) -> NDArray[np.bool_]:
     margin = margin_px(recipe)
     far = np.array([recipe.height_px - 1 - margin, recipe.width_px - 1 - margin])
-    return np.all((points >= margin) & (points <= far), axis=1)
+    inside: NDArray[np.bool_] = np.all((points >= margin) & (points <= far), axis=1)
+    return inside
 
 
 def _draw_along(
@@ -148,7 +149,9 @@ def _draw_along(
     if slack < 0:  # an unusually long chain is pressed into the image
         chain *= float(np.ptp(visible)) / chain[-1]
         slack = 0.0
-    return chain + float(visible.min()) + slack * rng.uniform(0.4, 0.6)
+    first = float(visible.min()) + slack * rng.uniform(0.4, 0.6)
+    places: NDArray[np.float64] = first + chain
+    return places
 
 
 def _draw_on_axon(
