@@ -48,7 +48,7 @@ def test_sample_keys_are_pinned(manifest):
 
 @pytest.mark.parametrize("key", ["fast-pair", "slow-single"])
 def test_sample_layers_carry_calibration_and_protocol(manifest, key, monkeypatch):
-    """What napari makes of a sample: one image in s and µm, with the protocol that its frames obey (here of 3 trials)."""
+    """What napari makes of a sample: one image in s and µm, with the protocol that its frames obey."""
     monkeypatch.setattr(presets, "preset_recipe", partial(presets.preset_recipe, trials=3))
     (sample,) = (entry for entry in manifest.contributions.sample_data if entry.key == key)
     (command,) = (entry for entry in manifest.contributions.commands if entry.id == sample.command)

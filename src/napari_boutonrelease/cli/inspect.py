@@ -46,7 +46,13 @@ def run(args: argparse.Namespace) -> None:
         light = measure_light(movie, camera_offset=offset, block_frames=block_frames, progress=progress)
     print("light", *say.light_lines(light), sep="\n")
     with progress_bar("measuring movement") as progress:
-        drift = measure_drift(movie, light=light, max_shift_px=Settings().recording.max_shift_px, progress=progress)
+        drift = measure_drift(
+            movie,
+            light=light,
+            max_shift_px=Settings().recording.max_shift_px,
+            block_frames=block_frames,
+            progress=progress,
+        )
     print("movement", *say.drift_lines(drift, light), sep="\n")
 
     if missing:

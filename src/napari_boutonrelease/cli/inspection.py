@@ -104,11 +104,12 @@ def light_lines(light: Light) -> list[str]:
 def drift_lines(drift: Drift, light: Light) -> list[str]:
     """How far the sample moved, and the lit frames that could not be followed."""
     used = drift.used
-    if not used.any():
-        return [_line("drift", "cannot be followed: no frame resembles the others")]
+    if not (drift.corrected and used.any()):
+        return [_line("drift", "cannot be followed: the image holds too little structure for its noise")]
     dy_px, dx_px = np.ptp(drift.dy_px[used]), np.ptp(drift.dx_px[used])
     steps = np.hypot(np.diff(drift.dy_px[used]), np.diff(drift.dx_px[used]))
     lines = [_line("drift", f"over {dy_px:.2f} px in y and {dx_px:.2f} px in x")]
+    lines.append(_line("known within", f"{drift.noise_px:.2g} px a frame"))
     if steps.size:
         lines.append(_line("steps", f"{np.median(steps):.2f} px from frame to frame, at most {steps.max():.2f} px"))
     lost = np.flatnonzero(~used & ~light.bad_frame)
