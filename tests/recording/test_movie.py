@@ -7,6 +7,7 @@ import struct
 import subprocess
 import sys
 import tracemalloc
+import warnings
 from pathlib import Path
 
 import numpy as np
@@ -421,6 +422,26 @@ def test_a_page_list_that_runs_in_a_circle_is_refused(tmp_path: Path) -> None:
     path.write_bytes(content)
     with pytest.raises(MovieError, match="runs in a circle"):
         open_movie(path)
+
+
+def test_damaged_directories_are_refused_as_such(tmp_path: Path) -> None:
+    rng = np.random.default_rng(3)
+    path = tmp_path / "m.tif"
+    refused = 0
+    for options in ({"imagej": True}, {"compression": "deflate"}, {"bigtiff": True, "byteorder": ">"}):
+        tifffile.imwrite(path, FRAMES[:5], **options)
+        whole = path.read_bytes()
+        for _ in range(150):
+            content = bytearray(whole)
+            for place in rng.integers(8, 350, 3):
+                content[place] = rng.integers(0, 256)
+            path.write_bytes(content)
+            with warnings.catch_warnings(action="ignore"):
+                try:
+                    open_movie(path).read(0, 2)
+                except MovieError:
+                    refused += 1
+    assert refused > 100
 
 
 def test_a_damaged_frame_is_named(tmp_path: Path) -> None:

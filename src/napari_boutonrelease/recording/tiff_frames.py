@@ -127,8 +127,10 @@ def open_tiff(path: Path, *, channel: int | None, keep_open: bool) -> TiffFrames
             dtype, decode = first.dtype, first.decode
             height, width = int(first.imagelength), int(first.imagewidth)
             layout = read_layout(tiff, n_pages=len(pages.offsets), height=height, width=width, name=name)
-    except (tifffile.TiffFileError, struct.error, IndexError, KeyError, AttributeError) as error:
-        raise MovieError(f"{name} is not a TIFF file that can be read ({error}): export it again.") from error
+    except MovieError:
+        raise
+    except (ValueError, TypeError, ArithmeticError, LookupError, AttributeError, struct.error) as error:
+        raise MovieError(f"{name} is a damaged TIFF file ({error}): copy or export it again.") from error
     if dtype is None or dtype.kind not in "iuf" or pages.image["bits per sample"] == 1:
         raise MovieError(f"{name} holds {dtype or 'unknown'} pixels: a movie needs whole or real numbers, e.g. uint16.")
 

@@ -147,11 +147,14 @@ class _Group:
     def find(self, tag: int) -> tuple[NDArray[np.int64], NDArray[np.void]]:
         """Rows of the group that hold `tag`, and their entries."""
         matches = self.entries["tag"] == tag
-        rows = np.flatnonzero(matches.any(axis=1))
-        return rows, self.entries[rows, matches[rows].argmax(axis=1)]
+        rows, columns = np.nonzero(matches)
+        rows, first = np.unique(rows, return_index=True)
+        return rows, self.entries[rows, columns[first]]
 
     def values(self, found: NDArray[np.void], count: int) -> NDArray[np.int64]:
         """First `count` whole numbers of each entry, (entry, count)."""
+        if count > len(self.data):
+            raise MovieError(f"{self.name}: a page claims {count} strips, more than the file has bytes: it is damaged.")
         numbers = np.zeros((len(found), count), dtype=np.int64)
         field_bytes = found.dtype["value"].itemsize
         fields = np.ascontiguousarray(found["value"])[:, None].view(np.uint8)
@@ -225,7 +228,7 @@ def _segments(groups: list[_Group], tag: int, wanted: NDArray[np.bool_], name: s
     lengths = {int(length) for _, _, found in found_in for length in np.unique(found["count"])}
     if len(lengths) != 1 or sum(len(rows) for _, rows, _ in found_in) != wanted.sum():
         raise MovieError(f"{name}: its pages are not all stored alike: save the movie alone in its file.")
-    numbers = np.zeros((len(wanted), lengths.pop()), dtype=np.int64)
-    for group, rows, found in found_in:
-        numbers[group.pages[rows]] = group.values(found, numbers.shape[1])
-    return numbers[wanted]
+    length = lengths.pop()
+    pages = np.concatenate([group.pages[rows] for group, rows, _ in found_in])
+    numbers = np.concatenate([group.values(found, length) for group, _, found in found_in])
+    return numbers[np.argsort(pages)]
