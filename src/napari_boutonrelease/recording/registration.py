@@ -26,6 +26,7 @@ _CELLS_PER_PX = 4
 _MOST_STEPS = 12
 _ENOUGH_INFORMATION = 0.98
 _FEW_PIXELS = 20_000  # below this every pixel is used
+_MOST_CACHED_NUMBERS = 20_000_000
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -96,7 +97,7 @@ class Reference:
         self._weights = 1.0 / variance
         self._level = float(np.mean(image))
         self._informative = self._choose_pixels()
-        self._pictures: dict[tuple[int, int], tuple[FloatArray, FloatArray, FloatArray]] = {}
+        self._pictures: dict[tuple[int, int], FloatArray] = {}  # slopes and image at the informative pixels
         self._cells: dict[tuple[int, int], _Cell] = {}
 
     def _choose_pixels(self) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
@@ -120,30 +121,33 @@ class Reference:
             return self._cells[cell]
         whole = [int(np.floor(step / _CELLS_PER_PX + 0.5)) for step in cell]
         part = (cell[0] - whole[0] * _CELLS_PER_PX, cell[1] - whole[1] * _CELLS_PER_PX)
+        y, x = self._informative
         if part not in self._pictures:
             at_y = np.arange(self._n_y) - part[0] / _CELLS_PER_PX
             at_x = np.arange(self._n_x) - part[1] / _CELLS_PER_PX
-            self._pictures[part] = (
-                self._spline(at_y, at_x) - self._level,
-                -self._spline(at_y, at_x, dx=1),  # the spline calls its first axis x
-                -self._spline(at_y, at_x, dy=1),
+            self._pictures[part] = np.stack(  # the spline calls its first axis x
+                [
+                    -self._spline(at_y, at_x, dx=1)[y, x],
+                    -self._spline(at_y, at_x, dy=1)[y, x],
+                    self._spline(at_y, at_x)[y, x] - self._level,
+                ]
             )
-        y, x = self._informative
         frame_y, frame_x = y + whole[0], x + whole[1]
         # the outermost reference pixels have no slope to trust
         seen = (frame_y >= 0) & (frame_y < self._n_y) & (frame_x >= 0) & (frame_x < self._n_x)
-        seen &= (y >= 1) & (y < self._n_y - 1) & (x >= 1) & (x < self._n_x - 1)
-        seen &= self._known[y, x]
+        seen &= (y >= 1) & (y < self._n_y - 1) & (x >= 1) & (x < self._n_x - 1) & self._known[y, x]
         seen[seen] = self._usable[frame_y[seen], frame_x[seen]]
         y, x, frame_y, frame_x = y[seen], x[seen], frame_y[seen], frame_x[seen]
-        picture, slope_y, slope_x = (image[y, x] for image in self._pictures[part])
         v, u = 2.0 * frame_y / max(self._n_y - 1, 1) - 1.0, 2.0 * frame_x / max(self._n_x - 1, 1) - 1.0
-        columns = np.stack([slope_y, slope_x, picture, np.ones_like(u), v, u, v * v, v * u, u * u])
+        smooth = np.stack([np.ones_like(u), v, u, v * v, v * u, u * u])
+        columns = np.concatenate([self._pictures[part][:, seen], smooth])
         weights = self._weights[y, x]
         rows = columns * weights
         normal = rows @ columns.T
         smooth_inverse = np.linalg.pinv(normal[3:, 3:], hermitian=True)
         crossed = normal[2, 3:]
+        if (len(self._cells) + 1) * rows.size > _MOST_CACHED_NUMBERS:
+            self._cells.pop(next(iter(self._cells)), None)
         self._cells[cell] = _Cell(
             pixels=(frame_y * self._n_x + frame_x).astype(np.intp),
             weights=weights.astype(np.float32),
