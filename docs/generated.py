@@ -50,7 +50,8 @@ def flags() -> str:
     """Every flag of a bouton: code, meaning, advice."""
     from napari_boutonrelease.flags import FLAGS
 
-    return _table(("flag", "what was found", "what to do"), ((f"`{f.code}`", f.meaning, f.advice) for f in FLAGS.values()))
+    rows = ((f"`{flag.code}`", flag.meaning, flag.advice) for flag in FLAGS.values())
+    return _table(("flag", "what was found", "what to do"), rows)
 
 
 def columns() -> str:
