@@ -27,7 +27,7 @@ def figure_release_along_axon(result: AnalysisResult) -> Figure:
 
 def draw_release_along_axon(area: Area, result: AnalysisResult) -> None:
     """Draw p_release above q against the distance along the axon, or the id where there is no path."""
-    width = area.width - 30.0
+    width = area.width - 25.0
     gap = 6.0
     upper_mm = (area.height - 24.0) * 0.6
     upper = area.axes(14.0, 10.0, width, upper_mm)
@@ -46,6 +46,7 @@ def draw_release_along_axon(area: Area, result: AnalysisResult) -> None:
     _draw_by_found(lower, result, where, "q", pale=[source == "axon" for source in texts(result.boutons, "q_from")])
     lower.set_ylabel("q, one vesicle (dF/F)")
     lower.set_ylim(bottom=0.0)
+    lower.locator_params(axis="y", nbins=5)
     for axes in (upper, lower):
         axes.yaxis.set_label_coords(-9.5 / width, 0.5)
     lower.set_xlabel(label)

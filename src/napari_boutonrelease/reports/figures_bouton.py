@@ -104,7 +104,8 @@ def _draw_trace(axes: Axes, result: AnalysisResult, row: int) -> None:
     axes.set_xlim(float(result.time_s[0]), float(result.time_s[-1]) + frame_interval_s(result))
     calls = amplitude_grid(result, "called")[row]
     strips = [("stimuli", -0.07, result.stimulus_s[np.isfinite(result.stimulus_s)], NULL)]
-    strips.append(("calls", 1.08, result.stimulus_s[calls == 1], EVOKED))
+    if (calls == 1).any():
+        strips.append(("calls", 1.08, result.stimulus_s[calls == 1], EVOKED))
     spontaneous = values(result.spontaneous, "bouton") == float(values(result.boutons, "bouton")[row])
     if spontaneous.any():
         strips.append(("spontaneous", 1.24, values(result.spontaneous, "time_s")[spontaneous], PULSE_2))
@@ -155,7 +156,7 @@ def envelope(
 
 def _draw_trials(axes: Axes, result: AnalysisResult, row: int) -> None:
     """Overlay the trials on their first stimulus, with their mean and the fitted response."""
-    axes.set_title("trials, mean and fitted response", loc="left", color=MUTED, fontsize=SMALL, pad=3)
+    axes.set_title("trials", loc="left", color=MUTED, fontsize=SMALL, pad=3)
     since, level = _aligned(result, row)
     if not np.isfinite(level).any():
         say_nothing_to_show(axes, "no usable trial")
@@ -185,7 +186,7 @@ def _draw_trials(axes: Axes, result: AnalysisResult, row: int) -> None:
     axes.set_xlim(1e3 * float(np.nanmin(since)), 1e3 * float(np.nanmax(since)))
     axes.set_xlabel("time from pulse 1 (ms)")
     axes.set_ylabel("dF/F")
-    axes.legend(loc="upper right", bbox_to_anchor=(1.0, 1.02))
+    axes.legend(loc="lower right", bbox_to_anchor=(1.0, 1.01), ncols=2, columnspacing=1.0)
 
 
 def _aligned(result: AnalysisResult, row: int) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
@@ -232,7 +233,6 @@ def _mean(numbers: NDArray[np.float64]) -> float:
 
 def _draw_histogram(axes: Axes, result: AnalysisResult, row: int) -> None:
     """Draw amplitudes of pulse 1, amplitudes without stimulus, and the fitted model component by component."""
-    axes.set_title("amplitudes of pulse 1", loc="left", color=MUTED, fontsize=SMALL, pad=3)
     evoked = amplitude_grid(result, "amplitude")[row, :, 0]
     evoked, null = evoked[np.isfinite(evoked)], result.null_amplitude[row]
     null = null[np.isfinite(null)]
@@ -257,11 +257,12 @@ def _draw_histogram(axes: Axes, result: AnalysisResult, row: int) -> None:
         axes.plot(fine, components.sum(axis=0), color=FIT, linewidth=1.2, label="model")
     if math.isfinite(threshold):
         axes.axvline(threshold, color=INK, linewidth=0.7, linestyle=":", label="threshold")
-    axes.set_ylim(0.0, 1.25 * axes.dataLim.y1)
+    axes.set_ylim(0.0, 1.08 * axes.dataLim.y1)
     axes.set_xlim(edges[0], edges[-1])
-    axes.set_xlabel("amplitude (dF/F)")
+    axes.locator_params(axis="y", nbins=4)
+    axes.set_xlabel("amplitude of pulse 1 (dF/F)")
     axes.set_ylabel("density")
-    axes.legend(loc="upper right", bbox_to_anchor=(1.02, 1.04))
+    axes.legend(loc="lower left", bbox_to_anchor=(-0.02, 1.01), ncols=2, columnspacing=1.2, labelspacing=0.25)
 
 
 def _draw_release_estimates(axes: Axes, result: AnalysisResult, row: int) -> None:

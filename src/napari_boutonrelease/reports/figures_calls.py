@@ -34,10 +34,10 @@ def draw_calls(area: Area, result: AnalysisResult) -> None:
         say_nothing_to_show(area.axes(0.0, 0.0, area.width, area.height), "There are no boutons to show.")
         return
     states = np.where(np.isnan(calls), _LEFT_OUT, np.where(calls == 1, _RELEASED, _FAILED))
-    together = n_pulses > 2
-    panels = [(f"Pulses 1 to {n_pulses}, line by line", states.transpose(0, 2, 1).reshape(-1, n_trials))] if together else [
-        (f"Pulse {pulse + 1}", states[:, :, pulse]) for pulse in range(n_pulses)
-    ]  # fmt: skip
+    if n_pulses > 2:
+        panels = [(f"Pulses 1 to {n_pulses}, line by line", states.transpose(0, 2, 1).reshape(-1, n_trials))]
+    else:
+        panels = [(f"Pulse {pulse + 1}", states[:, :, pulse]) for pulse in range(n_pulses)]
     left, gap, foot = 11.0, 5.0, 21.0
     width = (area.width - left - gap * (len(panels) - 1)) / len(panels)
     height = area.height - foot - 7.0

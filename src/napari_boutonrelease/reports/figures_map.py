@@ -49,7 +49,7 @@ def draw_map(area: Area, result: AnalysisResult) -> None:
     length = min(height, 45.0)
     bar_axes = area.axes(left, top + (height - length) / 2, 2.6, length)
     bar = area.figure.colorbar(colours, cax=bar_axes, label="p_release", ticks=[0, 0.25, 0.5, 0.75, 1])
-    bar.outline.set_visible(False)  # type: ignore[operator]
+    bar.outline.set_visible(False)
 
 
 def draw_evidence(area: Area, result: AnalysisResult) -> None:
@@ -65,11 +65,11 @@ def draw_evidence(area: Area, result: AnalysisResult) -> None:
 
 
 def _image_axes(area: Area, image: NDArray[np.float64], *, right_mm: float, foot_mm: float) -> Axes:
-    """Axes of the image's aspect, centred in what the area leaves beside bars and labels."""
+    """Axes of the image's aspect at the top of the area, centred in what bars and labels leave."""
     height, width = image.shape
     scale = min((area.width - right_mm) / width, (area.height - foot_mm) / height)
     wide, high = scale * width, scale * height
-    return area.axes((area.width - right_mm - wide) / 2, (area.height - foot_mm - high) / 2, wide, high)
+    return area.axes((area.width - right_mm - wide) / 2, 0.0, wide, high)
 
 
 def _show(axes: Axes, image: NDArray[np.float64], *, percentiles: tuple[float, float]) -> bool:

@@ -117,6 +117,8 @@ def text_width_mm(text: str, *, size: float = BODY, weight: str = "normal") -> f
 def wrapped(text: str, width_mm: float, *, size: float = BODY, weight: str = "normal") -> list[str]:
     """Break a text into lines no wider than `width_mm`; a word too long for a line is broken, too.
 
+    Only plain spaces part words: a non-breaking space keeps a value and its unit together.
+
     Examples
     --------
     >>> wrapped("one two three", 12.0, size=7.0)
@@ -124,7 +126,7 @@ def wrapped(text: str, width_mm: float, *, size: float = BODY, weight: str = "no
     """
     lines: list[str] = []
     line = ""
-    for word in text.split():
+    for word in filter(None, text.replace("\n", " ").split(" ")):
         longer = f"{line} {word}" if line else word
         if text_width_mm(longer, size=size, weight=weight) <= width_mm:
             line = longer

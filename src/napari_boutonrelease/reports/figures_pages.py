@@ -38,7 +38,7 @@ def pages(result: AnalysisResult) -> list[Page]:
         listing.append(partial(axon_page, result))
         listing += [partial(_drawn, "Boutons", draw) for draw in table_pages(result)]
         listing.append(partial(calls_page, result))
-        if n_pulses > 1:
+        if n_pulses > 1 and not _pairs_fit_below(result):
             listing.append(partial(pairs_page, result))
         listing += [partial(bouton_page, result, first) for first in range(0, n_boutons, 2)]
     listing += list(_quality_pages(result))
@@ -74,10 +74,13 @@ def title_page(result: AnalysisResult) -> Figure:
     height, width = result.mean_image.shape
     map_mm = min((area.width - 22.0) * height / width + 7.0, 92.0)
     draw_map(area.part(0.0, 43.0, area.width, map_mm), result)
-    top = 43.0 + map_mm + 5.0
-    foot = _write_cautions(area, result, upper=top + 62.0)
-    _write_headlines(area.part(0.0, top, 108.0, foot - top), result)
-    _write_facts(area.part(116.0, top, area.width - 116.0, foot - top), result)
+    top, least_box = 43.0 + map_mm + 5.0, 26.0
+    room = area.height - least_box - top
+    used = max(
+        _write_headlines(area.part(0.0, top, 108.0, room), result),
+        _write_facts(area.part(116.0, top, area.width - 116.0, room), result),
+    )
+    _write_cautions(area, result, top=top + used + 5.0)
     return figure
 
 
@@ -109,7 +112,8 @@ def _tile_numbers(result: AnalysisResult, path: str, decimals: int) -> tuple[str
     return fixed(value, decimals=decimals), f"95 % interval {limits}"
 
 
-def _write_headlines(area: Area, result: AnalysisResult) -> None:
+def _write_headlines(area: Area, result: AnalysisResult) -> float:
+    """Write the main results, as many as fit; return the height used."""
     area.text(0.0, 0.0, "In short", size=HEAD, weight="bold")
     y = 6.0
     for sentence in headlines(result):
@@ -118,9 +122,11 @@ def _write_headlines(area: Area, result: AnalysisResult) -> None:
             break
         area.text(0.0, y, "•", color=MUTED)
         y = area.paragraph(4.0, y, area.width - 4.0, sentence) + 1.4
+    return y
 
 
-def _write_facts(area: Area, result: AnalysisResult) -> None:
+def _write_facts(area: Area, result: AnalysisResult) -> float:
+    """Write what was recorded; return the height used."""
     area.text(0.0, 0.0, "Recording", size=HEAD, weight="bold")
     y = 6.0
     for name, value in recording_facts(result):
@@ -128,21 +134,18 @@ def _write_facts(area: Area, result: AnalysisResult) -> None:
             break
         area.text(0.0, y, name, size=SMALL, color=MUTED)
         y = area.paragraph(29.0, y, area.width - 29.0, value, size=SMALL) + 0.7
+    return y
 
 
-def _write_cautions(area: Area, result: AnalysisResult, *, upper: float) -> float:
-    """Write the recording's own cautions into a box at the foot, as many as fit; return the y above the box."""
-    lowest, width = area.height - 3.0, area.width - 10.0
-    paragraphs = [wrapped(caution, width) for caution in result.cautions] or [
-        ["No caution beyond those on the last page."]
-    ]
+def _write_cautions(area: Area, result: AnalysisResult, *, top: float) -> None:
+    """Write the recording's own cautions into a box, as many as fit."""
+    paragraphs = [wrapped(caution, area.width - 10.0) for caution in result.cautions]
+    paragraphs = paragraphs or [["No caution beyond those on the last page."]]
     kept = list(paragraphs)
-    while len(kept) > 1 and lowest - _box_mm(kept, more=len(kept) < len(paragraphs)) < upper:
+    while len(kept) > 1 and top + _box_mm(kept, more=len(kept) < len(paragraphs)) > area.height:
         kept.pop()
     left_out = len(paragraphs) - len(kept)
-    box = _box_mm(kept, more=left_out > 0)
-    top = lowest - box
-    area.box(0.0, top, area.width, box, color=SHADE)
+    area.box(0.0, top, area.width, _box_mm(kept, more=left_out > 0), color=SHADE)
     area.text(5.0, top + 3.5, "Before you quote these numbers", size=HEAD, weight="bold")
     y = top + 9.5
     for lines in kept:
@@ -152,7 +155,6 @@ def _write_cautions(area: Area, result: AnalysisResult, *, upper: float) -> floa
         y += 1.2
     if left_out:
         area.text(5.0, y, f"{counted(left_out, 'more caution')} on the last page.", color=MUTED)
-    return top - 4.0
 
 
 def _box_mm(paragraphs: list[list[str]], *, more: bool) -> float:
@@ -164,7 +166,7 @@ def _box_mm(paragraphs: list[list[str]], *, more: bool) -> float:
 def axon_page(result: AnalysisResult) -> Figure:
     """Draw release along the axon and the evidence that found the boutons."""
     figure, area = _new_page("Release along the axon")
-    draw_release_along_axon(area.part(0.0, 8.0, area.width, 138.0), result)
+    draw_release_along_axon(area.part(0.0, 10.0, area.width, 136.0), result)
     y = area.paragraph(0.0, 150.0, area.width, selection_words(result), size=SMALL, color=MUTED)
     area.text(0.0, y + 5.0, "Evidence of release", size=HEAD, weight="bold")
     cut = f" Maxima above {result.evidence_cut:.3g} were accepted." if math.isfinite(result.evidence_cut) else ""
@@ -174,14 +176,29 @@ def axon_page(result: AnalysisResult) -> Figure:
     return figure
 
 
+_CALLS_MM, _PAIRS_MM = 45.0, 112.0
+
+
+def _calls_mm(result: AnalysisResult) -> float:
+    return 38.0 + 7.0 * len(result.boutons)
+
+
+def _pairs_fit_below(result: AnalysisResult) -> bool:
+    """Whether calls and pulse pairs go on one page."""
+    return _calls_mm(result) + _PAIRS_MM + 30.0 < A4_MM[1] - 2 * MARGIN_MM and result.stimulus_s.shape[1] == 2
+
+
 @styled
 def calls_page(result: AnalysisResult) -> Figure:
-    """Draw the raster of calls."""
+    """Draw the raster of calls, and the pulse pairs below it where there is room."""
     figure, area = _new_page("Calls, trial by trial")
-    height = min(max(55.0, 35.0 + 7.0 * len(result.boutons)), area.height - 20.0)
+    height = min(max(_calls_mm(result), _CALLS_MM), area.height - 20.0)
     draw_calls(area.part(0.0, 10.0, area.width, height), result)
     words = "Below the raster: how many boutons released in each trial."
-    area.paragraph(0.0, 12.0 + height, area.width, words, size=SMALL, color=MUTED)
+    y = area.paragraph(0.0, 12.0 + height, area.width, words, size=SMALL, color=MUTED)
+    if _pairs_fit_below(result):
+        area.text(0.0, y + 9.0, "Pulse pairs", size=HEAD + 3.0, weight="bold")
+        _draw_pairs(area.part(0.0, y + 17.0, area.width, _PAIRS_MM), result)
     return figure
 
 
@@ -189,22 +206,26 @@ def calls_page(result: AnalysisResult) -> Figure:
 def pairs_page(result: AnalysisResult) -> Figure:
     """Draw pulse pairs, and the train where there are more than two pulses."""
     figure, area = _new_page("Pulse pairs")
-    draw_pulse_pairs(area.part(0.0, 10.0, area.width, 92.0), result)
-    ratio, ids = values(result.boutons, "ppr"), values(result.boutons, "bouton")
-    without = [f"{bouton:g}" for bouton in ids[~np.isfinite(ratio)]]
-    words = "Ratios of mean amplitudes, bars 95 % intervals, band: all boutons. A verdict needs an interval that excludes 1."
-    words += f" No ratio: bouton{'s' if len(without) > 1 else ''} {listed(without)}." if without else ""
-    y = area.paragraph(0.0, 106.0, area.width, words, size=SMALL, color=MUTED)
+    below = _draw_pairs(area.part(0.0, 10.0, area.width, _PAIRS_MM), result)
     if result.stimulus_s.shape[1] > 2:
-        draw_train(area.axes(14.0, y + 14.0, area.width - 16.0, 70.0), result)
+        area.text(0.0, below + 20.0, "Train", size=HEAD + 3.0, weight="bold")
+        draw_train(area.axes(14.0, below + 33.0, area.width - 16.0, 70.0), result)
     return figure
+
+
+def _draw_pairs(area: Area, result: AnalysisResult) -> float:
+    """Draw the pulse pairs and say how to read them; return the y below."""
+    draw_pulse_pairs(area.part(0.0, 0.0, area.width, 86.0), result)
+    without = [f"{b:g}" for b in values(result.boutons, "bouton")[~np.isfinite(values(result.boutons, "ppr"))]]
+    missing = f" No ratio: bouton{'s' if len(without) > 1 else ''} {listed(without)}." if without else ""
+    words = "Ratios of mean amplitudes; bars: 95 % intervals; band: all boutons. A verdict needs an interval without 1."
+    return area.paragraph(0.0, 90.0, area.width, words + missing, size=SMALL, color=MUTED)
 
 
 @styled
 def bouton_page(result: AnalysisResult, first: int) -> Figure:
     """Draw two boutons, from row `first` on."""
     figure, area = _new_page("Bouton by bouton")
-    area.text(area.width, 1.5, "", size=SMALL)
     area.paragraph(0.0, 6.4, area.width, _HISTOGRAM_CAPTION, size=SMALL - 0.4, color=MUTED)
     for place, row in enumerate(range(first, min(first + 2, len(result.boutons)))):
         draw_bouton(area.part(0.0, 13.5 + place * BLOCK_MM[1], area.width, BLOCK_MM[1]), result, row)

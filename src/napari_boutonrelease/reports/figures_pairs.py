@@ -139,7 +139,7 @@ def draw_train(axes: Axes, result: AnalysisResult) -> None:
     axes.plot(numbers, middle, "o-", color=EVOKED, label=f"median of {len(curves)} boutons")
     axes.axhline(1.0, color=HAIRLINE, linewidth=0.8, zorder=0)
     axes.set_ylim(bottom=min(0.0, float(min(y.min() for _, y in curves))))
-    axes.xaxis.get_major_locator().set_params(integer=True)
+    axes.locator_params(axis="x", integer=True)
     axes.set_xlabel("pulse")
     axes.set_ylabel("amplitude, relative to pulse 1")
     axes.legend(loc="lower left", bbox_to_anchor=(0.0, 1.01))

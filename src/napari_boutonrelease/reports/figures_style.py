@@ -99,7 +99,7 @@ def styled(function: Callable[P, R]) -> Callable[P, R]:
 
 
 @lru_cache(maxsize=1)
-def _look() -> dict[str, Any]:
+def _look() -> Any:
     """All settings of looks: a user's own style must not reach into the report."""
     groups = {key.split(".")[0] for key in _RC} | {
         "errorbar",

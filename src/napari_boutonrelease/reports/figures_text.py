@@ -40,7 +40,26 @@ class Block:
     draw: Callable[[Area, float], None]
 
 
-def paged(blocks: Sequence[Block], *, first_mm: float, next_mm: float) -> list[Draw]:
+@dataclass(frozen=True, slots=True)
+class Sheet:
+    """The blocks of one page."""
+
+    blocks: tuple[Block, ...]
+
+    @property
+    def height(self) -> float:
+        """Height of all blocks, mm."""
+        return sum(block.height for block in self.blocks)
+
+    def __call__(self, area: Area) -> None:
+        """Draw the blocks one below the other."""
+        y = 0.0
+        for block in self.blocks:
+            block.draw(area, y)
+            y += block.height
+
+
+def paged(blocks: Sequence[Block], *, first_mm: float, next_mm: float) -> list[Sheet]:
     """Share blocks over pages; at least one page, which may be empty."""
     sheets: list[list[Block]] = [[]]
     room = first_mm
@@ -50,17 +69,7 @@ def paged(blocks: Sequence[Block], *, first_mm: float, next_mm: float) -> list[D
             room = next_mm
         sheets[-1].append(block)
         room -= block.height
-    return [_stack(sheet) for sheet in sheets]
-
-
-def _stack(blocks: list[Block]) -> Draw:
-    def draw(area: Area) -> None:
-        y = 0.0
-        for block in blocks:
-            block.draw(area, y)
-            y += block.height
-
-    return draw
+    return [Sheet(tuple(sheet)) for sheet in sheets]
 
 
 def table_pages(result: AnalysisResult) -> list[Draw]:
@@ -71,13 +80,16 @@ def table_pages(result: AnalysisResult) -> list[Draw]:
     return [_with_head(head, sheet) for sheet in sheets]
 
 
-def _with_head(head: Block, body: Draw) -> Draw:
+def _with_head(head: Block, body: Sheet) -> Draw:
     def draw(area: Area) -> None:
         head.draw(area, 0.0)
         body(area.part(0.0, head.height, area.width, area.height - head.height))
-        words = "In brackets: 95 % intervals; for n_sites the numbers that the data cannot exclude. Place: distance along the "
-        words += "axon, else y, x in px. All columns are in boutons.csv, their meaning in datapackage.json."
-        area.paragraph(0.0, area.height - 6.0, area.width, words, size=SMALL - 0.4, color=MUTED)
+        words = (
+            "In brackets: 95 % intervals; for n_sites the numbers that the data cannot exclude. Place: distance along "
+            "the axon, else y, x in px. All columns are in boutons.csv, their meaning in datapackage.json."
+        )
+        below = head.height + body.height + 2.0
+        area.paragraph(0.0, below, area.width, words, size=SMALL - 0.4, color=MUTED)
 
     return draw
 
@@ -147,7 +159,7 @@ def flag_blocks(result: AnalysisResult) -> list[Block]:
     return blocks
 
 
-def caution_pages(result: AnalysisResult) -> list[Draw]:
+def caution_pages(result: AnalysisResult) -> list[Sheet]:
     """Return cautions, settings and origin, page by page."""
     blocks = [_heading("Of this recording")]
     blocks += [_paragraph(caution) for caution in result.cautions] or [_paragraph("None.")]
@@ -203,7 +215,7 @@ def _paragraph(text: str) -> Block:
 
 
 def _entry(code: str, who: str, text: str) -> Block:
-    """A flag at the left, its boutons below it, its words at the right."""
+    """Lay a flag at the left, its boutons below it, its words at the right."""
     left_lines, right_lines = wrapped(who, 38.0, size=SMALL), wrapped(text, _WIDTH_MM - 44.0)
 
     def draw(area: Area, y: float) -> None:
@@ -218,7 +230,7 @@ def _entry(code: str, who: str, text: str) -> Block:
 
 
 def _line(name: str, value: str, meaning: str) -> Block:
-    """A name, its value and what it means, in three columns."""
+    """Lay a name, its value and what it means, in three columns."""
     width = 66.0 if meaning else _WIDTH_MM - 46.0
     columns = [
         (0.0, wrapped(name, 44.0, size=SMALL), MUTED),

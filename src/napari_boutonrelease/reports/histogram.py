@@ -23,7 +23,7 @@ def bin_edges(evoked: NDArray[np.float64], null: NDArray[np.float64], *, noise_s
     spread = (high - low) or max(abs(high), 1e-6)
     width = max(0.5 * noise_sd if noise_sd > 0 else spread / 20.0, spread / 80.0)
     first, last = math.floor((low - 0.02 * spread) / width), math.ceil((high + 0.02 * spread) / width)
-    return width * np.arange(first, max(last, first + 1) + 1)
+    return width * np.arange(first, max(last, first + 1) + 1, dtype=np.float64)
 
 
 def amplitude_density(amplitudes: NDArray[np.float64], edges: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -63,7 +63,7 @@ def fitted_components(boutons: pd.DataFrame, row: int, amplitude: NDArray[np.flo
     variance = one["noise_sd"] ** 2 + vesicles * (one["q"] * q_cv) ** 2
     distance = amplitude[None, :] - vesicles[:, None] * one["q"]
     normal = np.exp(-0.5 * distance**2 / variance[:, None]) / np.sqrt(2 * np.pi * variance[:, None])
-    return np.asarray(weights)[:, None] * normal
+    return np.asarray(weights, dtype=np.float64)[:, None] * np.asarray(normal, dtype=np.float64)
 
 
 def _weights(model: str, one: dict[str, float]) -> list[float]:

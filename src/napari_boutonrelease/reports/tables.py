@@ -109,10 +109,8 @@ def _integer(value: Any, _: Column) -> str:
 
 def _number(value: Any, column: Column) -> str:
     number = float(value)
-    if column.decimals is None:
-        text = f"{number:.6g}"
-    else:
-        text = f"{number:.{column.decimals}f}".rstrip("0").rstrip(".")
+    exact = column.decimals is not None
+    text = f"{number:.{column.decimals}f}".rstrip("0").rstrip(".") if exact else f"{number:.6g}"
     return "0" if text == "-0" else text
 
 

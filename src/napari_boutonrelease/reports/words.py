@@ -82,14 +82,14 @@ def counted(count: float, noun: str, plural: str | None = None) -> str:
 
 
 def p_words(p: float) -> str:
-    """Write a p-value.
+    """Write a p-value, with spaces that do not break.
 
     Examples
     --------
-    >>> p_words(0.0000002), p_words(0.0213)
-    ('p < 0.001', 'p = 0.021')
+    >>> p_words(0.0213).replace(chr(160), " ")
+    'p = 0.021'
     """
-    return "p < 0.001" if p < 0.001 else f"p = {short(p)}"
+    return "p\u00a0<\u00a00.001" if p < 0.001 else f"p\u00a0=\u00a0{short(p)}"
 
 
 def listed(items: Iterable[object]) -> str:
@@ -197,7 +197,8 @@ def _axon_sentences(result: AnalysisResult) -> list[str]:
         p = number(result, "stimulus_failures.p")
         doubt = " This is too many: suspect failed stimulation." if p < 0.05 else ""
         sentences.append(
-            f"Every bouton failed in {counted(failed, 'trial')}; independence would give {short(expected)}.{doubt}"
+            f"Every bouton failed in {counted(failed, 'trial')}; independent boutons would do so in "
+            f"{short(expected)}.{doubt}"
         )
     return sentences
 
