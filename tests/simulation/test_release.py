@@ -43,9 +43,7 @@ def draw(n_sites, p_site, *, stimulus_s=None, recipe=RECIPE, arrived=None, seed=
 
 def chances(n_sites, p_site, *, stimulus_s=None, recipe=RECIPE):
     stimulus_s = pairs(10) if stimulus_s is None else stimulus_s
-    return release_chances(
-        n_sites=np.array([n_sites]), p_site=np.array([p_site]), stimulus_s=stimulus_s, recipe=recipe
-    )
+    return release_chances(n_sites=np.array([n_sites]), p_site=np.array([p_site]), stimulus_s=stimulus_s, recipe=recipe)
 
 
 def test_first_pulse_releases_a_binomial_number_of_vesicles():

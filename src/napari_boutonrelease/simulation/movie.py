@@ -18,7 +18,7 @@ if TYPE_CHECKING:
     from .recipe import Recipe
     from .truth import Truth
 
-_BLOCK_FRAMES, _BLOCK_PIXELS = 64, 2**20  # largest block that is worked on at once
+_BLOCK_FRAMES, _BLOCK_PIXELS = 256, 2**20  # largest block that is worked on at once
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

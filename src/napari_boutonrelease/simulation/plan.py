@@ -155,8 +155,8 @@ def _draw_boutons(
     if recipe.boutons:
         n_sites = np.array([b.n_sites for b in recipe.boutons], dtype=np.int64)
         p_site = np.array([b.p_site for b in recipe.boutons], dtype=np.float64)
-        q_dff = np.array([b.q_dff for b in recipe.boutons])
-        f0 = np.array([b.f0_photons for b in recipe.boutons])
+        q_dff = np.array([b.q_dff for b in recipe.boutons], dtype=np.float64)
+        f0 = np.array([b.f0_photons for b in recipe.boutons], dtype=np.float64)
     else:
         low, high = recipe.p_release
         p_release = low + (high - low) * (rng.permutation(n) + rng.random(n)) / max(n, 1)
