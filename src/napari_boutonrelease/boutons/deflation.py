@@ -23,7 +23,9 @@ class SpotModel:
     Parameters
     ----------
     evoked, null : (n, y, x) ndarray
-        Responses (counts) with noise factor 1.
+        Responses (counts).
+    evoked_factor, null_factor : (n,) ndarray
+        SD of each map in units of the SD of one frame's pixel.
     matched : MatchedMaps
         The same through the matched filter; `matched.evoked` is changed in place.
     spot_sigma_px : float
@@ -35,10 +37,13 @@ class SpotModel:
         *,
         evoked: NDArray[np.float32],
         null: NDArray[np.float32],
+        evoked_factor: NDArray[np.float64],
+        null_factor: NDArray[np.float64],
         matched: MatchedMaps,
         spot_sigma_px: float,
     ) -> None:
         self._evoked, self._null, self._matched = evoked, null, matched
+        self._evoked_factor, self._null_factor = evoked_factor, null_factor
         self._shape = (evoked.shape[1], evoked.shape[2])
         finite = np.isfinite(matched.pixel_variance)
         self._inverse_variance = np.where(finite, 1.0 / matched.pixel_variance, 0.0)
@@ -97,7 +102,7 @@ class SpotModel:
         ]
 
     def _read(self) -> None:
-        """Heights of all spots in all maps, neighbours separated."""
+        """Heights of all spots in all maps (for a noise factor of 1), neighbours separated."""
         weights = separated_weights(
             y_px=self.y_px,
             x_px=self.x_px,
@@ -107,8 +112,8 @@ class SpotModel:
             separate=True,
         )
         weights = [Patch(y0=w.y0, x0=w.x0, values=np.nan_to_num(w.values)) for w in weights]
-        self.heights = read_maps(self._evoked, weights)
-        null = read_maps(self._null, weights)
+        self.heights = read_maps(self._evoked, weights) / self._evoked_factor
+        null = read_maps(self._null, weights) / self._null_factor
         photon_sd = [
             np.sqrt(np.sum(w.values**2 / np.maximum(self._inverse_variance[w.slices], 1e-30), where=w.values != 0))
             for w in weights
@@ -130,7 +135,8 @@ class SpotModel:
             strength[index] = np.sqrt(np.sum(share * self.standardised[index]))
             total = max(float(share.sum()), 1e-12)
             y0, y1, x0, x1 = window(y, x, radius_px=_FIT_SIGMAS * self.spot_sigma_px, shape=self._shape)
-            image = np.tensordot((share / total).astype(np.float32), self._evoked[:, y0:y1, x0:x1], axes=1)
+            averaging = (share / total / self._evoked_factor).astype(np.float32)
+            image = np.tensordot(averaging, self._evoked[:, y0:y1, x0:x1], axes=1)
             frame = Patch(y0=y0, x0=x0, values=image.astype(np.float64))
             own = frame.values.copy()
             for other, profile in enumerate(profiles):

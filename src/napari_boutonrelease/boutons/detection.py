@@ -144,15 +144,17 @@ def detect_boutons(
     advance(2, steps)
     shapes = (
         find_shape_candidates(
-            stack.mean_image, spot_sigma_px=spot_sigma_px, spacing_px=spacing_px, exclude=exclude
+            stack.mean_image, spot_sigma_px=spot_sigma_px, spacing_px=_CLOSEST * spacing_px, exclude=exclude
         )
         if shape_candidates
         else ShapeCandidates(y_px=np.empty(0), x_px=np.empty(0), contrast=np.empty(0))
     )
     cuts = _Cuts(rate=rate, near_shape=_near(shapes, radius_px=max(spacing_px / 2, 1.0), shape=evidence.shape))
     model = SpotModel(
-        evoked=stack.evoked / stack.evoked_factor[:, None, None].astype(np.float32),
-        null=stack.null / stack.null_factor[:, None, None].astype(np.float32),
+        evoked=stack.evoked,
+        null=stack.null,
+        evoked_factor=stack.evoked_factor,
+        null_factor=stack.null_factor,
         matched=matched,
         spot_sigma_px=spot_sigma_px,
     )

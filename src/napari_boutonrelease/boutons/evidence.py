@@ -42,10 +42,13 @@ class MatchedMaps:
     pixel_variance: NDArray[np.float64]
 
 
-def robust_variance(maps: NDArray[np.float32]) -> NDArray[np.float64]:
-    """Squared MAD-based SD over the first axis, from deviations about zero. (n, y, x) -> (y, x)."""
-    rows = max(1, int(4e6 // max(maps.shape[0] * maps.shape[2], 1)))
-    blocks = [np.median(np.abs(maps[:, start : start + rows]), axis=0) for start in range(0, maps.shape[1], rows)]
+def robust_variance(maps: NDArray[np.float32], *, noise_factor: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Squared MAD-based SD of maps divided by their noise factor, about zero. (n, y, x) -> (y, x)."""
+    rows = max(1, int(1e6 // max(maps.shape[0] * maps.shape[2], 1)))
+    scale = (1.0 / noise_factor)[:, None, None].astype(np.float32)
+    blocks = [
+        np.median(np.abs(maps[:, start : start + rows] * scale), axis=0) for start in range(0, maps.shape[1], rows)
+    ]
     return (np.concatenate(blocks).astype(np.float64) * 1.482602) ** 2
 
 
@@ -82,7 +85,7 @@ def pixel_variance(
     """
     from scipy.ndimage import gaussian_filter
 
-    variance = robust_variance(null / noise_factor[:, None, None].astype(np.float32))
+    variance = robust_variance(null, noise_factor=noise_factor)
     usable = ~exclude & (variance > 0)
     if not np.any(usable):
         return np.full(variance.shape, np.inf)
@@ -124,7 +127,7 @@ def matched_filter(
     Parameters
     ----------
     maps : (n, y, x) ndarray
-        Responses (counts), noise factor 1.
+        Responses (counts).
     inverse_variance : (y, x) ndarray
         1 / counts²; 0 where a pixel is excluded.
     spot_sigma_px : float
@@ -133,7 +136,7 @@ def matched_filter(
     Returns
     -------
     (n, y, x) ndarray of float32
-        Response in units of its approximate noise SD.
+        Response in units of its approximate noise SD, for a noise factor of 1.
     """
     from scipy.ndimage import gaussian_filter, uniform_filter
 
@@ -190,13 +193,14 @@ def standardise(
     inverse = np.where(np.isfinite(variance), 1.0 / variance, 0.0)
 
     def read(maps: NDArray[np.float32], factor: NDArray[np.float64]) -> NDArray[np.float32]:
-        unit = maps / factor[:, None, None].astype(np.float32)
-        return matched_filter(unit, inverse_variance=inverse, spot_sigma_px=spot_sigma_px)
+        filtered = matched_filter(maps, inverse_variance=inverse, spot_sigma_px=spot_sigma_px)
+        filtered /= factor[:, None, None].astype(np.float32)
+        return filtered
 
     z_null, z_evoked = read(null, null_factor), read(evoked, evoked_factor)
     usable = inverse > 0
     # What moves or flickers by itself has more noise than its photons: measured in place, pooled over one spot.
-    measured = np.where(usable, robust_variance(z_null), 0.0)
+    measured = np.where(usable, robust_variance(z_null, noise_factor=np.ones(len(z_null))), 0.0)
     weight = gaussian_filter(usable.astype(np.float64), spot_sigma_px)
     sd = np.sqrt(gaussian_filter(measured, spot_sigma_px) / np.maximum(weight, 1e-9))
     inverse_sd = np.where(usable & (sd > 0), 1.0 / np.maximum(sd, 1e-9), 0.0).astype(np.float32)

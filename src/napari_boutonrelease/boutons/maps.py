@@ -1,16 +1,31 @@
-"""Response maps."""
+"""Response maps: every pixel projected on the response shape, at the stimuli and where nothing was stimulated."""
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
 
+from ..errors import InputError
+from ..recording.cubic_convolution import shift_frame_block
+from .evidence import matched_filter
+from .windows import Projection, null_windows, project, trial_windows
+
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
+    from ..recording import Movie, Timing
+    from ..recording.motion import Drift
     from ..response_shape import ResponseShape
+
+Progress = Callable[[int, int], None]
+
+_STILL_PX = 0.01  # a frame that moved less is not resampled
+_MAX_NULL = 2.0  # null maps wanted per evoked map, at most
+_ENOUGH_NULL = 20
+_CLEAR_SD = 4.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -28,7 +43,8 @@ class ResponseStack:
     null : (n_null, y, x) ndarray of float32
         The same at pseudo-stimuli, or from differences of trials.
     null_from : str
-        `gaps` (pseudo-stimuli in stimulus-free time) or `differences` (half differences of successive trials).
+        `gaps` (pseudo-stimuli in stimulus-free time) or `differences` (of successive trials, divided by sqrt(2): there
+        is no stimulus-free time; the releases in them make the noise of a bouton look larger than it is).
     mean_image : (y, x) ndarray
         Mean of the movement-corrected frames (counts).
     shape : ResponseShape
@@ -44,3 +60,240 @@ class ResponseStack:
     null_from: str
     mean_image: NDArray[np.float64]
     shape: ResponseShape
+
+
+def project_responses(
+    movie: Movie,
+    *,
+    timing: Timing,
+    drift: Drift,
+    shape: ResponseShape,
+    pre_s: float,
+    post_s: float,
+    memory_bytes: float,
+    block_frames: int,
+    progress: Progress | None,
+) -> ResponseStack:
+    """Fit the response shape at every pixel to every pulse, in one pass over the movie.
+
+    Each pulse of each trial gives one map: a least-squares fit of an offset and all pulses of the trial to the frames from
+    `pre_s` before the first to `post_s` after the last pulse. Frames that moved are resampled by cubic convolution; bad
+    frames are left out of the fit. Only the frames inside windows are read.
+
+    Parameters
+    ----------
+    movie : Movie
+    timing : Timing
+    drift : Drift
+    shape : ResponseShape
+        Time course of a response.
+    pre_s, post_s : float
+        Baseline before the first and response after the last pulse (s).
+    memory_bytes : float
+        Most memory for the maps. If all pulses do not fit, the later pulses of all trials are left out; if not even the
+        first pulses fit, trials are taken evenly.
+    block_frames : int
+        Frames read at a time.
+    progress : callable or None
+        Called with (done, total) blocks.
+
+    Returns
+    -------
+    ResponseStack
+
+    Raises
+    ------
+    InputError
+        If fewer than two pulses can be fitted.
+    """
+    height, width = movie.shape[1:]
+    most = max(int(memory_bytes / (4 * height * width)), 16)
+    evoked = project(
+        trial_windows(timing, used=drift.used, shape=shape, pre_s=pre_s, post_s=post_s),
+        timing=timing,
+        shape=shape,
+        height_px=height,
+    )
+    evoked = _thin(evoked, most=most // 2)
+    n_evoked = sum(len(projection.factor) for projection in evoked)
+    if n_evoked < 2:
+        raise InputError(
+            f"{movie.name}: {n_evoked} of {len(timing.stimulus_s)} trials can be fitted with a baseline of {pre_s:g} s and "
+            f"a response of {post_s:g} s; at least 2 are needed. Check the stimulus times, the frame interval and the "
+            "frames left out."
+        )
+    null = project(
+        null_windows(timing, used=drift.used, shape=shape, pre_s=pre_s, post_s=post_s),
+        timing=timing,
+        shape=shape,
+        height_px=height,
+    )
+    null = _evenly(null, most=min(int(_MAX_NULL * n_evoked), most - n_evoked))
+    null = null if len(null) >= min(_ENOUGH_NULL, n_evoked / 2) else []
+    maps, mean_image = _accumulate(
+        movie, drift=drift, projections=[*evoked, *null], block_frames=block_frames, progress=progress
+    )
+    stack = ResponseStack(
+        evoked=maps[:n_evoked],
+        evoked_trial=np.concatenate([np.full(len(one.factor), one.window.trial) for one in evoked]),
+        evoked_pulse=np.concatenate([one.window.pulses[: len(one.factor)] for one in evoked]),
+        evoked_factor=np.concatenate([one.factor for one in evoked]),
+        null=maps[n_evoked:],
+        null_factor=np.concatenate([one.factor for one in null]) if null else np.empty(0),
+        null_from="gaps",
+        mean_image=mean_image,
+        shape=shape,
+    )
+    return stack if null else _with_differences(stack)
+
+
+def scan_shapes(
+    movie: Movie,
+    *,
+    timing: Timing,
+    drift: Drift,
+    candidates: Sequence[ResponseShape],
+    pre_s: float,
+    post_s: float,
+    spot_sigma_px: float,
+    block_frames: int,
+    progress: Progress | None,
+) -> NDArray[np.float64]:
+    """How clearly each candidate shape shows in the mean response, for a first guess of the reporter's kinetics.
+
+    Parameters
+    ----------
+    movie, timing, drift, pre_s, post_s, block_frames, progress
+        As for `project_responses`.
+    candidates : sequence of n ResponseShape
+        Shapes to compare.
+    spot_sigma_px : float
+        Gaussian sigma of a bouton's image (px).
+
+    Returns
+    -------
+    (n,) ndarray
+        Sum over the clear local responses of the squared signal-to-noise ratio; the largest fits best. All 0 where
+        nothing is clear under any of them.
+    """
+    from scipy.ndimage import maximum_filter
+
+    means: list[Projection] = []
+    owner: list[int] = []
+    for index, shape in enumerate(candidates):
+        projections = project(
+            trial_windows(timing, used=drift.used, shape=shape, pre_s=pre_s, post_s=post_s),
+            timing=timing,
+            shape=shape,
+            height_px=movie.shape[1],
+        )
+        means += [_sum_of_pulses(projection) for projection in projections]
+        owner += [index] * len(projections)
+    if not means:
+        return np.zeros(len(candidates))
+    slot = np.asarray(owner)
+    maps, mean_image = _accumulate(
+        movie, drift=drift, projections=means, block_frames=block_frames, progress=progress, slots=slot
+    )
+    power = np.zeros(len(candidates))
+    np.add.at(power, slot, [float(one.factor[0] ** 2) for one in means])
+    # One frame's noise variance follows the light; its scale drops out of the comparison.
+    light = np.maximum(mean_image - np.min(mean_image), 0.02 * np.ptp(mean_image) + 1e-9)
+    z = matched_filter(
+        maps / np.sqrt(np.maximum(power, 1e-30))[:, None, None].astype(np.float32),
+        inverse_variance=1.0 / light,
+        spot_sigma_px=spot_sigma_px,
+    )
+    z /= np.maximum(1.482602 * np.median(np.abs(z), axis=(1, 2), keepdims=True), 1e-30)
+    highest = z.max(axis=0)
+    places = (highest > _CLEAR_SD) & (highest >= maximum_filter(highest, size=2 * round(2 * spot_sigma_px) + 1))
+    return np.asarray(np.sum(np.maximum(z[:, places], 0.0).astype(np.float64) ** 2, axis=1))
+
+
+def _sum_of_pulses(projection: Projection) -> Projection:
+    """One map for all pulses of a window: the sum of their amplitudes."""
+    weights = projection.weights.sum(axis=1, keepdims=True)
+    factor = np.sqrt(np.mean(np.sum(weights.astype(np.float64) ** 2, axis=-1), axis=0))
+    return replace(projection, weights=weights, factor=factor)
+
+
+def _thin(projections: list[Projection], *, most: int) -> list[Projection]:
+    """Leave out later pulses, then trials, until at most `most` maps remain."""
+    n_pulses = max((len(one.factor) for one in projections), default=0)
+    while n_pulses > 1 and sum(min(len(one.factor), n_pulses) for one in projections) > most:
+        n_pulses -= 1
+    cut = [replace(one, weights=one.weights[:, :n_pulses], factor=one.factor[:n_pulses]) for one in projections]
+    return _evenly(cut, most=most) if n_pulses == 1 else cut
+
+
+def _evenly(projections: list[Projection], *, most: int) -> list[Projection]:
+    if len(projections) <= most:
+        return projections
+    return [projections[i] for i in np.linspace(0, len(projections) - 1, max(most, 0)).round().astype(int)]
+
+
+def _accumulate(
+    movie: Movie,
+    *,
+    drift: Drift,
+    projections: Sequence[Projection],
+    block_frames: int,
+    progress: Progress | None,
+    slots: NDArray[np.intp] | None = None,
+) -> tuple[NDArray[np.float32], NDArray[np.float64]]:
+    """Sum weights times frames: one map a pulse of each projection, or one a slot; and the mean of all frames used."""
+    n_frames, height, width = movie.shape
+    first_map = np.cumsum([0, *(len(one.factor) for one in projections)]) if slots is None else np.append(slots, 0)
+    n_maps = int(first_map[-1]) if slots is None else int(slots.max()) + 1
+    maps = np.zeros((n_maps, height, width), dtype=np.float32)
+    total = np.zeros((height, width))
+    wanted = np.zeros(n_frames, dtype=np.bool_)
+    for one in projections:
+        wanted[one.window.frames] = True
+    starts = [start for start in range(0, n_frames, block_frames) if wanted[start : start + block_frames].any()]
+    for done, start in enumerate(starts):
+        chosen = start + np.flatnonzero(wanted[start : start + block_frames])
+        frames = _aligned(movie.read(int(chosen[0]), int(chosen[-1]) + 1)[chosen - chosen[0]], chosen, drift)
+        total += frames.sum(axis=0, dtype=np.float64)
+        for index, one in enumerate(projections):
+            if one.window.frames[-1] < chosen[0] or one.window.frames[0] > chosen[-1]:
+                continue
+            mine = np.isin(one.window.frames, chosen, assume_unique=True)
+            part = frames[np.searchsorted(chosen, one.window.frames[mine])]
+            target = maps[first_map[index] : first_map[index] + len(one.factor)]
+            weights = one.weights[:, :, mine]
+            if len(weights) == 1:
+                target += np.tensordot(weights[0], part, axes=1)
+            else:
+                target += np.einsum("yjf,fyx->jyx", weights, part)
+        if progress is not None:
+            progress(done + 1, len(starts))
+    return maps, total / max(int(wanted.sum()), 1)
+
+
+def _aligned(frames: NDArray[np.generic], index: NDArray[np.intp], drift: Drift) -> NDArray[np.float32]:
+    """Frames in reference coordinates."""
+    aligned = frames.astype(np.float32)
+    dy, dx = drift.dy_px[index], drift.dx_px[index]
+    moved = np.hypot(dy, dx) > _STILL_PX
+    if np.any(moved):
+        aligned[moved] = shift_frame_block(aligned[moved], dy=dy[moved], dx=dx[moved])
+    return aligned
+
+
+def _with_differences(stack: ResponseStack) -> ResponseStack:
+    """Null maps from successive maps of the same pulse: what both have in common cancels."""
+    earlier, later = [], []
+    for pulse in np.unique(stack.evoked_pulse):
+        same = np.flatnonzero(stack.evoked_pulse == pulse)
+        earlier.append(same[:-1])
+        later.append(same[1:])
+    first, second = np.concatenate(earlier), np.concatenate(later)
+    if not len(first):
+        raise InputError(
+            "The recording holds neither two trials of the same pulse nor stimulus-free time: its noise cannot be measured. "
+            "Record more trials."
+        )
+    null = (stack.evoked[first] - stack.evoked[second]) / np.float32(np.sqrt(2))
+    factor = np.sqrt((stack.evoked_factor[first] ** 2 + stack.evoked_factor[second] ** 2) / 2)
+    return replace(stack, null=null, null_factor=factor, null_from="differences")
