@@ -199,14 +199,34 @@ def standardise(
 
     z_null, z_evoked = read(null, null_factor), read(evoked, evoked_factor)
     usable = inverse > 0
-    # What moves or flickers by itself has more noise than its photons: measured in place, pooled over one spot.
-    measured = np.where(usable, robust_variance(z_null, noise_factor=np.ones(len(z_null))), 0.0)
-    weight = gaussian_filter(usable.astype(np.float64), spot_sigma_px)
-    sd = np.sqrt(gaussian_filter(measured, spot_sigma_px) / np.maximum(weight, 1e-9))
+    sd = np.sqrt(_filtered_variance(z_null, usable=usable, spot_sigma_px=spot_sigma_px))
     inverse_sd = np.where(usable & (sd > 0), 1.0 / np.maximum(sd, 1e-9), 0.0).astype(np.float32)
     z_null *= inverse_sd
     z_evoked *= inverse_sd
     return MatchedMaps(evoked=z_evoked, null=z_null, scale=inverse_sd.astype(np.float64), pixel_variance=variance)
+
+
+def _filtered_variance(
+    z_null: NDArray[np.float32], *, usable: NDArray[np.bool_], spot_sigma_px: float
+) -> NDArray[np.float64]:
+    """Variance of the filtered null maps at each pixel.
+
+    Photon noise is in the filter's weights already, so that the variance is the same everywhere but where something moves
+    or flickers by itself. A wide average serves unless the variance in place is clearly above it: one place alone has few
+    independent null responses, and noise in the divisor would pass for evidence.
+    """
+    from scipy.ndimage import gaussian_filter
+
+    measured = np.where(usable, robust_variance(z_null, noise_factor=np.ones(len(z_null))), 0.0)
+
+    def pooled(sigma_px: float) -> NDArray[np.float64]:
+        weight = gaussian_filter(usable.astype(np.float64), sigma_px)
+        return np.asarray(gaussian_filter(measured, sigma_px) / np.maximum(weight, 1e-9))
+
+    wide, local = pooled(8 * spot_sigma_px), pooled(spot_sigma_px)
+    # A MAD-based variance has a relative error of 2.33 / sqrt(n); neighbouring pixels of a filtered map share most of it.
+    clear = 1.0 + 2.5 * 2.33 / np.sqrt(2.0 * len(z_null))
+    return np.where(local > clear * wide, local, wide)
 
 
 def mixture_evidence(z: NDArray[np.float32]) -> NDArray[np.float32]:

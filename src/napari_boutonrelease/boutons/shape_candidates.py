@@ -57,11 +57,16 @@ def find_shape_candidates(
     -------
     ShapeCandidates
     """
-    from scipy.ndimage import gaussian_filter
+    from scipy.ndimage import distance_transform_edt, gaussian_filter
 
-    image = np.where(exclude, np.median(mean_image[~exclude]), mean_image).astype(np.float64)
+    # The nearest usable pixel stands in for an unusable one: an axon that leaves the image goes on instead of ending in
+    # what would look like half a spot.
+    nearest = distance_transform_edt(exclude, return_distances=False, return_indices=True)
+    image = mean_image.astype(np.float64)[tuple(nearest)]
     scale = _SCALE * spot_sigma_px
-    d_yy, d_xx, d_yx = (gaussian_filter(image, scale, order=order) for order in ((2, 0), (0, 2), (1, 1)))
+    d_yy, d_xx, d_yx = (
+        gaussian_filter(image, scale, order=order, mode="nearest") for order in ((2, 0), (0, 2), (1, 1))
+    )
     middle, spread = -(d_yy + d_xx) / 2, np.hypot((d_yy - d_xx) / 2, d_yx)
     weaker, stronger = middle - spread, middle + spread
     pooled = np.concatenate([d_yy[~exclude], d_xx[~exclude]])
