@@ -1,5 +1,27 @@
 """Release amplitudes in, parameters out: binomial release, intervals, failures, pulse pairs."""
 
+from .binomial import ReleaseModel, SitesFit, fit_binomial, fit_sites
+from .failures import (
+    binomial_failures,
+    binomial_moments,
+    direct_vesicles,
+    poisson_failures,
+    variance_of_variance,
+    variance_of_variance_from_kurtosis,
+    vesicles_from_cv,
+)
+from .false_discovery import benjamini_hochberg
+from .fit_inputs import ReleasePriors
+from .intervals import (
+    Estimate,
+    clopper_pearson_interval,
+    jeffreys_interval,
+    mcnemar_test,
+    newcombe_difference_interval,
+    ratio_interval,
+    wilson_interval,
+    zero_success_upper_limit,
+)
 from .likelihoods import (
     binomial_gaussian_loglikelihood,
     binomial_log_weights,
@@ -11,15 +33,66 @@ from .likelihoods import (
     poisson_m_max,
     vesicle_posterior,
 )
+from .mixture_fit import LogPrior
+from .poisson import PoissonHistogramFit, fit_poisson_histogram
+from .pulse_pairs import PulsePair, ReleaseHistory, fisher_exact_p, measure_history, measure_pulse_pair
+from .ratios import FiellerInterval, bootstrap_ratio_interval, fieller_interval, unbiased_ratio
+from .threshold import (
+    balanced_threshold,
+    detection_power,
+    expected_false_calls,
+    false_call_rate,
+    peak_false_call_rate,
+    rogan_gladen,
+)
 
 __all__ = [
+    "Estimate",
+    "FiellerInterval",
+    "LogPrior",
+    "PoissonHistogramFit",
+    "PulsePair",
+    "ReleaseHistory",
+    "ReleaseModel",
+    "ReleasePriors",
+    "SitesFit",
+    "balanced_threshold",
+    "benjamini_hochberg",
+    "binomial_failures",
     "binomial_gaussian_loglikelihood",
     "binomial_log_weights",
+    "binomial_moments",
+    "bootstrap_ratio_interval",
+    "clopper_pearson_interval",
     "component_logpdf",
+    "detection_power",
+    "direct_vesicles",
+    "expected_false_calls",
+    "false_call_rate",
+    "fieller_interval",
+    "fisher_exact_p",
+    "fit_binomial",
+    "fit_poisson_histogram",
+    "fit_sites",
+    "jeffreys_interval",
+    "mcnemar_test",
+    "measure_history",
+    "measure_pulse_pair",
     "mixture_loglikelihood",
+    "newcombe_difference_interval",
     "null_loglikelihood",
+    "peak_false_call_rate",
+    "poisson_failures",
     "poisson_gaussian_loglikelihood",
     "poisson_log_weights",
     "poisson_m_max",
+    "ratio_interval",
+    "rogan_gladen",
+    "unbiased_ratio",
+    "variance_of_variance",
+    "variance_of_variance_from_kurtosis",
     "vesicle_posterior",
+    "vesicles_from_cv",
+    "wilson_interval",
+    "zero_success_upper_limit",
 ]
