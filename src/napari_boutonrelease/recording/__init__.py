@@ -2,12 +2,16 @@
 
 from __future__ import annotations
 
+from .light import Light, measure_light
+from .motion import Drift, measure_drift, no_drift
 from .movie import Movie, content_digest, movie_from_array, open_movie
 from .protocol import Protocol, read_protocol, write_protocol
 from .stimuli import RegularStimuli, StimulusTable, read_stimulus_table
 from .timing import Timing, frame_times_s, resolve_timing, segment_frames, stimulus_frame
 
 __all__ = [
+    "Drift",
+    "Light",
     "Movie",
     "Protocol",
     "RegularStimuli",
@@ -15,7 +19,10 @@ __all__ = [
     "Timing",
     "content_digest",
     "frame_times_s",
+    "measure_drift",
+    "measure_light",
     "movie_from_array",
+    "no_drift",
     "open_movie",
     "read_protocol",
     "read_stimulus_table",

@@ -125,7 +125,7 @@ def measure_drift(
     frames = np.concatenate([_numbers(movie.read(int(k), int(k) + 1)) for k in sample])
     if not _share_structure(frames, sample, light):
         return no_drift(light=light)
-    reference = _build_reference(frames, sample, light, max_shift_px)
+    reference = _build_reference(frames, light, max_shift_px)
 
     fits: list[Fit] = []
     good = np.flatnonzero(~light.bad_frame)
@@ -207,27 +207,25 @@ def _share_structure(frames: NDArray[np.generic], sample: NDArray[np.intp], ligh
     return bool(common.mean() > 5.0 * doubt)
 
 
-def _build_reference(
-    frames: NDArray[np.generic], sample: NDArray[np.intp], light: Light, max_shift_px: float
-) -> Reference:
+def _build_reference(frames: NDArray[np.generic], light: Light, max_shift_px: float) -> Reference:
     """Align the sampled frames with each other, in three rounds, and average them."""
-    middle = int(np.argmin(np.abs(sample - np.median(sample))))
+    middle = len(frames) // 2
     seed = frames[max(0, middle - 4) : middle + 4]
-    image, seen = _aligned_mean(seed, np.zeros(len(seed)), np.zeros(len(seed)))
+    image, n_seen = _aligned_mean(seed, np.zeros(len(seed)), np.zeros(len(seed)))
     reach = 2.0 * max_shift_px  # the middle frame may itself lie at one end of the drift
-    for round_ in range(3):
-        reference = _reference(image, seen, light)
-        if round_ < 2:
-            dy, dx = reference.find(frames, max_shift_px=reach)
-        factor = np.ones(len(frames))
-        if round_ > 0:
-            fit = reference.locate(frames, dy=dy, dx=dx, max_shift_px=reach)
+    few = np.linspace(0, len(frames) - 1, min(len(frames), 200)).round().astype(int)
+    for finely, chosen in ((False, frames[few]), (True, frames[few]), (True, frames)):
+        reference = _reference(image, n_seen, light)
+        dy, dx = reference.find(chosen, max_shift_px=reach)
+        factor = np.ones(len(chosen))
+        if finely:
+            fit = reference.locate(chosen, dy=dy, dx=dx, max_shift_px=reach)
             dy, dx, factor = fit.dy_px, fit.dx_px, np.clip(fit.brightness, 0.25, 4.0)
         dy, dx = dy - np.median(dy), dx - np.median(dx)
         near = np.maximum(np.abs(dy), np.abs(dx)) <= max_shift_px
         offset = light.offset_counts
-        image, seen = _aligned_mean(frames[near], dy[near], dx[near], factor=factor[near], offset=offset)
-    return _reference(image, seen, light)
+        image, n_seen = _aligned_mean(chosen[near], dy[near], dx[near], factor=factor[near], offset=offset)
+    return _reference(image, n_seen, light)
 
 
 def _reference(image: FloatArray, n_seen: FloatArray, light: Light) -> Reference:
