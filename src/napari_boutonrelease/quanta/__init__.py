@@ -1,6 +1,6 @@
 """Release amplitudes in, parameters out: binomial release, intervals, failures, pulse pairs."""
 
-from .binomial import ReleaseModel, SitesFit, fit_binomial, fit_sites
+from .binomial import SitesFit, fit_binomial, fit_sites
 from .failures import (
     binomial_failures,
     binomial_moments,
@@ -37,6 +37,7 @@ from .mixture_fit import LogPrior
 from .poisson import PoissonHistogramFit, fit_poisson_histogram
 from .pulse_pairs import PulsePair, ReleaseHistory, fisher_exact_p, measure_history, measure_pulse_pair
 from .ratios import FiellerInterval, bootstrap_ratio_interval, fieller_interval, unbiased_ratio
+from .site_search import ReleaseModel
 from .threshold import (
     balanced_threshold,
     detection_power,

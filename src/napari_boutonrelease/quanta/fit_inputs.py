@@ -31,7 +31,8 @@ _EDGE_LOGIT = 12.0  # p_site within 6e-6 of 0 or 1 counts as 0 or 1
 _NOISE_FACTOR = 5.0  # the fitted noise may differ from the starting value this many times either way
 _SMALLEST_Q_SD = 0.25  # a vesicle smaller than this share of the noise is indistinguishable from it
 _Q_CV_RANGE = (0.02, 1.5)
-_N_Q, _N_RELEASE, _N_STARTS = 36, 14, 3
+_SHARP_Q_CV = 0.06
+_N_Q, _N_RELEASE, _N_STARTS = 64, 12, 3
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -158,13 +159,20 @@ def make_problems(data: BoutonData, n_sites: Floats, *, m_max: int, priors: Rele
 
 
 def starting_points(problems: Problems, data: BoutonData, *, priors: ReleasePriors) -> Floats:
-    """Best few starts of each problem, (B, S, 4): the ridges of a coarse grid over q and release probability.
+    """Best few starts of each problem, (B, S, 4): the ridges of a grid over q, release probability and q_cv.
 
-    Noise and q_cv stand at their first guesses on the grid; the climb that follows frees them.
+    Two q_cv are tried: the expected one, and one so small that peaks of the histogram stand out if there are any. The
+    noise stands at its first guess; the climb that follows frees all.
     """
+    expected = float(np.clip(priors.q_cv.centre, *_Q_CV_RANGE))
+    sharp = max(expected * np.exp(-2.0 * priors.q_cv.log_sd), min(_SHARP_Q_CV, expected))
+    q_cvs = [expected] if sharp == expected else [expected, sharp]
+    return np.concatenate([_ridges(problems, data, q_cv=q_cv) for q_cv in q_cvs], axis=1)
+
+
+def _ridges(problems: Problems, data: BoutonData, *, q_cv: float) -> Floats:
     lower, upper = problems.lower[0, SIZE], problems.upper[0, SIZE]
     log_q = np.linspace(max(lower, np.log(0.5 * data.noise_start)), upper, _N_Q) if upper > lower else np.array([lower])
-    q_cv = np.clip(priors.q_cv.centre, *_Q_CV_RANGE)
     components = component_logpdf(
         data.amplitudes,
         noise_sd=data.noise_start * data.relative_noise,
