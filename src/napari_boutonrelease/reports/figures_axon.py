@@ -52,8 +52,12 @@ def draw_release_along_axon(area: Area, result: AnalysisResult) -> None:
     lower.set_xlabel(label)
     span = float(np.nanmax(where) - np.nanmin(where)) or 1.0
     upper.set_xlim(float(np.nanmin(where)) - 0.04 * span, float(np.nanmax(where)) + 0.04 * span)
-    if not np.isfinite(values(result.boutons, "q")).any():
-        lower.text(0.5, 0.5, "q could be measured at no bouton.", transform=lower.transAxes, ha="center", color=MUTED)
+    if label == "bouton":
+        lower.locator_params(axis="x", integer=True, min_n_ticks=1)
+    for axes, name in ((upper, "p_release"), (lower, "q")):
+        if not np.isfinite(values(result.boutons, name)).any():
+            sentence = f"{name} could be measured at no bouton."
+            axes.text(0.5, 0.5, sentence, transform=axes.transAxes, ha="center", color=MUTED)
     _legend(upper, result)
 
 

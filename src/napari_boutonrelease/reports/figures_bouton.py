@@ -65,7 +65,8 @@ def _draw_heading(area: Area, result: AnalysisResult, row: int) -> float:
     place = place or f"y {one['y_px']:.1f}, x {one['x_px']:.1f} px"
     trials = "" if math.isnan(one["trials"]) else f"{one['trials']:g} usable trials"
     found = texts(boutons, "found_by")[row]
-    about = [place, f"found by {found}" if found else "", f"F0 {short(one['f0'], digits=3)} counts", trials]
+    f0 = f"F0 {short(one['f0'], digits=3)} counts" if math.isfinite(one["f0"]) else ""
+    about = [place, f"found by {found}" if found else "", f0, trials]
     area.text(27.0, 2.9, "   ·   ".join(part for part in about if part), color=MUTED)
     model, fit = texts(boutons, "quantal_model")[row], one["fit_p"]
     numbers = {

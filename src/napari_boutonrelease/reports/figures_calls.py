@@ -52,7 +52,9 @@ def draw_calls(area: Area, result: AnalysisResult) -> None:
         _draw_share(share, panel)
         share.set_xlabel("trial")
         if index == 0:
-            share.set_ylabel("boutons", rotation=0, ha="right", va="center", fontsize=SMALL)
+            share.set_ylabel(
+                "releases" if n_pulses > 2 else "boutons", rotation=0, ha="right", va="center", fontsize=SMALL
+            )
         else:
             share.tick_params(labelleft=False)
     handles = [
@@ -91,8 +93,9 @@ def _name_boutons(axes: Axes, result: AnalysisResult, *, first: bool) -> None:
 
 
 def _draw_share(axes: Axes, panel: NDArray[np.int_]) -> None:
-    """Draw in each trial how many boutons released."""
+    """Draw in each trial how many releases were called."""
     trials = np.arange(1, panel.shape[1] + 1)
     axes.bar(trials, (panel == _RELEASED).sum(axis=0), width=0.8, color=EVOKED, alpha=0.6, linewidth=0)
     axes.set_ylim(0, max(int((panel != _LEFT_OUT).any(axis=1).sum()), 1))
     axes.locator_params(axis="y", nbins=2, integer=True)
+    axes.locator_params(axis="x", integer=True, min_n_ticks=1)

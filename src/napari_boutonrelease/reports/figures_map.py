@@ -18,7 +18,7 @@ from .figures_page import Area, blank_figure
 from .figures_style import INK, MUTED, SMALL, say_nothing_to_show, sequential, styled
 
 _BAR_UM = (0.5, 1, 2, 5, 10, 20, 50, 100, 200)
-_RING, _LABEL_POINTS = 80.0, 10.5
+_RING, _LABEL_POINTS, _CROWD = 80.0, 10.5, 20
 
 
 @styled
@@ -56,7 +56,7 @@ def draw_evidence(area: Area, result: AnalysisResult) -> None:
     """Draw the detection evidence with the boutons that were kept."""
     axes = _image_axes(area, result.evidence, right_mm=22.0, foot_mm=7.0)
     if not _show(axes, result.evidence, percentiles=(5.0, 99.8)):
-        say_nothing_to_show(axes, "No evidence map: the positions were given.")
+        say_nothing_to_show(axes, "There is no evidence map.")
         return
     count = len(result.boutons)
     _draw_rings(axes, result, np.tile((0.106, 0.392, 0.659, 1.0), (count, 1)), np.ones(count, dtype=bool))
@@ -90,10 +90,18 @@ def _show(axes: Axes, image: NDArray[np.float64], *, percentiles: tuple[float, f
 def _draw_rings(axes: Axes, result: AnalysisResult, colours: Any, known: NDArray[np.bool_]) -> None:
     """Ring each bouton, so that the bouton itself stays visible; dashed where there is no number."""
     y, x = values(result.boutons, "y_px"), values(result.boutons, "x_px")
-    axes.scatter(x[known], y[known], s=_RING, facecolors="none", edgecolors=INK, linewidths=3.0)
-    axes.scatter(x[known], y[known], s=_RING, facecolors="none", edgecolors=colours[known], linewidths=2.0)
-    axes.scatter(x[~known], y[~known], s=_RING, facecolors="none", edgecolors="white", linewidths=2.4)
-    axes.scatter(x[~known], y[~known], s=_RING, facecolors="none", edgecolors=MUTED, linewidths=1.1, linestyles="--")
+    size = _RING if len(y) <= _CROWD else 0.5 * _RING
+
+    def ring(kept: NDArray[np.bool_], colour: Any, width: float, line: str = "-") -> None:
+        if kept.any():
+            axes.scatter(
+                x[kept], y[kept], s=size, facecolors="none", edgecolors=colour, linewidths=width, linestyles=line
+            )
+
+    ring(known, INK, 3.0)
+    ring(known, colours[known], 2.0)
+    ring(~known, "white", 2.4)
+    ring(~known, MUTED, 1.1, "--")
 
 
 def _draw_ids(axes: Axes, result: AnalysisResult) -> None:

@@ -20,6 +20,7 @@ MM_PER_POINT = MM_PER_INCH / 72.0
 A4_MM = (210.0, 297.0)
 MARGIN_MM = 16.0
 LINE_FACTOR = 1.38
+_MEASURED_POINTS = 200.0
 
 
 def blank_figure(width_mm: float, height_mm: float) -> Figure:
@@ -109,9 +110,9 @@ def line_mm(size: float) -> float:
 def text_width_mm(text: str, *, size: float = BODY, weight: str = "normal") -> float:
     """Width of one line of text, mm."""
     font = get_font(findfont(FontProperties(family="DejaVu Sans", weight=weight)))
-    font.set_size(size, 72)
+    font.set_size(_MEASURED_POINTS, 72)  # large, so that rounding to whole pixels does not matter
     font.set_text(text, 0.0)
-    return float(font.get_width_height()[0]) / 64.0 * MM_PER_POINT
+    return float(font.get_width_height()[0]) / 64.0 * MM_PER_POINT * size / _MEASURED_POINTS
 
 
 def wrapped(text: str, width_mm: float, *, size: float = BODY, weight: str = "normal") -> list[str]:

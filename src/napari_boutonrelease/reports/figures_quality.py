@@ -144,5 +144,6 @@ def _draw_release_over_trials(axes: Axes, result: AnalysisResult) -> None:
             color=MUTED,
         )
     axes.set_ylim(-0.03, 1.03)
+    axes.locator_params(axis="x", integer=True, min_n_ticks=1)
     axes.set_xlabel("trial")
     axes.set_ylabel("share of boutons")
