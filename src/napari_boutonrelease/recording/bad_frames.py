@@ -88,20 +88,25 @@ def _robust_sd(values: FloatArray) -> float:
 
 
 def _is_dark(tiles: FloatArray, offset: float | None) -> NDArray[np.bool_]:
-    """Frames whose light fell under half of what the others have. Without an offset the darkest tile stands for it."""
+    """Frames whose light fell under half of what the others have.
+
+    Light is counts above the offset. Where that is unknown, it is how strongly the frame shows the picture that the
+    brighter frames have in common; where there is no picture either, only a loss of half of the counts is sure.
+    """
     mean = tiles.mean(axis=1)
-    full = float(np.percentile(mean, 90))
     picture = np.median(tiles[mean >= np.median(mean)], axis=0)
-    floor = float(picture.min()) if offset is None else offset
-    if offset is None and np.ptp(picture) < 0.2 * abs(full):
-        floor = 0.0  # no dark place to compare with: only a loss of half of the counts is sure
-    above = mean - floor
-    bright = above >= 0.25 * (full - floor)
-    if full <= floor or not bright.any():
-        return np.zeros(len(mean), dtype=np.bool_)
-    lost = float(np.median(above[bright])) - above
-    noise = _robust_sd(np.diff(mean)) if len(mean) > 2 else 0.0
-    dark: NDArray[np.bool_] = (above < 0.5 * np.median(above[bright])) & (lost > 8.0 * noise)
+    light = mean - (offset or 0.0)
+    if offset is None and np.ptp(picture) > 0:
+        contrast = picture - picture.mean()
+        shown = tiles @ contrast / (contrast @ contrast)
+        if _robust_sd(np.diff(shown)) < 0.2:
+            light = shown
+    dark = np.zeros(len(mean), dtype=np.bool_)
+    full = float(np.percentile(light, 90))
+    lit = light >= 0.25 * full
+    if full > 0 and lit.any():
+        lost = float(np.median(mean[lit])) - mean
+        dark = (light < 0.5 * np.median(light[lit])) & (lost > 8.0 * _robust_sd(np.diff(mean)))
     return dark
 
 

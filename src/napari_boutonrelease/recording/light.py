@@ -55,7 +55,7 @@ class Light:
         For each frame "light off", "blank", "not finite", "flash" (a stimulation artefact over the whole field), or
         "" for a good one.
     mean_image : (y, x) ndarray of float
-        Mean of the good frames, counts.
+        Mean of the good frames, counts; NaN where there is none.
     frame_mean : (n_frames,) ndarray of float
         Mean of each frame, counts.
     bleaching : float
@@ -84,7 +84,7 @@ class Light:
         """Variance (counts²) of a pixel whose mean is `mean_counts` (raw counts, any shape); always above 0."""
         mean = np.asarray(mean_counts, dtype=np.float64)
         if not np.isfinite(self.gain):
-            return np.full(mean.shape, max(self.typical_variance, self.least_variance))
+            return np.full(mean.shape, np.fmax(self.typical_variance, self.least_variance))
         return np.maximum(self.gain * mean + self.read_variance, self.least_variance)
 
     @property
@@ -154,9 +154,9 @@ def measure_light(
     n_good = int(np.sum(~bad))
     dead = (extremes.low >= extremes.high) | (missing > 0) if n_good > 1 else missing > 0
     saturated = extremes.saturated(n_good, movie.full_scale) & ~dead
-    mean_image = sum((part.total for part in stretches), np.zeros((n_y, n_x))) / max(n_good, 1)
+    mean_image = sum((part.total for part in stretches), np.zeros((n_y, n_x))) / (n_good or np.nan)
     usable = ~(saturated | dead)
-    mean, variance = (np.nanmedian(np.stack(parts), axis=0)[usable] for parts in _per_stretch(stretches, n_y, n_x))
+    mean, variance = (np.median(np.stack(parts)[:, usable], axis=0) for parts in _per_stretch(stretches, n_y, n_x))
     known = np.isfinite(mean) & np.isfinite(variance)
     gain, gain_se, read_variance = photon_transfer_line(mean[known], variance[known], n_frames=n_good)
     step = 1e-9 if movie.full_scale is None else 1.0 / 12.0  # rounding to integers is noise, too
