@@ -6,6 +6,7 @@ amplitude is the height of the peak in continuous time whatever the frame in whi
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
@@ -56,15 +57,15 @@ class ResponseShape:
 
     def peak(self) -> tuple[float, float]:
         """Time of the peak after the start of the response, in s, and the unscaled height there."""
-        weights, rates = self._terms()
-        slowest = max(self.decay_s, self.slow_decay_s if self.slow_fraction else 0.0)
-        low, high = 0.0, self.rise_s * np.log1p(slowest / self.rise_s)
-        for _ in range(60):  # bisection on the slope, which falls through zero once
-            middle = 0.5 * (low + high)
-            slope = -np.sum(weights * rates * np.exp(-rates * middle))
-            low, high = (middle, high) if slope > 0 else (low, middle)
-        time = 0.5 * (low + high)
-        return time, float(np.sum(weights * np.exp(-rates * time)))
+        weights, rates = (terms.tolist() for terms in self._terms())
+        time = self.rise_s * math.log1p(self.decay_s / self.rise_s)
+        if self.slow_fraction:
+            low, high = 0.0, self.rise_s * math.log1p(max(self.decay_s, self.slow_decay_s) / self.rise_s)
+            for _ in range(60):  # bisection on the slope, which falls through zero once
+                time = 0.5 * (low + high)
+                slope = -sum(w * r * math.exp(-r * time) for w, r in zip(weights, rates, strict=True))
+                low, high = (time, high) if slope > 0 else (low, time)
+        return time, sum(w * math.exp(-r * time) for w, r in zip(weights, rates, strict=True))
 
     def end_s(self, *, remaining: float = 1e-3) -> float:
         """Time after the stimulus at which the response has fallen to about `remaining` of its peak, in s."""

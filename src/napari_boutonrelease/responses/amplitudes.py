@@ -169,7 +169,7 @@ def fit_amplitudes(
         frame_sd=frame_sd,
         trials=trials,
     )
-    ratio, from_gaps = _noise_ratio(null_z)
+    ratio, from_gaps = _noise_ratio(null_z, independent=_independent_share(nulls))
     amplitude_se = amplitude_se * ratio[:, None, None]
     typical = _typical(amplitude_se)
     at_pulse = scale[:, first_pulse_frame]
@@ -266,18 +266,30 @@ def _null_scores(
     return result
 
 
-def _noise_ratio(null_z: NDArray[np.float64]) -> tuple[NDArray[np.float64], NDArray[np.bool_]]:
+def _independent_share(nulls: Windows) -> float:
+    """Share of the null amplitudes that count as independent: two for the length of a window."""
+    if not nulls.start.size:
+        return 1.0
+    covered = np.zeros(int(nulls.stop.max()), dtype=bool)
+    for low, high in zip(nulls.start, nulls.stop, strict=True):
+        covered[low:high] = True
+    length = float(np.median(nulls.stop - nulls.start))
+    return min(1.0, 2.0 * np.count_nonzero(covered) / (length * nulls.start.size))
+
+
+def _noise_ratio(null_z: NDArray[np.float64], *, independent: float) -> tuple[NDArray[np.float64], NDArray[np.bool_]]:
     """SD of the null scores of each bouton, drawn towards the boutons' common value as far as chance explains them.
 
     The scatter of n null amplitudes is uncertain by 1/sqrt(2n). Boutons of one recording share the reasons for which
     noise exceeds the frames' scatter, so that most of their differences are chance (empirical Bayes on the logarithm).
     """
-    n = np.sum(np.isfinite(null_z), axis=1)
+    n = independent * np.sum(np.isfinite(null_z), axis=1)
     from_gaps = n >= _LEAST_NULLS
     ratio = np.ones(null_z.shape[0])
     if not from_gaps.any():
         return ratio, from_gaps
-    sd = robust_sd(null_z[from_gaps])
+    # About zero: null amplitudes of one gap share the error of their baseline, which their own mean would take out.
+    sd = robust_sd(null_z[from_gaps], centre=0.0)
     log_sd = np.log(np.where(sd > 0, sd, 1.0))
     chance = 0.6 / n[from_gaps]
     between = max(float(np.var(log_sd) - np.mean(chance)), 0.05**2)

@@ -18,7 +18,7 @@ _CLIPPED_SD = 0.954597
 """SD of a standard normal that is cut at ±2.5: sqrt(1 - 2·2.5·φ(2.5) / (2Φ(2.5) - 1))."""
 
 
-def robust_sd(values: NDArray[np.float64]) -> NDArray[np.float64]:
+def robust_sd(values: NDArray[np.float64], *, centre: float | None = None) -> NDArray[np.float64]:
     """SD of normal values among which some are outliers, along the last axis.
 
     Starts from the median absolute deviation and then drops what lies beyond 2.5 SD until that settles, allowing for the
@@ -28,6 +28,8 @@ def robust_sd(values: NDArray[np.float64]) -> NDArray[np.float64]:
     ----------
     values : (..., n) ndarray
         NaN are skipped.
+    centre : float, optional
+        Mean of the values where it is known; their own where absent.
 
     Returns
     -------
@@ -48,15 +50,16 @@ def robust_sd(values: NDArray[np.float64]) -> NDArray[np.float64]:
         finite = series[np.isfinite(series)]
         if finite.size < 3:
             continue
-        centre = np.median(finite)
-        sd = 1.482602 * np.median(np.abs(finite - centre)) or np.std(finite, ddof=1)
+        middle = np.median(finite) if centre is None else centre
+        sd = 1.482602 * np.median(np.abs(finite - middle)) or np.sqrt(np.mean((finite - middle) ** 2))
+        # The last half makes the SD, rather than the variance, free of bias at small n.
+        spent = 1.5 if centre is None else 0.5
         for _ in range(20):
-            kept = finite[np.abs(finite - centre) <= _CLIP_SD * sd]
+            kept = finite[np.abs(finite - middle) <= _CLIP_SD * sd]
             if kept.size < 3:
                 break
-            centre, before = np.mean(kept), sd
-            # (n - 1) - 1/2 makes the SD, rather than the variance, free of bias at small n.
-            sd = np.sqrt(np.sum((kept - centre) ** 2) / (kept.size - 1.5)) / _CLIPPED_SD
+            middle, before = np.mean(kept) if centre is None else centre, sd
+            sd = np.sqrt(np.sum((kept - middle) ** 2) / (kept.size - spent)) / _CLIPPED_SD
             if abs(sd - before) <= 1e-6 * sd:
                 break
         result[row] = sd
