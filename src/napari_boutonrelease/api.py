@@ -25,7 +25,13 @@ class Analysis(AnalysisResult):
 
     __slots__ = ()
 
-    def write(self, folder: str | Path, *, overwrite: bool = False) -> Path:
+    def write(
+        self,
+        folder: str | Path,
+        *,
+        overwrite: bool = False,
+        progress: Callable[[int, int], None] | None = None,
+    ) -> Path:
         """Write tables, traces, footprints, figures and report into a folder, whole or not at all.
 
         Parameters
@@ -34,6 +40,8 @@ class Analysis(AnalysisResult):
             Folder to make, or to replace if it holds results.
         overwrite : bool
             Replace results that are already there.
+        progress : callable, optional
+            Called with (done, total) files.
 
         Returns
         -------
@@ -47,7 +55,7 @@ class Analysis(AnalysisResult):
         """
         from .reports import write_result
 
-        return write_result(self, Path(folder), overwrite=overwrite)
+        return write_result(self, Path(folder), overwrite=overwrite, progress=progress)
 
 
 def analyse(

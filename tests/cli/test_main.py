@@ -111,6 +111,19 @@ def test_doubts_about_a_recording_are_notes(capsys, command):
     assert capsys.readouterr().err == "boutonrelease: note: half of the frames are dark.\n"
 
 
+def test_a_reader_that_has_seen_enough_is_no_failure(tmp_path):
+    assert program.main(["simulate", str(tmp_path / "a.tif"), "--trials", "1", "--set", "specks_off_axon=0"]) == 0
+    code = (
+        "import sys\nfrom napari_boutonrelease.cli.main import main\n"
+        f"sys.exit(main(['inspect', {str(tmp_path / 'a.tif')!r}]))"
+    )
+    reader, writer = os.pipe()
+    os.close(reader)
+    done = subprocess.run([sys.executable, "-c", code], stdout=writer, stderr=subprocess.PIPE, text=True, check=False)
+    os.close(writer)
+    assert (done.returncode, done.stderr) == (0, "")
+
+
 @pytest.mark.parametrize("words", [["--help"], ["--version"], *([name, "--help"] for name in COMMANDS)])
 def test_answers_load_nothing_heavy(words):
     code = (

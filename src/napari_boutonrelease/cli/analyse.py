@@ -49,7 +49,8 @@ def run(args: argparse.Namespace) -> None:
     check_can_write(out, overwrite=args.overwrite)
     with progress_bar("analysing") as progress:
         analysis = analyse(**inputs, settings=settings, progress=progress)
-    analysis.write(out, overwrite=args.overwrite)
+    with progress_bar("writing") as progress:
+        analysis.write(out, overwrite=args.overwrite, progress=progress)
     print(*summary_lines(analysis, folder=out), sep="\n")
 
 

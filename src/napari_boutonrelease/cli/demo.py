@@ -50,7 +50,8 @@ def run(args: argparse.Namespace) -> None:
     print(f"recording: {recording.movie} (simulated, seed {args.seed})")
     with progress_bar("analysing") as progress:
         analysis = analyse(recording.movie, recording.protocol, progress=progress)
-    analysis.write(results, overwrite=args.overwrite)
+    with progress_bar("writing") as progress:
+        analysis.write(results, overwrite=args.overwrite, progress=progress)
     print(*summary_lines(analysis, folder=results), sep="\n")
     print("", "estimates (95 % interval) beside the truth", sep="\n")
     print(*comparison_lines(analysis.boutons, read_truth(recording.truth)), sep="\n")

@@ -80,6 +80,9 @@ def _guarded(command: "ModuleType", args: "argparse.Namespace") -> int:
         warnings.showwarning = _show_warning
     try:
         command.run(args)
+        sys.stdout.flush()
+    except BrokenPipeError:  # whoever read our output, `head` say, has seen enough
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
     except InputError as error:
         return _failed(f"error: {error}", code=WRONG_INPUT, debug=args.debug)
     except KeyboardInterrupt:
