@@ -188,11 +188,9 @@ def ratio_interval(
     with np.errstate(invalid="ignore", divide="ignore"):
         centre = np.log(k1 / n1) - np.log(k2 / n2)
         half = z * np.sqrt(1 / k1 - 1 / n1 + 1 / k2 - 1 / n2)
+        lo, hi = np.exp(centre - half), np.exp(centre + half)
     defined = (k1 > 0) & (k2 > 0)
-    return (
-        np.where(defined, np.exp(np.where(defined, centre - half, 0.0)), np.nan),
-        np.where(defined, np.exp(np.where(defined, centre + half, 0.0)), np.nan),
-    )
+    return np.where(defined, lo, np.nan), np.where(defined, hi, np.nan)
 
 
 def mcnemar_test(
