@@ -7,7 +7,7 @@ the drift through time (`random_walk`). No frame is resampled but for the refere
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -16,6 +16,7 @@ from napari_boutonrelease.checks import check_positive
 from napari_boutonrelease.errors import InputError
 
 from .cubic_convolution import shift_frame_block
+from .light import photon_transfer_line
 from .random_walk import smooth_random_walk
 from .registration import Fit, Reference
 
@@ -123,6 +124,7 @@ def measure_drift(
     if len(sample) < 4 or min(n_y, n_x) < 8:
         return no_drift(light=light)
     frames = np.concatenate([_numbers(movie.read(int(k), int(k) + 1)) for k in sample])
+    _fill_dead(frames, light.dead)
     if not _share_structure(frames, sample, light):
         return no_drift(light=light)
     reference = _build_reference(frames, light, max_shift_px)
@@ -185,6 +187,15 @@ def _numbers(frames: NDArray[np.generic]) -> NDArray[np.generic]:
     return frames
 
 
+def _fill_dead(frames: NDArray[np.generic], dead: NDArray[np.bool_]) -> None:
+    """Give dead pixels the value of their nearest neighbour, so that the mean image has no holes."""
+    from scipy.ndimage import distance_transform_edt
+
+    if dead.any() and not dead.all():
+        y, x = distance_transform_edt(dead, return_distances=False, return_indices=True)
+        frames[:, dead] = frames[:, y[dead], x[dead]]
+
+
 def _share_structure(frames: NDArray[np.generic], sample: NDArray[np.intp], light: Light) -> bool:
     """Whether successive frames have more in common than a smooth background: else there is nothing to register."""
     from scipy.ndimage import gaussian_filter
@@ -192,7 +203,7 @@ def _share_structure(frames: NDArray[np.generic], sample: NDArray[np.intp], ligh
     usable = ~(light.dead | light.saturated)
     if not usable.any():
         return False
-    weights = usable / light.variance_at(light.mean_image)
+    weights = np.where(usable, 1.0 / light.variance_at(light.mean_image), 0.0)
     pairs = np.flatnonzero(np.diff(sample) == 1)
     pairs = pairs[np.linspace(0, len(pairs) - 1, min(len(pairs), 40)).round().astype(int)]
 
@@ -212,10 +223,11 @@ def _build_reference(frames: NDArray[np.generic], light: Light, max_shift_px: fl
     middle = len(frames) // 2
     seed = frames[max(0, middle - 4) : middle + 4]
     image, n_seen = _aligned_mean(seed, np.zeros(len(seed)), np.zeros(len(seed)))
+    variance_at: Callable[[FloatArray], FloatArray] = light.variance_at
     reach = 2.0 * max_shift_px  # the middle frame may itself lie at one end of the drift
     few = np.linspace(0, len(frames) - 1, min(len(frames), 200)).round().astype(int)
     for finely, chosen in ((False, frames[few]), (True, frames[few]), (True, frames)):
-        reference = _reference(image, n_seen, light)
+        reference = _reference(image, n_seen, light, variance_at)
         dy, dx = reference.find(chosen, max_shift_px=reach)
         factor = np.ones(len(chosen))
         if finely:
@@ -223,18 +235,41 @@ def _build_reference(frames: NDArray[np.generic], light: Light, max_shift_px: fl
             dy, dx, factor = fit.dy_px, fit.dx_px, np.clip(fit.brightness, 0.25, 4.0)
         dy, dx = dy - np.median(dy), dx - np.median(dx)
         near = np.maximum(np.abs(dy), np.abs(dx)) <= max_shift_px
-        offset = light.offset_counts
-        image, n_seen = _aligned_mean(chosen[near], dy[near], dx[near], factor=factor[near], offset=offset)
-    return _reference(image, n_seen, light)
+        chosen, dy, dx, factor = chosen[near], dy[near], dx[near], factor[near] / np.mean(factor[near])
+        image, n_seen = _aligned_mean(chosen, dy, dx, factor=factor, offset=light.offset_counts)
+        if finely:
+            variance_at = _noise_at_rest(chosen, dy, dx, factor, image, light)
+    return _reference(image, n_seen, light, variance_at)
 
 
-def _reference(image: FloatArray, n_seen: FloatArray, light: Light) -> Reference:
+def _noise_at_rest(
+    frames: NDArray[np.generic], dy: FloatArray, dx: FloatArray, factor: FloatArray, image: FloatArray, light: Light
+) -> Callable[[FloatArray], FloatArray]:
+    """Noise of a pixel with the movement taken out: a sample that trembles looks noisier than its light is."""
+    few = np.linspace(0, len(frames) - 1, min(len(frames), 60)).round().astype(int)
+    expected = shift_frame_block(np.broadcast_to(image, (len(few), *image.shape)), dy=-dy[few], dx=-dx[few])
+    expected = light.offset_counts + (expected - light.offset_counts) * factor[few, None, None].astype(np.float32)
+    error = frames[few] - expected
+    inside = np.zeros(image.shape, dtype=np.bool_)
+    margin_y, margin_x = (int(np.ceil(np.abs(shift).max())) + 1 for shift in (dy, dx))
+    inside[margin_y:-margin_y, margin_x:-margin_x] = True
+    inside &= ~(light.dead | light.saturated)
+    mean, variance = (np.asarray(part[:, inside].mean(axis=0), dtype=np.float64) for part in (expected, error**2))
+    gain, _, intercept = photon_transfer_line(mean, variance, n_frames=len(few))
+    if not gain < light.gain:
+        return light.variance_at
+    return replace(light, gain=gain, read_variance=intercept).variance_at
+
+
+def _reference(
+    image: FloatArray, n_seen: FloatArray, light: Light, variance_at: Callable[[FloatArray], FloatArray]
+) -> Reference:
     from scipy.ndimage import binary_dilation
 
-    noise = float(np.mean(light.variance_at(image) / np.maximum(n_seen, 1.0)))
+    variance = variance_at(image)
     return Reference(
-        image=without_noise(image, noise_variance=noise),
-        variance=light.variance_at(image),
+        image=without_noise(image, noise_variance=float(np.mean(variance / np.maximum(n_seen, 1.0)))),
+        variance=variance,
         known=n_seen > 0.2 * n_seen.max(),
         usable=~(binary_dilation(light.saturated) | light.dead),
     )
@@ -282,7 +317,7 @@ def _aligned_mean(
 ) -> tuple[FloatArray, FloatArray]:
     """Mean of frames in reference coordinates at their mean brightness, and how many of them saw each pixel."""
     n, n_y, n_x = frames.shape
-    factor = np.ones(n) if factor is None else factor / np.mean(factor)
+    factor = np.ones(n) if factor is None else factor
     total, seen, filled = np.zeros((n_y, n_x)), np.zeros((n_y, n_x)), np.zeros((n_y, n_x))
     for k in range(n):
         image = shift_frame_block(frames[k : k + 1], dy=dy[k : k + 1], dx=dx[k : k + 1])[0]
