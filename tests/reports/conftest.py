@@ -13,6 +13,7 @@ from napari_boutonrelease.analysis.columns import TABLES, empty_table
 from napari_boutonrelease.analysis.results import AnalysisResult
 from napari_boutonrelease.analysis.settings import Settings
 from napari_boutonrelease.flags import join_flags
+from napari_boutonrelease.reports import write_result
 from napari_boutonrelease.response_shape import ResponseShape
 
 INTERVAL_S, TRIAL_S, PIXEL_UM, NOISE_SD = 0.010, 1.0, 0.1, 0.022
@@ -102,11 +103,18 @@ def make_result(*, seed: int = 1, boutons: int = 9, trials: int = 60, pulses: in
                     }
                 )
         row = {
-            "bouton": b + 1, "y_px": y_px[b], "x_px": x_px[b], "y_um": y_px[b] * PIXEL_UM, "x_um": x_px[b] * PIXEL_UM,
-            "axon_um": axon_um[b], "axon_offset_um": abs(rng.normal(0, 0.1)), "footprint_px": 29,
+            "bouton": b + 1,
+            "y_px": y_px[b],
+            "x_px": x_px[b],
+            "y_um": y_px[b] * PIXEL_UM,
+            "x_um": x_px[b] * PIXEL_UM,
+            "axon_um": axon_um[b],
+            "axon_offset_um": abs(rng.normal(0, 0.1)),
+            "footprint_px": 29,
             "found_by": ("both", "responses", "both", "shape", "both", "hand", "shape", "responses", "file")[b % 9],
-            "trials": int(used.sum()), "flags": None,
-        }  # fmt: skip
+            "trials": int(used.sum()),
+            "flags": None,
+        }
         if not usable:
             bouton_rows.append(row | {"f0": 1.3, "trials": 0, "flags": join_flags(["f0_unusable", "edge"])})
             continue
@@ -116,50 +124,107 @@ def make_result(*, seed: int = 1, boutons: int = 9, trials: int = 60, pulses: in
             rate, low, high = _wilson(called, len(a))
             pulse_rows.append(
                 {
-                    "bouton": b + 1, "pulse": pulse + 1, "trials": len(a), "called": called, "p_called": rate,
-                    "p_called_lo": low, "p_called_hi": high, "p_release": rate, "p_release_lo": low, "p_release_hi": high,
-                    "amplitude_mean": a.mean(), "amplitude_se": a.std() / np.sqrt(len(a)), "amplitude_sd": a.std(),
+                    "bouton": b + 1,
+                    "pulse": pulse + 1,
+                    "trials": len(a),
+                    "called": called,
+                    "p_called": rate,
+                    "p_called_lo": low,
+                    "p_called_hi": high,
+                    "p_release": rate,
+                    "p_release_lo": low,
+                    "p_release_hi": high,
+                    "amplitude_mean": a.mean(),
+                    "amplitude_se": a.std() / np.sqrt(len(a)),
+                    "amplitude_sd": a.std(),
                     "potency": a[a > threshold].mean() if called else np.nan,
                 }
-            )  # fmt: skip
+            )
         first = pulse_rows[-pulses]
         rate, low, high = first["p_called"], first["p_called_lo"], first["p_called_hi"]
         silent = p_site[b] == 0
         row |= {
-            "f0": f0_start[b], "noise_sd": NOISE_SD * rng.uniform(0.9, 1.1), "noise_from": "gaps", "snr": q[b] / NOISE_SD,
-            "threshold": threshold, **{name: first[name] for name in ("p_called", "p_called_lo", "p_called_hi")},
-            "false_calls_expected": 0.006 * trials, "p_release": 0.004 if silent else rate,
-            "p_release_lo": 0.0 if silent else low, "p_release_hi": high,
+            "f0": f0_start[b],
+            "noise_sd": NOISE_SD * rng.uniform(0.9, 1.1),
+            "noise_from": "gaps",
+            "snr": q[b] / NOISE_SD,
+            "threshold": threshold,
+            **{name: first[name] for name in ("p_called", "p_called_lo", "p_called_hi")},
+            "false_calls_expected": 0.006 * trials,
+            "p_release": 0.004 if silent else rate,
+            "p_release_lo": 0.0 if silent else low,
+            "p_release_hi": high,
             **{name: first[name] for name in ("amplitude_mean", "amplitude_se", "potency")},
-            "n_sites": np.nan if silent else n_sites[b], "n_sites_lo": np.nan if silent else max(1, n_sites[b] - 1),
-            "n_sites_hi": np.nan if silent else n_sites[b] + 1, "p_site": 0.004 if silent else p_site[b], "p_site_lo": 0.8 * p_site[b],
-            "p_site_hi": min(1.25 * p_site[b] + 0.05, 1.0), "q": q[b], "q_lo": 0.88 * q[b], "q_hi": 1.12 * q[b], "q_from": "axon" if silent else "own",
-            "q_cv": 0.3, "quantal_model": "none" if silent else "binomial", "fit_p": 0.02 + 0.9 * rng.random(),
-            "spontaneous_per_min": 0.4, "crosstalk": 0.02, "p_corrected": max(rate - 0.006, 0.0), "p_corrected_lo": max(low - 0.006, 0.0),
-            "p_corrected_hi": high, "noise_photon_limit_sd": NOISE_SD * 0.8, "noise_excess": 1.25,
+            "n_sites": np.nan if silent else n_sites[b],
+            "n_sites_lo": np.nan if silent else max(1, n_sites[b] - 1),
+            "n_sites_hi": np.nan if silent else n_sites[b] + 1,
+            "p_site": 0.004 if silent else p_site[b],
+            "p_site_lo": 0.8 * p_site[b],
+            "p_site_hi": min(1.25 * p_site[b] + 0.05, 1.0),
+            "q": q[b],
+            "q_lo": 0.88 * q[b],
+            "q_hi": 1.12 * q[b],
+            "q_from": "axon" if silent else "own",
+            "q_cv": 0.3,
+            "quantal_model": "none" if silent else "binomial",
+            "fit_p": 0.02 + 0.9 * rng.random(),
+            "spontaneous_per_min": 0.4,
+            "crosstalk": 0.02,
+            "p_corrected": max(rate - 0.006, 0.0),
+            "p_corrected_lo": max(low - 0.006, 0.0),
+            "p_corrected_hi": high,
+            "noise_photon_limit_sd": NOISE_SD * 0.8,
+            "noise_excess": 1.25,
             "n_set": None if silent else ";".join(str(n) for n in range(max(1, n_sites[b] - 1), n_sites[b] + 2)),
-            "q_own": np.nan if silent else q[b] * 1.04, "p_release_own": rate,
-            "flags": join_flags(["silent"] if silent else ["n_unresolved", "crosstalk", "rundown"] if b == 4 else ["edge"] if b == 0 else []) or None,
-        }  # fmt: skip
+            "q_own": np.nan if silent else q[b] * 1.04,
+            "p_release_own": rate,
+            "flags": join_flags(
+                ["silent"]
+                if silent
+                else ["n_unresolved", "crosstalk", "rundown"]
+                if b == 4
+                else ["edge"]
+                if b == 0
+                else []
+            )
+            or None,
+        }
         if pulses > 1:
             ratio = 1.0 if silent else pulse_rows[-pulses + 1]["amplitude_mean"] / first["amplitude_mean"]
             row |= {
-                "p2_release": pulse_rows[-pulses + 1]["p_release"], "ppr": np.nan if silent else ratio,
-                "ppr_lo": np.nan if silent else 0.8 * ratio, "ppr_hi": np.nan if silent else 1.24 * ratio,
-                "ppf": np.nan if silent else ratio - 1, "ppr_release": np.nan if silent else ratio * 0.97,
-                "paired_pulse": None if silent else "facilitation" if 0.8 * ratio > 1 else "depression" if 1.24 * ratio < 1 else "unresolved",
-                "p2_given_release": np.nan if silent else 0.9 * rate, "p2_given_failure": np.nan if silent else min(1.1 * rate, 1),
+                "p2_release": pulse_rows[-pulses + 1]["p_release"],
+                "ppr": np.nan if silent else ratio,
+                "ppr_lo": np.nan if silent else 0.8 * ratio,
+                "ppr_hi": np.nan if silent else 1.24 * ratio,
+                "ppf": np.nan if silent else ratio - 1,
+                "ppr_release": np.nan if silent else ratio * 0.97,
+                "paired_pulse": None
+                if silent
+                else "facilitation"
+                if 0.8 * ratio > 1
+                else "depression"
+                if 1.24 * ratio < 1
+                else "unresolved",
+                "p2_given_release": np.nan if silent else 0.9 * rate,
+                "p2_given_failure": np.nan if silent else min(1.1 * rate, 1),
                 "history_p": np.nan if silent else rng.random(),
-            }  # fmt: skip
+            }
         bouton_rows.append(row)
         m = -np.log(max(1 - rate, 1e-3))
         for quantity, method, value, spread in (
-            ("p_release", "mixture, q pooled", row["p_release"], 0.25), ("p_release", "mixture, alone", rate, 0.3),
-            ("p_release", "counted", rate, 0.3), ("p_release", "counted, corrected", row["p_corrected"], 0.3),
-            ("m", "mixture, q pooled", n_sites[b] * p_site[b], 0.25), ("m", "failures", m, 0.3), ("m", "1/CV²", m * 1.1, 0.5),
-            ("n_sites", "mixture, q pooled", row["n_sites"], 0.4), ("p_site", "mixture, q pooled", p_site[b], 0.25),
-            ("p_site", "failures", p_site[b] * 0.97, 0.3), ("q", "mixture, q pooled", q[b], 0.12), ("q", "mixture, alone", 1.04 * q[b], 0.2),
-        ):  # fmt: skip
+            ("p_release", "mixture, q pooled", row["p_release"], 0.25),
+            ("p_release", "mixture, alone", rate, 0.3),
+            ("p_release", "counted", rate, 0.3),
+            ("p_release", "counted, corrected", row["p_corrected"], 0.3),
+            ("m", "mixture, q pooled", n_sites[b] * p_site[b], 0.25),
+            ("m", "failures", m, 0.3),
+            ("m", "1/CV²", m * 1.1, 0.5),
+            ("n_sites", "mixture, q pooled", row["n_sites"], 0.4),
+            ("p_site", "mixture, q pooled", p_site[b], 0.25),
+            ("p_site", "failures", p_site[b] * 0.97, 0.3),
+            ("q", "mixture, q pooled", q[b], 0.12),
+            ("q", "mixture, alone", 1.04 * q[b], 0.2),
+        ):
             low, high = value * (1 - spread), value * (1 + spread)
             high = min(high, 1.0) if quantity.startswith("p_") else high
             estimates.append(
@@ -178,11 +243,14 @@ def make_result(*, seed: int = 1, boutons: int = 9, trials: int = 60, pulses: in
 
     drift = pd.DataFrame(
         {
-            "frame": np.arange(frames), "time_s": time_s, "dy_px": np.cumsum(rng.normal(0, 0.02, frames)),
+            "frame": np.arange(frames),
+            "time_s": time_s,
+            "dy_px": np.cumsum(rng.normal(0, 0.02, frames)),
             "dx_px": 0.4 * np.sin(time_s / 9) + np.cumsum(rng.normal(0, 0.01, frames)),
-            "match": np.clip(0.93 + rng.normal(0, 0.01, frames), 0, 1), "used": 1,
+            "match": np.clip(0.93 + rng.normal(0, 0.01, frames), 0, 1),
+            "used": 1,
         }
-    )  # fmt: skip
+    )
     drift.loc[bad_frames.start : bad_frames.stop - 1, ["match", "used"]] = [0.31, 0]
     drift["used"] = drift["used"].astype(int)
 
@@ -195,23 +263,40 @@ def make_result(*, seed: int = 1, boutons: int = 9, trials: int = 60, pulses: in
         evidence += 400 * p_site[b] * spot
     return AnalysisResult(
         name="axon_07",
-        boutons=_frame("boutons", bouton_rows), pulses=_frame("pulses", pulse_rows), responses=_frame("responses", responses),
-        spontaneous=_frame("spontaneous", spontaneous), drift=drift,
+        boutons=_frame("boutons", bouton_rows),
+        pulses=_frame("pulses", pulse_rows),
+        responses=_frame("responses", responses),
+        spontaneous=_frame("spontaneous", spontaneous),
+        drift=drift,
         estimates=pd.DataFrame(estimates, columns=["bouton", "quantity", "method", "value", "lo", "hi"]),
         summary=_summary(frames, height, width, trials, pulses, bouton_rows) if boutons else {},
         provenance={
-            "created": "2026-03-02T10:15:00Z", "format": 1, "settings": Settings().model_dump(),
+            "created": "2026-03-02T10:15:00Z",
+            "format": 1,
+            "settings": Settings().model_dump(),
             "movie": {"path": "axon_07.tif", "bytes": 294912000, "sha256": "0" * 64},
             "versions": {"napari-boutonrelease": "0.1.0", "numpy": "2.1.0", "scipy": "1.14.0"},
         },
         cautions=(
             "1 of 60 trials was left out: the focus jumped.",
             "The pixel size comes from the protocol and differs from the file's (0.11 µm).",
-        ) if boutons else ("No bouton was found.",),
-        settings=Settings(), time_s=time_s, f=f, f0=f0, dff=dff, stimulus_s=stimulus_s, null_amplitude=null,
-        mean_image=image, evidence=evidence, evidence_cut=22.0,
-        footprints=make_footprints(y_px, x_px, (height, width)), shape=SHAPE, shape_from="recording",
-    )  # fmt: skip
+        )
+        if boutons
+        else ("No bouton was found.",),
+        settings=Settings(),
+        time_s=time_s,
+        f=f,
+        f0=f0,
+        dff=dff,
+        stimulus_s=stimulus_s,
+        null_amplitude=null,
+        mean_image=image,
+        evidence=evidence,
+        evidence_cut=22.0,
+        footprints=make_footprints(y_px, x_px, (height, width)),
+        shape=SHAPE,
+        shape_from="recording",
+    )
 
 
 def make_footprints(y_px, x_px, shape):
@@ -237,21 +322,44 @@ def _summary(frames, height, width, trials, pulses, bouton_rows):
     error = measured.std() / np.sqrt(len(measured)) if len(measured) else np.nan
     return {
         "recording": {
-            "frames": frames, "height_px": height, "width_px": width, "duration_s": frames * INTERVAL_S, "frame_interval_s": INTERVAL_S,
-            "exposure_s": INTERVAL_S, "row_time_s": 0.0, "pixel_size_um": PIXEL_UM, "trials": trials, "pulses": pulses,
+            "frames": frames,
+            "height_px": height,
+            "width_px": width,
+            "duration_s": frames * INTERVAL_S,
+            "frame_interval_s": INTERVAL_S,
+            "exposure_s": INTERVAL_S,
+            "row_time_s": 0.0,
+            "pixel_size_um": PIXEL_UM,
+            "trials": trials,
+            "pulses": pulses,
             "pulse_interval_s": 0.05 if pulses > 1 else None,
         },
         "population": {
-            "boutons": len(measured), "selection": "all boutons with a usable baseline, however found",
-            "p_release": measured.mean(), "p_release_lo": measured.mean() - 1.96 * error, "p_release_hi": measured.mean() + 1.96 * error,
-            "q": 0.121, "q_lo": 0.112, "q_hi": 0.131, "ppr": 1.18 if pulses > 1 else np.nan, "ppr_lo": 1.02, "ppr_hi": 1.36,
+            "boutons": len(measured),
+            "selection": "all boutons with a usable baseline, however found",
+            "p_release": measured.mean(),
+            "p_release_lo": measured.mean() - 1.96 * error,
+            "p_release_hi": measured.mean() + 1.96 * error,
+            "q": 0.121,
+            "q_lo": 0.112,
+            "q_hi": 0.131,
+            "ppr": 1.18 if pulses > 1 else np.nan,
+            "ppr_lo": 1.02,
+            "ppr_hi": 1.36,
         },
         "heterogeneity": {"sd": 0.21, "sd_lo": 0.13, "sd_hi": 0.36, "p": 2e-7},
         "morans_i": {"value": -0.12, "p": 0.41},
         "co_release": {"value": 0.02, "p": 0.37},
         "stimulus_failures": {"trials": 2, "expected": 1.4, "p": 0.41},
-        "quality": {"gain": 2.1, "read_noise_counts": 3.4, "bleaching": 0.22, "drift_max_px": 1.1, "frames_left_out": 15, "saturated_px": 0},
-    }  # fmt: skip
+        "quality": {
+            "gain": 2.1,
+            "read_noise_counts": 3.4,
+            "bleaching": 0.22,
+            "drift_max_px": 1.1,
+            "frames_left_out": 15,
+            "saturated_px": 0,
+        },
+    }
 
 
 @pytest.fixture(scope="session")
@@ -280,8 +388,24 @@ def blank_result() -> AnalysisResult:
     responses = full.responses.assign(amplitude=np.nan, amplitude_se=np.nan, called=None, p_released=np.nan, used=0)
     nothing = np.full_like(full.dff, np.nan)
     return replace(
-        full, boutons=boutons, responses=responses, pulses=empty_table("pulses"), estimates=full.estimates.iloc[:0],
-        spontaneous=empty_table("spontaneous"), summary={}, f=nothing, f0=nothing, dff=nothing,
-        null_amplitude=np.full_like(full.null_amplitude, np.nan), evidence_cut=np.nan,
-        mean_image=np.full_like(full.mean_image, np.nan), evidence=np.full_like(full.evidence, np.nan),
-    )  # fmt: skip
+        full,
+        boutons=boutons,
+        responses=responses,
+        pulses=empty_table("pulses"),
+        estimates=full.estimates.iloc[:0],
+        spontaneous=empty_table("spontaneous"),
+        summary={},
+        f=nothing,
+        f0=nothing,
+        dff=nothing,
+        null_amplitude=np.full_like(full.null_amplitude, np.nan),
+        evidence_cut=np.nan,
+        mean_image=np.full_like(full.mean_image, np.nan),
+        evidence=np.full_like(full.evidence, np.nan),
+    )
+
+
+@pytest.fixture(scope="session")
+def written(small_result, tmp_path_factory):
+    """A folder with everything of the small result; tests only read it."""
+    return write_result(small_result, tmp_path_factory.mktemp("written") / "axon_07.release", overwrite=False)

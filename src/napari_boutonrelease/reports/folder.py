@@ -42,8 +42,9 @@ def check_can_write(folder: Path, *, overwrite: bool) -> None:
         where writing is not allowed.
     """
     folder = Path(folder)
-    if folder.exists():
-        _check_replaceable(folder, overwrite=overwrite)
+    current = folder if folder.exists() else _aside(folder.resolve())
+    if current.exists():
+        _check_replaceable(current, overwrite=overwrite)
     ancestor = next(path for path in folder.absolute().parents if path.exists())
     if not ancestor.is_dir():
         raise OutputError(f"{ancestor} is a file, so no results can be written to {folder}; choose another folder.")

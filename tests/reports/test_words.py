@@ -1,0 +1,58 @@
+"""Results in words: what is said, what is left out, and how numbers are written."""
+
+from dataclasses import replace
+
+import pytest
+
+from napari_boutonrelease.reports.facts import fact, number
+from napari_boutonrelease.reports.words import flag_holders, headlines, recording_facts, recording_line
+
+
+def test_the_main_results_are_said_with_their_intervals(result):
+    said = " ".join(headlines(result)).replace("\u00a0", " ")
+    mean = result.summary["population"]
+    expected = f"{mean['p_release']:.2f} (95 % interval {mean['p_release_lo']:.2f} to {mean['p_release_hi']:.2f})"
+    assert f"Mean p_release is {expected} over 8 boutons (all boutons with a usable baseline, however found)." in said
+    assert "One vesicle gives 0.121 (95 % interval 0.112 to 0.131) dF/F." in said
+    assert "no more alike than chance (Moran's I −0.12, p = 0.41)" in said
+    assert "Bouton 4 shows no release: p_release is an upper limit there." in said
+    assert "sampling taken out, p < 0.001" in said
+
+
+@pytest.mark.parametrize(
+    ("group", "change", "expected"),
+    [
+        ("heterogeneity", {"p": 0.6}, "may all share one p_release"),
+        ("morans_i", {"value": 0.5, "p": 0.001}, "Neighbours along the axon are alike"),
+        ("co_release", {"p": 0.002}, "do not release independently"),
+        ("stimulus_failures", {"trials": 9, "p": 0.001}, "suspect failed stimulation"),
+    ],
+)
+def test_verdicts_follow_the_numbers(result, group, change, expected):
+    changed = {**result.summary, group: {**result.summary[group], **change}}
+    assert expected in " ".join(headlines(replace(result, summary=changed)))
+    assert expected not in " ".join(headlines(result))
+
+
+@pytest.mark.parametrize("missing", [{}, {"population": None}, {"population": {"p_release": float("nan")}}])
+def test_what_is_unknown_is_left_out(result, missing):
+    bare = replace(result, summary=missing)
+    said = " ".join(headlines(bare))
+    assert "nan" not in said.lower()
+    assert "no mean over them is given" in said
+    assert [name for name, _ in recording_facts(bare)] == ["Response shape"]
+    assert recording_line(bare).startswith("9 boutons")
+
+
+def test_facts_have_a_closed_list_of_names(result):
+    assert number(result, "recording.trials") == 60
+    assert fact(replace(result, summary={"recording": {"trials": float("nan")}}), "recording.trials") is None
+    with pytest.raises(KeyError, match=r"recording\.trial"):
+        fact(result, "recording.trial")
+
+
+def test_flags_name_their_boutons(result):
+    holders = flag_holders(result)
+    assert holders["silent"] == [4]
+    assert holders["edge"] == [1, 7]
+    assert "poor_fit" not in holders
