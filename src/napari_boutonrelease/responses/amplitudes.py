@@ -1,4 +1,4 @@
-"""Amplitude of every response, with its error, and the amplitudes that the same fit finds where nothing was stimulated."""
+"""Amplitude of every response with its error, and what the same fit finds where nothing was stimulated."""
 
 from __future__ import annotations
 
@@ -53,6 +53,8 @@ class AmplitudeFit:
         A bouton each: `gaps` or `residuals`.
     noise_ratio : (n_boutons,) ndarray
         SD of the null amplitudes over the error that the scatter of single frames predicts; 1 without gaps.
+    frame_sd : (n_boutons, n_trials) ndarray
+        SD of single frames at the brightness of each trial, dF/F (counts where F0 is not usable).
     correlation : TimeCorrelation
         Correlation of the noise in time that the fit allowed for.
     windows : Windows
@@ -70,6 +72,7 @@ class AmplitudeFit:
     noise_sd_counts: NDArray[np.float64]
     noise_from: tuple[str, ...]
     noise_ratio: NDArray[np.float64]
+    frame_sd: NDArray[np.float64]
     correlation: TimeCorrelation
     windows: Windows
 
@@ -155,7 +158,9 @@ def fit_amplitudes(
     first_pulse_frame = _frame_of_pulse(timing)
     brightness = scale[:, np.clip(trials.start, 0, f.shape[1] - 1)]
     # In counts the variance is a line in brightness; in dF/F it is that over the square of the brightness.
-    in_counts = variance_by_brightness(frame_variance * brightness**2, brightness=_f0_at(baseline, trials), n_values=n_rest)
+    in_counts = variance_by_brightness(
+        frame_variance * brightness**2, brightness=_f0_at(baseline, trials), n_values=n_rest
+    )
     frame_sd = np.sqrt(in_counts) / brightness
     amplitude_se = theory * frame_sd[:, :, None]
     n_baseline = 1 + slope
@@ -188,6 +193,7 @@ def fit_amplitudes(
         noise_sd_counts=noise_counts,
         noise_from=tuple("gaps" if gaps else "residuals" for gaps in from_gaps),
         noise_ratio=ratio,
+        frame_sd=frame_sd,
         correlation=correlation,
         windows=trials,
     )

@@ -124,7 +124,7 @@ def _bleaching(
     time_s: NDArray[np.float64],
     frame_s: NDArray[np.float64],
 ) -> tuple[NDArray[np.float64], NDArray[np.float64], tuple[str, ...]]:
-    """The simplest sum of non-negative exponentials by AICc; a robust smooth where its residuals show a trend."""
+    """Fit the simplest sum of non-negative exponentials (AICc), or a robust smooth where its residuals show a trend."""
     duration = max(float(np.ptp(frame_s)), 1e-12)
     at, everywhere = (time_s - frame_s[0]) / duration, (frame_s - frame_s[0]) / duration
     weights = np.where(np.isfinite(means), n_frames, 0.0)

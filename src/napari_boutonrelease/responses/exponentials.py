@@ -106,17 +106,19 @@ def fit_exponential(
     if not (start.size and np.all(start > 0)):
         raise InputError(f"start_rates must hold at least one rate, each greater than 0 (given {start.tolist()}).")
     if x.size < n_parameters:
-        raise InputError(f"{x.size} points cannot determine {n_parameters} parameters; give more points or fewer terms.")
+        raise InputError(
+            f"{x.size} points cannot determine {n_parameters} parameters; give more points or fewer terms."
+        )
 
     def solve(log_rates: NDArray[np.float64]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         design = _terms(x, np.exp(log_rates), form)
         if offset:
             design = np.column_stack([design, np.ones_like(x)])
         design = design * root[:, None]
-        return design, np.linalg.lstsq(design, y * root, rcond=None)[0]
+        return design, np.asarray(np.linalg.lstsq(design, y * root, rcond=None)[0], dtype=np.float64)
 
     def slopes(log_rates: NDArray[np.float64], linear: NDArray[np.float64]) -> NDArray[np.float64]:
-        """Derivatives of the curve by the logarithm of each rate, (n_points, n_terms)."""
+        """Differentiate the curve by the logarithm of each rate, (n_points, n_terms)."""
         rates = np.exp(log_rates)
         sign = -1.0 if form == "decay" else 1.0
         steep: NDArray[np.float64] = sign * linear[: start.size] * x[:, None] * rates * np.exp(-x[:, None] * rates)

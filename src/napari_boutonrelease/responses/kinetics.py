@@ -79,14 +79,12 @@ class _Traces:
     timing: Timing
 
     def take(self, boutons: NDArray[np.intp]) -> _Traces:
-        """Some of the boutons."""
+        """Keep some of the boutons."""
         return replace(self, y=self.y[boutons], offset_s=self.offset_s[boutons])
 
     def blocks(self, windows: Windows, correlation: TimeCorrelation) -> TrialBlocks:
-        """The traces cut into trials."""
-        return TrialBlocks(
-            self.y, offset_s=self.offset_s, windows=windows, timing=self.timing, correlation=correlation
-        )
+        """Cut the traces into trials."""
+        return TrialBlocks(self.y, offset_s=self.offset_s, windows=windows, timing=self.timing, correlation=correlation)
 
 
 def fit_response_shape(
@@ -192,7 +190,7 @@ def fit_response_shape(
 
 
 class _Search:
-    """Nonlinear search of the shape on given windows; the misfit is the sum of squares that no amplitude can take away."""
+    """Nonlinear search of the shape; the misfit is the sum of squares that no amplitude can take away."""
 
     def __init__(
         self, blocks: TrialBlocks, *, interval_s: float, reference: ResponseShape, bounds_s: tuple[float, float]
@@ -211,7 +209,7 @@ class _Search:
         return self._of_parameters(parameters)
 
     def with_slow(self, single: ResponseShape) -> tuple[ResponseShape, float]:
-        """The shape with a slow decay if it is needed, else the best without, and the p-value of the slow decay."""
+        """Find the shape with a slow decay if it is needed, else the best without, and the p-value of the slow decay."""
         from scipy.stats import f as f_distribution
 
         alone = self.single(single)
@@ -238,7 +236,7 @@ class _Search:
         return (best if needed else alone), p_value
 
     def standard_errors(self, shape: ResponseShape) -> tuple[float, float, float]:
-        """Standard errors of latency, rise and decay, in s, from the curvature of the misfit."""
+        """Give standard errors of latency, rise and decay, in s, from the curvature of the misfit."""
         curvature, _ = self._system(self._to_parameters(shape), variance=self.misfit(shape) / self._spare)
         variance = np.diag(np.linalg.pinv(curvature, hermitian=True))
         errors = np.sqrt(np.where(variance > 0, variance, np.nan))
@@ -268,7 +266,9 @@ class _Search:
     def _minimise(self, start: NDArray[np.float64]) -> NDArray[np.float64]:
         """Gauss-Newton steps within bounds, damped where one fails (Levenberg 1944, Marquardt 1963)."""
         low_s, high_s = self._bounds_s
-        low = np.array([0.0, np.log(_LEAST_RISE_FRAMES * self._interval_s), np.log(low_s), -5.0, np.log(low_s)])[: start.size]
+        low = np.array([0.0, np.log(_LEAST_RISE_FRAMES * self._interval_s), np.log(low_s), -5.0, np.log(low_s)])[
+            : start.size
+        ]
         high = np.array([high_s / 2, np.log(high_s), np.log(high_s * 2), 3.0, np.log(high_s * 4)])[: start.size]
         here = np.clip(start, low, high)
         variance = self.misfit(self._of_parameters(here)) / self._spare
@@ -328,7 +328,7 @@ def _clarity(blocks: TrialBlocks, shape: ResponseShape) -> NDArray[np.float64]:
 def _rough_shape(
     blocks: TrialBlocks, *, interval_s: float, reference: ResponseShape, longest_s: float
 ) -> ResponseShape:
-    """The best of a grid of decays and rises: the one that explains most over all boutons."""
+    """Choose from a grid of decays and rises what explains most over all boutons."""
     decays = np.geomspace(2 * interval_s, max(longest_s, 4 * interval_s), 12)
     decays = np.append(decays, reference.decay_s)
     rises = np.unique([reference.rise_s, interval_s / 2, 2 * interval_s])

@@ -21,8 +21,8 @@ _CLIPPED_SD = 0.954597
 def robust_sd(values: NDArray[np.float64], *, centre: float | None = None) -> NDArray[np.float64]:
     """SD of normal values among which some are outliers, along the last axis.
 
-    Starts from the median absolute deviation and then drops what lies beyond 2.5 SD until that settles, allowing for the
-    tails that every normal sample loses so. Nearly as precise as the plain SD, and unmoved by a few releases.
+    Starts from the median absolute deviation and then drops what lies beyond 2.5 SD until that settles, allowing for
+    the tails that every normal sample loses so. Nearly as precise as the plain SD, and unmoved by a few releases.
 
     Parameters
     ----------
@@ -83,8 +83,8 @@ def variance_by_brightness(
     Returns
     -------
     (n_boutons, n_trials) ndarray
-        v0 + v1·brightness, both at least 0. Where F0 changes by less than a tenth there is nothing to learn a slope from
-        and all trials get the mean.
+        v0 + v1·brightness, both at least 0. Where F0 changes by less than a tenth there is nothing to learn a slope
+        from and all trials get the mean.
     """
     weight = np.where(np.isfinite(variance), n_values, 0.0)
     filled = np.where(np.isfinite(variance), variance, 0.0)

@@ -1,4 +1,4 @@
-"""The linear model of a trace: a baseline for every window and a response for every pulse, solved for all windows at once.
+"""The linear model of a trace: a baseline a window and a response a pulse, solved for all windows at once.
 
     y(frame) = offset[window] (+ slope[window]·time) + sum over pulses of amplitude·h(frame; pulse)
 
@@ -98,7 +98,7 @@ class ResponseDesign:
         return np.asarray(whitened - self.matrix @ coefficients.reshape(self.scale.size, -1))
 
     def standard_errors(self) -> NDArray[np.float64]:
-        """Standard errors for noise of unit variance.
+        """Give standard errors for noise of unit variance.
 
         Returns
         -------
@@ -148,7 +148,11 @@ class ResponseDesign:
         chosen = int(np.argsort(length, kind="stable")[self.n_windows // 2])
         at = np.flatnonzero(self.window == chosen)
         first = chosen * self.n_columns_each
-        block = self.plain[at[0] : at[-1] + 1, first : first + self.n_columns_each].toarray() if at.size else np.zeros((0, 1))
+        block = (
+            self.plain[at[0] : at[-1] + 1, first : first + self.n_columns_each].toarray()
+            if at.size
+            else np.zeros((0, 1))
+        )
         return np.asarray(block[:, np.any(block != 0, axis=0)])
 
     def _own_blocks(self) -> Iterator[tuple[int, int, NDArray[np.float64]]]:

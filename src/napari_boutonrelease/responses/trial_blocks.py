@@ -1,7 +1,8 @@
 """The misfit of a response shape: what is left of all trials when every amplitude and baseline has been fitted.
 
-The same model as in `response_design`, laid out as equal blocks so that thousands of small fits run as one, for the search
-of the shape. A tail that reaches into the following trials is carried over from the amplitudes found in the sweep before.
+The same model as in `response_design`, laid out as equal blocks so that thousands of small fits run as one, for the
+search of the shape. A tail that reaches into the following trials is carried over from the amplitudes found in the
+sweep before.
 """
 
 from __future__ import annotations
@@ -155,11 +156,11 @@ class TrialBlocks:
         gram = turned @ design
         diagonal = np.einsum("wkk->wk", gram)
         gram = gram + (np.where(diagonal > 0, 1e-9 * diagonal, 1.0))[:, :, None] * np.eye(design.shape[2])
-        solved = np.linalg.solve(gram, turned @ y)
+        solved = np.asarray(np.linalg.solve(gram, turned @ y), dtype=np.float64)
         tails = [] if shape is None else self._tails(group, shape)
         for _ in range(_SWEEPS if tails else 0):
             y = self._whiten(group.y - self._carry(tails, solved[:, 1:]), group)
-            solved = np.linalg.solve(gram, turned @ y)
+            solved = np.asarray(np.linalg.solve(gram, turned @ y), dtype=np.float64)
         return _Solution(design=design, gram=gram, amplitude=solved[:, 1:], residual=y - design @ solved)
 
     def _predict(self, group: _Group, shape: ResponseShape, amplitude: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -169,7 +170,7 @@ class TrialBlocks:
         return own + self._carry(tails, amplitude) if tails else own
 
     def _heights(self, group: _Group, shape: ResponseShape, *, carried: int) -> NDArray[np.float64]:
-        """Height of each pulse's response in the window `carried` trials later, (n_trials - carried, n_frames, n_pulses)."""
+        """Heights of responses in the window `carried` trials later, (n_trials - carried, n_frames, n_pulses)."""
         n = self.n_trials - carried
         since_s = (self._time_s[carried:] + group.offset_s)[:, :, None] - self._pulse_s[:n, None, :]
         reached = np.isfinite(since_s) & group.valid[carried:, :, None] & (since_s < shape.end_s())

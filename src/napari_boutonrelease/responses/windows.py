@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -156,7 +157,9 @@ def plan_null_windows(
     interval = timing.frame_interval_s
     decay_frames = max(1.0, shape.decay_s / interval)
     least_before = max(3, int(np.ceil(decay_frames))) * (2 if slope else 1)
-    least_after = max(3, int(np.ceil((shape.latency_s + shape.rise_s) / interval + 2 * decay_frames))) * (2 if slope else 1)
+    least_after = max(3, int(np.ceil((shape.latency_s + shape.rise_s) / interval + 2 * decay_frames))) * (
+        2 if slope else 1
+    )
     step = max(3, int(np.ceil(2 * decay_frames)))
     real = [int(i) for i in np.flatnonzero(trials.stop > trials.start)]
     empty = np.zeros(0, dtype=np.intp)
@@ -214,4 +217,4 @@ def _runs(mask: NDArray[np.bool_], segment: NDArray[np.intp]) -> list[tuple[int,
     run = np.where(mask, segment, -1)
     edges = np.flatnonzero(np.diff(run)) + 1
     bounds = np.concatenate([[0], edges, [run.size]])
-    return [(int(low), int(high)) for low, high in zip(bounds[:-1], bounds[1:], strict=True) if high > low and mask[low]]
+    return [(int(low), int(high)) for low, high in pairwise(bounds) if high > low and mask[low]]
