@@ -1,1 +1,45 @@
+"""Places: where release is seen, boutons found there, and the weights with which each is read."""
 
+from __future__ import annotations
+
+from .detection import Detection, detect_boutons
+from .evidence import MatchedMaps, matched_filter, mixture_evidence, release_posterior, standardise
+from .false_discovery import FalseRate, measure_false_rate
+from .footprints import (
+    Footprints,
+    build_footprints,
+    crosstalk_matrix,
+    footprints_from_labels,
+)
+from .maps import ResponseStack, project_responses, scan_shapes
+from .optics import Optics
+from .positions import GivenBoutons, distance_along, read_axon, read_positions
+from .shape_candidates import ShapeCandidates, find_shape_candidates
+from .spots import estimate_spot_sigma
+
+__all__ = [
+    "Detection",
+    "FalseRate",
+    "Footprints",
+    "GivenBoutons",
+    "MatchedMaps",
+    "Optics",
+    "ResponseStack",
+    "ShapeCandidates",
+    "build_footprints",
+    "crosstalk_matrix",
+    "detect_boutons",
+    "distance_along",
+    "estimate_spot_sigma",
+    "find_shape_candidates",
+    "footprints_from_labels",
+    "matched_filter",
+    "measure_false_rate",
+    "mixture_evidence",
+    "project_responses",
+    "read_axon",
+    "read_positions",
+    "release_posterior",
+    "scan_shapes",
+    "standardise",
+]

@@ -6,8 +6,8 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from .evidence import MatchedMaps, matched_filter, mixture_evidence, release_posterior
-from .spots import Patch, fit_spot, gaussian_patch, read_maps, separated_weights, window
+from .evidence import MatchedMaps, box_half_px, matched_filter, mixture_evidence, release_posterior
+from .spots import PROFILE_REACH_SIGMA, Patch, fit_spot, gaussian_patch, read_maps, separated_weights, window
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -67,12 +67,12 @@ class SpotModel:
         self._take_out()
 
     def evidence(self) -> NDArray[np.float64]:
-        """Evidence of release of each spot, with what its nearest neighbour's heights explain taken out."""
+        """Return the evidence of release of each spot, with what stronger neighbours explain taken out."""
         values = np.empty(len(self.y_px))
         for index in range(len(values)):
             z = self.standardised[index]
             distance = np.hypot(self.y_px - self.y_px[index], self.x_px - self.x_px[index])
-            for other in np.nonzero((distance > 0) & (distance < 4 * self.spot_sigma_px))[0]:
+            for other in np.nonzero((distance > 0) & (distance < (_WINDOW_SIGMAS + PROFILE_REACH_SIGMA) * self.spot_sigma_px))[0]:
                 if np.mean(self.standardised[other]) > np.mean(z):
                     z = _without_copy(z[:, None], self.heights[other])[:, 0]
             values[index] = mixture_evidence(z[:, None].astype(np.float32)).item()
@@ -179,26 +179,32 @@ class SpotModel:
             rows, columns = patch.slices
             z[:, rows, columns] += np.multiply.outer(heights, patch.values).astype(np.float32)
         self._taken_out = []
+        box = box_half_px(self._filter_sigma)
         for y, x, heights in zip(self.y_px, self.x_px, self.heights, strict=True):
-            y0, y1, x0, x1 = window(y, x, radius_px=8 * self.spot_sigma_px, shape=self._shape)
-            inner = (slice(y0, y1), slice(x0, x1))
+            # The filter subtracts a local mean: a spot changes the map as far as half a box beyond its own reach.
+            reach = PROFILE_REACH_SIGMA * self.spot_sigma_px + box + 1
+            y0, y1, x0, x1 = window(y, x, radius_px=reach + box + 4 * self._filter_sigma, shape=self._shape)
+            wide = (slice(y0, y1), slice(x0, x1))
             spot = gaussian_patch(y, x, sigma_px=self.spot_sigma_px, shape=self._shape)
             image = spot.onto(Patch(y0=y0, x0=x0, values=np.zeros((y1 - y0, x1 - x0))))
             filtered = matched_filter(
                 image[None].astype(np.float32),
-                inverse_variance=self._inverse_variance[inner],
+                inverse_variance=self._inverse_variance[wide],
                 spot_sigma_px=self._filter_sigma,
             )[0]
-            patch = Patch(y0=y0, x0=x0, values=filtered * self._matched.scale[inner])
-            z[:, inner[0], inner[1]] -= np.multiply.outer(heights, patch.values).astype(np.float32)
+            whole = Patch(y0=y0, x0=x0, values=filtered * self._matched.scale[wide])
+            y0, y1, x0, x1 = window(y, x, radius_px=reach, shape=self._shape)
+            patch = Patch(y0=y0, x0=x0, values=whole.onto(Patch(y0=y0, x0=x0, values=np.zeros((y1 - y0, x1 - x0)))))
+            rows, columns = patch.slices
+            z[:, rows, columns] -= np.multiply.outer(heights, patch.values).astype(np.float32)
             self._taken_out.append((heights.copy(), patch))
 
 
 def _without_copy(z: NDArray[np.float64], heights: NDArray[np.float64]) -> NDArray[np.float64]:
     """Responses (n, pixels) less their positive regression on a neighbour's heights.
 
-    A spot that is not quite the shape assumed leaves a copy of each of its releases beside it. A neighbour with releases
-    of its own does not follow it trial by trial, and loses nothing but chance correlation.
+    A spot that is not quite the shape assumed leaves a copy of each of its releases beside it. A neighbour with
+    releases of its own does not follow it trial by trial, and loses nothing but chance correlation.
     """
     centred = heights - heights.mean()
     power = float(centred @ centred)

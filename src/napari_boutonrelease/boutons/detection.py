@@ -19,7 +19,7 @@ if TYPE_CHECKING:
     from .maps import ResponseStack
 
 _FIRST_SHARE = 0.1  # of false_discovery: how unlikely the first bouton must be where nothing may release at all
-_MARGIN = 0.5  # the share of false ones is promised for a recording, and scatters about its expectation
+_MARGIN = 0.3  # the share of false ones is promised for a recording, and scatters about its expectation
 _MAX_ROUNDS = 12
 _CLOSEST = 0.75  # of the spacing: nearer than that two fitted places are one bouton
 _SHAPE_POSITION_ERROR = 0.25  # of the spot's sigma: the shaft and unequal neighbours pull a maximum of the mean image
@@ -99,10 +99,11 @@ def detect_boutons(
 ) -> Detection:
     """Find boutons by stimulus-locked release and by shape.
 
-    Strong boutons are found first, fitted together trial by trial and taken out of the maps; then what they hid is looked
-    for (Högbom 1974), until nothing exceeds the cut. The cut keeps the expected number of false ones, measured on noise
-    maps, below `false_discovery` times the number found; the very first one must be ten times less likely to be false
-    than that, so that a recording without release stays empty.
+    Strong boutons are found first, fitted together trial by trial and taken out of the maps; then what they hid is
+    looked for (Högbom 1974), until nothing exceeds the cut. The cut keeps the expected number of false ones, measured
+    on noise maps, below a third of `false_discovery` times the number found, so that most recordings stay below the whole;
+    the very first one must be less likely to be false than a tenth of `false_discovery`, so that a recording without
+    release stays empty.
 
     Parameters
     ----------
@@ -127,7 +128,7 @@ def detect_boutons(
     -------
     Detection
     """
-    advance = progress or (lambda done, total: None)
+    advance = progress or _silently
     steps = 4
     matched = standardise(
         evoked=stack.evoked,
@@ -140,7 +141,7 @@ def detect_boutons(
     )
     advance(1, steps)
     evidence = mixture_evidence(matched.evoked)
-    rate = measure_false_rate(matched.null, n_maps=len(stack.evoked), spacing_px=spacing_px, rng=rng)
+    rate = measure_false_rate(matched.null, correlation=stack.evoked_correlation, spacing_px=spacing_px, rng=rng)
     advance(2, steps)
     shapes = (
         find_shape_candidates(
@@ -159,20 +160,36 @@ def detect_boutons(
         spot_sigma_px=spot_sigma_px,
     )
     score = _find_releasing(
-        model, evidence, cuts=cuts, spacing_px=spacing_px, false_discovery=false_discovery, null_is_silent=stack.null_from == "gaps"
+        model,
+        evidence,
+        cuts=cuts,
+        spacing_px=spacing_px,
+        false_discovery=false_discovery,
+        null_is_silent=stack.null_from == "gaps",
     )
     advance(3, steps)
     allowed = _allowed(len(score), false_discovery)
     anywhere, at_shape = cuts.at(allowed)
     detection = _merge(
-        model, score, shapes, spacing_px=spacing_px, evidence=evidence, cut=anywhere, cut_at_shape=at_shape, expected_false=allowed if len(score) else 0.0
+        model,
+        score,
+        shapes,
+        spacing_px=spacing_px,
+        evidence=evidence,
+        cut=anywhere,
+        cut_at_shape=at_shape,
+        expected_false=allowed if len(score) else 0.0,
     )
     advance(4, steps)
     return detection
 
 
+def _silently(done: int, total: int) -> None:
+    pass
+
+
 def _allowed(n_found: int, false_discovery: float) -> float:
-    """Expected false ones allowed with `n_found` boutons in hand."""
+    """Return the expected false ones allowed with `n_found` boutons in hand."""
     return false_discovery * (_MARGIN * n_found if n_found else _FIRST_SHARE)
 
 
@@ -230,7 +247,7 @@ def _keep(
     needed = cuts.map(expected)
     rows = np.clip(np.round(model.y_px).astype(int), 0, height - 1)
     columns = np.clip(np.round(model.x_px).astype(int), 0, width - 1)
-    keep = score >= needed[rows, columns]
+    keep: NDArray[np.bool_] = score >= needed[rows, columns]
     for index in np.argsort(-score):
         if keep[index]:
             near = np.hypot(model.y_px - model.y_px[index], model.x_px - model.x_px[index]) < _CLOSEST * spacing_px

@@ -18,6 +18,7 @@ RELEASE_PROBABILITIES = (0.02, 0.05, 0.1, 0.2, 0.4, 0.7)
 RELEASE_SIZES_SD = (2.5, 3.5, 5.0, 7.0, 10.0)
 # No single trial may argue for more than this: one spark, cosmic ray or passing vesicle does not make a bouton.
 MAX_NATS_PER_TRIAL = 10.0
+_POOL_SIGMAS = 8.0  # reach, in spot sigmas, over which noise is pooled
 _GROUP = 8  # likelihood ratios multiplied before one logarithm; e**(8 * 10) still fits float32
 
 
@@ -62,8 +63,9 @@ def pixel_variance(
 ) -> NDArray[np.float64]:
     """Noise variance of each pixel of a map with noise factor 1, measured on the null maps.
 
-    Photon noise follows the mean image along a straight line, which is fitted over all pixels; what a place has beyond
-    it, by moving or flickering, is measured as a ratio to that line, pooled over neighbouring pixels.
+    Photon noise follows the mean image along a straight line, which is fitted over all pixels. The ratio of what is
+    measured to that line varies slowly (resampling, uneven light) and is pooled widely: noise in a divisor would pass
+    for evidence.
 
     Parameters
     ----------
@@ -112,7 +114,12 @@ def _photon_line(
     y = np.array([np.median(seen[part]) for part in parts])
     # The relative error of a median of variances falls with the root of their number.
     slope, intercept = np.polyfit(x, y, 1, w=np.sqrt([len(part) for part in parts]) / np.maximum(y, 1e-6 * level))
-    return np.maximum(intercept + max(float(slope), 0.0) * mean_image, 0.2 * level)
+    return np.asarray(np.maximum(intercept + max(float(slope), 0.0) * mean_image, 0.2 * level))
+
+
+def box_half_px(spot_sigma_px: float) -> int:
+    """Return half the side of the box whose mean the matched filter subtracts (px)."""
+    return round(6 * spot_sigma_px)
 
 
 def matched_filter(
@@ -141,7 +148,7 @@ def matched_filter(
     from scipy.ndimage import gaussian_filter, uniform_filter
 
     weight = inverse_variance.astype(np.float32)
-    box = 2 * round(6 * spot_sigma_px) + 1
+    box = 2 * box_half_px(spot_sigma_px) + 1
     box_weight = np.maximum(uniform_filter(weight, box, mode="constant"), 1e-12 * max(float(weight.max()), 1e-30))
     # The spot's square is a Gaussian of sigma / sqrt(2); gaussian_filter is normalised to sum 1, hence the areas.
     spot_area = 2 * np.pi * spot_sigma_px**2
@@ -185,10 +192,8 @@ def standardise(
     -------
     MatchedMaps
     """
-    from scipy.ndimage import gaussian_filter
-
     variance = pixel_variance(
-        null, noise_factor=null_factor, mean_image=mean_image, smooth_px=1.5 * spot_sigma_px, exclude=exclude
+        null, noise_factor=null_factor, mean_image=mean_image, smooth_px=_POOL_SIGMAS * spot_sigma_px, exclude=exclude
     )
     inverse = np.where(np.isfinite(variance), 1.0 / variance, 0.0)
 
@@ -211,9 +216,9 @@ def _filtered_variance(
 ) -> NDArray[np.float64]:
     """Variance of the filtered null maps at each pixel.
 
-    Photon noise is in the filter's weights already, so that the variance is the same everywhere but where something moves
-    or flickers by itself. A wide average serves unless the variance in place is clearly above it: one place alone has few
-    independent null responses, and noise in the divisor would pass for evidence.
+    Photon noise is in the filter's weights already, so that the variance is the same everywhere but where something
+    moves or flickers by itself. A wide average serves unless the variance in place is clearly above it: one place alone
+    has few independent null responses, and noise in the divisor would pass for evidence.
     """
     from scipy.ndimage import gaussian_filter
 
@@ -223,8 +228,8 @@ def _filtered_variance(
         weight = gaussian_filter(usable.astype(np.float64), sigma_px)
         return np.asarray(gaussian_filter(measured, sigma_px) / np.maximum(weight, 1e-9))
 
-    wide, local = pooled(8 * spot_sigma_px), pooled(spot_sigma_px)
-    # A MAD-based variance has a relative error of 2.33 / sqrt(n); neighbouring pixels of a filtered map share most of it.
+    wide, local = pooled(_POOL_SIGMAS * spot_sigma_px), pooled(spot_sigma_px)
+    # A MAD-based variance has a relative error of 2.33 / sqrt(n), which neighbouring pixels of a filtered map share.
     clear = 1.0 + 2.5 * 2.33 / np.sqrt(2.0 * len(z_null))
     return np.where(local > clear * wide, local, wide)
 
@@ -260,14 +265,14 @@ def mixture_evidence(z: NDArray[np.float32]) -> NDArray[np.float32]:
     size = max(256, int(200_000 // max(n_maps, 1)))  # the block and its products stay in cache
     for start in range(0, columns.shape[1], size):
         evidence[start : start + size] = _block_evidence(columns[:, start : start + size])
-    return evidence.reshape(z.shape[1:])
+    return np.asarray(evidence.reshape(z.shape[1:]))
 
 
 def _block_evidence(z: NDArray[np.float32]) -> NDArray[np.float32]:
     n_maps, n_pixels = z.shape
     ceiling = np.float32(np.sqrt(2 * MAX_NATS_PER_TRIAL))
     mean = np.maximum(np.minimum(z, ceiling).sum(axis=0) / n_maps, 0)
-    best = (0.5 * n_maps * mean**2).astype(np.float32)
+    best: NDArray[np.float32] = (0.5 * n_maps * mean**2).astype(np.float32)
     n_groups = -(-n_maps // _GROUP)
     ratio = np.ones((n_groups * _GROUP, n_pixels), dtype=np.float32)
     mixed = np.empty_like(ratio)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
@@ -36,11 +37,11 @@ class FalseRate:
     n_tail: float
 
     def expected(self, evidence: float) -> float:
-        """Expected false maxima in one whole image at a cut of `evidence`."""
+        """Return the expected false maxima in one whole image at a cut of `evidence`."""
         return self.n_tail * float(np.exp(-(max(evidence, self.start) - self.start) / self.scale))
 
     def cut(self, expected: float) -> float:
-        """Evidence above which `expected` false maxima are expected in one whole image."""
+        """Return the evidence above which `expected` false maxima are expected in one whole image."""
         return self.start + self.scale * float(np.log(max(self.n_tail / expected, 1.0)))
 
 
@@ -59,21 +60,26 @@ def local_maxima(
 
 
 def measure_false_rate(
-    null: NDArray[np.float32], *, n_maps: int, spacing_px: float, rng: np.random.Generator
+    null: NDArray[np.float32],
+    *,
+    correlation: Sequence[NDArray[np.float64]],
+    spacing_px: float,
+    rng: np.random.Generator,
 ) -> FalseRate:
     """Fit the tail of the evidence of noise.
 
-    Stacks of `n_maps` maps are drawn from the null maps, without repeats as far as they go; each map is shifted
-    (with wrap-around) and mirrored at random. So repeated maps do not line up, and spontaneous releases, which stay at
-    their boutons, are spread thinly instead of posing as false maxima. The maxima of the evidence beyond the 95 %
-    quantile are taken as exponentially distributed, the tail of any smooth noise (Pickands 1975).
+    Stacks as large as the one to be judged are drawn from the null maps, without repeats as far as they go; each map is
+    shifted (with wrap-around) and mirrored at random. So repeated maps do not line up, and spontaneous releases, which
+    stay at their boutons, are spread thinly instead of posing as false maxima. Maps are then mixed so that those of one
+    trial are correlated as the pulses of a trial are. The maxima of the evidence beyond the 95 % quantile are taken as
+    exponentially distributed, the tail of any smooth noise (Pickands 1975).
 
     Parameters
     ----------
     null : (n_null, y, x) ndarray of float32
         Standardised responses where nothing was stimulated.
-    n_maps : int
-        Maps in the stack to be judged.
+    correlation : sequence of (n_pulses, n_pulses) ndarray
+        Correlation of the noise of each trial's maps.
     spacing_px : float
         Smallest distance of two maxima (px).
     rng : Generator
@@ -85,7 +91,7 @@ def measure_false_rate(
     maxima: list[NDArray[np.float32]] = []
     n_found = 0
     while len(maxima) < _MAX_STACKS and n_found < _MAXIMA_WANTED:
-        evidence = mixture_evidence(_shuffled(null, n_maps=n_maps, rng=rng))
+        evidence = mixture_evidence(_shuffled(null, correlation=correlation, rng=rng))
         y, x = local_maxima(evidence, spacing_px=spacing_px, above=0.0)
         maxima.append(evidence[y, x])
         n_found += len(y)
@@ -98,12 +104,23 @@ def measure_false_rate(
     return FalseRate(start=start, scale=max(scale, 0.8), n_tail=n_tail / len(maxima))
 
 
-def _shuffled(null: NDArray[np.float32], *, n_maps: int, rng: np.random.Generator) -> NDArray[np.float32]:
+def _shuffled(
+    null: NDArray[np.float32], *, correlation: Sequence[NDArray[np.float64]], rng: np.random.Generator
+) -> NDArray[np.float32]:
     n_null, height, width = null.shape
+    n_maps = sum(len(block) for block in correlation)
     rounds = [rng.permutation(n_null) for _ in range(-(-n_maps // n_null))]
     chosen = np.concatenate(rounds)[:n_maps]
     stack = np.empty((n_maps, height, width), dtype=np.float32)
     for index, source in enumerate(chosen):
         image = null[source][:: rng.choice((-1, 1)), :: rng.choice((-1, 1))]
         stack[index] = np.roll(image, (rng.integers(height), rng.integers(width)), axis=(0, 1))
+    first = 0
+    for block in correlation:
+        if len(block) > 1:
+            trial = stack[first : first + len(block)]
+            values, vectors = np.linalg.eigh(block)
+            root = (vectors * np.sqrt(np.maximum(values, 0.0))) @ vectors.T
+            trial[:] = np.tensordot(root.astype(np.float32), trial, axes=1)
+        first += len(block)
     return stack

@@ -18,8 +18,9 @@ from typing import TYPE_CHECKING, Literal
 import numpy as np
 
 from ..errors import InputError
+from .optics import Optics
 from .shaft import shaft_rays
-from .spots import Patch, fit_spot, gaussian_patch, separated_weights, window
+from .spots import Patch, gaussian_patch, separated_weights
 
 if TYPE_CHECKING:
     from numpy.typing import ArrayLike, NDArray
@@ -76,59 +77,6 @@ class Footprints:
     flags: tuple[frozenset[str], ...]
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Optics:
-    """What the pixels around the boutons look like.
-
-    Attributes
-    ----------
-    mean_image : (y, x) ndarray
-        Mean of the movement-corrected frames (counts).
-    variance_image : (y, x) ndarray
-        Noise variance of one frame's pixel (counts²), greater than 0.
-    saturated, dead : (y, x) ndarray of bool
-        Pixels that cannot be used.
-    dy_range_px, dx_range_px : (float, float)
-        Smallest and largest drift over the used frames (px).
-    """
-
-    mean_image: NDArray[np.float64]
-    variance_image: NDArray[np.float64]
-    saturated: NDArray[np.bool_]
-    dead: NDArray[np.bool_]
-    dy_range_px: tuple[float, float]
-    dx_range_px: tuple[float, float]
-
-    def always_inside(self) -> NDArray[np.bool_]:
-        """Reference pixels that every frame shows, with the two pixels beside them that interpolation needs."""
-        height, width = self.mean_image.shape
-        rows = _inside(height, *self.dy_range_px)
-        columns = _inside(width, *self.dx_range_px)
-        return rows[:, None] & columns[None, :]
-
-    def usable(self) -> NDArray[np.bool_]:
-        """Pixels that carry information in every frame."""
-        return self.always_inside() & ~self._on_sample(self.saturated) & ~self._on_sample(self.dead)
-
-    def _on_sample(self, mask: NDArray[np.bool_]) -> NDArray[np.bool_]:
-        """A mask of the detector in reference coordinates, at mid drift."""
-        shift = tuple(-round((low + high) / 2) for low, high in (self.dy_range_px, self.dx_range_px))
-        moved = np.zeros_like(mask)
-        height, width = mask.shape
-        rows, columns = np.nonzero(mask)
-        rows, columns = rows + shift[0], columns + shift[1]
-        inside = (rows >= 0) & (rows < height) & (columns >= 0) & (columns < width)
-        moved[rows[inside], columns[inside]] = True
-        return moved
-
-
-def _inside(size: int, low: float, high: float) -> NDArray[np.bool_]:
-    index = np.arange(size)
-    if low == high == 0:
-        return np.ones(size, dtype=np.bool_)
-    return (index + low >= 1) & (index + high <= size - 2)
-
-
 def build_footprints(
     *,
     y_px: ArrayLike,
@@ -140,7 +88,7 @@ def build_footprints(
     response_image: NDArray[np.floating] | None,
     response_variance: NDArray[np.floating] | None,
 ) -> Footprints:
-    """Extraction weights of boutons at given places.
+    """Compute the extraction weights of boutons at given places.
 
     Parameters
     ----------
@@ -177,20 +125,29 @@ def build_footprints(
         precision = np.where(precision > 0, 1.0, 0.0)
     elif mode == "adaptive":
         if response_image is None or response_variance is None:
-            raise InputError("Adaptive footprints need the mean response image and its variance; give both, or use weighted.")
+            raise InputError(
+                "Adaptive footprints need the mean response image and its variance; give both, or use weighted."
+            )
         profiles = [
             _adapted(profile, y, x, image=response_image, variance=response_variance, sigma_px=spot_sigma_px)
             for profile, y, x in zip(profiles, ys, xs, strict=True)
         ]
     return _assemble(
-        ys, xs, profiles, optics=optics, precision=precision, spot_sigma_px=spot_sigma_px, radius_px=background_radius_px, label=None
+        ys,
+        xs,
+        profiles,
+        optics=optics,
+        precision=precision,
+        spot_sigma_px=spot_sigma_px,
+        radius_px=background_radius_px,
+        label=None,
     )
 
 
 def footprints_from_labels(
     label: NDArray[np.integer], *, optics: Optics, spot_sigma_px: float, background_radius_px: float
 ) -> Footprints:
-    """Extraction weights of drawn masks: the mean over the mask, background and neighbouring masks separated.
+    """Compute the extraction weights of drawn masks: their mean, background and neighbouring masks separated.
 
     Parameters
     ----------
@@ -253,7 +210,17 @@ def _assemble(
     )
     label = _core_labels(profiles, optics.mean_image.shape) if label is None else label
     shaft = [
-        _shaft_counts(i, ys, xs, profiles, weights[i], optics=optics, precision=precision, sigma_px=spot_sigma_px, radius_px=radius_px)
+        _shaft_counts(
+            i,
+            ys,
+            xs,
+            profiles,
+            weights[i],
+            optics=optics,
+            precision=precision,
+            sigma_px=spot_sigma_px,
+            radius_px=radius_px,
+        )
         for i in range(len(ys))
     ]
     return Footprints(
@@ -285,7 +252,7 @@ def _adapted(
     variance: NDArray[np.floating],
     sigma_px: float,
 ) -> Patch:
-    """The profile seen in an image, moved towards the Gaussian by the share of the difference that noise explains."""
+    """Move the profile seen in an image towards the Gaussian by the share of the difference that noise explains."""
     seen = image[profile.slices].astype(np.float64)
     noise = np.maximum(variance[profile.slices].astype(np.float64), 1e-30)
     energy = np.sum(profile.values**2 / noise)
@@ -323,7 +290,7 @@ def _shaft_counts(
     sigma_px: float,
     radius_px: float,
 ) -> float:
-    """What the weights see of the bare axon: their reading of the mean image, less the height fitted beside two rays."""
+    """Compare the weights' reading of the mean image with the height fitted beside two rays of axon."""
     if not np.all(np.isfinite(weights.values)):
         return float("nan")
     near = np.flatnonzero(np.hypot(ys - ys[index], xs - xs[index]) < radius_px + 4 * sigma_px)
@@ -331,7 +298,7 @@ def _shaft_counts(
     # Equal weights: the axon's course is a matter of light, not of noise.
     used = np.where(precision[weights.slices] > 0, 1.0, 0.0)
     columns = [profiles[index].onto(weights).ravel(), np.ones(image.values.size)]
-    columns += [profiles[j].onto(weights).ravel() for j in near if j != index]
+    columns += [profiles[j].onto(weights).ravel() for j in near.tolist() if j != index]
     columns = [column for column in columns if np.sum(used.ravel() * column**2) > 1e-6]
     others = np.stack(columns)
     rays = shaft_rays(image, y_px=ys[index], x_px=xs[index], precision=used, other_columns=others, sigma_px=sigma_px)
@@ -343,9 +310,9 @@ def _shaft_counts(
 def _flags(y: float, x: float, profile: Patch, optics: Optics) -> frozenset[str]:
     found = set()
     seen = profile.values >= _SEEN
-    if np.any(optics._on_sample(optics.saturated)[profile.slices] & seen):
+    if np.any(optics.on_sample(optics.saturated)[profile.slices] & seen):
         found.add("saturated")
-    if np.any(optics._on_sample(optics.dead)[profile.slices] & seen):
+    if np.any(optics.on_sample(optics.dead)[profile.slices] & seen):
         found.add("dead_pixels")
     energy = profile.values**2
     inside = optics.always_inside()[profile.slices]
@@ -378,47 +345,3 @@ def crosstalk_matrix(footprints: Footprints) -> NDArray[np.float64]:
             if i != j:
                 matrix[i, j] = float(np.sum(frame.values * patches[j].onto(frame)))
     return matrix
-
-
-def estimate_spot_sigma(
-    image: NDArray[np.floating], *, y_px: ArrayLike, x_px: ArrayLike, start_sigma_px: float, usable: NDArray[np.bool_]
-) -> float:
-    """Median Gaussian sigma of the spots that stand alone in an image.
-
-    Each is fitted over 2.5 sigmas with a free width. In a mean image the shaft widens a spot a little; widths from
-    responses, where a detection has them, are to be preferred.
-
-    Parameters
-    ----------
-    image : (y, x) ndarray
-        Mean image or mean response (counts).
-    y_px, x_px : (n,) array_like of float
-        Places (px).
-    start_sigma_px : float
-        First guess (px), returned where no spot stands alone.
-    usable : (y, x) ndarray of bool
-        Pixels to fit.
-
-    Returns
-    -------
-    float
-        Sigma (px), between 0.6 and 1.7 times the first guess.
-    """
-    ys, xs = np.asarray(y_px, dtype=np.float64), np.asarray(x_px, dtype=np.float64)
-    shape = (image.shape[0], image.shape[1])
-    sigmas = []
-    for y, x in zip(ys, xs, strict=True):
-        if np.sum(np.hypot(ys - y, xs - x) < 5 * start_sigma_px) > 1:
-            continue
-        y0, y1, x0, x1 = window(y, x, radius_px=2.5 * start_sigma_px, shape=shape)
-        weight = usable[y0:y1, x0:x1].astype(np.float64)
-        if np.mean(weight) < 0.9:
-            continue
-        _, _, sigma, height = fit_spot(
-            image[y0:y1, x0:x1].astype(np.float64), inverse_variance=weight, y=y - y0, x=x - x0, sigma=start_sigma_px, free_sigma=True
-        )
-        if height > 0:
-            sigmas.append(sigma)
-    if not sigmas:
-        return start_sigma_px
-    return float(np.clip(np.median(sigmas), 0.6 * start_sigma_px, 1.7 * start_sigma_px))

@@ -40,6 +40,8 @@ class ResponseStack:
         Index of trial and pulse, from 0.
     evoked_factor, null_factor : (n,) ndarray
         SD of a map's pixel in units of the SD of one frame's pixel.
+    evoked_correlation : tuple of (n_pulses, n_pulses) ndarray
+        Correlation of the noise of the maps of each trial, trial by trial in the order of `evoked`.
     null : (n_null, y, x) ndarray of float32
         The same at pseudo-stimuli, or from differences of trials.
     null_from : str
@@ -55,6 +57,7 @@ class ResponseStack:
     evoked_trial: NDArray[np.intp]
     evoked_pulse: NDArray[np.intp]
     evoked_factor: NDArray[np.float64]
+    evoked_correlation: tuple[NDArray[np.float64], ...]
     null: NDArray[np.float32]
     null_factor: NDArray[np.float64]
     null_from: str
@@ -76,9 +79,9 @@ def project_responses(
 ) -> ResponseStack:
     """Fit the response shape at every pixel to every pulse, in one pass over the movie.
 
-    Each pulse of each trial gives one map: a least-squares fit of an offset and all pulses of the trial to the frames from
-    `pre_s` before the first to `post_s` after the last pulse. Frames that moved are resampled by cubic convolution; bad
-    frames are left out of the fit. Only the frames inside windows are read.
+    Each pulse of each trial gives one map: a least-squares fit of an offset and all pulses of the trial to the frames
+    from `pre_s` before the first to `post_s` after the last pulse. Frames that moved are resampled by cubic
+    convolution; bad frames are left out of the fit. Only the frames inside windows are read.
 
     Parameters
     ----------
@@ -118,9 +121,9 @@ def project_responses(
     n_evoked = sum(len(projection.factor) for projection in evoked)
     if n_evoked < 2:
         raise InputError(
-            f"{movie.name}: {n_evoked} of {len(timing.stimulus_s)} trials can be fitted with a baseline of {pre_s:g} s and "
-            f"a response of {post_s:g} s; at least 2 are needed. Check the stimulus times, the frame interval and the "
-            "frames left out."
+            f"{movie.name}: {n_evoked} of {len(timing.stimulus_s)} trials can be fitted with a baseline of {pre_s:g} s "
+            f"and a response of {post_s:g} s; at least 2 are needed. Check the stimulus times, the frame interval and "
+            "the frames left out."
         )
     null = project(
         null_windows(timing, used=drift.used, shape=shape, pre_s=pre_s, post_s=post_s),
@@ -138,6 +141,7 @@ def project_responses(
         evoked_trial=np.concatenate([np.full(len(one.factor), one.window.trial) for one in evoked]),
         evoked_pulse=np.concatenate([one.window.pulses[: len(one.factor)] for one in evoked]),
         evoked_factor=np.concatenate([one.factor for one in evoked]),
+        evoked_correlation=tuple(one.correlation for one in evoked),
         null=maps[n_evoked:],
         null_factor=np.concatenate([one.factor for one in null]) if null else np.empty(0),
         null_from="gaps",
@@ -200,7 +204,7 @@ def scan_shapes(
     # One frame's noise variance follows the light; its scale drops out of the comparison.
     light = np.maximum(mean_image - np.min(mean_image), 0.02 * np.ptp(mean_image) + 1e-9)
     z = matched_filter(
-        maps / np.sqrt(np.maximum(power, 1e-30))[:, None, None].astype(np.float32),
+        maps / np.sqrt(np.maximum(power, 1e-30)).astype(np.float32)[:, None, None],
         inverse_variance=1.0 / light,
         spot_sigma_px=spot_sigma_px,
     )
@@ -214,7 +218,7 @@ def _sum_of_pulses(projection: Projection) -> Projection:
     """One map for all pulses of a window: the sum of their amplitudes."""
     weights = projection.weights.sum(axis=1, keepdims=True)
     factor = np.sqrt(np.mean(np.sum(weights.astype(np.float64) ** 2, axis=-1), axis=0))
-    return replace(projection, weights=weights, factor=factor)
+    return replace(projection, weights=weights, factor=factor, correlation=np.ones((1, 1)))
 
 
 def _thin(projections: list[Projection], *, most: int) -> list[Projection]:
@@ -222,7 +226,15 @@ def _thin(projections: list[Projection], *, most: int) -> list[Projection]:
     n_pulses = max((len(one.factor) for one in projections), default=0)
     while n_pulses > 1 and sum(min(len(one.factor), n_pulses) for one in projections) > most:
         n_pulses -= 1
-    cut = [replace(one, weights=one.weights[:, :n_pulses], factor=one.factor[:n_pulses]) for one in projections]
+    cut = [
+        replace(
+            one,
+            weights=one.weights[:, :n_pulses],
+            factor=one.factor[:n_pulses],
+            correlation=one.correlation[:n_pulses, :n_pulses],
+        )
+        for one in projections
+    ]
     return _evenly(cut, most=most) if n_pulses == 1 else cut
 
 
@@ -291,8 +303,8 @@ def _with_differences(stack: ResponseStack) -> ResponseStack:
     first, second = np.concatenate(earlier), np.concatenate(later)
     if not len(first):
         raise InputError(
-            "The recording holds neither two trials of the same pulse nor stimulus-free time: its noise cannot be measured. "
-            "Record more trials."
+            "The recording holds neither two trials of the same pulse nor stimulus-free time: its noise cannot be "
+            "measured. Record more trials."
         )
     null = (stack.evoked[first] - stack.evoked[second]) / np.float32(np.sqrt(2))
     factor = np.sqrt((stack.evoked_factor[first] ** 2 + stack.evoked_factor[second] ** 2) / 2)

@@ -23,11 +23,11 @@ def shaft_rays(
     other_columns: NDArray[np.float64],
     sigma_px: float,
 ) -> NDArray[np.float64]:
-    """The two rays that explain most of what the spots and the background leave in the image.
+    """Find the two rays that explain most of what the spots and the background leave in the image.
 
     A ray is half a line of light that starts at the bouton's centre, seen through a Gaussian point spread:
-    exp(-across² / 2 sigma²) * Phi(along / sigma). All pairs of directions are tried by linear least squares; a ray that
-    would be dark is left out. Two rays instead of a line, because an axon bends and ends.
+    exp(-across² / 2 sigma²) * Phi(along / sigma). All pairs of directions are tried by linear least squares; a ray
+    that would be dark is left out. Two rays instead of a line, because an axon bends and ends.
 
     Parameters
     ----------
@@ -89,4 +89,4 @@ def _solve(
     diagonal += 1e-9 * diagonal + 1e-12 * np.max(np.diag(normal))
     targets = right[choices]
     heights = np.linalg.solve(matrices, targets[..., None])[..., 0]
-    return heights, np.sum(heights * targets, axis=1)
+    return np.asarray(heights, dtype=np.float64), np.asarray(np.sum(heights * targets, axis=1), dtype=np.float64)

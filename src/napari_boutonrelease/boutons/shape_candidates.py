@@ -83,9 +83,7 @@ def find_shape_candidates(
     )
 
 
-def _vertex(
-    before: NDArray[np.float64], at: NDArray[np.float64], after: NDArray[np.float64]
-) -> NDArray[np.float64]:
+def _vertex(before: NDArray[np.float64], at: NDArray[np.float64], after: NDArray[np.float64]) -> NDArray[np.float64]:
     """Place of the top of the parabola through three neighbours, from -0.5 to 0.5."""
     bend = before - 2 * at + after
     return np.clip(np.where(bend < 0, 0.5 * (before - after) / np.where(bend < 0, bend, -1.0), 0.0), -0.5, 0.5)

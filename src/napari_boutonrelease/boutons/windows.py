@@ -52,14 +52,19 @@ class Projection:
         One row of the image each, or a single one for all where rows are read at once.
     factor : (n_pulses,) ndarray
         SD of an amplitude in units of the SD of one frame's pixel.
+    correlation : (n_pulses, n_pulses) ndarray
+        Between the errors of the amplitudes: they share the offset and overlap in time.
     """
 
     window: Window
     weights: NDArray[np.float32]
     factor: NDArray[np.float64]
+    correlation: NDArray[np.float64]
 
 
-def trial_windows(timing: Timing, *, used: NDArray[np.bool_], shape: ResponseShape, pre_s: float, post_s: float) -> list[Window]:
+def trial_windows(
+    timing: Timing, *, used: NDArray[np.bool_], shape: ResponseShape, pre_s: float, post_s: float
+) -> list[Window]:
     """One window a trial, from `pre_s` before its first pulse to `post_s` after its last.
 
     A window never reaches into another file nor to the next trial's stimulus, and begins after the tail of the one
@@ -90,7 +95,7 @@ def trial_windows(timing: Timing, *, used: NDArray[np.bool_], shape: ResponseSha
 def null_windows(
     timing: Timing, *, used: NDArray[np.bool_], shape: ResponseShape, pre_s: float, post_s: float
 ) -> list[Window]:
-    """As many windows as fit, one after the other, where there is neither a stimulus nor its tail."""
+    """Place as many windows as fit, one after the other, where there is neither a stimulus nor its tail."""
     times = np.sort(timing.stimulus_s[np.isfinite(timing.stimulus_s)])
     decay = max(shape.decay_s, shape.slow_decay_s if shape.slow_fraction else 0.0)
     quiet = shape.latency_s + _TAIL_DECAYS * decay
@@ -106,7 +111,9 @@ def null_windows(
             n_fit = int(length / full) if length >= full else int(length >= _SHORTEST * full)
             each = min(full, length)
             # Spread over the gap; the share of baseline and response is that of a trial.
-            firsts = begin + (length - n_fit * each) * (np.arange(n_fit) + 0.5) / max(n_fit, 1) + np.arange(n_fit) * each
+            firsts = (
+                begin + (length - n_fit * each) * (np.arange(n_fit) + 0.5) / max(n_fit, 1) + np.arange(n_fit) * each
+            )
             windows += [
                 Window(
                     frames=_frames_between(timing, first, first + each, segment=int(segment), used=used),
@@ -125,17 +132,15 @@ def _frames_between(
     slack = 1e-6 * timing.frame_interval_s
     first = np.searchsorted(timing.frame_start_s, begin - slack)
     last = np.searchsorted(timing.frame_start_s, end - timing.exposure_s + slack, side="right")
-    frames = np.arange(first, last)
-    return frames[used[first:last] & (timing.segment[first:last] == segment)]
+    frames = np.arange(first, last, dtype=np.intp)
+    return np.asarray(frames[used[first:last] & (timing.segment[first:last] == segment)])
 
 
-def project(
-    windows: Sequence[Window], *, timing: Timing, shape: ResponseShape, height_px: int
-) -> list[Projection]:
-    """Least-squares weights of each window; windows that cannot tell the response from the offset are left out.
+def project(windows: Sequence[Window], *, timing: Timing, shape: ResponseShape, height_px: int) -> list[Projection]:
+    """Return the least-squares weights of each window that can tell the response from the offset.
 
-    In every window an offset and one amplitude a pulse are fitted together (ordinary least squares), so that the tail of
-    a pulse is not read as a response to the next.
+    In every window an offset and one amplitude a pulse are fitted together (ordinary least squares), so that the tail
+    of a pulse is not read as a response to the next.
     """
     rows = np.arange(height_px) * timing.row_time_s if timing.row_time_s > 0 else np.zeros(1)
     projections = []
@@ -149,8 +154,16 @@ def project(
         if np.min(np.linalg.eigvalsh(normal)[:, 0]) < 1e-4:
             continue
         weights = np.linalg.solve(normal, design)[:, :-1]
-        factor = np.sqrt(np.mean(np.sum(weights**2, axis=-1), axis=0))
-        projections.append(Projection(window=window, weights=weights.astype(np.float32), factor=factor))
+        covariance = np.mean(weights @ weights.transpose(0, 2, 1), axis=0)
+        factor = np.sqrt(np.diag(covariance))
+        projections.append(
+            Projection(
+                window=window,
+                weights=weights.astype(np.float32),
+                factor=factor,
+                correlation=covariance / np.outer(factor, factor),
+            )
+        )
     if not projections:
         return []
     typical = float(np.median(np.concatenate([projection.factor for projection in projections])))
