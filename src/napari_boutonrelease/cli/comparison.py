@@ -41,11 +41,13 @@ class _Compared:
         estimate = with_interval(self.value[row], self.lo[row], self.hi[row], digits=self.digits)
         return estimate, f"{self.truth[row]:.{self.digits}f}" if np.isfinite(self.truth[row]) else "-"
 
-    def tally(self) -> str:
+    def tally(self) -> list[str]:
         both = np.isfinite(self.value) & np.isfinite(self.truth)
         above = np.nan_to_num(self.lo[both], nan=-np.inf) <= self.truth[both]
         below = np.nan_to_num(self.hi[both], nan=np.inf) >= self.truth[both]
-        return f"{self.heading}: {np.sum(above & below)} of {np.sum(both)} intervals hold the truth"
+        if not both.any():
+            return []
+        return [f"{self.heading}: {np.sum(above & below)} of {np.sum(both)} intervals hold the truth"]
 
 
 def matched_spots(boutons: pd.DataFrame, truth: Truth) -> NDArray[np.int64]:
@@ -89,7 +91,12 @@ def comparison_lines(boutons: pd.DataFrame, truth: Truth) -> list[str]:
         [f"{bouton:.0f}", *(cell for quantity in compared for cell in quantity.cells(row))]
         for row, bouton in enumerate(values(boutons, "bouton"))
     ]
-    return [*_aligned([header, *rows]), "", _found(spots, real, truth), *(quantity.tally() for quantity in compared)]
+    return [
+        *_aligned([header, *rows]),
+        "",
+        _found(spots, real, truth),
+        *(line for quantity in compared for line in quantity.tally()),
+    ]
 
 
 def _found(spots: NDArray[np.int64], real: NDArray[np.bool_], truth: Truth) -> str:
