@@ -33,7 +33,7 @@ if TYPE_CHECKING:
 __all__ = ["Drift", "measure_drift", "no_drift"]
 
 _MATCH = 0.5  # a frame that holds less than half of the structure it should does not show this reference
-_SAMPLE_PIXELS = 60_000_000  # pixels of all frames that the reference is built from
+_SAMPLE_PIXELS = 40_000_000  # pixels of all frames that the reference is built from
 _MOST_NOISE_PX = 1.0  # where photon noise leaves more doubt than this, a correction does not help
 
 
@@ -205,7 +205,7 @@ def _share_structure(frames: NDArray[np.generic], sample: NDArray[np.intp], ligh
         return False
     weights = np.where(usable, 1.0 / light.variance_at(light.mean_image), 0.0)
     pairs = np.flatnonzero(np.diff(sample) == 1)
-    pairs = pairs[np.linspace(0, len(pairs) - 1, min(len(pairs), 40)).round().astype(int)]
+    pairs = pairs[np.linspace(0, len(pairs) - 1, min(len(pairs), 24)).round().astype(int)]
 
     def fine(frame: NDArray[np.generic]) -> FloatArray:
         values = frame.astype(np.float64)
@@ -225,7 +225,7 @@ def _build_reference(frames: NDArray[np.generic], light: Light, max_shift_px: fl
     image, n_seen = _aligned_mean(seed, np.zeros(len(seed)), np.zeros(len(seed)))
     variance_at: Callable[[FloatArray], FloatArray] = light.variance_at
     reach = 2.0 * max_shift_px  # the middle frame may itself lie at one end of the drift
-    few = np.linspace(0, len(frames) - 1, min(len(frames), 200)).round().astype(int)
+    few = np.linspace(0, len(frames) - 1, min(len(frames), 100)).round().astype(int)
     for finely, chosen in ((False, frames[few]), (True, frames[few]), (True, frames)):
         reference = _reference(image, n_seen, light, variance_at)
         dy, dx = reference.find(chosen, max_shift_px=reach)
@@ -237,7 +237,7 @@ def _build_reference(frames: NDArray[np.generic], light: Light, max_shift_px: fl
         near = np.maximum(np.abs(dy), np.abs(dx)) <= max_shift_px
         chosen, dy, dx, factor = chosen[near], dy[near], dx[near], factor[near] / np.mean(factor[near])
         image, n_seen = _aligned_mean(chosen, dy, dx, factor=factor, offset=light.offset_counts)
-        if finely:
+        if finely and variance_at == light.variance_at:
             variance_at = _noise_at_rest(chosen, dy, dx, factor, image, light)
     return _reference(image, n_seen, light, variance_at)
 
@@ -246,7 +246,7 @@ def _noise_at_rest(
     frames: NDArray[np.generic], dy: FloatArray, dx: FloatArray, factor: FloatArray, image: FloatArray, light: Light
 ) -> Callable[[FloatArray], FloatArray]:
     """Noise of a pixel with the movement taken out: a sample that trembles looks noisier than its light is."""
-    few = np.linspace(0, len(frames) - 1, min(len(frames), 60)).round().astype(int)
+    few = np.linspace(0, len(frames) - 1, min(len(frames), 20)).round().astype(int)
     expected = shift_frame_block(np.broadcast_to(image, (len(few), *image.shape)), dy=-dy[few], dx=-dx[few])
     expected = light.offset_counts + (expected - light.offset_counts) * factor[few, None, None].astype(np.float32)
     error = frames[few] - expected
@@ -321,12 +321,15 @@ def _aligned_mean(
     total, seen, filled = np.zeros((n_y, n_x)), np.zeros((n_y, n_x)), np.zeros((n_y, n_x))
     for k in range(n):
         image = shift_frame_block(frames[k : k + 1], dy=dy[k : k + 1], dx=dx[k : k + 1])[0]
-        image = (image - np.float32(offset)) / np.float32(factor[k]) + np.float32(offset)
-        y, x = np.arange(n_y) + dy[k], np.arange(n_x) + dx[k]
-        inside = np.outer((y >= 0) & (y <= n_y - 1), (x >= 0) & (x <= n_x - 1))
-        total += np.where(inside, image, 0.0)
+        image *= np.float32(1.0 / factor[k])
+        image += np.float32(offset * (1.0 - 1.0 / factor[k]))
+        inside = tuple(
+            slice(max(0, int(np.ceil(-shift))), max(0, min(size, int(np.floor(size - shift)))))
+            for size, shift in ((n_y, dy[k]), (n_x, dx[k]))
+        )
+        total[inside] += image[inside]
+        seen[inside] += 1.0
         filled += image
-        seen += inside
     return np.where(seen > 0, total / np.maximum(seen, 1.0), filled / n), seen
 
 
