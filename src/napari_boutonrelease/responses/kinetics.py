@@ -209,8 +209,8 @@ class _Search:
         return self._of_parameters(parameters)
 
     def with_slow(self, single: ResponseShape) -> tuple[ResponseShape, float]:
-        """Find the shape with a slow decay if it is needed, else the best without, and the p-value of the slow decay."""
-        from scipy.stats import f as f_distribution
+        """Find the shape, with a slow decay if it is needed, and the p-value of the slow decay."""
+        from scipy.special import fdtrc
 
         alone = self.single(single)
         worst = self.misfit(alone)
@@ -230,7 +230,7 @@ class _Search:
                 best, best_misfit = shape, misfit
         spare = max(self._spare - 2, 1.0)
         ratio = max(worst - best_misfit, 0.0) / 2 / (best_misfit / spare)
-        p_value = float(f_distribution.sf(ratio, 2, spare))
+        p_value = float(fdtrc(2, spare, ratio))
         gain = self._n_values * np.log(worst / best_misfit) - 2 * np.log(self._n_values)
         needed = p_value < _SLOW_P and gain > 0 and best.slow_fraction > 0.02
         return (best if needed else alone), p_value
