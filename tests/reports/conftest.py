@@ -31,7 +31,7 @@ def _wilson(called, trials):
 def _frame(table, rows):
     """Rows as dicts, any column left out is empty."""
     if not rows:
-        return empty_table(table)
+        return empty_table(TABLES[table])
     return pd.DataFrame(rows).reindex(columns=TABLES[table].names)
 
 
@@ -391,9 +391,9 @@ def blank_result() -> AnalysisResult:
         full,
         boutons=boutons,
         responses=responses,
-        pulses=empty_table("pulses"),
+        pulses=empty_table(TABLES["pulses"]),
         estimates=full.estimates.iloc[:0],
-        spontaneous=empty_table("spontaneous"),
+        spontaneous=empty_table(TABLES["spontaneous"]),
         summary={},
         f=nothing,
         f0=nothing,

@@ -70,12 +70,12 @@ def test_flags_pattern_takes_the_registry_and_nothing_else():
 )
 def test_other_columns_are_refused(change, message):
     with pytest.raises(OutputError, match=message):
-        check_columns("drift", change(list(TABLES["drift"].names)))
+        check_columns(TABLES["drift"], change(list(TABLES["drift"].names)))
 
 
 def test_an_empty_table_has_the_columns_and_takes_missing_integers():
-    frame = empty_table("boutons")
-    check_columns("boutons", frame.columns)
+    frame = empty_table(TABLES["boutons"])
+    check_columns(TABLES["boutons"], frame.columns)
     assert len(frame) == 0
     assert frame["n_sites"].dtype == "Int64"
     assert frame["q"].dtype == np.float64

@@ -84,7 +84,7 @@ def texts_of(figure):
 
 
 def check_layout(figure):
-    """No text reaches over the paper's edge, and no two texts of one page cover each other."""
+    """No text reaches over the paper's edge, and no two texts of one page cover each other; return what is said."""
     extents = texts_of(figure)
     assert extents
     for text, box in extents:
@@ -99,6 +99,7 @@ def check_layout(figure):
         assert min(wide, high) < 0.25 * min(box.height, other_box.height), (
             f"{one.get_text()!r} covers {other.get_text()!r}"
         )
+    return " ".join(text.get_text() for text, _ in extents)
 
 
 @pytest.mark.parametrize("name", ["result", "blank_result", "empty_result"])
@@ -117,10 +118,7 @@ def test_long_names_many_flags_and_many_cautions_fit(small_result):
             f"Caution {i}: " + "something about this recording that takes a long time to say. " * 3 for i in range(12)
         ),
     )
-    listing = pages(crowded)
-    for page in listing:
-        check_layout(page())
-    said = " ".join(text.get_text() for page in listing for text, _ in texts_of(page()))
+    said = " ".join(check_layout(page()) for page in pages(crowded))
     assert all(code in said for code in FLAGS)
     assert all(f"Caution {i}:" in said for i in range(12))
 
@@ -149,7 +147,7 @@ def test_a_report_of_nothing_says_so_in_words(request, tmp_path, name):
     nothing = request.getfixturevalue(name)
     write_report(nothing, tmp_path / "report.pdf")
     assert (tmp_path / "report.pdf").stat().st_size > 5000
-    words = " ".join(text.get_text() for text, _ in texts_of(pages(nothing)[0]()))
+    words = check_layout(pages(nothing)[0]())
     assert {"blank_result": "could be measured at no bouton", "empty_result": "No bouton was found"}[name] in words
     for draw in figures_of(nothing).values():
         check_layout(draw())

@@ -303,13 +303,13 @@ SUMMARY: dict[str, str] = {
 """Keys of the summary that reports put into words, as dotted paths; each may be missing or null."""
 
 
-def check_columns(table: str, names: Iterable[str]) -> None:
-    """Raise unless `names` are the columns of `table`, in order.
+def check_columns(table: TableDefinition, names: Iterable[str]) -> None:
+    """Raise unless `names` are the columns of the table, in order.
 
     Parameters
     ----------
-    table : str
-        A key of `TABLES`.
+    table : TableDefinition
+        What the columns should be.
     names : iterable of str
         Names found.
 
@@ -318,37 +318,20 @@ def check_columns(table: str, names: Iterable[str]) -> None:
     OutputError
         If a column is missing, unknown, or out of order.
     """
-    found, wanted = tuple(names), TABLES[table].names
+    found, wanted = tuple(names), table.names
     if found == wanted:
         return
     missing = [name for name in wanted if name not in found]
     unknown = [name for name in found if name not in wanted]
-    problem = "; ".join(
-        text
-        for text, wrong in (
-            (f"missing: {', '.join(missing)}", missing),
-            (f"unknown: {', '.join(unknown)}", unknown),
-            ("the order differs or a name comes twice", not missing and not unknown),
-        )
-        if wrong
-    )
-    raise OutputError(f"Table {table} does not have the columns of the data dictionary ({problem}).")
+    problems = [f"missing: {', '.join(missing)}"] if missing else []
+    problems += [f"unknown: {', '.join(unknown)}"] if unknown else []
+    problem = "; ".join(problems) or "the order differs or a name comes twice"
+    raise OutputError(f"Table {table.name} does not have the columns of the data dictionary ({problem}).")
 
 
-def empty_table(table: str) -> pd.DataFrame:
-    """Return the table with its columns and no row.
-
-    Parameters
-    ----------
-    table : str
-        A key of `TABLES`.
-
-    Returns
-    -------
-    DataFrame
-        Numbers are float64, integers `Int64`, text `string`.
-    """
+def empty_table(table: TableDefinition) -> pd.DataFrame:
+    """Return the table with its columns and no row; numbers are float64, integers `Int64`, text `string`."""
     import pandas as pd
 
     types = {"integer": "Int64", "number": "float64", "string": "string"}
-    return pd.DataFrame({c.name: pd.Series(dtype=types[c.type]) for c in TABLES[table].columns})
+    return pd.DataFrame({column.name: pd.Series(dtype=types[column.type]) for column in table.columns})

@@ -4,7 +4,17 @@ from __future__ import annotations
 
 from .datapackage import describe_package
 from .export import write_result
-from .folder import check_can_write
+from .folder import check_can_write, replaced_whole
+from .strict_json import json_ready, write_json
 from .tables import read_table, write_table
 
-__all__ = ["check_can_write", "describe_package", "read_table", "write_result", "write_table"]
+__all__ = [
+    "check_can_write",
+    "describe_package",
+    "json_ready",
+    "read_table",
+    "replaced_whole",
+    "write_json",
+    "write_result",
+    "write_table",
+]

@@ -4,9 +4,10 @@ from __future__ import annotations
 
 import hashlib
 import re
+from collections.abc import Mapping
 from typing import TYPE_CHECKING, Any
 
-from ..analysis.columns import BOUTONS, TABLES, Column, TableDefinition
+from ..analysis.columns import BOUTONS, Column, TableDefinition
 from .folder import PACKAGE
 
 if TYPE_CHECKING:
@@ -34,7 +35,9 @@ _MEANINGS = {
 }
 
 
-def describe_package(folder: Path, *, name: str, created: str | None = None) -> dict[str, Any]:
+def describe_package(
+    folder: Path, *, name: str, tables: Mapping[str, TableDefinition], created: str | None = None
+) -> dict[str, Any]:
     """Describe every file of an output folder.
 
     Parameters
@@ -43,6 +46,8 @@ def describe_package(folder: Path, *, name: str, created: str | None = None) -> 
         Folder whose files are all written.
     name : str
         Name of the recording.
+    tables : mapping of str to TableDefinition
+        The data dictionary, by stem of the CSV file.
     created : str, optional
         UTC time of the analysis, ISO 8601.
 
@@ -53,9 +58,8 @@ def describe_package(folder: Path, *, name: str, created: str | None = None) -> 
         files with their meaning, all with size and SHA-256.
     """
     files = sorted(path for path in folder.rglob("*") if path.is_file() and path.name != PACKAGE)
-    tables = [path for path in files if path.suffix == ".csv" and path.stem in TABLES]
-    ordered = sorted(tables, key=lambda path: list(TABLES).index(path.stem))
-    ordered += [path for path in files if path not in tables]
+    ordered = [folder / f"{stem}.csv" for stem in tables if folder / f"{stem}.csv" in files]
+    ordered += [path for path in files if path not in ordered]
     package: dict[str, Any] = {
         "$schema": _SCHEMA,
         "name": _slug(name),
@@ -63,36 +67,32 @@ def describe_package(folder: Path, *, name: str, created: str | None = None) -> 
     }
     if created:
         package["created"] = created
-    return package | {"resources": [_resource(path, folder) for path in ordered]}
+    return package | {"resources": [_resource(path, folder, tables) for path in ordered]}
 
 
-def _resource(path: Path, folder: Path) -> dict[str, Any]:
+def _resource(path: Path, folder: Path, tables: Mapping[str, TableDefinition]) -> dict[str, Any]:
     relative = path.relative_to(folder).as_posix()
     suffix = path.suffix.removeprefix(".").lower()
+    table = tables.get(relative.removesuffix(".csv")) if suffix == "csv" else None
     resource: dict[str, Any] = {
-        "name": path.stem if path.suffix == ".csv" and path.stem in TABLES else _slug(relative),
+        "name": table.name if table else _slug(relative),
         "path": relative,
         "format": suffix,
         "mediatype": _MEDIA_TYPES.get(suffix, "application/octet-stream"),
         "bytes": path.stat().st_size,
         "hash": f"sha256:{_sha256(path)}",
     }
-    if suffix == "csv" and path.stem in TABLES:
-        table = TABLES[path.stem]
-        return resource | {
-            "type": "table",
-            "description": table.meaning,
-            "encoding": "utf-8",
-            "schema": _schema(table),
-        }
-    return resource | {"description": _MEANINGS.get(relative, _figure_meaning(path))}
+    if table is None:
+        return resource | {"description": _MEANINGS.get(relative, _figure_meaning(path))}
+    schema = _schema(table, with_boutons=BOUTONS.name in tables)
+    return resource | {"type": "table", "description": table.meaning, "encoding": "utf-8", "schema": schema}
 
 
-def _schema(table: TableDefinition) -> dict[str, Any]:
+def _schema(table: TableDefinition, *, with_boutons: bool) -> dict[str, Any]:
     schema: dict[str, Any] = {"fields": [_field(column) for column in table.columns], "missingValues": [""]}
     if table.key:
         schema["primaryKey"] = list(table.key)
-    if table is not BOUTONS and "bouton" in table.names:
+    if with_boutons and table is not BOUTONS and "bouton" in table.names:
         reference = {"resource": BOUTONS.name, "fields": ["bouton"]}
         schema["foreignKeys"] = [{"fields": ["bouton"], "reference": reference}]
     return schema

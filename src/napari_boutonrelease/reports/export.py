@@ -69,7 +69,8 @@ def write_result(
             path.parent.mkdir(exist_ok=True)
             write(path)
         created = result.provenance.get("created")
-        package = describe_package(work, name=result.name, created=created if isinstance(created, str) else None)
+        created = created if isinstance(created, str) else None
+        package = describe_package(work, name=result.name, tables=TABLES, created=created)
         write_json(package, work / PACKAGE)
     if progress is not None:
         progress(total, total)
@@ -78,7 +79,7 @@ def write_result(
 
 def _writers(result: AnalysisResult, *, figures: bool) -> dict[str, Writer]:
     """Every file by name and what writes it."""
-    writers: dict[str, Writer] = {f"{table}.csv": _table_writer(result, table) for table in TABLES}
+    writers: dict[str, Writer] = {f"{name}.csv": _table_writer(result, name) for name in TABLES}
     writers["traces.npz"] = lambda path: write_traces(result, path)
     writers["footprints.tif"] = lambda path: write_label_image(result, path)
     if len(result.footprints.weights):
@@ -95,8 +96,8 @@ def _writers(result: AnalysisResult, *, figures: bool) -> dict[str, Writer]:
     return writers
 
 
-def _table_writer(result: AnalysisResult, table: str) -> Writer:
-    return lambda path: write_table(getattr(result, table), path, table=table)
+def _table_writer(result: AnalysisResult, name: str) -> Writer:
+    return lambda path: write_table(getattr(result, name), path, table=TABLES[name])
 
 
 def _figure_writer(draw: Callable[[], Figure]) -> Writer:

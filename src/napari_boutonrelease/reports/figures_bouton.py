@@ -112,17 +112,16 @@ def _draw_trace(axes: Axes, result: AnalysisResult, row: int) -> None:
         strips.append(("spontaneous", 1.24, values(result.spontaneous, "time_s")[spontaneous], PULSE_2))
     axes.spines["bottom"].set_position(("axes", -0.13))
     for name, height, times, colour in strips:
-        axes.plot(
-            times,
-            np.full(len(times), height),
-            "|",
-            color=colour,
-            markersize=4.2,
-            markeredgewidth=0.7,
-            transform=axes.get_xaxis_transform(),
-            clip_on=False,
-        )
+        _draw_marks(axes, times, height, colour)
         axes.text(1.008, height, name, transform=axes.transAxes, va="center", fontsize=SMALL - 0.4, color=MUTED)
+
+
+def _draw_marks(axes: Axes, times: NDArray[np.float64], height: float, colour: str) -> None:
+    """Draw short upright marks at a height in axes units, all in one path so that thousands stay light."""
+    x = np.repeat(times, 3)
+    y = np.tile([height - 0.045, height + 0.045, np.nan], len(times))
+    place = axes.get_xaxis_transform()
+    axes.plot(x, y, color=colour, linewidth=0.8, transform=place, clip_on=False, solid_capstyle="butt")
 
 
 def envelope(

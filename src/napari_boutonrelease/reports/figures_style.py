@@ -78,6 +78,7 @@ _RC: dict[str, Any] = {
     "legend.borderaxespad": 0.0,
     "figure.facecolor": "white",
     "savefig.facecolor": "white",
+    "text.hinting": "none",
     "pdf.fonttype": 42,
     "svg.fonttype": "none",
     "svg.hashsalt": "boutonrelease",

@@ -25,7 +25,7 @@ _STALE_S = 3600.0
 _LITTER = {".DS_Store", "Thumbs.db", "desktop.ini"}
 
 
-def check_can_write(folder: Path, *, overwrite: bool) -> None:
+def check_can_write(folder: Path, *, overwrite: bool, mark: str = MARK) -> None:
     """Raise unless results can be written into `folder`, before any work is done.
 
     Parameters
@@ -34,6 +34,8 @@ def check_can_write(folder: Path, *, overwrite: bool) -> None:
         Folder to be made or replaced.
     overwrite : bool
         Whether results that are there may be replaced.
+    mark : str
+        The file without which a folder is not taken for results.
 
     Raises
     ------
@@ -44,7 +46,7 @@ def check_can_write(folder: Path, *, overwrite: bool) -> None:
     folder = Path(folder)
     current = folder if folder.exists() else _aside(folder.resolve())
     if current.exists():
-        _check_replaceable(current, overwrite=overwrite)
+        _check_replaceable(current, overwrite=overwrite, mark=mark)
     ancestor = next(path for path in folder.absolute().parents if path.exists())
     if not ancestor.is_dir():
         raise OutputError(f"{ancestor} is a file, so no results can be written to {folder}; choose another folder.")
@@ -53,7 +55,7 @@ def check_can_write(folder: Path, *, overwrite: bool) -> None:
 
 
 @contextmanager
-def replaced_whole(folder: Path, *, overwrite: bool) -> Iterator[Path]:
+def replaced_whole(folder: Path, *, overwrite: bool, mark: str = MARK) -> Iterator[Path]:
     """Yield an empty folder beside `folder` that takes its place when the block ends without an error.
 
     Parameters
@@ -62,6 +64,8 @@ def replaced_whole(folder: Path, *, overwrite: bool) -> Iterator[Path]:
         Folder to be made or replaced.
     overwrite : bool
         Whether results that are there may be replaced.
+    mark : str
+        The file without which a folder is not taken for results.
 
     Yields
     ------
@@ -75,12 +79,12 @@ def replaced_whole(folder: Path, *, overwrite: bool) -> Iterator[Path]:
     """
     folder = Path(folder).resolve()  # a link to a folder keeps pointing at it
     _recover(folder)
-    check_can_write(folder, overwrite=overwrite)
+    check_can_write(folder, overwrite=overwrite, mark=mark)
     work = folder.with_name(f".{folder.name}.writing-{secrets.token_hex(4)}")
     try:
         work.mkdir(parents=True)
         yield work
-        check_can_write(folder, overwrite=overwrite)  # somebody may have written there meanwhile
+        check_can_write(folder, overwrite=overwrite, mark=mark)  # somebody may have written there meanwhile
         _put_in_place(work, folder)
     except OSError as error:
         raise OutputError(f"The results could not be written to {folder}: {error}.") from error
@@ -88,21 +92,21 @@ def replaced_whole(folder: Path, *, overwrite: bool) -> Iterator[Path]:
         shutil.rmtree(work, ignore_errors=True)
 
 
-def _check_replaceable(folder: Path, *, overwrite: bool) -> None:
+def _check_replaceable(folder: Path, *, overwrite: bool, mark: str) -> None:
     if not folder.is_dir():
         raise OutputError(f"{folder} is a file; give a folder for the results.")
     present = {path.relative_to(folder).as_posix() for path in folder.rglob("*") if not path.is_dir()}
     present = {name for name in present if name.rsplit("/", 1)[-1] not in _LITTER}
     if not present:
         return
-    if MARK not in present:
+    if mark not in present:
         raise OutputError(
-            f"{folder} holds files but no results of an analysis (no {MARK}), so it is not replaced; "
+            f"{folder} holds files but no results of an analysis (no {mark}), so it is not replaced; "
             "choose another folder."
         )
     if not overwrite:
         raise OutputError(f"{folder} already holds results; replace them with --overwrite, or choose another folder.")
-    foreign = sorted(present - _listed(folder))
+    foreign = sorted(present - _listed(folder) - {mark})
     if foreign:
         raise OutputError(
             f"{folder} also holds files that no analysis wrote ({', '.join(foreign[:3])}"
@@ -112,7 +116,7 @@ def _check_replaceable(folder: Path, *, overwrite: bool) -> None:
 
 def _listed(folder: Path) -> set[str]:
     """Files that the results there know as their own."""
-    own = {MARK, PACKAGE}
+    own = {PACKAGE}
     with suppress(OSError, ValueError, KeyError, TypeError):
         package = json.loads((folder / PACKAGE).read_text(encoding="utf-8"))
         own |= {resource["path"] for resource in package["resources"]}

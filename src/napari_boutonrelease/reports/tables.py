@@ -7,7 +7,7 @@ import math
 from collections.abc import Callable
 from typing import TYPE_CHECKING, Any
 
-from ..analysis.columns import TABLES, Column, check_columns
+from ..analysis.columns import Column, TableDefinition, check_columns
 from ..errors import OutputError, SavedAnalysisError
 
 if TYPE_CHECKING:
@@ -16,7 +16,7 @@ if TYPE_CHECKING:
     import pandas as pd
 
 
-def write_table(frame: pd.DataFrame, path: Path, *, table: str) -> None:
+def write_table(frame: pd.DataFrame, path: Path, *, table: TableDefinition) -> None:
     """Write one table.
 
     Integers are written as integers, other numbers with six significant digits (times to the microsecond), and
@@ -28,8 +28,8 @@ def write_table(frame: pd.DataFrame, path: Path, *, table: str) -> None:
         The table; its columns are those of the data dictionary, in order.
     path : Path
         CSV file to write.
-    table : str
-        Its name in the data dictionary.
+    table : TableDefinition
+        Its entry in the data dictionary.
 
     Raises
     ------
@@ -37,7 +37,7 @@ def write_table(frame: pd.DataFrame, path: Path, *, table: str) -> None:
         If the columns differ from the data dictionary, or a cell does not fit its column's type.
     """
     check_columns(table, frame.columns)
-    columns = TABLES[table].columns
+    columns = table.columns
     cells = [_column_cells(frame[column.name].tolist(), column, table) for column in columns]
     with path.open("w", encoding="utf-8", newline="") as file:
         writer = csv.writer(file, lineterminator="\n")
@@ -45,15 +45,15 @@ def write_table(frame: pd.DataFrame, path: Path, *, table: str) -> None:
         writer.writerows(zip(*cells, strict=True))
 
 
-def read_table(path: Path, *, table: str) -> pd.DataFrame:
+def read_table(path: Path, *, table: TableDefinition) -> pd.DataFrame:
     """Read a table that `write_table` wrote.
 
     Parameters
     ----------
     path : Path
         CSV file.
-    table : str
-        Its name in the data dictionary.
+    table : TableDefinition
+        Its entry in the data dictionary.
 
     Returns
     -------
@@ -68,7 +68,7 @@ def read_table(path: Path, *, table: str) -> pd.DataFrame:
     import pandas as pd
 
     types = {"integer": "Int64", "number": "float64", "string": "string"}
-    columns = TABLES[table].columns
+    columns = table.columns
     try:
         frame = pd.read_csv(
             path,
@@ -79,17 +79,17 @@ def read_table(path: Path, *, table: str) -> pd.DataFrame:
         )
         check_columns(table, frame.columns)
     except (OSError, ValueError) as error:
-        raise SavedAnalysisError(f"{path} cannot be read as the table {table}: {error}") from error
+        raise SavedAnalysisError(f"{path} cannot be read as the table {table.name}: {error}") from error
     return frame
 
 
-def _column_cells(values: list[Any], column: Column, table: str) -> list[str]:
+def _column_cells(values: list[Any], column: Column, table: TableDefinition) -> list[str]:
     write = _WRITERS[column.type]
     try:
         return ["" if _is_missing(value) else write(value, column) for value in values]
     except (TypeError, ValueError) as error:
         raise OutputError(
-            f"Table {table}, column {column.name}: a cell does not fit the type {column.type} ({error})."
+            f"Table {table.name}, column {column.name}: a cell does not fit the type {column.type} ({error})."
         ) from error
 
 

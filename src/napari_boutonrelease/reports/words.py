@@ -48,12 +48,13 @@ def fixed(value: float, *, decimals: int = 2) -> str:
 
     Examples
     --------
-    >>> fixed(0.5), fixed(float("nan"))
-    ('0.50', '–')
+    >>> fixed(0.5), fixed(-0.001), fixed(float("nan"))
+    ('0.50', '0.00', '–')
     """
     if value is None or not math.isfinite(value):
         return MISSING
-    return f"{value:.{decimals}f}".replace("-", "−")
+    text = f"{value:.{decimals}f}"
+    return f"{0.0:.{decimals}f}" if float(text) == 0 else text.replace("-", "−")
 
 
 def with_limits(value: float, low: float, high: float, *, decimals: int = 2) -> str:
@@ -61,13 +62,14 @@ def with_limits(value: float, low: float, high: float, *, decimals: int = 2) -> 
 
     Examples
     --------
-    >>> with_limits(0.42, 0.31, 0.53)
-    '0.42 (0.31–0.53)'
+    >>> with_limits(0.42, 0.31, 0.53), with_limits(0.02, -0.01, 0.05)
+    ('0.42 (0.31–0.53)', '0.02 (−0.01 to 0.05)')
     """
     text = fixed(value, decimals=decimals)
     if not (math.isfinite(low) and math.isfinite(high)):
         return text
-    return f"{text} ({fixed(low, decimals=decimals)}–{fixed(high, decimals=decimals)})"
+    dash = "–" if low >= 0 else " to "  # next to a minus, a dash would be misread
+    return f"{text} ({fixed(low, decimals=decimals)}{dash}{fixed(high, decimals=decimals)})"
 
 
 def counted(count: float, noun: str, plural: str | None = None) -> str:
