@@ -21,7 +21,7 @@ _ROOM_MM = A4_MM[1] - 2 * MARGIN_MM - 14.0
 _WIDTH_MM = A4_MM[0] - 2 * MARGIN_MM
 _TABLE_MM = {
     "bouton": 11.0,
-    "place (µm)": 17.0,
+    "place": 17.0,
     "found by": 17.0,
     "trials": 11.0,
     "p_release": 25.0,
@@ -85,7 +85,7 @@ def _with_head(head: Block, body: Sheet) -> Draw:
         head.draw(area, 0.0)
         body(area.part(0.0, head.height, area.width, area.height - head.height))
         words = (
-            "In brackets: 95 % intervals; for n_sites the numbers that the data cannot exclude. Place: distance along "
+            "In brackets: 95 % intervals; for n_sites the numbers that the data cannot exclude. Place: µm along "
             "the axon, else y, x in px. All columns are in boutons.csv, their meaning in datapackage.json."
         )
         below = head.height + body.height + 2.0
