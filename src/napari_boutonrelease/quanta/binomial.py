@@ -154,6 +154,7 @@ def fit_sites(
 
     Examples
     --------
+    >>> from napari_boutonrelease.quanta import LogPrior
     >>> rng = np.random.default_rng(1)
     >>> vesicles = rng.binomial(2, 0.4, 300)
     >>> fit = fit_sites(0.2 * vesicles + rng.normal(0, 0.02, 300), rng.normal(0, 0.02, 100), relative_noise=None,
@@ -190,6 +191,7 @@ def fit_binomial(
 
     Examples
     --------
+    >>> from napari_boutonrelease.quanta import LogPrior
     >>> rng = np.random.default_rng(1)
     >>> amplitudes = 0.2 * rng.binomial(1, 0.5, 100) + rng.normal(0, 0.03, 100)
     >>> fit = fit_binomial(amplitudes, rng.normal(0, 0.03, 100), relative_noise=None, n_sites=1,

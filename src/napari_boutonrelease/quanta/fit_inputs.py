@@ -31,7 +31,7 @@ _EDGE_LOGIT = 12.0  # p_site within 6e-6 of 0 or 1 counts as 0 or 1
 _NOISE_FACTOR = 5.0  # the fitted noise may differ from the starting value this many times either way
 _SMALLEST_Q_SD = 0.25  # a vesicle smaller than this share of the noise is indistinguishable from it
 _Q_CV_RANGE = (0.02, 1.5)
-_SHARP_Q_CV = 0.06
+_SHARP_Q_CV, _BROAD_Q_CV = 0.06, 0.9
 _N_Q, _N_RELEASE, _N_STARTS = 64, 12, 3
 
 
@@ -161,12 +161,17 @@ def make_problems(data: BoutonData, n_sites: Floats, *, m_max: int, priors: Rele
 def starting_points(problems: Problems, data: BoutonData, *, priors: ReleasePriors) -> Floats:
     """Best few starts of each problem, (B, S, 4): the ridges of a grid over q, release probability and q_cv.
 
-    Two q_cv are tried: the expected one, and one so small that peaks of the histogram stand out if there are any. The
-    noise stands at its first guess; the climb that follows frees all.
+    Besides the expected q_cv, one is tried that is so small that peaks of the histogram stand out if there are any,
+    and one so large that a single broad cloud counts as one vesicle, as far as the prior lets q_cv go. The noise
+    stands at its first guess; the climb that follows frees all.
     """
     expected = float(np.clip(priors.q_cv.centre, *_Q_CV_RANGE))
-    sharp = max(expected * np.exp(-2.0 * priors.q_cv.log_sd), min(_SHARP_Q_CV, expected))
-    q_cvs = [expected] if sharp == expected else [expected, sharp]
+    leeway = np.exp(2.0 * priors.q_cv.log_sd)
+    sharp, broad = (
+        max(expected / leeway, min(_SHARP_Q_CV, expected)),
+        min(expected * leeway, max(_BROAD_Q_CV, expected)),
+    )
+    q_cvs = np.unique([sharp, expected, broad])
     return np.concatenate([_ridges(problems, data, q_cv=q_cv) for q_cv in q_cvs], axis=1)
 
 
