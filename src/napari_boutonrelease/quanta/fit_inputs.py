@@ -236,5 +236,4 @@ def _first_noise(evoked: Floats, quiet_nulls: Floats, noise_prior: LogPrior | No
         return noise_prior.centre
     if not evoked.size:
         return float("nan")
-    # without any other word on the noise: the spread of the amplitudes of either sign closest to zero
-    return max(0.3 * float(evoked.std()), 1.482602 * float(np.median(np.minimum(np.abs(evoked), evoked.std()))) * 0.3)
+    return 0.3 * float(evoked.std())  # no other word on the noise: most of the spread is release
