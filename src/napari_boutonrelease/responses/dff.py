@@ -22,6 +22,8 @@ BaselineMethod = Literal["bleaching", "trial", "percentile"]
 _CURVES = ("constant", "exponential", "two exponentials")
 _LEAST_SE = 3.0
 """F0 must exceed this many standard errors of itself to be divided by."""
+_REFINEMENTS = 14
+"""Moves of the rates after the grid: enough to bring their steps below one percent."""
 _TREND_Z = 4.0
 """Residuals of an exponential that follow each other this clearly (in SD) call for the smooth curve."""
 
@@ -157,9 +159,7 @@ def _bleaching(
 def _best_exponentials(
     y: NDArray[np.float64], *, weights: NDArray[np.float64], at: NDArray[np.float64]
 ) -> tuple[NDArray[np.intp], NDArray[np.float64], NDArray[np.float64]]:
-    """Search a grid of rates, all boutons at once, for non-negative sums; AICc chooses the number of terms.
-
-    A curve is wanted, not its rates, and on the grid the curve is as good as between its points.
+    """Fit non-negative sums of 0, 1 and 2 exponentials to all boutons at once; AICc chooses.
 
     Returns
     -------
@@ -168,38 +168,67 @@ def _best_exponentials(
     rates, linear : (n_boutons, 2), (n_boutons, 3) ndarray
         Rates (1/duration), and the offset with the terms' heights; 0 where a term is absent.
     """
-    n_boutons = y.shape[0]
     n = np.sum(weights > 0, axis=1)
-    total = np.maximum(np.sum(weights, axis=1), 1e-300)
-    mean = np.sum(weights * y, axis=1) / total
-    centred = y - mean[:, None]
-    single = np.geomspace(0.2, 60.0, 36)
-    pairs = [(slow, fast) for slow in single[::3] for fast in single[1::3] if fast > 3 * slow]
-    rates = np.zeros((n_boutons, 2))
-    linear = np.zeros((n_boutons, 3))
-    linear[:, 0] = mean
-    number = np.zeros(n_boutons, dtype=np.intp)
-    flat = np.sum(weights * centred**2, axis=1)
     floor = 1e-20 * np.maximum(np.sum(weights * y**2, axis=1), 1e-300)
-    best = _aicc(flat + floor, n, 2)
-    for terms, k, candidates in ((1, 4, [(rate,) for rate in single]), (2, 6, pairs)):
-        for candidate in candidates:
-            basis = np.stack([np.ones_like(at), *(np.exp(-rate * at) for rate in candidate)])
-            normal = np.einsum("bn,in,jn->bij", weights, basis, basis, optimize=True)
-            normal += 1e-12 * total[:, None, None] * np.eye(terms + 1)
-            right = np.einsum("bn,in->bi", weights * centred, basis, optimize=True)
-            solution = np.linalg.solve(normal, right[..., None])[..., 0]
-            left_over = np.sum(weights * (centred - solution @ basis) ** 2, axis=1) + floor
-            criterion = _aicc(left_over, n, k)
-            solution[:, 0] += mean
-            better = (criterion < best) & np.all(solution >= 0, axis=1)
-            best[better] = criterion[better]
-            number[better] = terms
-            rates[better, :] = 0.0
-            rates[better, :terms] = candidate
-            linear[better, :] = 0.0
-            linear[better, : terms + 1] = solution[better]
+    rates, linear = np.zeros((y.shape[0], 2)), np.zeros((y.shape[0], 3))
+    number = np.zeros(y.shape[0], dtype=np.intp)
+    best = np.full(y.shape[0], np.inf)
+    single = np.geomspace(0.2, 60.0, 24)
+    pairs = np.array([(slow, fast) for slow in single[::2] for fast in single[1::2] if fast > 3 * slow])
+    for terms, candidates in enumerate((np.zeros((1, 0)), single[:, None], pairs)):
+        found, solution, left = _search(y, weights=weights, at=at, candidates=candidates)
+        criterion = _aicc(left + floor, n, 2 * terms + 2)
+        better = criterion < best if terms else np.full(best.shape, True)
+        best[better], number[better] = criterion[better], terms
+        rates[better, :terms] = found[better]
+        linear[better, : terms + 1] = solution[better]
     return number, rates, linear
+
+
+def _search(
+    y: NDArray[np.float64], *, weights: NDArray[np.float64], at: NDArray[np.float64], candidates: NDArray[np.float64]
+) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
+    """Try the candidate rates, then ever smaller moves around each bouton's best; what is negative does not count.
+
+    Returns rates (n_boutons, n_terms), linear parameters (n_boutons, n_terms + 1) and weighted residual sums; the sums
+    are infinite where no candidate is non-negative.
+    """
+    n_boutons, n_terms = y.shape[0], candidates.shape[1]
+    rates, linear = np.zeros((n_boutons, n_terms)), np.zeros((n_boutons, n_terms + 1))
+    left = np.full(n_boutons, np.inf)
+
+    def attempt(trial: NDArray[np.float64]) -> NDArray[np.bool_]:
+        solution, residual_sum = _linear_fit(y, weights=weights, at=at, rates=trial)
+        better = (residual_sum < left) & (np.all(solution >= 0, axis=1) | (n_terms == 0))
+        rates[better], linear[better], left[better] = trial[better], solution[better], residual_sum[better]
+        return better
+
+    for candidate in candidates:
+        attempt(np.broadcast_to(candidate, rates.shape))
+    moves = np.stack(np.meshgrid(*[[-1.0, 0.0, 1.0]] * n_terms), axis=-1).reshape(-1, n_terms) if n_terms else []
+    step = np.full(n_boutons, 0.15)
+    for _ in range(_REFINEMENTS if n_terms else 0):
+        centre, moved = rates.copy(), np.zeros(n_boutons, dtype=bool)
+        for move in moves:
+            moved |= attempt(centre * np.exp(step[:, None] * move))
+        step[~moved] /= 2.0
+    return rates, linear, left
+
+
+def _linear_fit(
+    y: NDArray[np.float64], *, weights: NDArray[np.float64], at: NDArray[np.float64], rates: NDArray[np.float64]
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Offset and heights for given rates, (n_boutons, n_terms + 1), and weighted residual sums."""
+    total = np.maximum(np.sum(weights, axis=1), 1e-300)
+    mean = np.sum(weights * y, axis=1) / total  # taken out first, lest rounding drowns small residuals
+    basis = np.concatenate([np.ones((y.shape[0], 1, at.size)), np.exp(-rates[:, :, None] * at)], axis=1)
+    weighted = basis * weights[:, None, :]
+    normal = weighted @ basis.transpose(0, 2, 1) + 1e-12 * total[:, None, None] * np.eye(basis.shape[1])
+    centred = y - mean[:, None]
+    solution = np.linalg.solve(normal, weighted @ centred[:, :, None])[:, :, 0]
+    left = np.sum(weights * (centred - np.einsum("bi,bin->bn", solution, basis)) ** 2, axis=1)
+    solution[:, 0] += mean
+    return solution, left
 
 
 def _aicc(residual_sum: NDArray[np.float64], n: NDArray[np.intp], k: int) -> NDArray[np.float64]:
