@@ -26,6 +26,7 @@ autodoc_typehints = "none"
 autodoc_member_order = "bysource"
 napoleon_google_docstring = False
 napoleon_use_rtype = False
+napoleon_use_ivar = True  # attributes of many classes share a name, and types name them: "(n_trials,) ndarray"
 
 html_theme = "furo"
 html_title = project
