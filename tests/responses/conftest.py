@@ -79,7 +79,7 @@ class Traces:
 def traces_of(
     amplitude, *, timing, shape, rng=None, noise=0.0, f0=1000.0, bleach_s=80.0, y_px=None, memory=0.0, events=()
 ):
-    """F with evoked responses `amplitude` (bouton, trial, pulse), events (bouton, time_s, size) and noise of SD noise·F0."""
+    """F with responses `amplitude` (bouton, trial, pulse), events (bouton, time_s, size) and noise of SD noise·F0."""
     n_boutons = amplitude.shape[0]
     time_s = timing.frame_start_s
     y_px = np.zeros(n_boutons) if y_px is None else np.asarray(y_px, dtype=float)

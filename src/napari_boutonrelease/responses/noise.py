@@ -44,7 +44,7 @@ def robust_sd(values: NDArray[np.float64], *, centre: float | None = None) -> ND
     True
     """
     values = np.asarray(values, dtype=np.float64)
-    flat = values.reshape(-1, values.shape[-1])
+    flat = values.reshape(int(np.prod(values.shape[:-1])), values.shape[-1])
     result = np.full(flat.shape[0], np.nan)
     for row, series in enumerate(flat):
         finite = series[np.isfinite(series)]

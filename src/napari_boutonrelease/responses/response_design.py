@@ -48,6 +48,8 @@ class ResponseDesign:
         Norm of each whitened column; 1 for columns without entries.
     present : (n_columns,) ndarray of bool
         Columns with entries.
+    reach : int
+        How many windows further a response is still seen.
     factor : (n_bands, n_columns) ndarray
         Banded Cholesky factor of the scaled normal equations.
     """
@@ -63,6 +65,7 @@ class ResponseDesign:
     whitening: csr_array | None
     scale: NDArray[np.float64]
     present: NDArray[np.bool_]
+    reach: int
     factor: NDArray[np.float64]
 
     @property
@@ -110,8 +113,7 @@ class ResponseDesign:
         from scipy.linalg import cho_solve_banded
 
         each = self.n_columns_each
-        reach = (self.factor.shape[0] - 1) // each
-        stride = 1 if reach == 0 else min(self.n_windows, 4 * (reach + 1))
+        stride = 1 if self.reach == 0 else min(self.n_windows, 4 * (self.reach + 1))
         diagonal = np.empty(self.scale.size)
         for first in range(min(stride, self.n_windows)):
             probe = np.zeros((self.n_windows, each, each))
@@ -274,6 +276,7 @@ def build_design(
         whitening=whitening,
         scale=scale,
         present=present,
+        reach=int(np.max(i // each - j // each, initial=0)),
         factor=cholesky_banded(band, lower=True) if scale.size else band,
     )
 
