@@ -151,6 +151,21 @@ def test_nothing_to_hold_on_to_means_no_correction(rng):
     np.testing.assert_array_equal(drift.dx_px, 0.0)
 
 
+@pytest.mark.parametrize("angle", [0.0, 0.6])
+def test_a_straight_axon_tells_movement_across_it_only(rng, angle):
+    y, x = np.mgrid[0:48, 0:64].astype(float)
+    across = np.array([np.cos(angle), np.sin(angle)])
+    truth = slow(400)
+    place = (y - 24) * across[0] + (x - 32) * across[1]
+    expected = 2 + 30 * np.exp(-((place - (truth @ across)[:, None, None]) ** 2) / 4.0)
+    drift = measured((100 + 2 * rng.poisson(expected)).astype(np.uint16))
+    found = np.stack([drift.dy_px, drift.dx_px], axis=1)
+    assert drift.used.all()
+    error = (found - truth) @ across
+    assert np.sqrt(np.mean((error - error.mean()) ** 2)) < 0.02
+    assert np.abs(found @ [-across[1], across[0]]).max() < 0.02
+
+
 def test_a_still_dim_sample_is_left_still(rng):
     """Raw shifts would scatter by a tenth of a pixel here and add more noise than they remove."""
     axon = Axon(rng, bouton=1.5, axon=0.4, background=0.15)
@@ -217,7 +232,9 @@ def test_shift_of_a_photograph_found_as_an_independent_program_finds_it():
     np.testing.assert_allclose(theirs, (22.4, -13.32))
     inside = np.zeros(photograph.shape, dtype=bool)
     inside[40:-40, 40:-40] = True  # what left the image on one side came back on the other
-    reference = Reference(image=photograph, variance=np.ones_like(photograph), known=inside, usable=inside)
+    reference = Reference(
+        image=photograph, variance=np.ones_like(photograph), known=inside, usable=inside, directions=np.eye(2)
+    )
     dy, dx = reference.find(moved[None], max_shift_px=30.0)
     fit = reference.locate(moved[None], dy=dy, dx=dx, max_shift_px=30.0)
     np.testing.assert_allclose([fit.dy_px[0], fit.dx_px[0]], -theirs, atol=0.01)

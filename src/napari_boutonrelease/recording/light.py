@@ -214,7 +214,8 @@ def photon_transfer_line(mean: FloatArray, variance: FloatArray, *, n_frames: in
     x = np.array([mean[piece].mean() for piece in pieces])
     y = np.array([np.median(variance[piece]) for piece in pieces])
     n = np.array([min(piece.size, 200) for piece in pieces])  # a bin is never surer than the line is straight
-    design = np.stack([x, np.ones_like(x)], axis=1)
+    middle = float(x.mean())  # a large offset must not swallow the slope
+    design = np.stack([x - middle, np.ones_like(x)], axis=1)
     expected, trust = np.maximum(y, 1e-3 * y.max() + 1e-300), np.ones_like(x)
     for _ in range(30):
         scale = np.sqrt(n) / expected
@@ -227,7 +228,8 @@ def photon_transfer_line(mean: FloatArray, variance: FloatArray, *, n_frames: in
         expected = np.maximum(design @ line, 0.05 * np.median(y) + 1e-300)
     free = max(float(np.sum(trust > 0)) - 2.0, 1.0)
     scatter = float(np.sum(trust * residual**2)) / free
-    gain, read_variance = map(float, line)
+    gain = float(line[0])
+    read_variance = float(line[1]) - gain * middle
     gain_se = float(np.sqrt(scatter * np.linalg.pinv(normal)[0, 0]))
     return (gain, gain_se, read_variance) if gain > 3.0 * gain_se else unknown
 

@@ -34,6 +34,7 @@ __all__ = ["Drift", "measure_drift", "no_drift"]
 
 _MATCH = 0.5  # a frame that holds less than half of the structure it should does not show this reference
 _SAMPLE_PIXELS = 40_000_000  # pixels of all frames that the reference is built from
+_PAIR_PIXELS = 3_000_000  # pixels of all pairs of frames that the telling directions are taken from
 _MOST_NOISE_PX = 1.0  # where photon noise leaves more doubt than this, a correction does not help
 
 
@@ -52,7 +53,7 @@ class Drift:
     reference : (y, x) ndarray of float
         Mean of aligned frames, counts, in the coordinates that drift refers to.
     noise_px : float
-        Typical standard error of one frame's shift along one axis before following the drift through time, px.
+        Typical standard error of one frame's shift along one direction before following the drift through time, px.
     corrected : bool
         False where nothing was corrected: not asked for, or nothing in the image to hold on to.
     """
@@ -90,8 +91,9 @@ def measure_drift(
 ) -> Drift:
     """Measure the rigid movement of every frame.
 
-    Where the image holds nothing to register on, or photon noise leaves a doubt of more than a pixel, the result is
-    that of `no_drift`: a correction would do harm.
+    Movement along a direction that the image does not tell, or leaves in doubt by more than a pixel in one frame, is
+    taken to be 0, because a correction would do harm: both directions of a blank image (the result is then that of
+    `no_drift`), and the length of a straight axon without boutons.
 
     Parameters
     ----------
@@ -125,9 +127,10 @@ def measure_drift(
         return no_drift(light=light)
     frames = np.concatenate([_numbers(movie.read(int(k), int(k) + 1)) for k in sample])
     _fill_dead(frames, light.dead)
-    if not _share_structure(frames, sample, light):
+    directions = _telling_directions(frames, sample, light)
+    if not directions.any():
         return no_drift(light=light)
-    reference = _build_reference(frames, light, max_shift_px)
+    reference = _build_reference(frames, light, directions, max_shift_px)
 
     fits: list[Fit] = []
     good = np.flatnonzero(~light.bad_frame)
@@ -140,9 +143,6 @@ def measure_drift(
         if progress is not None:
             progress(stop, n_frames)
     fit = Fit(**{name: np.concatenate([getattr(part, name) for part in fits]) for name in Fit.__slots__})
-    noise_px = float(np.median(np.hypot(fit.dy_sd_px, fit.dx_sd_px)) / np.sqrt(2.0))
-    if not noise_px <= _MOST_NOISE_PX:
-        return no_drift(light=light)
 
     match, matched = _judge(fit)
     inside = np.maximum(np.abs(fit.dy_px), np.abs(fit.dx_px)) < max_shift_px
@@ -165,7 +165,7 @@ def measure_drift(
         match=whole_match,
         used=used,
         reference=image,
-        noise_px=noise_px,
+        noise_px=float(np.median(np.hypot(fit.dy_sd_px, fit.dx_sd_px)) / np.sqrt(np.trace(directions))),
         corrected=True,
     )
 
@@ -196,29 +196,53 @@ def _fill_dead(frames: NDArray[np.generic], dead: NDArray[np.bool_]) -> None:
         frames[:, dead] = frames[:, y[dead], x[dead]]
 
 
-def _share_structure(frames: NDArray[np.generic], sample: NDArray[np.intp], light: Light) -> bool:
-    """Whether successive frames have more in common than a smooth background: else there is nothing to register."""
+def _telling_directions(frames: NDArray[np.generic], sample: NDArray[np.intp], light: Light) -> FloatArray:
+    """Project on the directions along which the image tells movement: none on a blank, one on a straight axon.
+
+    The information on movement is the weighted square of the image's slopes. Taken as the product of the slopes of two
+    successive frames, it holds no noise, for they share none.
+
+    Returns
+    -------
+    (2, 2) ndarray of float
+        Projection matrix, (y, x).
+    """
     from scipy.ndimage import gaussian_filter
 
     usable = ~(light.dead | light.saturated)
     if not usable.any():
-        return False
+        return np.zeros((2, 2))
     weights = np.where(usable, 1.0 / light.variance_at(light.mean_image), 0.0)
     pairs = np.flatnonzero(np.diff(sample) == 1)
-    pairs = pairs[np.linspace(0, len(pairs) - 1, min(len(pairs), 24)).round().astype(int)]
+    n_pairs = min(len(pairs), int(np.clip(_PAIR_PIXELS // usable.size, 24, 200)))
+    pairs = pairs[np.linspace(0, len(pairs) - 1, n_pairs).round().astype(int)]
 
-    def fine(frame: NDArray[np.generic]) -> FloatArray:
+    # beyond the border there is no image, and a continued one would seem to have structure
+    inside = tuple(slice(min(size // 6, 6), -min(size // 6, 6)) for size in usable.shape)
+
+    def slopes(frame: NDArray[np.generic]) -> FloatArray:
         values = frame.astype(np.float64)
         values[~usable] = np.median(values[usable])
-        result: FloatArray = gaussian_filter(values, 1.0) - gaussian_filter(values, 6.0)
-        return result
+        along_y, along_x = (
+            gaussian_filter(values, 1.2, order=order) - gaussian_filter(values, 6.0, order=order)
+            for order in ((1, 0), (0, 1))
+        )
+        return np.stack([along_y[inside].ravel(), along_x[inside].ravel()])
 
-    common = np.array([np.sum(weights * fine(frames[k]) * fine(frames[k + 1])) for k in pairs])
-    doubt = common.std(ddof=1) / np.sqrt(len(common)) if len(common) > 2 else np.inf
-    return bool(common.mean() > 5.0 * doubt)
+    information = np.array([(slopes(frames[k]) * weights[inside].ravel()) @ slopes(frames[k + 1]).T for k in pairs])
+    information = 0.5 * (information + information.transpose(0, 2, 1))
+    strengths, directions = np.linalg.eigh(information.mean(axis=0))
+    projection = np.zeros((2, 2))
+    for strength, direction in zip(strengths, directions.T, strict=True):
+        doubt = (direction @ information @ direction).std() / np.sqrt(max(n_pairs - 1, 1))
+        if n_pairs > 2 and strength > max(5.0 * doubt, _MOST_NOISE_PX**-2, 1e-3 * strengths[-1]):
+            projection += np.outer(direction, direction)
+    return projection
 
 
-def _build_reference(frames: NDArray[np.generic], light: Light, max_shift_px: float) -> Reference:
+def _build_reference(
+    frames: NDArray[np.generic], light: Light, directions: FloatArray, max_shift_px: float
+) -> Reference:
     """Align the sampled frames with each other, in three rounds, and average them."""
     middle = len(frames) // 2
     seed = frames[max(0, middle - 4) : middle + 4]
@@ -227,7 +251,7 @@ def _build_reference(frames: NDArray[np.generic], light: Light, max_shift_px: fl
     reach = 2.0 * max_shift_px  # the middle frame may itself lie at one end of the drift
     few = np.linspace(0, len(frames) - 1, min(len(frames), 100)).round().astype(int)
     for finely, chosen in ((False, frames[few]), (True, frames[few]), (True, frames)):
-        reference = _reference(image, n_seen, light, variance_at)
+        reference = _reference(image, n_seen, light, directions, variance_at)
         dy, dx = reference.find(chosen, max_shift_px=reach)
         factor = np.ones(len(chosen))
         if finely:
@@ -239,7 +263,7 @@ def _build_reference(frames: NDArray[np.generic], light: Light, max_shift_px: fl
         image, n_seen = _aligned_mean(chosen, dy, dx, factor=factor, offset=light.offset_counts)
         if finely and variance_at == light.variance_at:
             variance_at = _noise_at_rest(chosen, dy, dx, factor, image, light)
-    return _reference(image, n_seen, light, variance_at)
+    return _reference(image, n_seen, light, directions, variance_at)
 
 
 def _noise_at_rest(
@@ -262,7 +286,11 @@ def _noise_at_rest(
 
 
 def _reference(
-    image: FloatArray, n_seen: FloatArray, light: Light, variance_at: Callable[[FloatArray], FloatArray]
+    image: FloatArray,
+    n_seen: FloatArray,
+    light: Light,
+    directions: FloatArray,
+    variance_at: Callable[[FloatArray], FloatArray],
 ) -> Reference:
     from scipy.ndimage import binary_dilation
 
@@ -272,6 +300,7 @@ def _reference(
         variance=variance,
         known=n_seen > 0.2 * n_seen.max(),
         usable=~(binary_dilation(light.saturated) | light.dead),
+        directions=directions,
     )
 
 

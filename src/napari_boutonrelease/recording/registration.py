@@ -67,7 +67,6 @@ class _Cell:
     weights: Single  # (n_pixels,)
     rows: Single  # (n_columns, n_pixels): columns times weights
     inverse: FloatArray  # of the normal matrix
-    smooth_inverse: FloatArray  # of its part for the smooth background alone
     signal: float
 
 
@@ -84,14 +83,22 @@ class Reference:
         Pixels of the reference to trust.
     usable : (y, x) ndarray of bool
         Pixels of the *frames* to trust.
+    directions : (2, 2) ndarray of float
+        Projection on the directions (y, x) along which movement shows; no other movement is told.
     """
 
     def __init__(
-        self, *, image: FloatArray, variance: FloatArray, known: NDArray[np.bool_], usable: NDArray[np.bool_]
+        self,
+        *,
+        image: FloatArray,
+        variance: FloatArray,
+        known: NDArray[np.bool_],
+        usable: NDArray[np.bool_],
+        directions: FloatArray,
     ) -> None:
         from scipy.interpolate import RectBivariateSpline
 
-        self.image, self._known, self._usable = image, known, usable
+        self.image, self._known, self._usable, self._directions = image, known, usable, directions
         self._n_y, self._n_x = image.shape
         self._spline = RectBivariateSpline(np.arange(self._n_y), np.arange(self._n_x), image, kx=3, ky=3)
         self._weights = 1.0 / variance
@@ -153,7 +160,6 @@ class Reference:
             weights=weights.astype(np.float32),
             rows=rows.astype(np.float32),
             inverse=np.linalg.pinv(normal, hermitian=True, rcond=1e-12),
-            smooth_inverse=smooth_inverse,
             signal=float(normal[2, 2] - crossed @ smooth_inverse @ crossed),
         )
         return self._cells[cell]
@@ -178,22 +184,22 @@ class Reference:
         flat = frames.reshape(n, -1)
         limit = int(np.ceil(max_shift_px * _CELLS_PER_PX))
         found = {name: np.zeros(n) for name in Fit.__slots__}
-        drift = np.stack([dy, dx], axis=1)
+        drift = np.stack([dy, dx], axis=1) @ self._directions
         cells = np.clip(np.rint(drift * _CELLS_PER_PX), -limit, limit).astype(int)
         active = np.arange(n)
-        for step in range(_MOST_STEPS):
+        for _ in range(_MOST_STEPS):
+            if not active.size:
+                break
             moving = []
             for cell, members in _grouped(cells, active):
                 centre = np.asarray(cell) / _CELLS_PER_PX
                 problem = self._cell(cell)
                 move = self._solve(problem, flat, members, found)
-                drift[members] = centre + move
+                drift[members] = (centre + move) @ self._directions
                 # a little past the cell's edge is as good, and keeps frames from going to and fro
                 far = np.abs(move).max(axis=1) > 0.6 / _CELLS_PER_PX
                 moving.append(members[far])
             active = np.concatenate(moving)
-            if not active.size or step == _MOST_STEPS - 1:
-                break
             target = np.clip(np.rint(drift[active] * _CELLS_PER_PX), -limit, limit).astype(int)
             stuck = (target == cells[active]).all(axis=1)
             cells[active] = target
@@ -216,13 +222,15 @@ class Reference:
         brightness = solution[:, 2]
         factor = np.maximum(brightness, 0.2)  # a hardly visible frame must not jump
         sd = np.sqrt(misfit) / factor
-        found["dy_sd_px"][members] = sd * np.sqrt(max(cell.inverse[0, 0], 0.0))
-        found["dx_sd_px"][members] = sd * np.sqrt(max(cell.inverse[1, 1], 0.0))
+        doubt = self._directions @ cell.inverse[:2, :2] @ self._directions
+        found["dy_sd_px"][members] = sd * np.sqrt(max(doubt[0, 0], 0.0))
+        found["dx_sd_px"][members] = sd * np.sqrt(max(doubt[1, 1], 0.0))
         found["brightness"][members] = brightness
         found["misfit"][members] = misfit
         found["signal"][members] = cell.signal
         found["n_pixels"][members] = n_pixels
-        return np.clip(solution[:, :2] / factor[:, None], -0.75, 0.75)
+        move: FloatArray = np.clip(solution[:, :2] / factor[:, None] @ self._directions, -0.75, 0.75)
+        return move
 
     def find(self, frames: NDArray[np.generic], *, max_shift_px: float) -> tuple[FloatArray, FloatArray]:
         """Coarse drift of frames by cross-correlation with the likelihood template, to about a pixel.
@@ -260,7 +268,8 @@ class Reference:
             for k, (i, j) in enumerate(zip(*np.divmod(best, len(lags_x)), strict=True)):
                 dy[start + k] = lags_y[i] + _summit(likeness[k, :, j], i)
                 dx[start + k] = lags_x[j] + _summit(likeness[k, i], j)
-        return dy * binning, dx * binning
+        dy, dx = binning * self._directions @ np.stack([dy, dx])
+        return dy, dx
 
     def _likelihood_template(self) -> Single:
         from scipy.ndimage import gaussian_filter
