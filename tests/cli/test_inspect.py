@@ -65,6 +65,18 @@ def test_a_file_without_calibration_is_no_error(tmp_path, capsys):
     assert {"frame_interval_s", "pixel_size_um"} <= set(said["verdict"].replace(".", " ").split())
 
 
+def test_an_unknown_pixel_size_is_a_doubt_only(tmp_path, capsys):
+    rng = np.random.default_rng(1)
+    tifffile.imwrite(tmp_path / "plain.tif", rng.poisson(50, (40, 24, 24)).astype("uint16"))
+    text = "[recording]\nframe_interval_s = 0.01\n[stimuli]\nfirst_s = 0.1\ntrials = 1\n"
+    (tmp_path / "plain.toml").write_text(text, encoding="utf-8")
+    said = report(capsys, tmp_path / "plain.tif", "--protocol", tmp_path / "plain.toml")
+    assert said["trials"] == "1, with 1 pulse each"
+    assert said["drift"].startswith("cannot be followed")
+    assert said["verdict"].startswith("can be analysed\n")
+    assert {"pixel_size_um", "camera_offset"} <= set(said["verdict"].replace(",", " ").split())
+
+
 def test_a_protocol_that_does_not_fit_is_a_verdict(recording, tmp_path, capsys):
     text = (recording / "axon.protocol.toml").read_text(encoding="utf-8").replace("trials = 6", "trials = 60")
     (tmp_path / "long.toml").write_text(text, encoding="utf-8")

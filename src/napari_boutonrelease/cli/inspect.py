@@ -75,9 +75,6 @@ def _resolved(movie: "Movie", protocol: "Protocol | None") -> "tuple[Timing | No
             missing.append("The file does not say its pixel size: set pixel_size_um in the protocol.")
         return None, missing
     try:
-        timing = resolve_timing(movie, protocol)
+        return resolve_timing(movie, protocol), []
     except InputError as error:
         return None, [str(error)]
-    if timing.pixel_size_um is None:
-        return timing, ["The file does not say its pixel size: set pixel_size_um in the protocol."]
-    return timing, []

@@ -120,6 +120,8 @@ def drift_lines(drift: Drift, light: Light) -> list[str]:
 def doubts(light: Light, drift: Drift, timing: Timing) -> list[str]:
     """Sentences on what would make the numbers worse than they need be."""
     found = []
+    if timing.pixel_size_um is None:
+        found.append("The pixel size is unknown: set pixel_size_um in the protocol, else sizes in µm are guessed.")
     if timing.camera_offset is None:
         found.append("The camera offset is unknown: give camera_offset in the protocol, else dF/F is too small.")
     if light.saturated.any():
