@@ -87,21 +87,22 @@ def release_trend(called: ArrayLike) -> tuple[float, float]:
     share = float(np.mean(y)) if y.size else 0.0
     if y.size < 3 or share in (0.0, 1.0):
         return 0.0, 1.0
+    null = float(y.size * (xlogy(share, share) + xlogy(1 - share, 1 - share)))
+    with_call, without = x[y == 1], x[y == 0]
+    if with_call.min() > without.max() or with_call.max() < without.min():
+        return float(np.copysign(np.inf, with_call[0] - without[0])), float(chdtrc(1, -2 * null))
     design = np.column_stack([np.ones_like(x), x])
     beta = np.array([np.log(share / (1 - share)), 0.0])
-    for _ in range(50):
+    for _ in range(100):
         p = expit(design @ beta)
         weight = np.maximum(p * (1 - p), 1e-10)
         step = np.linalg.solve(design.T @ (weight[:, None] * design), design.T @ (y - p))
         beta = beta + np.clip(step, -3.0, 3.0)
-        if np.max(np.abs(step)) < 1e-10 or abs(beta[1]) > 500:
+        if np.max(np.abs(step)) < 1e-10:
             break
     p = expit(design @ beta)
-    ratio = 2 * (
-        np.sum(xlogy(y, p) + xlogy(1 - y, 1 - p)) - y.size * (xlogy(share, share) + xlogy(1 - share, 1 - share))
-    )
-    log_odds = float(beta[1]) if abs(beta[1]) <= 500 else float(np.copysign(np.inf, beta[1]))
-    return log_odds, float(chdtrc(1, max(float(ratio), 0.0)))
+    ratio = 2 * (float(np.sum(xlogy(y, p) + xlogy(1 - y, 1 - p))) - null)
+    return float(beta[1]), float(chdtrc(1, max(ratio, 0.0)))
 
 
 def amplitude_trend(amplitude: ArrayLike) -> tuple[float, float]:
