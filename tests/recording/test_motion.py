@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 
 from napari_boutonrelease.errors import InputError
-from napari_boutonrelease.recording import measure_drift, measure_light, movie_from_array, no_drift
+from napari_boutonrelease.recording import light_at_rest, measure_drift, measure_light, movie_from_array, no_drift
 from napari_boutonrelease.recording.random_walk import smooth_random_walk
 from napari_boutonrelease.recording.registration import Reference
 
@@ -200,6 +200,19 @@ def test_short_tiny_and_dark_recordings_do_not_fail(rng):
         assert drift.dy_px.shape == (len(array),)
         assert np.isfinite(drift.dy_px).all()
         assert not drift.corrected
+
+
+@pytest.mark.parametrize("tremble_px", [0.0, 0.1, 0.3])
+def test_the_gain_of_a_trembling_sample(rng, tremble_px):
+    movie = movie_from_array(record(rng, Axon(rng), slow(600) + rng.normal(0, tremble_px, (600, 2))))
+    light = measure_light(movie, camera_offset=OFFSET, block_frames=200)
+    drift = measure_drift(movie, light=light, max_shift_px=8.0, block_frames=200)
+    at_rest = light_at_rest(movie, light=light, drift=drift)
+    assert at_rest.gain == pytest.approx(GAIN, rel=0.05)
+    assert at_rest.gain_lo < at_rest.gain < at_rest.gain_hi
+    if tremble_px == 0.3:
+        assert light.gain > 1.3 * GAIN  # what it looks like
+    assert light_at_rest(movie, light=light, drift=no_drift(light=light)) is light
 
 
 def test_no_drift_keeps_good_frames(rng):

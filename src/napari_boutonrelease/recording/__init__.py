@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from .light import Light, measure_light
+from .light import Light, light_at_rest, measure_light
 from .motion import Drift, measure_drift, no_drift
 from .movie import Movie, content_digest, movie_from_array, open_movie
 from .protocol import Protocol, read_protocol, write_protocol
@@ -19,6 +19,7 @@ __all__ = [
     "Timing",
     "content_digest",
     "frame_times_s",
+    "light_at_rest",
     "measure_drift",
     "measure_light",
     "movie_from_array",

@@ -7,7 +7,7 @@ alone both halves are alike whatever the light level.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -15,18 +15,21 @@ import numpy as np
 from napari_boutonrelease.errors import InputError
 
 from .bad_frames import LOOK_AHEAD_FRAMES, FrameLevels
+from .cubic_convolution import shift_frame_block
 
 if TYPE_CHECKING:
     from collections.abc import Callable
 
     from numpy.typing import ArrayLike, NDArray
 
+    from .motion import Drift
     from .movie import Movie
 
     FloatArray = NDArray[np.float64]
 
-__all__ = ["Light", "measure_light"]
+__all__ = ["Light", "light_at_rest", "measure_light"]
 
+_MOST_PAIRS, _PAIR_PIXELS = 400, 50_000_000  # pairs of frames, and their pixels, that the noise at rest is taken from
 _STRETCHES = 15  # stretches of the recording whose median noise counts, so that one jump of the sample does not
 
 
@@ -178,6 +181,53 @@ def measure_light(
         typical_variance=float(np.median(variance)) if variance.size else float("nan"),
         least_variance=max(0.5 * float(np.percentile(variance, 1)), step) if variance.size else step,
     )
+
+
+def light_at_rest(movie: Movie, *, light: Light, drift: Drift) -> Light:
+    """Measure the noise again with the movement taken out: a sample that trembles looks noisier than its light is.
+
+    The change that the movement between two successive frames makes in the reference is taken from their difference,
+    as strongly as the difference shows it; what is left gives the photon-transfer line as in `measure_light`.
+
+    Parameters
+    ----------
+    movie : Movie
+        The recording.
+    light : Light
+        As measured without regard to movement.
+    drift : Drift
+        Its movement.
+
+    Returns
+    -------
+    Light
+        With gain, interval and read variance replaced; `light` itself where nothing moved or the line is not told.
+    """
+    firsts = np.flatnonzero(drift.used[:-1] & drift.used[1:])
+    n_pairs = min(len(firsts), _MOST_PAIRS, max(_PAIR_PIXELS // drift.reference.size, 20))
+    inside = ~(light.saturated | light.dead)
+    for axis, shift in enumerate((drift.dy_px, drift.dx_px)):
+        margin = int(np.ceil(np.abs(shift[drift.used]).max())) + 2 if drift.used.any() else 0
+        at = np.arange(inside.shape[axis])
+        inside &= np.expand_dims((at >= margin) & (at < inside.shape[axis] - margin), 1 - axis)
+    if not drift.corrected or not n_pairs or not inside.any():
+        return light
+    mean, falling = np.zeros(int(inside.sum())), np.zeros(int(inside.sum()))
+    for k in firsts[np.linspace(0, len(firsts) - 1, n_pairs).round().astype(int)]:
+        pair = slice(k, k + 2)
+        frames = np.asarray(movie.read(pair.start, pair.stop)[:, inside], dtype=np.float64)
+        still = np.broadcast_to(drift.reference, (2, *drift.reference.shape))
+        moved = shift_frame_block(still, dy=-drift.dy_px[pair], dx=-drift.dx_px[pair])[:, inside]
+        change, expected = frames[1] - frames[0], (moved[1] - moved[0]).astype(np.float64)
+        power = float(expected @ expected)
+        change -= expected * (float(change @ expected) / power if power > 0 else 0.0)
+        mean += frames.mean(axis=0) / n_pairs
+        falling += np.minimum(change, 0.0) ** 2 * ((1.0 + 1.1 / n_pairs) / n_pairs)
+    gain, gain_se, read_variance = photon_transfer_line(mean, falling, n_frames=2 * n_pairs)
+    if not np.isfinite(gain):
+        return light
+    half_width = 1.96 * gain_se
+    return replace(light, gain=gain, gain_lo=gain - half_width, gain_hi=gain + half_width, read_variance=read_variance)
 
 
 def photon_transfer_line(mean: FloatArray, variance: FloatArray, *, n_frames: int) -> tuple[float, float, float]:
