@@ -6,7 +6,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from .evidence import MatchedMaps, box_half_px, matched_filter, mixture_evidence, release_posterior
+from .evidence import MatchedMaps, box_half_px, clearly_more, matched_filter, mixture_evidence, release_posterior
 from .spots import PROFILE_REACH_SIGMA, Patch, fit_spot, gaussian_patch, read_maps, separated_weights, window
 
 if TYPE_CHECKING:
@@ -72,7 +72,9 @@ class SpotModel:
         for index in range(len(values)):
             z = self.standardised[index]
             distance = np.hypot(self.y_px - self.y_px[index], self.x_px - self.x_px[index])
-            for other in np.nonzero((distance > 0) & (distance < (_WINDOW_SIGMAS + PROFILE_REACH_SIGMA) * self.spot_sigma_px))[0]:
+            for other in np.nonzero(
+                (distance > 0) & (distance < (_WINDOW_SIGMAS + PROFILE_REACH_SIGMA) * self.spot_sigma_px)
+            )[0]:
                 if np.mean(self.standardised[other]) > np.mean(z):
                     z = _without_copy(z[:, None], self.heights[other])[:, 0]
             values[index] = mixture_evidence(z[:, None].astype(np.float32)).item()
@@ -114,13 +116,14 @@ class SpotModel:
         weights = [Patch(y0=w.y0, x0=w.x0, values=np.nan_to_num(w.values)) for w in weights]
         self.heights = read_maps(self._evoked, weights) / self._evoked_factor
         null = read_maps(self._null, weights) / self._null_factor
-        photon_sd = [
-            np.sqrt(np.sum(w.values**2 / np.maximum(self._inverse_variance[w.slices], 1e-30), where=w.values != 0))
+        variance = [
+            np.sum(w.values**2 / np.maximum(self._inverse_variance[w.slices], 1e-30), where=w.values != 0)
             for w in weights
         ]
+        photon_sd = np.sqrt(np.asarray(variance))
         measured_sd = 1.482602 * np.median(np.abs(null), axis=1)
-        # Fewer than a hundred null maps say less about the noise of one place than the pixels' variances do.
-        sd = np.maximum(np.asarray(photon_sd), measured_sd * (1 - 1.2 / np.sqrt(null.shape[1])))
+        moving = measured_sd**2 > clearly_more(null.shape[1]) * photon_sd**2
+        sd = np.where(moving, measured_sd, photon_sd)
         sd = np.where(sd > 0, sd, np.inf)[:, None]
         self.standardised, self.null_standardised = self.heights / sd, null / sd
 
@@ -150,6 +153,10 @@ class SpotModel:
                 sigma=self.spot_sigma_px,
                 free_sigma=False,
             )
+            if self._inverse_variance[round(y_new) + y0, round(x_new) + x0] == 0:
+                y_new, x_new = y - y0, x - x0  # nothing can be said of a place that no frame shows
+            if not self._usable(y_new + y0, x_new + x0):
+                y_new, x_new = y - y0, x - x0  # nothing can be said of a place that not every frame shows
             free_sigma = self.spot_sigma_px
             if strength[index] > 20 and self._isolated(index):
                 _, _, free_sigma, height = fit_spot(
@@ -167,6 +174,11 @@ class SpotModel:
         if len(clear) >= 3:
             measured = float(np.median(fitted[clear, 2]))
             self.spot_sigma_px = float(np.clip(measured, 0.6 * self._filter_sigma, 1.7 * self._filter_sigma))
+
+    def _usable(self, y: float, x: float) -> bool:
+        row, column = round(y), round(x)
+        inside = 0 <= row < self._shape[0] and 0 <= column < self._shape[1]
+        return inside and bool(self._inverse_variance[row, column] > 0)
 
     def _isolated(self, index: int) -> bool:
         distance = np.hypot(self.y_px - self.y_px[index], self.x_px - self.x_px[index])

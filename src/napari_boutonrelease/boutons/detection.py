@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from .deflation import SpotModel
-from .evidence import mixture_evidence, standardise
+from .evidence import MAX_NATS_PER_TRIAL, mixture_evidence, standardise
 from .false_discovery import FalseRate, local_maxima, measure_false_rate
 from .shape_candidates import ShapeCandidates, find_shape_candidates
 
@@ -20,6 +20,7 @@ if TYPE_CHECKING:
 
 _FIRST_SHARE = 0.1  # of false_discovery: how unlikely the first bouton must be where nothing may release at all
 _MARGIN = 0.3  # the share of false ones is promised for a recording, and scatters about its expectation
+_NULL_CHANCE = 4.0  # nats that noise reaches at one of many places
 _MAX_ROUNDS = 12
 _CLOSEST = 0.75  # of the spacing: nearer than that two fitted places are one bouton
 _SHAPE_POSITION_ERROR = 0.25  # of the spot's sigma: the shaft and unequal neighbours pull a maximum of the mean image
@@ -101,9 +102,10 @@ def detect_boutons(
 
     Strong boutons are found first, fitted together trial by trial and taken out of the maps; then what they hid is
     looked for (Högbom 1974), until nothing exceeds the cut. The cut keeps the expected number of false ones, measured
-    on noise maps, below a third of `false_discovery` times the number found, so that most recordings stay below the whole;
+    on noise maps, below 0.3 of `false_discovery` times the number found, so that most recordings stay below the whole;
     the very first one must be less likely to be false than a tenth of `false_discovery`, so that a recording without
-    release stays empty.
+    release stays empty. Where the mean image shows a spot, less evidence is needed than elsewhere (Genovese, Roeder &
+    Wasserman 2006). A place must show more than what it does without a stimulus.
 
     Parameters
     ----------
@@ -205,7 +207,7 @@ def _find_releasing(
     """Fill `model` with releasing spots; returns their evidence."""
     score = np.empty(0)
     residual = evidence
-    refused: list[tuple[float, float]] = []
+    refused: list[tuple[float, float, float]] = []
     for _ in range(_MAX_ROUNDS):
         excess = residual / cuts.map(_allowed(len(score), false_discovery))
         # Only the highest of each neighbourhood: its own flanks must be gone before the next one is believed.
@@ -214,29 +216,37 @@ def _find_releasing(
             (float(a), float(b))
             for a, b in zip(y, x, strict=True)
             if _distance(model, a, b) >= _CLOSEST * spacing_px
-            and all(np.hypot(a - c, b - d) >= _CLOSEST * spacing_px for c, d in refused)
+            and all(np.hypot(a - c, b - d) >= radius for c, d, radius in refused)
         ]
         if not new:
             break
         before = len(model.y_px)
         model.set_places(np.append(model.y_px, [a for a, _ in new]), np.append(model.x_px, [b for _, b in new]))
-        score = _scores(model, null_is_silent=null_is_silent)
+        by_itself = _by_itself(model) if null_is_silent else np.zeros(len(model.y_px))
+        score = np.maximum(model.evidence() - by_itself, 0.0)
         keep = _keep(model, score, cuts=cuts, expected=_allowed(len(score), false_discovery), spacing_px=spacing_px)
-        refused += [place for place, kept in zip(new, keep[before:], strict=True) if not kept]
+        # The flanks of a place that is active by itself are so, too.
+        refused += [
+            (*place, (2.5 if active else _CLOSEST) * spacing_px)
+            for place, kept, active in zip(new, keep[before:], by_itself[before:] > 0, strict=True)
+            if not kept
+        ]
         if not np.all(keep):
             model.set_places(model.y_px[keep], model.x_px[keep])
-            score = _scores(model, null_is_silent=null_is_silent)
+            score = score[keep]
         residual = model.residual_evidence(evidence, reach_px=3 * spacing_px)
     return score
 
 
-def _scores(model: SpotModel, *, null_is_silent: bool) -> NDArray[np.float64]:
-    """Evidence of each spot, less what the same place shows without a stimulus."""
-    score = model.evidence()
-    if null_is_silent:
-        ratio = model.standardised.shape[1] / model.null_standardised.shape[1]
-        score = score - np.maximum(model.null_evidence() - 4.0, 0.0) * ratio
-    return np.maximum(score, 0.0)
+def _by_itself(model: SpotModel) -> NDArray[np.float64]:
+    """Return the evidence that each place would show without any stimulus, with three SD of its chance on top.
+
+    Spontaneous releases and whatever flickers or wobbles are as frequent at the pseudo-stimuli. A release counts up to
+    `MAX_NATS_PER_TRIAL`, and numbers of releases scatter as Poisson numbers do, here and there.
+    """
+    ratio = model.standardised.shape[1] / model.null_standardised.shape[1]
+    expected = ratio * np.maximum(model.null_evidence() - _NULL_CHANCE, 0.0)
+    return np.asarray(expected + 3 * np.sqrt(2 * MAX_NATS_PER_TRIAL * expected))
 
 
 def _keep(

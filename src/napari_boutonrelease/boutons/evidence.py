@@ -228,10 +228,16 @@ def _filtered_variance(
         weight = gaussian_filter(usable.astype(np.float64), sigma_px)
         return np.asarray(gaussian_filter(measured, sigma_px) / np.maximum(weight, 1e-9))
 
-    wide, local = pooled(_POOL_SIGMAS * spot_sigma_px), pooled(spot_sigma_px)
-    # A MAD-based variance has a relative error of 2.33 / sqrt(n), which neighbouring pixels of a filtered map share.
-    clear = 1.0 + 2.5 * 2.33 / np.sqrt(2.0 * len(z_null))
-    return np.where(local > clear * wide, local, wide)
+    wide, local = pooled(_POOL_SIGMAS * spot_sigma_px), pooled(0.5 * spot_sigma_px)
+    return np.where(local > clearly_more(len(z_null)) * wide, local, wide)
+
+
+def clearly_more(n_null: int) -> float:
+    """Return the ratio above which a MAD-based variance from `n_null` values is larger than expected by 2.5 SD.
+
+    The relative SD of such a variance is 2.33 / sqrt(n).
+    """
+    return 1.0 + 2.5 * 2.33 / float(np.sqrt(n_null))
 
 
 def mixture_evidence(z: NDArray[np.float32]) -> NDArray[np.float32]:
