@@ -1,5 +1,7 @@
 """What detection promises, on stacks of maps with known releases."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
@@ -135,6 +137,23 @@ def test_strong_boutons_wider_than_assumed_have_no_ghosts(axon, find):
         assert np.all(apart.min(axis=0) < 0.5)
         assert np.sum(apart.min(axis=1) >= 2) <= 1
         assert detection.spot_sigma_px == pytest.approx(sigma, rel=0.06)
+
+
+def test_without_stimulus_free_time_differences_of_trials_serve(axon, find):
+    n_found = n_there = n_false = 0
+    for seed in range(3):
+        rng = np.random.default_rng(400 + seed)
+        scene = axon(rng, p=(0.2, 0.95), q_sd=(4.0, 8.0))
+        stack = scene.stack(rng)
+        null = (stack.evoked[1:] - stack.evoked[:-1]) / np.float32(np.sqrt(2))
+        stack = replace(stack, null=null, null_factor=stack.null_factor[1:], null_from="differences")
+        y, x = by_responses(find(stack, seed=seed))
+        apart = distances(y, x, scene.y, scene.x)
+        n_found += int(np.sum(apart.min(axis=0) < 1.5))
+        n_there += scene.y.size
+        n_false += int(np.sum(apart.min(axis=1) >= 1.5))
+    assert n_found == n_there
+    assert n_false <= 2
 
 
 def test_static_structures_that_wobble_do_not_release(axon, find):

@@ -81,6 +81,7 @@ def test_noise_is_one_in_bright_and_dark_places(axon):
         evoked_factor=stack.evoked_factor,
         null_factor=stack.null_factor,
         mean_image=stack.mean_image,
+        null_is_silent=True,
         spot_sigma_px=SIGMA_PX,
         exclude=excluded,
     )
@@ -104,6 +105,7 @@ def test_a_flickering_place_is_judged_by_its_own_noise(axon):
         evoked_factor=stack.evoked_factor,
         null_factor=stack.null_factor,
         mean_image=stack.mean_image,
+        null_is_silent=True,
         spot_sigma_px=SIGMA_PX,
         exclude=np.zeros(scene.shape, dtype=bool),
     )

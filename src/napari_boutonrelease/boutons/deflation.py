@@ -6,7 +6,15 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from .evidence import MatchedMaps, box_half_px, clearly_more, matched_filter, mixture_evidence, release_posterior
+from .evidence import (
+    MatchedMaps,
+    box_half_px,
+    clearly_more,
+    local_variance,
+    matched_filter,
+    mixture_evidence,
+    release_posterior,
+)
 from .spots import PROFILE_REACH_SIGMA, Patch, fit_spot, gaussian_patch, read_maps, separated_weights, window
 
 if TYPE_CHECKING:
@@ -28,6 +36,8 @@ class SpotModel:
         SD of each map in units of the SD of one frame's pixel.
     matched : MatchedMaps
         The same through the matched filter; `matched.evoked` is changed in place.
+    null_is_silent : bool
+        False where the null maps hold releases.
     spot_sigma_px : float
         Gaussian sigma of a bouton's image (px); replaced by a measured one when the spots allow it.
     """
@@ -40,10 +50,12 @@ class SpotModel:
         evoked_factor: NDArray[np.float64],
         null_factor: NDArray[np.float64],
         matched: MatchedMaps,
+        null_is_silent: bool,
         spot_sigma_px: float,
     ) -> None:
         self._evoked, self._null, self._matched = evoked, null, matched
         self._evoked_factor, self._null_factor = evoked_factor, null_factor
+        self._null_is_silent = null_is_silent
         self._shape = (evoked.shape[1], evoked.shape[2])
         finite = np.isfinite(matched.pixel_variance)
         self._inverse_variance = np.where(finite, 1.0 / matched.pixel_variance, 0.0)
@@ -121,9 +133,9 @@ class SpotModel:
             for w in weights
         ]
         photon_sd = np.sqrt(np.asarray(variance))
-        measured_sd = 1.482602 * np.median(np.abs(null), axis=1)
-        moving = measured_sd**2 > clearly_more(null.shape[1]) * photon_sd**2
-        sd = np.where(moving, measured_sd, photon_sd)
+        measured = local_variance(null.T, self.heights.T, null_is_silent=self._null_is_silent)
+        moving = measured > clearly_more(null.shape[1]) * photon_sd**2
+        sd = np.where(moving, np.sqrt(measured), photon_sd)
         sd = np.where(sd > 0, sd, np.inf)[:, None]
         self.standardised, self.null_standardised = self.heights / sd, null / sd
 

@@ -132,12 +132,14 @@ def detect_boutons(
     """
     advance = progress or _silently
     steps = 4
+    null_is_silent = stack.null_from == "gaps"
     matched = standardise(
         evoked=stack.evoked,
         null=stack.null,
         evoked_factor=stack.evoked_factor,
         null_factor=stack.null_factor,
         mean_image=stack.mean_image,
+        null_is_silent=null_is_silent,
         spot_sigma_px=spot_sigma_px,
         exclude=exclude,
     )
@@ -159,6 +161,7 @@ def detect_boutons(
         evoked_factor=stack.evoked_factor,
         null_factor=stack.null_factor,
         matched=matched,
+        null_is_silent=null_is_silent,
         spot_sigma_px=spot_sigma_px,
     )
     score = _find_releasing(
@@ -167,7 +170,7 @@ def detect_boutons(
         cuts=cuts,
         spacing_px=spacing_px,
         false_discovery=false_discovery,
-        null_is_silent=stack.null_from == "gaps",
+        null_is_silent=null_is_silent,
     )
     advance(3, steps)
     allowed = _allowed(len(score), false_discovery)

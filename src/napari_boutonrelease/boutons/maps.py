@@ -277,7 +277,7 @@ def _accumulate(
             if len(weights) == 1:
                 target += np.tensordot(weights[0], part, axes=1)
             else:
-                target += np.einsum("yjf,fyx->jyx", weights, part)
+                target += np.matmul(weights, part.transpose(1, 0, 2)).transpose(1, 0, 2)
         if progress is not None:
             progress(done + 1, len(starts))
     return maps, total / max(int(wanted.sum()), 1)
