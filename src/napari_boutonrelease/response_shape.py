@@ -69,8 +69,8 @@ class ResponseShape:
 
     def end_s(self, *, remaining: float = 1e-3) -> float:
         """Time after the stimulus at which the response has fallen to about `remaining` of its peak, in s."""
-        slow = self.slow_decay_s * np.log(self.slow_fraction / remaining) if self.slow_fraction > remaining else 0.0
-        return self.latency_s + max(-self.decay_s * np.log(remaining), slow) + self.rise_s
+        slow = self.slow_decay_s * math.log(self.slow_fraction / remaining) if self.slow_fraction > remaining else 0.0
+        return self.latency_s + max(-self.decay_s * math.log(remaining), slow) + self.rise_s
 
     def value(self, since_stimulus_s: ArrayLike) -> NDArray[np.float64]:
         """Height at instants after the stimulus (any shape, in s); 0 before the start, 1 at the peak."""
@@ -106,4 +106,4 @@ class ResponseShape:
         start = np.maximum(begin, 0.0)[..., None]
         stop = np.maximum(begin + exposure_s, 0.0)[..., None]
         area = np.sum(weights / rates * (np.exp(-rates * start) - np.exp(-rates * stop)), axis=-1)
-        return area / (exposure_s * self.peak()[1])
+        return np.asarray(area / (exposure_s * self.peak()[1]))

@@ -1,1 +1,1 @@
-
+"""One movie's choices, run, results and saved analysis."""

@@ -14,7 +14,9 @@ class _Step(BaseModel):
 class RecordingSettings(_Step):
     """Reading the movie, movement and light."""
 
-    channel: Annotated[int | None, Field(ge=0, description="channel to analyse, from 0, where the movie has several")] = None
+    channel: Annotated[
+        int | None, Field(ge=0, description="channel to analyse, from 0, where the movie has several")
+    ] = None
     correct_motion: Annotated[bool, Field(description="follow the sample's movement")] = True
     max_shift_px: Annotated[float, Field(gt=0, description="largest movement expected, px")] = 12.0
 
@@ -28,18 +30,31 @@ class DetectionSettings(_Step):
         float, Field(gt=0, lt=1, description="expected share of false ones among boutons found by their responses")
     ] = 0.05
     shape_candidates: Annotated[bool, Field(description="also take spots of the mean image, silent or not")] = True
+    footprint: Annotated[
+        Literal["weighted", "disc"],
+        Field(description="weighted: by photon noise, most precise; disc: plain disc of half-maximum diameter"),
+    ] = "weighted"
 
 
 class ResponseSettings(_Step):
     """Traces and amplitudes."""
 
-    background_um: Annotated[float, Field(gt=0, description="radius within which the local background is fitted, µm")] = 2.5
-    baseline_s: Annotated[float | None, Field(gt=0, description="time before the first pulse that a trial's fit uses, s")] = None
+    background_um: Annotated[
+        float, Field(gt=0, description="radius within which the local background is fitted, µm")
+    ] = 2.5
+    baseline_s: Annotated[
+        float | None, Field(gt=0, description="time before the first pulse that a trial's fit uses, s")
+    ] = None
     slope: Annotated[bool, Field(description="let the baseline of each trial slope")] = False
     baseline: Annotated[
         Literal["bleaching", "trial", "percentile"],
         Field(description="F0: smooth bleaching curve, mean before each trial, or running percentile"),
     ] = "bleaching"
+    percentile: Annotated[float, Field(gt=0, lt=100, description="which percentile, where F0 is a running one")] = 20.0
+    percentile_s: Annotated[float, Field(gt=0, description="length of the running percentile, s")] = 20.0
+    false_spontaneous: Annotated[
+        float, Field(gt=0, description="spontaneous releases a bouton that noise may feign in one recording")
+    ] = 0.1
 
 
 class CallSettings(_Step):
@@ -57,7 +72,10 @@ class QuantalSettings(_Step):
 
     n_max: Annotated[int, Field(ge=1, le=30, description="largest number of release sites tried")] = 8
     q_cv: Annotated[float, Field(gt=0, lt=1.5, description="expected variation of one vesicle's size (CV)")] = 0.3
-    bootstrap: Annotated[int, Field(ge=0, description="simulated repeats for the goodness of fit; 0 leaves it out")] = 200
+    q_cv_doubt: Annotated[float, Field(gt=0, lt=2, description="how loosely that is held: SD of its logarithm")] = 0.15
+    bootstrap: Annotated[int, Field(ge=0, description="simulated repeats for the goodness of fit; 0 leaves it out")] = (
+        200
+    )
 
 
 class PairSettings(_Step):

@@ -179,7 +179,7 @@ def fit_axon_release(
     a = np.where((sd > 0) & np.isfinite(sd), a, np.nan)
 
     grid = _make_grid(a, sd, n_max=n_max)
-    n_boutons, n_trials, n_pulses = a.shape
+    n_boutons, _, n_pulses = a.shape
     scales = [_noise_scales(count) for count in nulls]
     shape = (len(scales[0][0]), len(grid.q), len(grid.q_cv), n_max, len(grid.p_release))
     likelihood = np.zeros((n_boutons, n_pulses, *shape), dtype=np.float32)
@@ -351,7 +351,7 @@ class _Axon:
 def _prior_of_n(n_max: int) -> Floats:
     """Prior of n_sites, falling as 1/n: no number of sites is a preferred scale."""
     weights = 1.0 / np.arange(1, n_max + 1)
-    return weights / weights.sum()
+    return np.asarray(weights / weights.sum())
 
 
 def _silent_log_likelihood(a: Floats, sd: Floats, scale: float) -> float:
@@ -408,7 +408,7 @@ def _own_share(q_posterior: Floats, axon: _Axon, grid: _Grid) -> Floats:
     log_q = np.log(grid.q)
     mean = q_posterior @ log_q
     variance = np.sum(q_posterior * (log_q - mean[:, None]) ** 2, axis=1)
-    return np.clip(1.0 - variance / axon.prior_variance, 0.0, 1.0)
+    return np.asarray(np.clip(1.0 - variance / axon.prior_variance, 0.0, 1.0))
 
 
 def _evidence(full: Floats, likelihood: NDArray[np.float32], posterior: Floats) -> float:
@@ -433,7 +433,7 @@ def _posterior_release(a: Floats, sd: Floats, scales: Floats, full: Floats, grid
             silent += flat[k, i] @ (none / mixture)
             kept += flat[k, i].sum()
     result[used] = 1.0 - silent / kept
-    return np.clip(result, 0.0, 1.0)
+    return np.asarray(np.clip(result, 0.0, 1.0))
 
 
 def _quantiles_of_p(mass: Floats, silent: float) -> tuple[float, float, float]:

@@ -5,7 +5,7 @@ from __future__ import annotations
 from .light import Light, light_at_rest, measure_light
 from .motion import Drift, measure_drift, no_drift
 from .movie import Movie, content_digest, movie_from_array, open_movie
-from .protocol import Protocol, read_protocol, write_protocol
+from .protocol import Protocol, protocol_from_dict, protocol_to_dict, read_protocol, write_protocol
 from .stimuli import RegularStimuli, StimulusTable, read_stimulus_table
 from .timing import Timing, frame_times_s, resolve_timing, segment_frames, stimulus_frame
 
@@ -25,6 +25,8 @@ __all__ = [
     "movie_from_array",
     "no_drift",
     "open_movie",
+    "protocol_from_dict",
+    "protocol_to_dict",
     "read_protocol",
     "read_stimulus_table",
     "resolve_timing",

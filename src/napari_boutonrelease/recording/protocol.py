@@ -7,18 +7,30 @@ import json
 import math
 import os
 import tomllib
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
+
+import numpy as np
 
 from ..errors import InputError, OutputError, ProtocolError
 from ..response_shape import ResponseShape
 from .stimuli import RegularStimuli, StimulusTable, check_value, read_stimulus_table, stimulus_table_text
 
-__all__ = ["Protocol", "RegularStimuli", "StimulusTable", "check_exposure", "read_protocol", "write_protocol"]
+__all__ = [
+    "Protocol",
+    "RegularStimuli",
+    "StimulusTable",
+    "check_exposure",
+    "protocol_from_dict",
+    "protocol_to_dict",
+    "read_protocol",
+    "write_protocol",
+]
 
 _RECORDING = ("frame_interval_s", "exposure_s", "row_time_s", "pixel_size_um", "camera_offset")
 _REGULAR = ("first_s", "trials", "trial_interval_s", "pulses", "pulse_interval_s")
+_TABLE = ("trial", "pulse", "time_s")
 _REPORTER = ("rise_s", "decay_s", "latency_s", "slow_fraction", "slow_decay_s")
 _SECTIONS = {"recording": _RECORDING, "stimuli": (*_REGULAR, "times"), "reporter": _REPORTER}
 _COUNTS = frozenset({"trials", "pulses"})
@@ -123,24 +135,69 @@ def write_protocol(protocol: Protocol, path: str | Path) -> None:
         If the file cannot be written.
     """
     path = Path(path)
-    stimuli: dict[str, Any]
     if isinstance(protocol.stimuli, StimulusTable):
         table_name = path.stem.removesuffix(".protocol") + ".pulses.csv"
         _write_whole(path.with_name(table_name), stimulus_table_text(protocol.stimuli))
-        stimuli = {"times": table_name}
+        sections = _sections(protocol, stimuli={"times": table_name})
     else:
-        stimuli = {key: getattr(protocol.stimuli, key) for key in _REGULAR}
+        sections = _sections(protocol, stimuli={key: getattr(protocol.stimuli, key) for key in _REGULAR})
+    text = "\n".join(
+        "\n".join([f"[{title}]", *(f"{key} = {_toml_value(key, value)}" for key, value in stated.items()), ""])
+        for title, stated in sections.items()
+        if stated
+    )
+    _write_whole(path, text)
+
+
+def protocol_to_dict(protocol: Protocol) -> dict[str, Any]:
+    """Return the protocol as JSON-ready sections; `protocol_from_dict` gives it back. A table is written out in full."""
+    if isinstance(protocol.stimuli, StimulusTable):
+        table = {key: getattr(protocol.stimuli, key).tolist() for key in _TABLE}
+        return _sections(protocol, stimuli=table)
+    return _sections(protocol, stimuli={key: getattr(protocol.stimuli, key) for key in _REGULAR})
+
+
+def protocol_from_dict(sections: dict[str, Any], *, source: Path) -> Protocol:
+    """Rebuild a protocol from `protocol_to_dict`.
+
+    Parameters
+    ----------
+    sections : dict
+        As from `protocol_to_dict`.
+    source : Path
+        The file they were read from; relative names count from its folder.
+
+    Returns
+    -------
+    Protocol
+
+    Raises
+    ------
+    ProtocolError
+        If a key is unknown, missing or wrong.
+    """
+    stimuli = sections.get("stimuli", {})
+    if "time_s" not in stimuli:
+        return _build(sections, source)
+    table = StimulusTable(
+        trial=np.asarray(stimuli["trial"], dtype=np.int64),
+        pulse=np.asarray(stimuli["pulse"], dtype=np.int64),
+        time_s=np.asarray(stimuli["time_s"], dtype=np.float64),
+        source=str(source),
+    )
+    return replace(_build({**sections, "stimuli": {"first_s": 0.0, "trials": 1}}, source), stimuli=table)
+
+
+def _sections(protocol: Protocol, *, stimuli: dict[str, Any]) -> dict[str, dict[str, Any]]:
     sections = {
         "recording": {key: getattr(protocol, key) for key in _RECORDING},
         "stimuli": stimuli,
         "reporter": {key: getattr(protocol.reporter, key) for key in _REPORTER if protocol.reporter},
     }
-    text = "\n".join(
-        "\n".join([f"[{title}]", *(f"{key} = {_toml_value(key, value)}" for key, value in stated.items()), ""])
-        for title, values in sections.items()
-        if (stated := {key: value for key, value in values.items() if value is not None})
-    )
-    _write_whole(path, text)
+    stated = {
+        title: {key: value for key, value in values.items() if value is not None} for title, values in sections.items()
+    }
+    return {title: values for title, values in stated.items() if values}
 
 
 def _build(document: dict[str, Any], path: Path) -> Protocol:

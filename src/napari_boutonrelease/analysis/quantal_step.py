@@ -1,0 +1,199 @@
+"""From amplitudes to release: calls, the axon's quantal model, each bouton's own fit, pulse pairs."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from napari_boutonrelease.quanta import (
+    Estimate,
+    LogPrior,
+    PulsePair,
+    ReleaseHistory,
+    ReleasePriors,
+    SitesFit,
+    balanced_threshold,
+    benjamini_hochberg,
+    fit_sites,
+    measure_history,
+    measure_pulse_pair,
+    rogan_gladen,
+)
+from napari_boutonrelease.quanta.pooled import AxonRelease, fit_axon_release
+from napari_boutonrelease.responses import AmplitudeFit, ReleaseCalls, call_releases
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+    from .progress import Progress
+    from .settings import Settings
+
+CONFIDENCE = 0.95
+_TELLING = 1.1  # sensitivity and specificity must add up to this, or the correction blows up
+_VERDICT_SHARE = 0.05  # false verdicts tolerated among the boutons said to facilitate or depress
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Quanta:
+    """Release of every bouton.
+
+    Attributes
+    ----------
+    calls : ReleaseCalls
+        Responses above threshold.
+    axon : AxonRelease
+        Release and quanta of all boutons together.
+    own : tuple of SitesFit
+        Each bouton fitted alone, from pulse 1.
+    corrected : tuple of Estimate
+        Called fraction of pulse 1 freed of false calls and misses (Rogan & Gladen 1978).
+    pairs : tuple of PulsePair or None
+        Pulse 2 against pulse 1; None without a second pulse.
+    verdicts : tuple of str
+        `facilitation`, `depression`, `unresolved`, or empty; corrected for the number of boutons.
+    histories : tuple of ReleaseHistory or None
+        Calls of pulse 2 after a call, and after a failure, of pulse 1.
+    """
+
+    calls: ReleaseCalls
+    axon: AxonRelease
+    own: tuple[SitesFit, ...]
+    corrected: tuple[Estimate, ...]
+    pairs: tuple[PulsePair | None, ...]
+    verdicts: tuple[str, ...]
+    histories: tuple[ReleaseHistory | None, ...]
+
+
+def measure_quanta(
+    fit: AmplitudeFit, *, settings: Settings, rng: np.random.Generator, progress: Progress | None
+) -> Quanta:
+    """Estimate release and quanta of every bouton from its amplitudes."""
+    amplitude, noise = fit.amplitude, fit.amplitude_se
+    n_boutons, _, n_pulses = amplitude.shape
+    axon = fit_axon_release(
+        amplitude,
+        noise,
+        n_null=np.isfinite(fit.null_amplitude).sum(axis=1),
+        n_max=settings.quanta.n_max,
+        q_cv=settings.quanta.q_cv,
+        q_cv_doubt=settings.quanta.q_cv_doubt,
+        progress=None,
+    )
+    threshold_sd = np.full(n_boutons, settings.calls.threshold_sd)
+    if settings.calls.threshold_rule == "balanced":
+        threshold_sd = np.array([_balanced(axon, b, fit.noise_sd[b], settings) for b in range(n_boutons)])
+    calls = call_releases(amplitude, amplitude_se=noise, noise_sd=fit.noise_sd, threshold_sd=threshold_sd)
+
+    own, corrected, pairs, histories = [], [], [], []
+    priors = ReleasePriors(
+        q=None, q_cv=LogPrior(centre=settings.quanta.q_cv, log_sd=settings.quanta.q_cv_doubt), noise=None
+    )
+    for b in range(n_boutons):
+        with np.errstate(invalid="ignore", divide="ignore"):
+            relative = noise[b, :, 0] / fit.noise_sd[b]
+        own.append(
+            fit_sites(
+                amplitude[b, :, 0],
+                fit.null_amplitude[b],
+                relative_noise=np.where(np.isfinite(relative), relative, 1.0),
+                n_max=settings.quanta.n_max,
+                priors=priors if fit.null_amplitude[b].size else _with_noise(priors, fit.noise_sd[b]),
+                confidence=CONFIDENCE,
+                n_bootstrap=settings.quanta.bootstrap,
+                rng=rng,
+            )
+        )
+        corrected.append(_corrected(axon, calls, b, fit.noise_sd[b]))
+        second = n_pulses > 1 and np.isfinite(fit.noise_sd[b])
+        pairs.append(
+            measure_pulse_pair(
+                amplitude[b, :, 0],
+                amplitude[b, :, 1],
+                noise_sd=fit.noise_sd[b],
+                confidence=CONFIDENCE,
+                n_bootstrap=settings.pairs.bootstrap,
+                rng=rng,
+            )
+            if second
+            else None
+        )
+        histories.append(
+            measure_history(calls.called[b, :, 0], calls.called[b, :, 1], confidence=CONFIDENCE) if second else None
+        )
+        if progress is not None:
+            progress(b + 1, n_boutons)
+    return Quanta(
+        calls=calls,
+        axon=axon,
+        own=tuple(own),
+        corrected=tuple(corrected),
+        pairs=tuple(pairs),
+        verdicts=_verdicts(pairs),
+        histories=tuple(histories),
+    )
+
+
+def vesicle_weights(axon: AxonRelease, bouton: int, *, pulse: int) -> NDArray[np.float64]:
+    """Probability of 0, 1, ... vesicles at one pulse, at the bouton's most probable number of sites."""
+    n = int(axon.n_sites[bouton])
+    p = float(axon.p_site[bouton, pulse])
+    m = np.arange(n + 1)
+    choose = np.cumprod(np.concatenate([[1.0], (n - m[:-1]) / (m[:-1] + 1.0)]))
+    return np.asarray(choose * p**m * (1.0 - p) ** (n - m))
+
+
+def _balanced(axon: AxonRelease, bouton: int, noise_sd: float, settings: Settings) -> float:
+    if not np.isfinite(axon.p_site[bouton, 0]) or not noise_sd > 0:
+        return settings.calls.threshold_sd
+    weights = vesicle_weights(axon, bouton, pulse=0)
+    return balanced_threshold(weights, q=axon.q[bouton], q_cv=axon.q_cv, noise_sd=noise_sd) / noise_sd
+
+
+def _with_noise(priors: ReleasePriors, noise_sd: float) -> ReleasePriors:
+    """Stand in for null amplitudes that the protocol leaves no room for."""
+    if not (np.isfinite(noise_sd) and noise_sd > 0):
+        return priors
+    return ReleasePriors(q=priors.q, q_cv=priors.q_cv, noise=LogPrior(centre=noise_sd, log_sd=0.1))
+
+
+def _corrected(axon: AxonRelease, calls: ReleaseCalls, bouton: int, noise_sd: float) -> Estimate:
+    from scipy.special import ndtr
+
+    n_trials = int(calls.n_trials[bouton, 0])
+    if n_trials == 0 or not np.isfinite(axon.p_site[bouton, 0]):
+        return Estimate(value=np.nan, lo=np.nan, hi=np.nan, method="none: no trial")
+    weights = vesicle_weights(axon, bouton, pulse=0)[1:]
+    m = np.arange(1, len(weights) + 1)
+    q = axon.q[bouton]
+    spread = np.sqrt(noise_sd**2 + m * (q * axon.q_cv) ** 2)
+    caught = ndtr((m * q - calls.threshold[bouton]) / spread)
+    sensitivity = float(weights @ caught / weights.sum()) if weights.sum() > 0 else float(caught[0])
+    specificity = 1.0 - float(calls.false_calls_expected[bouton, 0]) / n_trials
+    if sensitivity + specificity < _TELLING:
+        return Estimate(value=np.nan, lo=np.nan, hi=np.nan, method="none: a call says nothing of release")
+    estimate, _ = rogan_gladen(
+        int(calls.n_called[bouton, 0]),
+        n_trials,
+        sensitivity=sensitivity,
+        specificity=specificity,
+        n_sensitivity=np.inf,
+        n_specificity=np.inf,
+        confidence=CONFIDENCE,
+    )
+    return estimate
+
+
+def _verdicts(pairs: list[PulsePair | None]) -> tuple[str, ...]:
+    """Verdicts that hold although many boutons were looked at (Benjamini & Hochberg 1995)."""
+    p_values = np.array([np.nan if pair is None or pair.verdict is None else pair.p_equal for pair in pairs])
+    adjusted = benjamini_hochberg(p_values) if np.isfinite(p_values).any() else p_values
+    return tuple(
+        ""
+        if pair is None or pair.verdict is None
+        else pair.verdict
+        if not adjusted[i] > _VERDICT_SHARE
+        else "unresolved"
+        for i, pair in enumerate(pairs)
+    )

@@ -1,0 +1,139 @@
+"""The saved analysis: what was done to which movie, so that it can be done again."""
+
+from __future__ import annotations
+
+import json
+import platform
+from dataclasses import dataclass
+from datetime import UTC, datetime
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from pydantic import ValidationError
+
+from napari_boutonrelease import __version__
+from napari_boutonrelease.errors import SavedAnalysisError
+from napari_boutonrelease.recording import Protocol, content_digest, protocol_from_dict, protocol_to_dict
+
+from .settings import Settings
+
+if TYPE_CHECKING:
+    from napari_boutonrelease.recording import Movie
+
+    from .run import Measured
+
+FORMAT_VERSION = 1
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class SavedAnalysis:
+    """What an `analysis.json` holds.
+
+    Attributes
+    ----------
+    path : Path
+        The file.
+    settings : Settings
+        Every choice.
+    protocol : Protocol
+        When the axon was stimulated.
+    movie_files : tuple of Path
+        Where the movie was; relative ones are looked for beside the saved file's folder, too.
+    movie_digest : str
+        SHA-256 of the movie's content.
+    boutons, axon : Path or None
+        Files that were given.
+    """
+
+    path: Path
+    settings: Settings
+    protocol: Protocol
+    movie_files: tuple[Path, ...]
+    movie_digest: str
+    boutons: Path | None
+    axon: Path | None
+
+    def check_movie(self, movie: Movie) -> None:
+        """Raise `SavedAnalysisError` unless the movie has the content that was analysed."""
+        if movie.files and content_digest(movie) != self.movie_digest:
+            raise SavedAnalysisError(
+                f"{movie.files[0]} is not the movie that {self.path} was made from (its content differs). "
+                "Give the right movie, or analyse this one with --settings instead of --from."
+            )
+
+
+def provenance_of(measured: Measured, *, boutons: str | Path | None, axon: str | Path | None) -> dict[str, Any]:
+    """Put together what is needed to repeat an analysis, JSON-ready."""
+    movie = measured.movie
+    return {
+        "format": "boutonrelease analysis",
+        "format_version": FORMAT_VERSION,
+        "created": datetime.now(UTC).isoformat(timespec="seconds"),
+        "versions": _versions(),
+        "movie": {
+            "files": [str(Path(file).resolve()) for file in movie.files],
+            "bytes": [Path(file).stat().st_size for file in movie.files],
+            "sha256": content_digest(movie) if movie.files else None,
+            "shape": list(movie.shape),
+            "dtype": str(movie.dtype),
+            "axes": movie.axes,
+            "found_in": dict(measured.timing.found_in),
+        },
+        "protocol": protocol_to_dict(measured.protocol),
+        "settings": measured.settings.model_dump(mode="json"),
+        "boutons": None if boutons is None else str(Path(boutons).resolve()),
+        "axon": None if axon is None else str(Path(axon).resolve()),
+        "hand_edits": [],
+    }
+
+
+def read_saved(path: str | Path) -> SavedAnalysis:
+    """Read an `analysis.json`.
+
+    Raises
+    ------
+    SavedAnalysisError
+        If it cannot be read, is not a saved analysis, or comes from a newer format.
+    """
+    path = Path(path)
+    try:
+        content = json.loads(path.read_text(encoding="utf-8"))
+    except OSError as error:
+        raise SavedAnalysisError(f"Cannot read {path}: {error.strerror}.") from error
+    except ValueError as error:
+        raise SavedAnalysisError(f"{path} is not a saved analysis: {error}.") from error
+    if not isinstance(content, dict) or content.get("format") != "boutonrelease analysis":
+        raise SavedAnalysisError(f"{path} is not a saved analysis; give the analysis.json of a results folder.")
+    version = content.get("format_version")
+    if version != FORMAT_VERSION:
+        raise SavedAnalysisError(
+            f"{path} has format version {version}; this program reads version {FORMAT_VERSION}. "
+            "Use the newest version of the program."
+        )
+    try:
+        return SavedAnalysis(
+            path=path,
+            settings=Settings.model_validate(content["settings"]),
+            protocol=protocol_from_dict(content["protocol"], source=path),
+            movie_files=tuple(Path(file) for file in content["movie"]["files"]),
+            movie_digest=str(content["movie"]["sha256"]),
+            boutons=None if content["boutons"] is None else Path(content["boutons"]),
+            axon=None if content["axon"] is None else Path(content["axon"]),
+        )
+    except (KeyError, TypeError) as error:
+        raise SavedAnalysisError(f"{path} is damaged: {error} is missing or has the wrong type.") from error
+    except ValidationError as error:
+        first = error.errors()[0]
+        where = ".".join(map(str, first["loc"]))
+        raise SavedAnalysisError(f"{path}: setting {where}: {first['msg']} (given {first['input']!r}).") from error
+
+
+def _versions() -> dict[str, str]:
+    from importlib.metadata import version
+
+    packages = ("numpy", "scipy", "scikit-image", "tifffile", "pandas", "pydantic", "matplotlib")
+    return {
+        "napari-boutonrelease": __version__,
+        "python": platform.python_version(),
+        **{package: version(package) for package in packages},
+    }
