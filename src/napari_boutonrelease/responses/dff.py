@@ -199,15 +199,17 @@ def _search(
 
     def attempt(trial: NDArray[np.float64]) -> NDArray[np.bool_]:
         solution, residual_sum = _linear_fit(y, weights=weights, at=at, rates=trial)
-        better = (residual_sum < left) & (np.all(solution >= 0, axis=1) | (n_terms == 0))
+        better: NDArray[np.bool_] = (residual_sum < left) & (np.all(solution >= 0, axis=1) | (n_terms == 0))
         rates[better], linear[better], left[better] = trial[better], solution[better], residual_sum[better]
         return better
 
     for candidate in candidates:
         attempt(np.broadcast_to(candidate, rates.shape))
-    moves = np.stack(np.meshgrid(*[[-1.0, 0.0, 1.0]] * n_terms), axis=-1).reshape(-1, n_terms) if n_terms else []
+    if not n_terms:
+        return rates, linear, left
+    moves = np.stack(np.meshgrid(*[[-1.0, 0.0, 1.0]] * n_terms), axis=-1).reshape(-1, n_terms)
     step = np.full(n_boutons, 0.15)
-    for _ in range(_REFINEMENTS if n_terms else 0):
+    for _ in range(_REFINEMENTS):
         centre, moved = rates.copy(), np.zeros(n_boutons, dtype=bool)
         for move in moves:
             moved |= attempt(centre * np.exp(step[:, None] * move))

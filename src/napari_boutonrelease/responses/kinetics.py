@@ -34,6 +34,10 @@ _LOG_RISE_PRIOR = 1.0
 _LEAST_RISE_FRAMES = 0.02
 _SLOW_P = 1e-4
 _MAX_STEPS = 40
+_WORTH_SEARCHING = 8.0
+"""Fall of the misfit, in variances of the noise, below which a slow decay is not even looked for."""
+_MOST_FRAMES, _LEAST_TRIALS = 20_000, 20
+"""The first trials, which are the brightest, settle the shape; more would only cost time."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -146,14 +150,16 @@ def fit_response_shape(
     if not known.size or longest_s <= 0:
         return nothing
 
-    wide = plan_trial_windows(timing=timing, tail_s=longest_s, baseline_s=None)
+    wide = _first_trials(plan_trial_windows(timing=timing, tail_s=longest_s, baseline_s=None))
     coarse = replace(traces, offset_s=_rounded(traces.offset_s, step=timing.frame_interval_s / 4))
     interval_s = timing.frame_interval_s
     shape = _rough_shape(coarse.blocks(wide, white()), interval_s=interval_s, reference=reference, longest_s=longest_s)
     windows, correlation, clear, boutons = wide, white(), np.zeros(known.size), np.zeros(0, dtype=np.intp)
     bounds_s = (interval_s, longest_s)
     for _ in range(3):
-        windows = plan_trial_windows(timing=timing, tail_s=min(rest_s(shape), longest_s), baseline_s=None)
+        windows = _first_trials(
+            plan_trial_windows(timing=timing, tail_s=min(rest_s(shape), longest_s), baseline_s=None)
+        )
         correlation = _noise_of(coarse, windows=windows, shape=shape)
         clear = _clarity(coarse.blocks(windows, correlation), shape)
         boutons = np.argsort(-clear, kind="stable")[:_MAX_BOUTONS]
@@ -215,25 +221,33 @@ class _Search:
         alone = self.single(single)
         worst = self.misfit(alone)
         low_s, high_s = self._bounds_s
-        best, best_misfit = alone, worst
-        for factor, fraction in ((4.0, 0.2), (10.0, 0.2), (25.0, 0.2)):
-            slow_s = alone.decay_s * factor
-            if not slow_s < 2 * high_s:
-                continue
-            start = np.append(
-                self._to_parameters(replace(alone, decay_s=max(low_s, 0.8 * alone.decay_s))),
-                [np.log(fraction / (1 - fraction)), np.log(slow_s)],
-            )
-            shape = self._of_parameters(self._minimise(start))
-            misfit = self.misfit(shape)
-            if misfit < best_misfit and shape.slow_decay_s > 2 * shape.decay_s:
-                best, best_misfit = shape, misfit
-        spare = max(self._spare - 2, 1.0)
-        ratio = max(worst - best_misfit, 0.0) / 2 / (best_misfit / spare)
-        p_value = float(fdtrc(2, spare, ratio))
-        gain = self._n_values * np.log(worst / best_misfit) - 2 * np.log(self._n_values)
-        needed = p_value < _SLOW_P and gain > 0 and best.slow_fraction > 0.02
+        slow = [alone.decay_s * factor for factor in (4.0, 10.0, 25.0) if alone.decay_s * factor < 2 * high_s]
+        gains = [self._slow_gain(alone, slow_s, variance=worst / self._spare) for slow_s in slow]
+        best, best_misfit, gain = alone, worst, max(gains, default=0.0)
+        if gain > _WORTH_SEARCHING:
+            for slow_s in slow:
+                start = replace(alone, decay_s=max(low_s, 0.8 * alone.decay_s), slow_fraction=0.2, slow_decay_s=slow_s)
+                shape = self._of_parameters(self._minimise(self._to_parameters(start)))
+                misfit = self.misfit(shape)
+                if misfit < best_misfit and shape.slow_decay_s > 2 * shape.decay_s:
+                    best, best_misfit = shape, misfit
+            gain = (worst - best_misfit) / (best_misfit / self._spare)
+        p_value = float(fdtrc(2, self._spare, max(gain, 0.0) / 2))
+        by_bic = self._n_values * np.log(worst / best_misfit) > 2 * np.log(self._n_values)
+        needed = p_value < _SLOW_P and by_bic and best.slow_fraction > 0.02
         return (best if needed else alone), p_value
+
+    def _slow_gain(self, alone: ResponseShape, slow_s: float, *, variance: float) -> float:
+        """Foresee how far the misfit, over the variance, falls with a slow decay (Rao's score test)."""
+        parameters = self._to_parameters(alone)
+        steps = np.append(self._steps(parameters.size), 1e-3)
+        moved = [self._of_parameters(parameters + step) for step in np.diag(steps[:-1])]
+        moved.append(replace(alone, slow_fraction=1e-3, slow_decay_s=slow_s))
+        curvature, descent = self._blocks.normal_equations(alone, moved, steps)
+        known = np.linalg.pinv(curvature[:3, :3], hermitian=True)
+        spread = curvature[3, 3] - curvature[3, :3] @ known @ curvature[:3, 3]
+        rise = descent[3] - curvature[3, :3] @ known @ descent[:3]
+        return float(rise**2 / spread / variance) if rise > 0 and spread > 1e-9 * curvature[3, 3] else 0.0
 
     def standard_errors(self, shape: ResponseShape) -> tuple[float, float, float]:
         """Give standard errors of latency, rise and decay, in s, from the curvature of the misfit."""
@@ -253,10 +267,13 @@ class _Search:
         """Misfit over the variance of the noise, with the weak pull of the reference."""
         return self.misfit(self._of_parameters(parameters)) / variance + float(np.sum(self._pull(parameters) ** 2))
 
+    def _steps(self, n: int) -> NDArray[np.float64]:
+        return np.array([1e-3 * self._interval_s, 1e-3, 1e-3, 1e-3, 1e-3])[:n]
+
     def _system(
         self, parameters: NDArray[np.float64], *, variance: float
     ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-        steps = np.array([1e-3 * self._interval_s, 1e-3, 1e-3, 1e-3, 1e-3])[: parameters.size]
+        steps = self._steps(parameters.size)
         moved = [self._of_parameters(parameters + step) for step in np.diag(steps)]
         curvature, descent = self._blocks.normal_equations(self._of_parameters(parameters), moved, steps)
         looseness = np.array([_LATENCY_PRIOR_S, _LOG_RISE_PRIOR, np.inf, np.inf, np.inf])[: parameters.size]
@@ -323,6 +340,16 @@ def _clarity(blocks: TrialBlocks, shape: ResponseShape) -> NDArray[np.float64]:
     n_pulses = max(blocks.n_pulses, 1)
     small = 2.0 / (9.0 * n_pulses)
     return np.asarray((np.cbrt(chi_square / n_pulses) - (1 - small)) / np.sqrt(small))
+
+
+def _first_trials(windows: Windows) -> Windows:
+    """Empty the windows of all but the first trials."""
+    order = np.argsort(windows.start, kind="stable")
+    frames = np.cumsum((windows.stop - windows.start)[order])
+    last = max(int(np.searchsorted(frames, _MOST_FRAMES, side="right")), _LEAST_TRIALS)
+    stop = windows.stop.copy()
+    stop[order[last:]] = windows.start[order[last:]]
+    return replace(windows, stop=stop)
 
 
 def _rough_shape(

@@ -145,16 +145,14 @@ class ResponseDesign:
         return found
 
     def typical_block(self) -> NDArray[np.float64]:
-        """Design of the window of median length, not whitened, without columns of absent pulses."""
-        length = np.bincount(self.window, minlength=self.n_windows)
-        chosen = int(np.argsort(length, kind="stable")[self.n_windows // 2])
+        """Design of the filled window of median length, not whitened, without columns of absent pulses."""
+        filled, length = np.unique(self.window, return_counts=True)
+        if not filled.size:
+            return np.zeros((0, 1))
+        chosen = int(filled[np.argsort(length, kind="stable")[filled.size // 2]])
         at = np.flatnonzero(self.window == chosen)
         first = chosen * self.n_columns_each
-        block = (
-            self.plain[at[0] : at[-1] + 1, first : first + self.n_columns_each].toarray()
-            if at.size
-            else np.zeros((0, 1))
-        )
+        block = self.plain[at[0] : at[-1] + 1, first : first + self.n_columns_each].toarray()
         return np.asarray(block[:, np.any(block != 0, axis=0)])
 
     def _own_blocks(self) -> Iterator[tuple[int, int, NDArray[np.float64]]]:

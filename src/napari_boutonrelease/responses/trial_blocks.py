@@ -28,6 +28,8 @@ __all__ = ["TrialBlocks"]
 
 _SWEEPS = 3
 _MOST_CARRIED = 4
+_CARRIED_HEIGHT = 0.003
+"""Tails are carried into a window that starts while they stand higher than this share of the peak."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -84,6 +86,9 @@ class TrialBlocks:
         inside = frame < stop[:, None]
         frame = np.minimum(frame, y.shape[1] - 1)
         self._time_s = timing.frame_start_s[frame]
+        last_s = np.fmax.reduce(self._pulse_s, axis=1)
+        lags = range(1, min(_MOST_CARRIED, order.size - 1) + 1)
+        self._gap_s = [float(np.min(self._time_s[lag:, 0] - last_s[:-lag])) for lag in lags]
         self._groups = []
         self.n_boutons = y.shape[0]
         self.n_values = np.zeros(y.shape[0])
@@ -181,13 +186,9 @@ class TrialBlocks:
         return height
 
     def _tails(self, group: _Group, shape: ResponseShape) -> list[NDArray[np.float64]]:
-        tails = []
-        for carried in range(1, min(_MOST_CARRIED, self.n_trials - 1) + 1):
-            heights = self._heights(group, shape, carried=carried)
-            if not np.any(heights > 0.005):
-                break
-            tails.append(heights)
-        return tails
+        end_s = shape.end_s(remaining=_CARRIED_HEIGHT)
+        carried = [lag for lag, gap_s in enumerate(self._gap_s, start=1) if not gap_s > end_s]
+        return [self._heights(group, shape, carried=lag) for lag in carried]
 
     @staticmethod
     def _carry(tails: list[NDArray[np.float64]], amplitude: NDArray[np.float64]) -> NDArray[np.float64]:
