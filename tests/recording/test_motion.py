@@ -16,7 +16,7 @@ class Axon:
 
     def __init__(self, rng, *, n_y=48, n_x=120, bouton=30.0, axon=8.0, background=3.0, sigma_px=1.4):
         self.shape, self.background, self.sigma_px = (n_y, n_x), background, sigma_px
-        x = np.concatenate([np.arange(-8, n_x + 8, 0.5), rng.uniform(6, n_x - 6, 14)])
+        x = np.concatenate([np.arange(-8, n_x + 8, 0.5), np.linspace(8, n_x - 8, 14) + rng.uniform(-2, 2, 14)])
         y = n_y / 2 + n_y / 4 * np.sin(x / 25.0)
         self.y, self.x = y, x
         self.photons = np.full(x.size, axon * 0.5 / (2.5 * 1.4))
@@ -104,15 +104,16 @@ def test_jumps_bleaching_and_changing_background(rng):
     assert np.abs(error - np.median(error, axis=0)).max() < 0.15
 
 
-def test_boutons_that_flash_hardly_move_the_frame(rng):
-    axon = Axon(rng, bouton=300, axon=80, background=30)
+@pytest.mark.parametrize("photons", [1, 10])
+def test_boutons_that_flash_hardly_move_the_frame(rng, photons):
+    axon = Axon(rng, bouton=30 * photons, axon=8 * photons, background=3 * photons)
     truth = np.zeros((600, 2))
     doubled = [range(k // 30 % 4, 14, 4) if k % 30 < 8 else () for k in range(600)]
     drift = measured(record(rng, axon, truth, doubled=doubled))
     flashing = np.array([len(spots) > 0 for spots in doubled])
     for shift in (drift.dy_px, drift.dx_px):
         assert abs(shift[flashing].mean() - shift[~flashing].mean()) < 0.01
-        assert np.abs(shift).max() < 0.03
+        assert np.abs(shift).max() < 0.02
     assert drift.used.all()
 
 

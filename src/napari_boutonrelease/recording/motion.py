@@ -19,6 +19,7 @@ from .cubic_convolution import shift_frame_block
 from .light import photon_transfer_line
 from .random_walk import smooth_random_walk
 from .registration import Fit, Reference
+from .wiener import without_noise
 
 if TYPE_CHECKING:
     from collections.abc import Callable
@@ -304,38 +305,6 @@ def _reference(
     )
 
 
-def without_noise(image: FloatArray, *, noise_variance: float) -> FloatArray:
-    """Take white noise out of an image by Wiener's filter, its gain the same along every direction.
-
-    What is left is the expectation of the true image given the noisy one. Slopes of it, unlike slopes of the noisy
-    image, tell without bias how much a frame moved.
-
-    Parameters
-    ----------
-    image : (y, x) ndarray of float
-        Noisy image.
-    noise_variance : float
-        Variance of the noise of each pixel.
-
-    Returns
-    -------
-    (y, x) ndarray of float
-    """
-    from scipy.fft import dctn, idctn
-
-    spectrum = dctn(image, norm="ortho")
-    along_y, along_x = (np.arange(n) / n for n in image.shape)
-    radius = np.hypot(along_y[:, None], along_x)
-    n_rings = max(4, min(40, min(image.shape) // 2))
-    ring = np.minimum((radius * n_rings).astype(int), n_rings)
-    power = np.bincount(ring.ravel(), (spectrum**2).ravel()) / np.maximum(np.bincount(ring.ravel()), 1)
-    gain = np.clip(1.0 - noise_variance / np.maximum(power, 1e-300), 0.0, 1.0)
-    kept = gain[ring]
-    kept[0, 0] = 1.0
-    result: FloatArray = idctn(spectrum * kept, norm="ortho")
-    return result
-
-
 def _aligned_mean(
     frames: NDArray[np.generic],
     dy: FloatArray,
@@ -373,9 +342,22 @@ def _locate(reference: Reference, frames: NDArray[np.generic], max_shift_px: flo
     if apart.size:
         again = reference.locate(frames[apart], dy=usual_y[apart], dx=usual_x[apart], max_shift_px=max_shift_px)
         better = again.misfit < fit.misfit[apart]
-        for name in Fit.__slots__:
-            getattr(fit, name)[apart[better]] = getattr(again, name)[better]
+        _put(fit, apart[better], again, better)
+    usual_misfit = np.percentile(fit.misfit, 25)
+    flashing = np.flatnonzero(fit.misfit > usual_misfit * (1.0 + 3.0 * np.sqrt(2.0 / np.maximum(fit.n_pixels, 1.0))))
+    if flashing.size:
+        again = reference.locate_despite_flashes(frames[flashing], _take(fit, flashing), max_shift_px=max_shift_px)
+        _put(fit, flashing, again, np.ones(flashing.size, dtype=np.bool_))
     return fit
+
+
+def _take(fit: Fit, which: NDArray[np.intp]) -> Fit:
+    return Fit(**{name: getattr(fit, name)[which] for name in Fit.__slots__})
+
+
+def _put(fit: Fit, where: NDArray[np.intp], other: Fit, which: NDArray[np.bool_]) -> None:
+    for name in Fit.__slots__:
+        getattr(fit, name)[where] = getattr(other, name)[which]
 
 
 def _judge(fit: Fit) -> tuple[FloatArray, NDArray[np.bool_]]:

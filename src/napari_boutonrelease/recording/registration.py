@@ -27,6 +27,10 @@ _MOST_STEPS = 12
 _ENOUGH_INFORMATION = 0.98
 _FEW_PIXELS = 20_000  # below this every pixel is used
 _MOST_CACHED_NUMBERS = 20_000_000
+_PLACE_PX = 1.2  # SD of the average over a place
+_FLASH_SD = 4.5  # a place this far from the reference flashes
+_FLASH_WIDTH_PX = 7  # and what lies about it is left out, too
+_FLASH_ROUNDS = 6
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -151,8 +155,6 @@ class Reference:
         weights = self._weights[y, x]
         rows = columns * weights
         normal = rows @ columns.T
-        smooth_inverse = np.linalg.pinv(normal[3:, 3:], hermitian=True)
-        crossed = normal[2, 3:]
         if (len(self._cells) + 1) * rows.size > _MOST_CACHED_NUMBERS:
             self._cells.pop(next(iter(self._cells)), None)
         self._cells[cell] = _Cell(
@@ -160,7 +162,7 @@ class Reference:
             weights=weights.astype(np.float32),
             rows=rows.astype(np.float32),
             inverse=np.linalg.pinv(normal, hermitian=True, rcond=1e-12),
-            signal=float(normal[2, 2] - crossed @ smooth_inverse @ crossed),
+            signal=_signal(normal),
         )
         return self._cells[cell]
 
@@ -232,6 +234,68 @@ class Reference:
         move: FloatArray = np.clip(solution[:, :2] / factor[:, None] @ self._directions, -0.75, 0.75)
         return move
 
+    def locate_despite_flashes(self, frames: NDArray[np.generic], fit: Fit, *, max_shift_px: float) -> Fit:
+        """Locate frames again without the places that differ from the reference: boutons that release.
+
+        A bouton that flashes beside another, or on a bend, would pull the frame towards it. Places where what is left
+        over, averaged over a bouton, is beyond noise are left out, unless that leaves too little to hold on to.
+
+        Parameters
+        ----------
+        frames : (n_frames, y, x) ndarray
+            Frames as recorded.
+        fit : Fit
+            Where they lie by all of their pixels.
+        max_shift_px : float
+            No drift leaves +-max_shift_px.
+
+        Returns
+        -------
+        Fit
+        """
+        found = {name: getattr(fit, name).copy() for name in Fit.__slots__}
+        for k, frame in enumerate(frames):
+            self._refit(frame.reshape(-1), found, k, max_shift_px)
+        return Fit(**found)
+
+    def _refit(self, frame: NDArray[np.generic], found: dict[str, FloatArray], k: int, max_shift_px: float) -> None:
+        from scipy.ndimage import gaussian_filter, maximum_filter
+
+        left_over = np.zeros(self.image.shape, dtype=np.float32)
+        drift = np.array([found["dy_px"][k], found["dx_px"][k]])
+        flashing = np.zeros(self.image.size, dtype=np.bool_)
+        for round_ in range(_FLASH_ROUNDS):
+            cell = np.rint(drift * _CELLS_PER_PX).astype(int)
+            problem = self._cell((int(cell[0]), int(cell[1])))
+            kept = ~flashing[problem.pixels]
+            rows, weights = problem.rows[:, kept], problem.weights[kept]
+            columns = rows / weights
+            values = frame[problem.pixels].astype(np.float32) - np.float32(self._level)
+            normal = (rows @ columns.T).astype(np.float64)
+            inverse = np.linalg.pinv(normal, hermitian=True, rcond=1e-9)
+            doubt = self._directions @ inverse[:2, :2] @ self._directions
+            if np.trace(doubt) > 4.0 * np.trace(self._directions @ problem.inverse[:2, :2] @ self._directions):
+                return
+            solution = inverse @ (rows @ values[kept])
+            residual = values - (solution @ problem.rows).astype(np.float32) / problem.weights
+            residual *= np.sqrt(problem.weights)
+            misfit = float(np.mean(residual[kept] ** 2)) * kept.sum() / max(kept.sum() - len(inverse), 1)
+            factor = max(float(solution[2]), 0.2)
+            move = np.clip(solution[:2] / factor @ self._directions, -0.75, 0.75)
+            drift = np.clip(cell / _CELLS_PER_PX @ self._directions + move, -max_shift_px, max_shift_px)
+            found["dy_px"][k], found["dx_px"][k] = drift
+            found["dy_sd_px"][k], found["dx_sd_px"][k] = np.sqrt(misfit * np.maximum(np.diag(doubt), 0.0)) / factor
+            found["brightness"][k], found["misfit"][k] = solution[2], misfit
+            found["signal"][k], found["n_pixels"][k] = _signal(normal), kept.sum()
+            left_over[:] = 0.0
+            left_over.flat[problem.pixels] = residual
+            places = np.abs(gaussian_filter(left_over, _PLACE_PX, truncate=2.5))
+            # averaging over a Gaussian of SD s leaves white noise an SD of 1 / (2 s sqrt(pi))
+            limit = _FLASH_SD * np.sqrt(misfit) / (2.0 * _PLACE_PX * np.sqrt(np.pi))
+            # the worst first: they also make the rest of the frame look wrong
+            limit = max(limit, 0.5 * float(places.max()) * (1.0 - round_ / _FLASH_ROUNDS))
+            flashing = (maximum_filter(places, size=_FLASH_WIDTH_PX) > limit).ravel()
+
     def find(self, frames: NDArray[np.generic], *, max_shift_px: float) -> tuple[FloatArray, FloatArray]:
         """Coarse drift of frames by cross-correlation with the likelihood template, to about a pixel.
 
@@ -280,6 +344,12 @@ class Reference:
         fine = gaussian_filter(logarithm, 0.7) - gaussian_filter(logarithm, 8.0)
         template: Single = fine.astype(np.float32)
         return template
+
+
+def _signal(normal: FloatArray) -> float:
+    """Energy of the reference's structure beyond a smooth background."""
+    crossed = normal[2, 3:]
+    return float(normal[2, 2] - crossed @ np.linalg.pinv(normal[3:, 3:], hermitian=True) @ crossed)
 
 
 def _grouped(cells: NDArray[np.int_], active: NDArray[np.intp]) -> list[tuple[tuple[int, int], NDArray[np.intp]]]:
