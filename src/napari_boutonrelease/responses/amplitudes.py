@@ -7,8 +7,14 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from .bouton_groups import groups_of_boutons, row_offset_s
 from .noise import TimeCorrelation, estimate_time_correlation, robust_sd, variance_by_brightness, white
-from .response_design import ResponseDesign, build_design, evoked_responses, groups_of_boutons, row_offset_s
+from .response_design import (
+    ResponseDesign,
+    build_design,
+    evoked_responses,
+    pooled_residuals,
+)
 from .windows import Windows, plan_null_windows, plan_trial_windows, rest_s
 
 if TYPE_CHECKING:
@@ -140,11 +146,21 @@ def fit_amplitudes(
 
     members = [group for group, _, _ in groups]
     plain = designs(trials, white())
-    correlation = _correlation(y, designs=plain, members=members)
+    residual, common = pooled_residuals(y, designs=plain, members=members)
+    correlation = (
+        white()
+        if common is None
+        else estimate_time_correlation(
+            residual,
+            frame_in_run=common.frame_in_run,
+            fitted=common.typical_block(),
+            max_order=_MAX_ORDER,
+        )
+    )
     trial_designs = designs(trials, correlation) if correlation.order else plain
 
     n_boutons, (n_trials, n_pulses) = f.shape[0], timing.stimulus_s.shape
-    coefficient = np.full((n_boutons, n_trials, trial_designs[0].n_columns_each if groups else 0), np.nan)
+    coefficient = np.full((n_boutons, n_trials, 1 + slope + n_pulses), np.nan)
     theory = np.full((n_boutons, n_trials, n_pulses), np.nan)
     frame_variance = np.full((n_boutons, n_trials), np.nan)
     n_rest = np.zeros((n_boutons, n_trials))
@@ -161,7 +177,7 @@ def fit_amplitudes(
     in_counts = variance_by_brightness(
         frame_variance * brightness**2, brightness=_f0_at(baseline, trials), n_values=n_rest
     )
-    frame_sd = np.sqrt(in_counts) / brightness
+    frame_sd = np.sqrt(np.where(in_counts > 0, in_counts, np.nan)) / brightness
     amplitude_se = theory * frame_sd[:, :, None]
     n_baseline = 1 + slope
     amplitude = np.where(np.isfinite(theory), coefficient[:, :, n_baseline:], np.nan)
@@ -196,23 +212,6 @@ def fit_amplitudes(
         frame_sd=frame_sd,
         correlation=correlation,
         windows=trials,
-    )
-
-
-def _correlation(
-    y: NDArray[np.float64], *, designs: list[ResponseDesign], members: list[NDArray[np.intp]]
-) -> TimeCorrelation:
-    """Correlation of the noise, from the residuals of the largest group of boutons."""
-    if not members:
-        return white()
-    largest = int(np.argmax([group.size for group in members]))
-    design, group = designs[largest], members[largest]
-    values = y[np.ix_(group, design.frame)].T
-    if not values.size:
-        return white()
-    residual = design.residual(values, design.solve(values))
-    return estimate_time_correlation(
-        residual, frame_in_run=design.frame_in_run, fitted=design.typical_block(), max_order=_MAX_ORDER
     )
 
 
@@ -268,7 +267,8 @@ def _null_scores(
     for group, design in zip(members, designs, strict=False):
         solved = design.solve(design.whiten(y[np.ix_(group, design.frame)].T))[:, design.n_baseline]
         error = design.standard_errors()[:, design.n_baseline]
-        result[group] = solved.T / (error * frame_sd[np.ix_(group, nearest)])
+        spread = error * frame_sd[np.ix_(group, nearest)]
+        result[group] = np.where(spread > 0, solved.T / np.where(spread > 0, spread, 1.0), np.nan)
     return result
 
 

@@ -13,10 +13,11 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from .bouton_groups import row_offset_s
 from .noise import TimeCorrelation
 
 if TYPE_CHECKING:
-    from collections.abc import Iterator
+    from collections.abc import Iterator, Sequence
 
     from numpy.typing import NDArray
     from scipy.sparse import csr_array
@@ -25,7 +26,12 @@ if TYPE_CHECKING:
     from ..response_shape import ResponseShape
     from .windows import Windows
 
-__all__ = ["ResponseDesign", "build_design", "evoked_responses", "groups_of_boutons", "row_offset_s"]
+__all__ = [
+    "ResponseDesign",
+    "build_design",
+    "evoked_responses",
+    "pooled_residuals",
+]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -279,41 +285,36 @@ def build_design(
     )
 
 
-def row_offset_s(y_px: NDArray[np.float64], *, timing: Timing) -> NDArray[np.float64]:
-    """How much later than row 0 each bouton's row is exposed, in s."""
-    return np.asarray(y_px, dtype=np.float64) * timing.row_time_s
-
-
-def groups_of_boutons(
-    f: NDArray[np.float64], *, offset_s: NDArray[np.float64], used: NDArray[np.bool_]
-) -> Iterator[tuple[NDArray[np.intp], float, NDArray[np.bool_]]]:
-    """Boutons that share a design: the same row offset and the same usable frames.
+def pooled_residuals(
+    y: NDArray[np.float64], *, designs: Sequence[ResponseDesign], members: Sequence[NDArray[np.intp]]
+) -> tuple[NDArray[np.float64], ResponseDesign | None]:
+    """Least-squares residuals of all boutons whose rows are those of the largest group.
 
     Parameters
     ----------
-    f : (n_boutons, n_frames) ndarray
-        Brightness; NaN in frames without a value.
-    offset_s : (n_boutons,) ndarray
-        Row offset of each, in s.
-    used : (n_frames,) ndarray of bool
-        Frames that may be used.
+    y : (n_boutons, n_frames) ndarray
+        Traces.
+    designs : sequence of ResponseDesign
+        Design of each group, not whitened.
+    members : sequence of (n,) ndarray of int
+        Boutons of each group.
 
-    Yields
-    ------
-    boutons : (n,) ndarray of int
-        Members of the group.
-    offset_s : float
-        Their row offset.
-    usable : (n_frames,) ndarray of bool
-        Their usable frames.
+    Returns
+    -------
+    residual : (n_rows, n) ndarray
+    design : ResponseDesign or None
+        Design of the largest group; None where no group has any row.
     """
-    groups: dict[tuple[float, bytes], list[int]] = {}
-    for bouton, series in enumerate(f):
-        usable = used & np.isfinite(series)
-        groups.setdefault((float(offset_s[bouton]), np.packbits(usable).tobytes()), []).append(bouton)
-    for (offset, packed), members in groups.items():
-        usable = np.unpackbits(np.frombuffer(packed, dtype=np.uint8), count=used.size).astype(bool)
-        yield np.array(members, dtype=np.intp), offset, usable
+    filled = [i for i, design in enumerate(designs) if design.frame.size]
+    if not filled:
+        return np.zeros((0, 0)), None
+    common = designs[max(filled, key=lambda i: members[i].size)]
+    residuals = []
+    for i in filled:
+        if np.array_equal(designs[i].frame, common.frame):
+            values = y[np.ix_(members[i], common.frame)].T
+            residuals.append(designs[i].residual(values, designs[i].solve(values)))
+    return np.concatenate(residuals, axis=1), common
 
 
 def evoked_responses(

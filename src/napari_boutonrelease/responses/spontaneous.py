@@ -7,8 +7,9 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from .bouton_groups import row_offset_s
 from .noise import TimeCorrelation, robust_sd
-from .response_design import evoked_responses, row_offset_s
+from .response_design import evoked_responses
 from .windows import rest_frames, rest_s
 
 if TYPE_CHECKING:

@@ -12,7 +12,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from .response_design import groups_of_boutons
+from .bouton_groups import groups_of_boutons
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
