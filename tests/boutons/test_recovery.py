@@ -14,7 +14,13 @@ from napari_boutonrelease.recording import movie_from_array, resolve_timing
 from napari_boutonrelease.recording.light import measure_light
 from napari_boutonrelease.recording.motion import measure_drift
 from napari_boutonrelease.response_shape import ResponseShape
-from napari_boutonrelease.simulation import Recipe, protocol_of, simulate_recording
+from napari_boutonrelease.simulation import (
+    Recipe,
+    expected_profile,
+    noise_variance,
+    protocol_of,
+    simulate_recording,
+)
 
 
 def analyse(recipe, *, seed):
@@ -130,6 +136,19 @@ def test_an_axon_that_never_releases_is_seen_by_shape_alone_and_read_without_its
     own = (baseline - footprints.shaft_counts)[at]
     # A blurred disc is a little flatter than the Gaussian it is fitted with.
     np.testing.assert_allclose(own, light, rtol=0.12)
+    for spot, index in enumerate(at):
+        y0, x0, profile = expected_profile(truth, spot)
+        noise = noise_variance(truth)
+        limit = 1 / np.sqrt(np.sum(profile**2 / noise[y0 : y0 + profile.shape[0], x0 : x0 + profile.shape[1]]))
+        whole = np.zeros(noise.shape)
+        whole[y0 : y0 + profile.shape[0], x0 : x0 + profile.shape[1]] = profile
+        weights = np.zeros(noise.shape)
+        patch = footprints.weights[index]
+        top, left = footprints.y0[index], footprints.x0[index]
+        weights[top : top + patch.shape[0], left : left + patch.shape[1]] = patch
+        sd = np.sqrt(np.sum(weights**2 * noise)) / np.sum(weights * whole)
+        # Even one who knows the profile, the noise and the background could not read it with less noise than `limit`.
+        assert limit < sd <= 1.15 * limit
     assert np.all(footprints.shaft_counts[at][: recipe.n_boutons] > 1.0)  # the speck lies off the axon
 
 

@@ -22,6 +22,7 @@ if TYPE_CHECKING:
 
 _WINDOW_SIGMAS = 6.0  # radius within which heights are read against a constant background
 _FIT_SIGMAS = 3.5  # half width of the image a position is fitted to
+_ALONE_SIGMAS = 3.0  # a neighbour beyond that, taken out trial by trial, leaves a spot its width
 _SWEEPS = 3
 
 
@@ -194,7 +195,7 @@ class SpotModel:
 
     def _isolated(self, index: int) -> bool:
         distance = np.hypot(self.y_px - self.y_px[index], self.x_px - self.x_px[index])
-        return bool(np.sum(distance < 5 * self.spot_sigma_px) == 1)
+        return bool(np.sum(distance < _ALONE_SIGMAS * self.spot_sigma_px) == 1)
 
     def _take_out(self) -> None:
         """Subtract every spot, at its height in each trial, from the filtered maps."""

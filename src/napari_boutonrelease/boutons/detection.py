@@ -21,6 +21,7 @@ if TYPE_CHECKING:
 _FIRST_SHARE = 0.1  # of false_discovery: how unlikely the first bouton must be where nothing may release at all
 _MARGIN = 0.3  # the share of false ones is promised for a recording, and scatters about its expectation
 _NULL_CHANCE = 4.0  # nats that noise reaches at one of many places
+_LEAST_SEEN = 0.8  # of a spot's energy: half a spot at the border is averaged over too few pixels to be believed
 _MAX_ROUNDS = 12
 _CLOSEST = 0.75  # of the spacing: nearer than that two fitted places are one bouton
 _SHAPE_POSITION_ERROR = 0.25  # of the spot's sigma: the shaft and unequal neighbours pull a maximum of the mean image
@@ -145,6 +146,8 @@ def detect_boutons(
     )
     advance(1, steps)
     evidence = mixture_evidence(matched.evoked)
+    blind = _share_seen(exclude, spot_sigma_px=spot_sigma_px) < _LEAST_SEEN
+    evidence[blind] = 0.0
     rate = measure_false_rate(matched.null, correlation=stack.evoked_correlation, spacing_px=spacing_px, rng=rng)
     advance(2, steps)
     shapes = (
@@ -171,6 +174,7 @@ def detect_boutons(
         spacing_px=spacing_px,
         false_discovery=false_discovery,
         null_is_silent=null_is_silent,
+        blind=blind,
     )
     advance(3, steps)
     allowed = _allowed(len(score), false_discovery)
@@ -187,6 +191,14 @@ def detect_boutons(
     )
     advance(4, steps)
     return detection
+
+
+def _share_seen(exclude: NDArray[np.bool_], *, spot_sigma_px: float) -> NDArray[np.float64]:
+    """Return the share of a spot's energy that usable pixels hold, for a spot on each pixel."""
+    from scipy.ndimage import gaussian_filter
+
+    usable = (~exclude).astype(np.float64)
+    return np.asarray(gaussian_filter(usable, spot_sigma_px / np.sqrt(2.0), mode="constant"))
 
 
 def _silently(done: int, total: int) -> None:
@@ -206,10 +218,11 @@ def _find_releasing(
     spacing_px: float,
     false_discovery: float,
     null_is_silent: bool,
+    blind: NDArray[np.bool_],
 ) -> NDArray[np.float64]:
     """Fill `model` with releasing spots; returns their evidence."""
     score = np.empty(0)
-    residual = evidence
+    residual: NDArray[np.floating] = evidence
     refused: list[tuple[float, float, float]] = []
     for _ in range(_MAX_ROUNDS):
         excess = residual / cuts.map(_allowed(len(score), false_discovery))
@@ -237,7 +250,7 @@ def _find_releasing(
         if not np.all(keep):
             model.set_places(model.y_px[keep], model.x_px[keep])
             score = score[keep]
-        residual = model.residual_evidence(evidence, reach_px=3 * spacing_px)
+        residual = np.where(blind, 0.0, model.residual_evidence(evidence, reach_px=3 * spacing_px))
     return score
 
 

@@ -25,7 +25,7 @@ Progress = Callable[[int, int], None]
 _STILL_PX = 0.01  # a frame that moved less is not resampled
 _MAX_NULL = 2.0  # null maps wanted per evoked map, at most
 _ENOUGH_NULL = 20
-_CLEAR_SD = 4.0
+_CLEAR_SD = 5.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
