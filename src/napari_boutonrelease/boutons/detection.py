@@ -21,7 +21,7 @@ if TYPE_CHECKING:
 _FIRST_SHARE = 0.1  # of false_discovery: how unlikely the first bouton must be where nothing may release at all
 _MARGIN = 0.3  # the share of false ones is promised for a recording, and scatters about its expectation
 _NULL_CHANCE = 4.0  # nats that noise reaches at one of many places
-_LEAST_SEEN = 0.8  # of a spot's energy: half a spot at the border is averaged over too few pixels to be believed
+_LEAST_SEEN = 0.8  # of the energy of a spot: one cut by the border is averaged over too few pixels to be believed
 _MAX_ROUNDS = 12
 _CLOSEST = 0.75  # of the spacing: nearer than that two fitted places are one bouton
 _SHAPE_POSITION_ERROR = 0.25  # of the spot's sigma: the shaft and unequal neighbours pull a maximum of the mean image

@@ -48,13 +48,19 @@ class FalseRate:
 def local_maxima(
     image: NDArray[np.floating], *, spacing_px: float, above: float
 ) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
-    """Rows and columns of maxima that nothing within `spacing_px` exceeds, highest first."""
-    from scipy.ndimage import maximum_filter
+    """Rows and columns of maxima that nothing within `spacing_px` exceeds, highest first.
+
+    Touching pixels of the same value (evidence that is at its ceiling trial after trial) are one maximum, in their middle.
+    """
+    from scipy.ndimage import center_of_mass, label, maximum_filter
 
     reach = int(np.floor(spacing_px))
     rows, columns = np.mgrid[-reach : reach + 1, -reach : reach + 1]
     disc = rows**2 + columns**2 <= spacing_px**2
-    y, x = np.nonzero((image >= maximum_filter(image, footprint=disc, mode="constant")) & (image > above))
+    highest = (image >= maximum_filter(image, footprint=disc, mode="constant")) & (image > above)
+    plateaus, n_plateaus = label(highest, structure=np.ones((3, 3)))
+    middles = np.reshape(center_of_mass(highest, plateaus, np.arange(1, n_plateaus + 1)), (-1, 2))
+    y, x = np.round(middles).astype(np.intp).T
     order = np.argsort(-image[y, x], kind="stable")
     return y[order], x[order]
 

@@ -22,7 +22,8 @@ if TYPE_CHECKING:
 
 Progress = Callable[[int, int], None]
 
-_STILL_PX = 0.01  # a frame that moved less is not resampled
+_STILL_PX = 0.02  # movement that is neglected within a sum of frames
+_PIXELS_AT_ONCE = 8192
 _MAX_NULL = 2.0  # null maps wanted per evoked map, at most
 _ENOUGH_NULL = 20
 _CLEAR_SD = 5.0
@@ -255,42 +256,74 @@ def _accumulate(
 ) -> tuple[NDArray[np.float32], NDArray[np.float64]]:
     """Sum weights times frames: one map a pulse of each projection, or one a slot; and the mean of all frames used."""
     n_frames, height, width = movie.shape
-    first_map = np.cumsum([0, *(len(one.factor) for one in projections)]) if slots is None else np.append(slots, 0)
+    first_map = np.cumsum([0, *(len(one.factor) for one in projections)]) if slots is None else slots
     n_maps = int(first_map[-1]) if slots is None else int(slots.max()) + 1
     maps = np.zeros((n_maps, height, width), dtype=np.float32)
     total = np.zeros((height, width))
     wanted = np.zeros(n_frames, dtype=np.bool_)
     for one in projections:
         wanted[one.window.frames] = True
+    n_rows = projections[0].weights.shape[0]
     starts = [start for start in range(0, n_frames, block_frames) if wanted[start : start + block_frames].any()]
     for done, start in enumerate(starts):
         chosen = start + np.flatnonzero(wanted[start : start + block_frames])
-        frames = _aligned(movie.read(int(chosen[0]), int(chosen[-1]) + 1)[chosen - chosen[0]], chosen, drift)
-        total += frames.sum(axis=0, dtype=np.float64)
+        frames = movie.read(int(chosen[0]), int(chosen[-1]) + 1)
+        frames = frames if len(frames) == len(chosen) else frames[chosen - chosen[0]]
+        targets = [total]
+        weights = [np.ones((n_rows, 1, len(chosen)), dtype=np.float32)]
         for index, one in enumerate(projections):
             if one.window.frames[-1] < chosen[0] or one.window.frames[0] > chosen[-1]:
                 continue
+            spread = np.zeros((n_rows, len(one.factor), len(chosen)), dtype=np.float32)
             mine = np.isin(one.window.frames, chosen, assume_unique=True)
-            part = frames[np.searchsorted(chosen, one.window.frames[mine])]
-            target = maps[first_map[index] : first_map[index] + len(one.factor)]
-            weights = one.weights[:, :, mine]
-            if len(weights) == 1:
-                target += np.tensordot(weights[0], part, axes=1)
-            else:
-                target += np.matmul(weights, part.transpose(1, 0, 2)).transpose(1, 0, 2)
+            spread[:, :, np.searchsorted(chosen, one.window.frames[mine])] = one.weights[:, :, mine]
+            weights.append(spread)
+            targets += list(maps[first_map[index] : first_map[index] + len(one.factor)])
+        sums = _aligned_sums(frames, np.concatenate(weights, axis=1), dy=drift.dy_px[chosen], dx=drift.dx_px[chosen])
+        for target, part in zip(targets, sums, strict=True):
+            target += part
         if progress is not None:
             progress(done + 1, len(starts))
     return maps, total / max(int(wanted.sum()), 1)
 
 
-def _aligned(frames: NDArray[np.generic], index: NDArray[np.intp], drift: Drift) -> NDArray[np.float32]:
-    """Frames in reference coordinates."""
-    aligned = frames.astype(np.float32)
-    dy, dx = drift.dy_px[index], drift.dx_px[index]
-    moved = np.hypot(dy, dx) > _STILL_PX
-    if np.any(moved):
-        aligned[moved] = shift_frame_block(aligned[moved], dy=dy[moved], dx=dx[moved])
-    return aligned
+def _aligned_sums(
+    frames: NDArray[np.generic], weights: NDArray[np.float32], *, dy: NDArray[np.float64], dx: NDArray[np.float64]
+) -> NDArray[np.float32]:
+    """Weighted sums of frames in reference coordinates: weights (rows or 1, n_sums, n_frames) -> (n_sums, y, x).
+
+    Summing and resampling may change places. Frames that lie within `_STILL_PX` of each other are summed first and
+    resampled together, which is most of the work saved where a sample drifts slowly.
+    """
+    n_sums = weights.shape[1]
+    sums = np.zeros((n_sums, *frames.shape[1:]), dtype=np.float32)
+    cells = np.round(np.stack([dy, dx]) / (2 * _STILL_PX)).astype(int)
+    unique, cell_of = np.unique(cells, axis=1, return_inverse=True)
+    for cell in range(unique.shape[1]):
+        members = np.flatnonzero(cell_of.ravel() == cell)
+        part, mine = frames[members] if len(members) < len(frames) else frames, weights[:, :, members]
+        if not unique[:, cell].any():
+            sums += _sums(part, mine)
+        elif len(members) <= n_sums:
+            sums += _sums(shift_frame_block(part, dy=dy[members], dx=dx[members]), mine)
+        else:
+            middle = [np.full(n_sums, shift[members].mean()) for shift in (dy, dx)]
+            sums += shift_frame_block(_sums(part, mine), dy=middle[0], dx=middle[1])
+    return sums
+
+
+def _sums(frames: NDArray[np.generic], weights: NDArray[np.float32]) -> NDArray[np.float32]:
+    """Multiply weights (rows or 1, n_sums, n_frames) with frames, a stretch of pixels at a time to stay small."""
+    n_frames, height, width = frames.shape
+    if len(weights) > 1:
+        by_row = frames.astype(np.float32).transpose(1, 0, 2)
+        return np.asarray(np.matmul(weights, by_row).transpose(1, 0, 2), dtype=np.float32)
+    flat = frames.reshape(n_frames, -1)
+    sums = np.empty((weights.shape[1], height * width), dtype=np.float32)
+    for start in range(0, height * width, _PIXELS_AT_ONCE):
+        stretch = slice(start, start + _PIXELS_AT_ONCE)
+        sums[:, stretch] = weights[0] @ flat[:, stretch].astype(np.float32)
+    return sums.reshape(-1, height, width)
 
 
 def _with_differences(stack: ResponseStack) -> ResponseStack:
