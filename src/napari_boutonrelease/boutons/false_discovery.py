@@ -50,7 +50,7 @@ def local_maxima(
 ) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
     """Rows and columns of maxima that nothing within `spacing_px` exceeds, highest first.
 
-    Touching pixels of the same value (evidence that is at its ceiling trial after trial) are one maximum, in their middle.
+    Touching pixels of the same value (evidence at its ceiling in every trial) are one maximum, in their middle.
     """
     from scipy.ndimage import center_of_mass, label, maximum_filter
 
