@@ -75,7 +75,7 @@ def measure_quanta(
     axon = fit_axon_release(
         amplitude,
         noise,
-        n_null=np.isfinite(fit.null_amplitude).sum(axis=1),
+        n_null=fit.n_null_effective,
         n_max=settings.quanta.n_max,
         q_cv=settings.quanta.q_cv,
         q_cv_doubt=settings.quanta.q_cv_doubt,

@@ -11,7 +11,6 @@ from typing import TYPE_CHECKING, Any
 
 from pydantic import ValidationError
 
-from napari_boutonrelease import __version__
 from napari_boutonrelease.errors import SavedAnalysisError
 from napari_boutonrelease.recording import Protocol, content_digest, protocol_from_dict, protocol_to_dict
 
@@ -131,9 +130,17 @@ def read_saved(path: str | Path) -> SavedAnalysis:
 def _versions() -> dict[str, str]:
     from importlib.metadata import version
 
-    packages = ("numpy", "scipy", "scikit-image", "tifffile", "pandas", "pydantic", "matplotlib")
+    packages = (
+        "napari-boutonrelease",
+        "numpy",
+        "scipy",
+        "scikit-image",
+        "tifffile",
+        "pandas",
+        "pydantic",
+        "matplotlib",
+    )
     return {
-        "napari-boutonrelease": __version__,
         "python": platform.python_version(),
         **{package: version(package) for package in packages},
     }

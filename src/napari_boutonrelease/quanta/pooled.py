@@ -20,7 +20,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
-from scipy.special import gammaln, logsumexp
+from scipy.special import gammaln
 
 from ..checks import check_array, check_positive
 from ..errors import InputError
@@ -35,9 +35,10 @@ if TYPE_CHECKING:
 _Q_STEP = 0.07  # of log q
 _Q_SPREADS = (0.04, 0.1, 0.2, 0.35)  # SD of log q between the boutons of an axon
 _Q_CVS = (0.1, 0.18, 0.26, 0.35, 0.45, 0.6)
-_TYPICAL_Q = (4.0, 0.8)  # weak prior of the axon's centre: q in noise SDs, and SD of its logarithm
+_TYPICAL_Q = (4.0, 0.5)  # weak prior of the axon's centre: q in noise SDs, and SD of its logarithm
 _NOISE_DOUBT = 0.02  # relative: nulls and evoked amplitudes are not measured at the same moments
 _INTERVAL = 0.95
+_N_SCALES = 3
 _SILENT = 0.5  # prior probability that a bouton never releases
 
 
@@ -181,7 +182,7 @@ def fit_axon_release(
     grid = _make_grid(a, sd, n_max=n_max)
     n_boutons, _, n_pulses = a.shape
     scales = [_noise_scales(count) for count in nulls]
-    shape = (len(scales[0][0]), len(grid.q), len(grid.q_cv), n_max, len(grid.p_release))
+    shape = (_N_SCALES, len(grid.q), len(grid.q_cv), n_max, len(grid.p_release))
     likelihood = np.zeros((n_boutons, n_pulses, *shape), dtype=np.float32)
     for b in range(n_boutons):
         for j in range(n_pulses):
@@ -190,18 +191,20 @@ def fit_axon_release(
             progress(b + 1, n_boutons)
 
     # Integrate over p_release pulse by pulse, then join the pulses: they share all else.
-    per_pulse = logsumexp(likelihood, axis=-1) - np.log(shape[-1])  # (bouton, pulse, scale, q, q_cv, n)
-    log_scale_prior = np.log(np.array([weights for _, weights in scales]))[:, :, None, None, None]
+    per_pulse = _log_sum(likelihood, axis=-1) - np.log(shape[-1])  # (bouton, pulse, scale, q, q_cv, n)
+    log_scale_prior = np.log([weights for _, weights in scales]).reshape(n_boutons, _N_SCALES, 1, 1, 1)
     joint = per_pulse.sum(axis=1) + log_scale_prior
     joint = joint + np.log(_prior_of_n(n_max))
-    silent = np.array(
-        [[_silent_log_likelihood(x, y, k) for k in values] for x, y, (values, _) in zip(a, sd, scales, strict=True)]
-    )
-    silent = logsumexp(silent + log_scale_prior[:, :, 0, 0, 0], axis=1)
-    marginal = logsumexp(joint, axis=(1, 4))  # (bouton, q, q_cv)
+    at_scales = [_silent_log_likelihood(x, y, values) for x, y, (values, _) in zip(a, sd, scales, strict=True)]
+    silent = _log_sum(np.reshape(at_scales, (n_boutons, _N_SCALES)) + log_scale_prior[:, :, 0, 0, 0], axis=1)
+    marginal = _log_sum(joint, axis=(1, 4))  # (bouton, q, q_cv)
     axon = _fit_axon(marginal, silent, grid, noise_sd=_median(sd), q_cv=q_cv, q_cv_doubt=q_cv_doubt)
     log_posterior = joint + axon.log_prior[:, None, :, :, None]
-    posterior = np.exp(log_posterior - logsumexp(log_posterior, axis=(1, 2, 3, 4), keepdims=True))
+    # A silent bouton tells nothing of q. Given that it releases after all, its own likelihood would choose a q too small
+    # to be seen; so it takes q as all the others have it.
+    told = np.where(axon.silent < 0.5, 0.0, 1.0)[:, None, None]
+    log_posterior -= (told * marginal)[:, None, :, :, None]
+    posterior = np.exp(log_posterior - _log_sum(log_posterior, axis=(1, 2, 3, 4), keepdims=True))
 
     p_release, p_lo, p_hi, evidence = (np.full((n_boutons, n_pulses), np.nan) for _ in range(4))
     p_site, site_lo, site_hi = (np.full((n_boutons, n_pulses), np.nan) for _ in range(3))
@@ -213,7 +216,7 @@ def fit_axon_release(
         full = posterior[b][..., None] * given
         of_p = full.sum(axis=(0, 1, 2, 3))
         p_release[b, j], p_lo[b, j], p_hi[b, j] = _quantiles_of_p(of_p, axon.silent[b])
-        evidence[b, j] = _evidence(full, likelihood[b, j], posterior[b])
+        evidence[b, j] = _evidence(likelihood[b, j], posterior[b])
         if evidence[b, j] < 1.92:
             p_lo[b, j] = 0.0
         of_site = full.sum(axis=(0, 1, 2))  # (n, p_release)
@@ -285,6 +288,13 @@ def _make_grid(a: Floats, sd: Floats, *, n_max: int) -> _Grid:
     )
 
 
+def _log_sum(values: NDArray[np.floating], *, axis: int | tuple[int, ...], keepdims: bool = False) -> Floats:
+    """Logarithm of the sum of exponentials; an axon without boutons is fine."""
+    largest = np.max(values, axis=axis, keepdims=True, initial=-1e30)
+    total = np.log(np.sum(np.exp(values - largest), axis=axis, keepdims=True)) + largest
+    return np.asarray(total if keepdims else np.squeeze(total, axis=axis))
+
+
 def _median(sd: Floats) -> float:
     usable = sd[np.isfinite(sd) & (sd > 0)]
     return float(np.median(usable)) if usable.size else 1.0
@@ -354,10 +364,10 @@ def _prior_of_n(n_max: int) -> Floats:
     return np.asarray(weights / weights.sum())
 
 
-def _silent_log_likelihood(a: Floats, sd: Floats, scale: float) -> float:
-    """Log-likelihood of a bouton that never releases, over that at the noise given."""
+def _silent_log_likelihood(a: Floats, sd: Floats, scales: Floats) -> Floats:
+    """Log-likelihood of a bouton that never releases, over that at the noise given, for each noise scale."""
     z = (a / sd)[np.isfinite(a)]
-    return float(-0.5 * np.sum(z**2) * (1.0 / scale**2 - 1.0) - z.size * np.log(scale))
+    return np.asarray(-0.5 * np.sum(z**2) * (1.0 / scales**2 - 1.0) - z.size * np.log(scales))
 
 
 def _fit_axon(
@@ -411,10 +421,13 @@ def _own_share(q_posterior: Floats, axon: _Axon, grid: _Grid) -> Floats:
     return np.asarray(np.clip(1.0 - variance / axon.prior_variance, 0.0, 1.0))
 
 
-def _evidence(full: Floats, likelihood: NDArray[np.float32], posterior: Floats) -> float:
+def _evidence(likelihood: NDArray[np.float32], posterior: Floats) -> float:
     """Log-likelihood ratio of the best p_release against the smallest, the rest integrated over its posterior."""
-    at_each_p = logsumexp(likelihood, axis=(0, 1, 2, 3), b=posterior[..., None])
-    return float(at_each_p.max() - at_each_p[0]) if np.isfinite(full).all() else float("nan")
+    largest = float(likelihood.max())
+    at_each_p = np.einsum("sqcn,sqcnp->p", posterior, np.exp(likelihood - largest, dtype=np.float64))
+    with np.errstate(divide="ignore"):
+        logarithm = np.log(at_each_p)
+    return float(logarithm.max() - logarithm[0])
 
 
 def _posterior_release(a: Floats, sd: Floats, scales: Floats, full: Floats, grid: _Grid) -> Floats:

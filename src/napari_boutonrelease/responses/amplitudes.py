@@ -32,6 +32,8 @@ _REST_HEIGHT = 0.05
 """Frames in which every response is below this share of its peak show the noise."""
 _LEAST_NULLS = 10
 """With fewer pseudo-stimuli their scatter is less certain than the theory."""
+_NO_GAP_NULLS = 50.0
+"""Without any gap the frames' scatter stands for the noise of amplitudes: taken to be right within 10 %."""
 _WORSE = 3.0
 """A pulse whose error is this many times the typical one, since frames are missing, is not used."""
 
@@ -59,6 +61,8 @@ class AmplitudeFit:
         A bouton each: `gaps` or `residuals`.
     noise_ratio : (n_boutons,) ndarray
         SD of the null amplitudes over the error that the scatter of single frames predicts; 1 without gaps.
+    n_null_effective : (n_boutons,) ndarray
+        Independent null amplitudes that would tell `noise_sd` as well as the bouton's own and the others' together.
     frame_sd : (n_boutons, n_trials) ndarray
         SD of single frames at the brightness of each trial, dF/F (counts where F0 is not usable).
     correlation : TimeCorrelation
@@ -78,6 +82,7 @@ class AmplitudeFit:
     noise_sd_counts: NDArray[np.float64]
     noise_from: tuple[str, ...]
     noise_ratio: NDArray[np.float64]
+    n_null_effective: NDArray[np.float64]
     frame_sd: NDArray[np.float64]
     correlation: TimeCorrelation
     windows: Windows
@@ -190,7 +195,7 @@ def fit_amplitudes(
         frame_sd=frame_sd,
         trials=trials,
     )
-    ratio, from_gaps = _noise_ratio(null_z, independent=_independent_share(nulls))
+    ratio, from_gaps, n_effective = _noise_ratio(null_z, independent=_independent_share(nulls))
     amplitude_se = amplitude_se * ratio[:, None, None]
     typical = _typical(amplitude_se)
     at_pulse = scale[:, first_pulse_frame]
@@ -209,6 +214,7 @@ def fit_amplitudes(
         noise_sd_counts=noise_counts,
         noise_from=tuple("gaps" if gaps else "residuals" for gaps in from_gaps),
         noise_ratio=ratio,
+        n_null_effective=n_effective,
         frame_sd=frame_sd,
         correlation=correlation,
         windows=trials,
@@ -283,7 +289,9 @@ def _independent_share(nulls: Windows) -> float:
     return min(1.0, 2.0 * np.count_nonzero(covered) / (length * nulls.start.size))
 
 
-def _noise_ratio(null_z: NDArray[np.float64], *, independent: float) -> tuple[NDArray[np.float64], NDArray[np.bool_]]:
+def _noise_ratio(
+    null_z: NDArray[np.float64], *, independent: float
+) -> tuple[NDArray[np.float64], NDArray[np.bool_], NDArray[np.float64]]:
     """SD of the null scores of each bouton, drawn towards the boutons' common value as far as chance explains them.
 
     The scatter of n null amplitudes is uncertain by 1/sqrt(2n). Boutons of one recording share the reasons for which
@@ -293,7 +301,7 @@ def _noise_ratio(null_z: NDArray[np.float64], *, independent: float) -> tuple[ND
     from_gaps = n >= _LEAST_NULLS
     ratio = np.ones(null_z.shape[0])
     if not from_gaps.any():
-        return ratio, from_gaps
+        return ratio, from_gaps, np.full(ratio.shape, _NO_GAP_NULLS)
     # About zero: null amplitudes of one gap share the error of their baseline, which their own mean would take out.
     sd = robust_sd(null_z[from_gaps], centre=0.0)
     log_sd = np.log(np.where(sd > 0, sd, 1.0))
@@ -303,7 +311,11 @@ def _noise_ratio(null_z: NDArray[np.float64], *, independent: float) -> tuple[ND
     common = np.sum(precision * log_sd) / (np.sum(precision) + 1.0 / 0.2**2)
     ratio[from_gaps] = np.exp(common + between / (chance + between) * (log_sd - common))
     ratio[~from_gaps] = np.exp(common)
-    return ratio, from_gaps
+    # The variance of the logarithm of an SD from n values is 1 / (2 n).
+    doubt = np.full(ratio.shape, between)
+    doubt[from_gaps] = between * chance / (between + chance)
+    doubt += 1.0 / (np.sum(precision) + 1.0 / 0.2**2)
+    return ratio, from_gaps, 0.5 / doubt
 
 
 def _typical(standard_errors: NDArray[np.float64]) -> NDArray[np.float64]:
