@@ -16,6 +16,10 @@ class ProtocolError(InputError):
     """The stimulation protocol is incomplete, contradicts itself or does not fit the movie."""
 
 
+class TooFewResponsesError(InputError):
+    """Too few stimuli can be fitted to look for boutons by their responses."""
+
+
 class BoutonFileError(InputError):
     """A file of bouton positions, a label image or an axon path cannot be used."""
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import warnings
 from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
@@ -12,13 +13,16 @@ from napari_boutonrelease.boutons import (
     Optics,
     build_footprints,
     detect_boutons,
+    detect_by_shape,
     distance_along,
+    estimate_spot_sigma,
     footprints_from_labels,
     project_responses,
     read_axon,
     read_positions,
     scan_shapes,
 )
+from napari_boutonrelease.errors import AnalysisWarning, TooFewResponsesError
 from napari_boutonrelease.response_shape import ResponseShape
 
 if TYPE_CHECKING:
@@ -147,28 +151,16 @@ def find_places(
     progress: Progress | None,
 ) -> Places:
     """Find the boutons by their responses and by their shape, and compute their weights."""
-    pre_s, post_s = map_window_s(timing, shape)
     pixel_um = timing.pixel_size_um or _UNKNOWN_PIXEL_UM
-    stack = project_responses(
+    found = _detect(
         movie,
         timing=timing,
         drift=drift,
+        optics=optics,
         shape=shape,
-        pre_s=pre_s,
-        post_s=post_s,
-        memory_bytes=_MAP_BYTES,
-        block_frames=BLOCK_FRAMES,
-        progress=progress,
-    )
-    found = detect_boutons(
-        stack,
-        spot_sigma_px=spot_sigma_px(settings.detection, pixel_size_um=timing.pixel_size_um),
-        spacing_px=settings.detection.spacing_um / pixel_um,
-        false_discovery=settings.detection.false_discovery,
-        shape_candidates=settings.detection.shape_candidates,
-        exclude=~optics.usable(),
+        settings=settings,
         rng=rng,
-        progress=None,
+        progress=progress,
     )
     footprints = build_footprints(
         y_px=found.y_px,
@@ -191,6 +183,51 @@ def find_places(
     )
 
 
+def _detect(
+    movie: Movie,
+    *,
+    timing: Timing,
+    drift: Drift,
+    optics: Optics,
+    shape: ResponseShape,
+    settings: Settings,
+    rng: np.random.Generator,
+    progress: Progress | None,
+) -> Detection:
+    """Find boutons by response and shape, or by shape alone where the responses are too few."""
+    pre_s, post_s = map_window_s(timing, shape)
+    sigma_px = spot_sigma_px(settings.detection, pixel_size_um=timing.pixel_size_um)
+    spacing_px = settings.detection.spacing_um / (timing.pixel_size_um or _UNKNOWN_PIXEL_UM)
+    exclude = ~optics.usable()
+    try:
+        stack = project_responses(
+            movie,
+            timing=timing,
+            drift=drift,
+            shape=shape,
+            pre_s=pre_s,
+            post_s=post_s,
+            memory_bytes=_MAP_BYTES,
+            block_frames=BLOCK_FRAMES,
+            progress=progress,
+        )
+    except TooFewResponsesError as error:
+        if not settings.detection.shape_candidates:
+            raise
+        warnings.warn(f"{error} Boutons are looked for by their shape alone.", AnalysisWarning, stacklevel=2)
+        return detect_by_shape(optics.mean_image, spot_sigma_px=sigma_px, spacing_px=spacing_px, exclude=exclude)
+    return detect_boutons(
+        stack,
+        spot_sigma_px=sigma_px,
+        spacing_px=spacing_px,
+        false_discovery=settings.detection.false_discovery,
+        shape_candidates=settings.detection.shape_candidates,
+        exclude=exclude,
+        rng=rng,
+        progress=None,
+    )
+
+
 def given_places(
     path: str | Path,
     *,
@@ -209,11 +246,14 @@ def given_places(
             given.label, optics=optics, spot_sigma_px=sigma, background_radius_px=radius
         )
     else:
+        measured = estimate_spot_sigma(
+            optics.mean_image, y_px=given.y_px, x_px=given.x_px, start_sigma_px=sigma, usable=optics.usable()
+        )
         footprints = build_footprints(
             y_px=given.y_px,
             x_px=given.x_px,
             optics=optics,
-            spot_sigma_px=sigma,
+            spot_sigma_px=measured,
             background_radius_px=radius,
             mode=settings.detection.footprint,
             response_image=None,

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from .detection import Detection, detect_boutons
+from .detection import Detection, detect_boutons, detect_by_shape
 from .evidence import MatchedMaps, matched_filter, mixture_evidence, release_posterior, standardise
 from .false_discovery import FalseRate, measure_false_rate
 from .footprints import (
@@ -29,6 +29,7 @@ __all__ = [
     "build_footprints",
     "crosstalk_matrix",
     "detect_boutons",
+    "detect_by_shape",
     "distance_along",
     "estimate_spot_sigma",
     "find_shape_candidates",

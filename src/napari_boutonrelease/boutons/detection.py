@@ -193,6 +193,42 @@ def detect_boutons(
     return detection
 
 
+def detect_by_shape(
+    mean_image: NDArray[np.floating], *, spot_sigma_px: float, spacing_px: float, exclude: NDArray[np.bool_]
+) -> Detection:
+    """Find boutons by their shape in the mean image alone, where the responses are too few to look for any.
+
+    Parameters
+    ----------
+    mean_image : (y, x) ndarray
+        Mean of the movement-corrected frames (counts).
+    spot_sigma_px, spacing_px, exclude
+        As for `detect_boutons`.
+
+    Returns
+    -------
+    Detection
+        Without evidence: 0 everywhere, and NaN for the cuts and the number of false ones.
+    """
+    found = find_shape_candidates(
+        mean_image, spot_sigma_px=spot_sigma_px, spacing_px=_CLOSEST * spacing_px, exclude=exclude
+    )
+    order = np.lexsort((found.x_px, found.y_px))
+    nothing = float("nan")
+    return Detection(
+        y_px=found.y_px[order],
+        x_px=found.x_px[order],
+        found_by=("shape",) * len(order),
+        score=np.zeros(len(order)),
+        shape_contrast=found.contrast[order],
+        evidence=np.zeros(mean_image.shape, dtype=np.float32),
+        cut=nothing,
+        cut_at_shape=nothing,
+        expected_false=nothing,
+        spot_sigma_px=spot_sigma_px,
+    )
+
+
 def _share_seen(exclude: NDArray[np.bool_], *, spot_sigma_px: float) -> NDArray[np.float64]:
     """Return the share of a spot's energy that usable pixels hold, for a spot on each pixel."""
     from scipy.ndimage import gaussian_filter

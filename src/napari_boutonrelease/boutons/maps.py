@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from ..errors import InputError
+from ..errors import TooFewResponsesError
 from ..recording.cubic_convolution import shift_frame_block
 from .evidence import matched_filter
 from .windows import Projection, null_windows, project, trial_windows
@@ -107,8 +107,8 @@ def project_responses(
 
     Raises
     ------
-    InputError
-        If fewer than two pulses can be fitted.
+    TooFewResponsesError
+        If fewer than two pulses can be fitted, or neither stimulus-free time nor a second trial shows the noise.
     """
     height, width = movie.shape[1:]
     most = max(int(memory_bytes / (4 * height * width)), 16)
@@ -121,7 +121,7 @@ def project_responses(
     evoked = _thin(evoked, most=most // 2)
     n_evoked = sum(len(projection.factor) for projection in evoked)
     if n_evoked < 2:
-        raise InputError(
+        raise TooFewResponsesError(
             f"{movie.name}: {n_evoked} of {len(timing.stimulus_s)} trials can be fitted with a baseline of {pre_s:g} s "
             f"and a response of {post_s:g} s; at least 2 are needed. Check the stimulus times, the frame interval and "
             "the frames left out."
@@ -335,7 +335,7 @@ def _with_differences(stack: ResponseStack) -> ResponseStack:
         later.append(same[1:])
     first, second = np.concatenate(earlier), np.concatenate(later)
     if not len(first):
-        raise InputError(
+        raise TooFewResponsesError(
             "The recording holds neither two trials of the same pulse nor stimulus-free time: its noise cannot be "
             "measured. Record more trials."
         )
