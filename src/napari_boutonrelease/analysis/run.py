@@ -10,7 +10,7 @@ import numpy as np
 
 from napari_boutonrelease.boutons import Optics
 from napari_boutonrelease.errors import AnalysisWarning
-from napari_boutonrelease.recording import measure_drift, measure_light, no_drift, resolve_timing
+from napari_boutonrelease.recording import fill_dead, measure_drift, measure_light, no_drift, resolve_timing
 from napari_boutonrelease.responses import (
     ASSUMED_SHAPE,
     Responses,
@@ -160,6 +160,7 @@ def measure(
     light = measure_light(
         movie, camera_offset=timing.camera_offset, block_frames=BLOCK_FRAMES, progress=steps.step("light")
     )
+    movie = fill_dead(movie, dead=light.dead)
     if settings.recording.correct_motion:
         drift = measure_drift(
             movie,

@@ -74,8 +74,8 @@ def _population(measured: Measured) -> dict[str, Any]:
     axon, pairs = measured.quanta.axon, measured.quanta.pairs
     known = np.isfinite(axon.p_release[:, 0])
     selected = np.array([way in ("responses", "both") for way in measured.places.found_by], dtype=bool) & known
-    p_all = _mean_with_interval(axon.p_release[known, 0])
-    p_selected = _mean_with_interval(axon.p_release[selected, 0])
+    p_all = _mean_with_interval(axon.p_release[known, 0], upper_limits=axon.p_release_hi[known, 0])
+    p_selected = _mean_with_interval(axon.p_release[selected, 0], upper_limits=axon.p_release_hi[selected, 0])
     ratios = np.array([np.nan if pair is None else pair.ppr.value for pair in pairs])
     ppr = _population_ratio(measured, known)
     return {
@@ -119,11 +119,15 @@ def _selection_in_words(measured: Measured, known: NDArray[np.bool_]) -> str:
     return f"{by_response} boutons found by their responses and {by_shape} by shape alone, silent ones among them"
 
 
-def _mean_with_interval(values: NDArray[np.float64]) -> tuple[float | None, float | None, float | None]:
-    """Mean over boutons and its 95 % interval (Student's t over boutons)."""
+def _mean_with_interval(
+    values: NDArray[np.float64], *, upper_limits: NDArray[np.float64]
+) -> tuple[float | None, float | None, float | None]:
+    """Mean over boutons and its 95 % interval (Student's t over boutons; of silent ones the mean of their limits)."""
     if values.size == 0:
         return None, None, None
     mean = float(values.mean())
+    if not values.any():
+        return 0.0, 0.0, float(upper_limits.mean())
     if values.size < 2:
         return mean, None, None
     from scipy.special import stdtrit
@@ -145,6 +149,8 @@ def _population_ratio(measured: Measured, known: NDArray[np.bool_]) -> tuple[flo
     if there.sum() < 3 or first[there].mean() <= 0:
         return None, None, None
     estimate = fieller_interval(second[there], first[there], confidence=CONFIDENCE)
+    if not estimate.bounded:
+        return None, None, None
     return _number(estimate.ratio), _number(estimate.lo), _number(estimate.hi)
 
 
