@@ -221,14 +221,15 @@ def photon_limit_sd(measured: Measured) -> NDArray[np.float64]:
         height, width = weights.shape
         pixels = variance[y0 : y0 + height, x0 : x0 + width]
         frame_sd = float(np.sqrt(np.sum(weights**2 * pixels)))
-        measured_sd = np.nanmedian(fit.frame_sd[b] * np.nanmean(baseline.f0[b])) if baseline.usable[b] else np.nan
+        known = fit.frame_sd[b][np.isfinite(fit.frame_sd[b])]
+        measured_sd = np.median(known) * np.nanmean(baseline.f0[b]) if baseline.usable[b] and known.size else np.nan
         if measured_sd > 0 and fit.noise_ratio[b] > 0:
             limit[b] = fit.noise_sd[b] / fit.noise_ratio[b] * frame_sd / measured_sd
     return limit
 
 
 def crosstalk(measured: Measured) -> NDArray[np.float64]:
-    """Return the share of each bouton's mean amplitude that it would have read of its neighbours, were they not separated."""
+    """Return the share of each bouton's mean amplitude that its neighbours would give it, were they not separated."""
     fit = measured.responses.amplitudes
     mean, _ = _mean_and_se(fit.amplitude_counts[:, :, 0]) if len(measured.places.bouton) else (np.empty(0), None)
     response = np.maximum(np.nan_to_num(mean), 0.0)

@@ -59,6 +59,8 @@ def find_shape_candidates(
     """
     from scipy.ndimage import distance_transform_edt, gaussian_filter
 
+    if exclude.all():
+        return ShapeCandidates(y_px=np.empty(0), x_px=np.empty(0), contrast=np.empty(0))
     # The nearest usable pixel stands in for an unusable one: an axon that leaves the image goes on instead of ending in
     # what would look like half a spot.
     nearest = distance_transform_edt(exclude, return_distances=False, return_indices=True)

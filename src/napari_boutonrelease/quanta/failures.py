@@ -134,7 +134,8 @@ def vesicles_from_cv(amplitudes: ArrayLike, *, noise_sd: float, q_cv: float, con
         - 4.0 * third / (usable.size * mean * release_variance)
     )
     log_se = float(np.sqrt(max(log_variance, 0.0)))
-    spread = float(np.exp(_normal_quantile(confidence) * log_se))
+    with np.errstate(over="ignore"):  # an interval may have no end
+        spread = float(np.exp(_normal_quantile(confidence) * log_se))
     return Estimate(value=m, se=m * log_se, lo=m / spread, hi=m * spread, method="delta on the logarithm")
 
 

@@ -7,7 +7,7 @@ import re
 import warnings
 from bisect import bisect_right
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from itertools import accumulate
 from pathlib import Path
 from typing import Any, Protocol
@@ -128,6 +128,45 @@ class ArrayFrames:
     def read(self, start: int, stop: int) -> NDArray[Any]:
         """Return frames (frame, y, x) in native byte order."""
         return np.asarray(self.array[start:stop]).astype(self.dtype, copy=False)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class FilledFrames:
+    """Frames whose dead pixels show what their nearest neighbour shows."""
+
+    movie: Movie
+    dead: NDArray[np.bool_]
+    neighbour: tuple[NDArray[np.intp], NDArray[np.intp]]
+
+    def read(self, start: int, stop: int) -> NDArray[Any]:
+        """Return frames (frame, y, x) in native byte order."""
+        frames = self.movie.read(start, stop).copy()
+        frames[:, self.dead] = frames[:, self.neighbour[0], self.neighbour[1]]
+        return frames
+
+
+def fill_dead(movie: Movie, *, dead: NDArray[np.bool_]) -> Movie:
+    """Let dead pixels show what their nearest neighbour shows, so that resampling does not spread them.
+
+    A pixel that holds no number would otherwise leave none around it.
+
+    Parameters
+    ----------
+    movie : Movie
+    dead : (y, x) ndarray of bool
+
+    Returns
+    -------
+    Movie
+        Read as lazily as before; `movie` itself where no pixel, or every pixel, is dead.
+    """
+    from scipy.ndimage import distance_transform_edt
+
+    if not dead.any() or dead.all():
+        return movie
+    y, x = distance_transform_edt(dead, return_distances=False, return_indices=True)
+    filled = FilledFrames(movie=movie, dead=dead, neighbour=(y[dead], x[dead]))
+    return replace(movie, sources=(filled,), source_frames=(movie.shape[0],))
 
 
 def movie_from_array(
