@@ -1,0 +1,436 @@
+"""Makes explanation/validation.md: simulate, analyse, compare with the truth and with an ideal observer.
+
+`python docs/make_validation.py RECORDS` keeps one file a simulated recording in the folder RECORDS and makes only those
+that are missing; then it writes the page. `--only-write` makes none and takes what is there.
+"""
+
+from __future__ import annotations
+
+import argparse
+import json
+import sys
+from datetime import UTC, datetime
+from pathlib import Path
+
+import numpy as np
+
+HERE = Path(__file__).parent
+sys.path.insert(0, str(HERE.parent / "tests" / "recovery"))
+
+import study  # noqa: E402
+import summary  # noqa: E402
+from population import AXONS, Population, study_axons, summarise  # noqa: E402
+
+import napari_boutonrelease  # noqa: E402
+
+MOVIES = {
+    "fast-pair": 16,
+    "dim": 16,
+    "mixed": 8,
+    "crowded": 10,
+    "crowded-silent": 8,
+    "silent": 20,
+    "equal-25ms": 8,
+    "slow-decay": 8,
+}
+PAGE = HERE / "explanation" / "validation.md"
+
+
+def main() -> None:
+    """Run the studies that are missing and write the page."""
+    parser = argparse.ArgumentParser(description=__doc__)
+    parser.add_argument("records", type=Path, help="folder that keeps what was found of each simulated recording")
+    parser.add_argument("--only-write", action="store_true", help="run nothing; take the records that are there")
+    given = parser.parse_args()
+    given.records.mkdir(parents=True, exist_ok=True)
+    movies, axons = {}, {}
+    for name, (population, n_axons) in AXONS.items():
+        axons[name] = (population, n_axons, _axons(name, population, n_axons, given))
+    for name, count in MOVIES.items():
+        seeds = range(1, count + 1)
+        if given.only_write:
+            seeds = [seed for seed in seeds if (given.records / f"{name}-{seed}.json").exists()]
+        movies[name] = study.studied(name, seeds=seeds, folder=given.records, progress=_tell)
+    PAGE.write_text(_page(movies, axons), encoding="utf-8")
+    print(f"{PAGE} written")
+
+
+def _axons(name: str, population: Population, n_axons: int, given: argparse.Namespace) -> dict[str, np.ndarray] | None:
+    path = given.records / f"axons-{name}.json"
+    if not path.exists():
+        if given.only_write:
+            return None
+        found = study_axons(population, axons=n_axons, rng=np.random.default_rng(11))
+        path.write_text(json.dumps({key: values.tolist() for key, values in found.items()}), encoding="utf-8")
+        _tell(name, 11)
+    return {key: np.array(values) for key, values in json.loads(path.read_text(encoding="utf-8")).items()}
+
+
+def _tell(name: str, seed: int) -> None:
+    print(f"{datetime.now(tz=UTC):%H:%M:%S} {name} seed {seed}", flush=True)
+
+
+def _page(movies: dict, axons: dict) -> str:
+    movies = {name: records for name, records in movies.items() if records}
+    parts = [
+        _INTRODUCTION.format(version=napari_boutonrelease.__version__),
+        "## The recordings\n",
+        _table(
+            ("scenario", "movies (seeds)", "boutons a movie", "trials × pulses", "what differs from the preset"),
+            [_scenario(name, records) for name, records in movies.items()],
+        ),
+        "## Finding boutons\n\n" + _FINDING,
+        _finding(movies),
+        "## Amplitudes\n\n" + _AMPLITUDES,
+        _amplitudes(movies),
+        "## Release probability and single calls\n\n" + _RELEASE,
+        _release(movies),
+        _calls(movies),
+        "## Neighbours\n\n" + _NEIGHBOURS,
+        _neighbours(movies),
+        "## Pulse pairs\n\n" + _PAIRS,
+        _pairs(movies),
+        "## Numbers of sites\n\n" + _SITES,
+        _sites(movies),
+        "## The statistics alone, without movies\n\n" + _AXONS,
+        _statistics(axons),
+        _silent_axons(axons),
+    ]
+    return "\n".join(part if part.endswith("\n") else part + "\n" for part in parts)
+
+
+def _scenario(name, records):
+    preset, changes = study.SCENARIOS[name]
+    recipe = study.scenario_recipe(name)
+    seeds = [record["seed"] for record in records]
+    differs = ", ".join(f"`{key}={value}`" for key, value in changes.items()) or "nothing"
+    return (
+        name if name == preset else f"{name} (preset {preset})",
+        f"{len(seeds)} ({min(seeds)} to {max(seeds)})",
+        recipe.n_boutons,
+        f"{recipe.trials} × {recipe.pulses}",
+        differs,
+    )
+
+
+def _finding(movies):
+    rows = []
+    for name, records in movies.items():
+        one = summary.detection(records)
+        rows.append(
+            (
+                name,
+                f"{one['recall']:.3f} of {one['clear']}" if one["clear"] else "",
+                f"{one['recall_all']:.3f} of {one['releasing']}" if one["releasing"] else "",
+                f"{one['false_share']:.3f} ({one['false_by_responses']})" if one["releasing"] else "",
+                f"{one['movies_with_false']} of {one['movies']}",
+                f"{one['never_called_releasing']} of {one['never']}",
+                _number(one["position_rms_um"]),
+                _number(one["drift_rms_px"]),
+            )
+        )
+    header = (
+        "scenario",
+        "recall, clear",
+        "recall, all releasing",
+        "false share (count)",
+        "movies with a false one",
+        "never-releasing ones called releasing",
+        "position error, RMS (µm)",
+        "drift error, RMS (px)",
+    )
+    return _table(header, rows)
+
+
+def _amplitudes(movies):
+    rows = []
+    for name, records in _with_release(movies):
+        one = summary.amplitudes(summary.releasing(records))
+        ours, observer = one["ours"], one["observer"]
+        rows.append(
+            (
+                name,
+                one["boutons"],
+                f"{one['snr']:.1f}",
+                f"{ours['error_over_limit']:.3f}",
+                f"{observer['error_over_limit']:.3f}",
+                f"{ours['failure_over_limit']:.3f}",
+                f"{1 / ours['failure_over_stated']:.3f}",
+                f"{ours['scale']:.3f} ± {ours['scale_sd']:.3f}",
+                f"{observer['scale']:.3f} ± {observer['scale_sd']:.3f}",
+            )
+        )
+    header = (
+        "scenario",
+        "boutons",
+        "median q / limit",
+        "error SD / limit",
+        "observer's",
+        "failures' SD / limit",
+        "stated noise / failures' SD",
+        "scale, mean ± SD",
+        "observer's",
+    )
+    return _table(header, rows)
+
+
+def _release(movies):
+    rows = []
+    for name, records in _with_release(movies):
+        boutons = summary.releasing(records)
+        for pulse in range(len(boutons[0]["p"])):
+            rows.append((f"{name}, pulse {pulse + 1}", *_release_row(summary.release(boutons, pulse=pulse))))
+        if len(boutons[0]["p"]) > 1:
+            rows.append((f"{name}, all", *_release_row(summary.release(boutons))))
+    return _table(_RELEASE_HEADER, rows)
+
+
+def _release_row(one):
+    low, high = one["ratio_interval"]
+    return (
+        one["values"],
+        f"{one['bias']:+.4f} ± {one['bias_se']:.4f}",
+        f"{one['rms']:.4f}",
+        f"{one['rms_same']:.4f}",
+        f"{one['rms_known']:.4f}",
+        f"{one['ratio']:.3f} ({low:.2f} to {high:.2f})",
+        f"{one['coverage']:.3f} ± {one['coverage_se']:.3f}",
+    )
+
+
+def _calls(movies):
+    rows = []
+    for name, records in _with_release(movies):
+        one = summary.calls(summary.releasing(records))
+        rows.append(
+            (
+                name,
+                f"{100 * one['ours']:.2f} %",
+                f"{100 * one['observer']:.2f} %",
+                f"{100 * one['known']:.2f} %",
+                f"{one['ours'] / one['observer']:.2f}",
+            )
+        )
+    return _table(("scenario", "wrong calls", "observer's", "with everything known", "ours / observer's"), rows)
+
+
+def _neighbours(movies):
+    rows = []
+    for name in ("crowded", "crowded-silent"):
+        boutons = summary.releasing(movies.get(name, []), near_um=(0.8, 1.2))
+        if boutons:
+            rows.append((name, *_release_row(summary.release(boutons))))
+    return _table(_RELEASE_HEADER, rows)
+
+
+def _pairs(movies):
+    rows = []
+    for name, records in _with_release(movies):
+        boutons = [spot for spot in summary.releasing(records) if "ppr" in spot["ours"]]
+        if not boutons:
+            continue
+        one = summary.pulse_pairs(boutons)
+        ours, observer = one["ours"], one["observer"]
+        rows.append(
+            (
+                name,
+                ours["boutons"],
+                f"{ours['bias']:+.3f} ± {ours['bias_se']:.3f}",
+                f"{observer['bias']:+.3f} ± {observer['bias_se']:.3f}",
+                f"{ours['pooled']:.3f} (true {ours['pooled_true']:.3f})",
+                f"{ours['coverage']:.3f}",
+                ", ".join(f"{count} {verdict or 'undefined'}" for verdict, count in one["verdicts"].items()),
+            )
+        )
+    header = (
+        "scenario",
+        "boutons",
+        "bias of PPR",
+        "observer's",
+        "ratio of all means",
+        "intervals that hold the truth",
+        "verdicts",
+    )
+    return _table(header, rows)
+
+
+def _sites(movies):
+    rows = []
+    for name, records in _with_release(movies):
+        one = summary.sites(summary.releasing(records))
+        ours, observer = one["ours"], one["observer"]
+        rows.append(
+            (
+                name,
+                one["boutons"],
+                f"{ours['right']:.3f}",
+                f"{observer['right']:.3f}",
+                f"{ours['in_set']:.3f}",
+                f"{ours['unresolved']:.2f}",
+                f"{observer['unresolved']:.2f}",
+            )
+        )
+    header = (
+        "scenario",
+        "boutons",
+        "exactly right",
+        "observer's",
+        "true n in `n_set`",
+        "`n_unresolved`",
+        "observer's",
+    )
+    return _table(header, rows)
+
+
+def _statistics(axons):
+    rows = []
+    for population, n_axons, found in axons.values():
+        if found is None:
+            continue
+        keep = found["p"][:, 0] > 0
+        if not keep.any():
+            continue
+        one = summarise({key: values[keep] for key, values in found.items()})
+        rows.append(
+            (
+                _of_population(population),
+                f"{n_axons}",
+                one["values"],
+                f"{one['bias']:+.4f} ± {one['bias_se']:.4f}",
+                f"{one['rms']:.4f}",
+                f"{one['rms_if_known']:.4f}",
+                f"{one['ratio']:.3f}",
+                f"{one['coverage']:.3f}",
+                f"{one['wrong'] / one['wrong_if_known']:.2f}",
+                f"{one['n_right']:.2f} / {one['n_in_set']:.3f}",
+            )
+        )
+    header = (
+        "axons",
+        "number",
+        "values",
+        "bias",
+        "RMS error",
+        "all but p known",
+        "ratio",
+        "coverage",
+        "wrong calls / all known",
+        "n right / in set",
+    )
+    return _table(header, rows)
+
+
+def _silent_axons(axons):
+    rows = []
+    for population, _, found in axons.values():
+        if found is None or not population.silent:
+            continue
+        never = found["p"][:, 0] == 0
+        rows.append(
+            (
+                _of_population(population),
+                int(never.sum()),
+                f"{np.sqrt(np.mean(found['estimate'][never] ** 2)):.4f}",
+                f"{np.median(found['hi'][never]):.3f}, {found['hi'][never].max():.3f}",
+                f"{np.mean(found['lo'][never] == 0):.3f}",
+                f"{np.mean(found['silent_probability'][never] > 0.5):.3f}",
+            )
+        )
+    header = (
+        "axons",
+        "silent boutons",
+        "RMS of p_release",
+        "upper limit: median, largest",
+        "interval includes 0",
+        "said to be silent",
+    )
+    return _table(header, rows)
+
+
+def _of_population(one: Population) -> str:
+    parts = [f"q/noise {one.q:g}"]
+    if one.pulses > 1:
+        parts.append("paired")
+    if one.boutons == 1:
+        parts.append("one bouton alone")
+    if one.trials != 80:
+        parts.append(f"{one.trials} trials")
+    if one.silent:
+        parts.append(f"{one.silent} of {one.boutons} silent")
+    if one.p_release != (0.1, 0.9):
+        parts.append("p {:g} to {:g}".format(*one.p_release))
+    return ", ".join(parts)
+
+
+def _with_release(movies):
+    return [(name, records) for name, records in movies.items() if summary.releasing(records)]
+
+
+def _number(value: float) -> str:
+    return f"{value:.3f}" if np.isfinite(value) else ""
+
+
+def _table(header, rows) -> str:
+    lines = [header, ["---"] * len(header), *rows]
+    return "\n".join("| " + " | ".join(str(cell) for cell in line) + " |" for line in lines) + "\n"
+
+
+_RELEASE_HEADER = (
+    "",
+    "values",
+    "bias",
+    "RMS error",
+    "observer, same inference",
+    "observer, all but p known",
+    "ratio to the latter (95 % interval)",
+    "coverage",
+)
+
+_INTRODUCTION = """# How good are the numbers?
+
+Recordings are simulated vesicle by vesicle and photon by photon, analysed with the default settings like any recording,
+and compared with what truly happened. The simulation shares no code with the analysis.
+
+The yardstick is an *ideal observer*: the same likelihood, but amplitudes read with the true footprints, light, kinetics
+and drift. What nobody can know remains unknown to it, too: the baseline of each trial and, frame by frame, the local
+background and the neighbours' brightness. It then makes the same inference as the analysis (`same inference`), or it
+also knows the number of sites, q, the variation of q and the noise, and only `p_release` is left to find by maximum
+likelihood (`all but p known`). The smallest error that any amplitude can have is the Cramér-Rao limit of that
+likelihood for a response in darkness: it leaves out the photons of the responses themselves and the fluctuation of the
+diffuse light.
+
+This page is made by `python docs/make_validation.py RECORDS` (version {version}); every number in it is measured.
+"""
+_FINDING = """A bouton is *clear* if one vesicle is at least 3 times the Cramér-Rao SD and it releases in at least one
+trial in ten. Found is what lies within 0.5 µm. False are those found by responses (`found_by` says `responses` or
+`both`) where nothing releases. Specks and silent boutons that the shape finds must not be called releasing: they are
+flagged `silent` or their interval of `p_release` includes 0.
+
+Required: recall at least 0.95, false share at most 0.05, positions within 0.1 µm; an axon that never releases gives no
+bouton by responses in 19 of 20 recordings.
+"""
+_AMPLITUDES = """The error of an amplitude is estimate minus truth, the scale of each bouton (what an error of its F0
+does) taken out; SD by the robust estimator that spontaneous releases do not move.
+
+Required: error SD at most 1.15 times the limit; the stated noise is the SD of failures within 10 %.
+"""
+_RELEASE = """Required: bias less than 0.01, RMS error at most 1.15 times that of the observer who knows all but p at
+q/noise of 4 and more, at most 1.3 times at about 2; 93 to 97 % of the 95 % intervals hold the truth.
+"""
+_NEIGHBOURS = """Boutons with a neighbour 0.8 to 1.2 µm away.
+"""
+_PAIRS = """Required: no bias beyond chance, 93 to 97 % of the intervals hold the truth. In `equal-25ms` both pulses
+release alike, 25 ms apart with a decay of 100 ms: PPR is 1. In `slow-decay` they do so, too, and a fifth of the
+response decays with 400 ms: its tail must not pass for facilitation.
+"""
+_SITES = """Required: exactly right at least 0.95 times as often as the observer; the true number in `n_set` in at
+least 93 %.
+"""
+_AXONS = """Amplitudes are drawn directly: `p_release` even between 0.1 and 0.9, 1 to 4 sites, q with a spread of 10 %
+between boutons, gamma vesicles of CV 0.3, 8 boutons with 80 trials where nothing else is said, the noise known from 300
+null amplitudes. Seed 11.
+"""
+
+
+if __name__ == "__main__":
+    main()
