@@ -46,6 +46,7 @@ from .threshold import (
     peak_false_call_rate,
     rogan_gladen,
 )
+from .vesicle_sizes import gamma_vesicles_logpdf
 
 __all__ = [
     "Estimate",
@@ -75,6 +76,7 @@ __all__ = [
     "fit_binomial",
     "fit_poisson_histogram",
     "fit_sites",
+    "gamma_vesicles_logpdf",
     "jeffreys_interval",
     "mcnemar_test",
     "measure_history",

@@ -24,6 +24,7 @@ from scipy.special import gammaln
 
 from ..checks import check_array, check_positive
 from ..errors import InputError
+from .vesicle_sizes import gamma_vesicles_logpdf
 
 if TYPE_CHECKING:
     from collections.abc import Callable
@@ -200,8 +201,8 @@ def fit_axon_release(
     marginal = _log_sum(joint, axis=(1, 4))  # (bouton, q, q_cv)
     axon = _fit_axon(marginal, silent, grid, noise_sd=_median(sd), q_cv=q_cv, q_cv_doubt=q_cv_doubt)
     log_posterior = joint + axon.log_prior[:, None, :, :, None]
-    # A silent bouton tells nothing of q. Given that it releases after all, its own likelihood would choose a q too small
-    # to be seen; so it takes q as all the others have it.
+    # A silent bouton tells nothing of q. Given that it releases after all, its own likelihood would choose a q too
+    # small to be seen; so it takes q as all the others have it.
     told = np.where(axon.silent < 0.5, 0.0, 1.0)[:, None, None]
     log_posterior -= (told * marginal)[:, None, :, :, None]
     posterior = np.exp(log_posterior - _log_sum(log_posterior, axis=(1, 2, 3, 4), keepdims=True))
@@ -307,20 +308,14 @@ def _noise_scales(n_null: float) -> tuple[Floats, Floats]:
 
 
 def _densities(a: Floats, sd: Floats, scale: float, grid: _Grid) -> tuple[NDArray[np.float32], Floats]:
-    """Density of each amplitude given m vesicles, over its largest: (q * q_cv, vesicles, trials); log of the largest.
-
-    Noise plus m gamma-distributed vesicles, by the Pearson type III density of the same mean, variance and skewness.
-    """
-    m = np.arange(grid.n_max + 1)[None, :, None]
-    q = np.repeat(grid.q, len(grid.q_cv))[:, None, None]
-    quantal_sd = q * np.tile(grid.q_cv, len(grid.q))[:, None, None]
-    variance = (scale * sd) ** 2 + m * quantal_sd**2
-    cubed = np.tile(grid.q_cv, len(grid.q))[:, None, None] * quantal_sd**3
-    skew = np.maximum(2.0 * m * cubed / variance**1.5, 0.02)  # 0.02 stands for the normal limit
-    shape = 4.0 / skew**2
-    z = np.maximum((a - m * q) / np.sqrt(variance), -1.95 / skew)
-    log_scale = np.log(2.0 / skew) + (shape - 1.0) * np.log(shape) - shape - gammaln(shape) - 0.5 * np.log(variance)
-    log_density = log_scale + (shape - 1.0) * np.log1p(z * skew / 2.0) - 2.0 * z / skew
+    """Density of each amplitude given m vesicles, over its largest (q * q_cv, vesicles, trials); log of the largest."""
+    log_density = gamma_vesicles_logpdf(
+        a,
+        vesicles=np.arange(grid.n_max + 1)[None, :, None],
+        q=np.repeat(grid.q, len(grid.q_cv))[:, None, None],
+        q_cv=np.tile(grid.q_cv, len(grid.q))[:, None, None],
+        noise_sd=scale * sd,
+    )
     largest = log_density.max(axis=1)
     return np.exp(log_density - largest[:, None, :]).astype(np.float32), largest
 
