@@ -342,22 +342,9 @@ def _locate(reference: Reference, frames: NDArray[np.generic], max_shift_px: flo
     if apart.size:
         again = reference.locate(frames[apart], dy=usual_y[apart], dx=usual_x[apart], max_shift_px=max_shift_px)
         better = again.misfit < fit.misfit[apart]
-        _put(fit, apart[better], again, better)
-    usual_misfit = np.percentile(fit.misfit, 25)
-    flashing = np.flatnonzero(fit.misfit > usual_misfit * (1.0 + 3.0 * np.sqrt(2.0 / np.maximum(fit.n_pixels, 1.0))))
-    if flashing.size:
-        again = reference.locate_despite_flashes(frames[flashing], _take(fit, flashing), max_shift_px=max_shift_px)
-        _put(fit, flashing, again, np.ones(flashing.size, dtype=np.bool_))
-    return fit
-
-
-def _take(fit: Fit, which: NDArray[np.intp]) -> Fit:
-    return Fit(**{name: getattr(fit, name)[which] for name in Fit.__slots__})
-
-
-def _put(fit: Fit, where: NDArray[np.intp], other: Fit, which: NDArray[np.bool_]) -> None:
-    for name in Fit.__slots__:
-        getattr(fit, name)[where] = getattr(other, name)[which]
+        for name in Fit.__slots__:
+            getattr(fit, name)[apart[better]] = getattr(again, name)[better]
+    return reference.locate_despite_flashes(frames, fit, max_shift_px=max_shift_px)
 
 
 def _judge(fit: Fit) -> tuple[FloatArray, NDArray[np.bool_]]:
