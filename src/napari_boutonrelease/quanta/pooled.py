@@ -20,11 +20,20 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
-from scipy.special import gammaln
 
 from ..checks import check_array, check_positive
 from ..errors import InputError
-from .vesicle_sizes import gamma_vesicles_logpdf
+from .axon_quanta import fit_axon_quanta, log_quantiles, own_share, weighted_interval
+from .release_grid import (
+    N_SCALES,
+    ReleaseGrid,
+    integrated_likelihood,
+    log_sum,
+    make_grid,
+    mixtures,
+    noise_scales,
+    silent_likelihood,
+)
 
 if TYPE_CHECKING:
     from collections.abc import Callable
@@ -33,14 +42,9 @@ if TYPE_CHECKING:
 
     Floats = NDArray[np.float64]
 
-_Q_STEP = 0.07  # of log q
-_Q_SPREADS = (0.04, 0.1, 0.2, 0.35)  # SD of log q between the boutons of an axon
-_Q_CVS = (0.1, 0.18, 0.26, 0.35, 0.45, 0.6)
-_TYPICAL_Q = (4.0, 0.5)  # weak prior of the axon's centre: q in noise SDs, and SD of its logarithm
-_NOISE_DOUBT = 0.02  # relative: nulls and evoked amplitudes are not measured at the same moments
 _INTERVAL = 0.95
-_N_SCALES = 3
-_SILENT = 0.5  # prior probability that a bouton never releases
+_IN_LIKELIHOOD_INTERVAL = 1.92  # half the 95 % point of chi-squared with one degree of freedom
+_NEGLIGIBLE = 1e-4  # of the most probable point
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -111,18 +115,6 @@ class AxonRelease:
     noise_scale: Floats
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
-class _Grid:
-    """The points at which the likelihood is known. Axes everywhere: noise scale, q, q_cv, n_sites, p_release."""
-
-    q: Floats
-    q_cv: Floats
-    p_release: Floats
-    p_site: Floats  # (n, p_release)
-    weights: NDArray[np.float32]  # (n * p_release, vesicles)
-    n_max: int
-
-
 def fit_axon_release(
     amplitude: ArrayLike,
     amplitude_sd: ArrayLike,
@@ -180,32 +172,29 @@ def fit_axon_release(
         raise InputError(f"n_max must be at least 1 (given {n_max}).")
     a = np.where((sd > 0) & np.isfinite(sd), a, np.nan)
 
-    grid = _make_grid(a, sd, n_max=n_max)
+    noise_sd = _median(sd)
+    grid = make_grid(noise_sd=noise_sd, largest=float(np.nanmax(a, initial=0.0)), n_trials=a.shape[1], n_max=n_max)
     n_boutons, _, n_pulses = a.shape
-    scales = [_noise_scales(count) for count in nulls]
-    shape = (_N_SCALES, len(grid.q), len(grid.q_cv), n_max, len(grid.p_release))
-    likelihood = np.zeros((n_boutons, n_pulses, *shape), dtype=np.float32)
+    scales = [noise_scales(count) for count in nulls]
+    # Integrate over p_release pulse by pulse, then join the pulses: they share all else.
+    joint = np.zeros((n_boutons, N_SCALES, len(grid.q), len(grid.q_cv), n_max))
+    silent = np.zeros((n_boutons, N_SCALES))
     for b in range(n_boutons):
+        values, weights = scales[b]
         for j in range(n_pulses):
-            likelihood[b, j] = _log_likelihood(a[b, :, j], sd[b, :, j], scales[b][0], grid)
+            joint[b] += integrated_likelihood(a[b, :, j], sd[b, :, j], values, grid)
+        joint[b] += np.log(weights)[:, None, None, None] + np.log(_prior_of_n(n_max))
+        silent[b] = silent_likelihood(a[b], sd[b], values) + np.log(weights)
         if progress is not None:
             progress(b + 1, n_boutons)
-
-    # Integrate over p_release pulse by pulse, then join the pulses: they share all else.
-    per_pulse = _log_sum(likelihood, axis=-1) - np.log(shape[-1])  # (bouton, pulse, scale, q, q_cv, n)
-    log_scale_prior = np.log([weights for _, weights in scales]).reshape(n_boutons, _N_SCALES, 1, 1, 1)
-    joint = per_pulse.sum(axis=1) + log_scale_prior
-    joint = joint + np.log(_prior_of_n(n_max))
-    at_scales = [_silent_log_likelihood(x, y, values) for x, y, (values, _) in zip(a, sd, scales, strict=True)]
-    silent = _log_sum(np.reshape(at_scales, (n_boutons, _N_SCALES)) + log_scale_prior[:, :, 0, 0, 0], axis=1)
-    marginal = _log_sum(joint, axis=(1, 4))  # (bouton, q, q_cv)
-    axon = _fit_axon(marginal, silent, grid, noise_sd=_median(sd), q_cv=q_cv, q_cv_doubt=q_cv_doubt)
+    marginal = log_sum(joint, axis=(1, 4))  # (bouton, q, q_cv)
+    axon = fit_axon_quanta(marginal, log_sum(silent, axis=1), grid, noise_sd=noise_sd, q_cv=q_cv, q_cv_doubt=q_cv_doubt)
     log_posterior = joint + axon.log_prior[:, None, :, :, None]
-    # A silent bouton tells nothing of q. Given that it releases after all, its own likelihood would choose a q too
-    # small to be seen; so it takes q as all the others have it.
+    # A silent bouton tells nothing of q. Given that it releases after all, its own likelihood would choose a q too small
+    # to be seen; so it takes q as all the others have it.
     told = np.where(axon.silent < 0.5, 0.0, 1.0)[:, None, None]
     log_posterior -= (told * marginal)[:, None, :, :, None]
-    posterior = np.exp(log_posterior - _log_sum(log_posterior, axis=(1, 2, 3, 4), keepdims=True))
+    posterior = np.exp(log_posterior - log_sum(log_posterior, axis=(1, 2, 3, 4), keepdims=True))
 
     p_release, p_lo, p_hi, evidence = (np.full((n_boutons, n_pulses), np.nan) for _ in range(4))
     p_site, site_lo, site_hi = (np.full((n_boutons, n_pulses), np.nan) for _ in range(3))
@@ -213,23 +202,21 @@ def fit_axon_release(
     n_probability = posterior.sum(axis=(1, 2, 3))
     n_sites = n_probability.argmax(axis=1) + 1
     for b, j in np.argwhere(np.isfinite(a).any(axis=1)):
-        given = np.exp(likelihood[b, j] - per_pulse[b, j][..., None]) / shape[-1]  # p_release given the rest
-        full = posterior[b][..., None] * given
-        of_p = full.sum(axis=(0, 1, 2, 3))
+        known = np.isfinite(a[b, :, j])
+        pulse = _look_at_pulse(a[b, known, j], sd[b, known, j], scales[b][0], posterior[b], grid)
+        of_p = pulse.probability.sum(axis=0)
         p_release[b, j], p_lo[b, j], p_hi[b, j] = _quantiles_of_p(of_p, axon.silent[b])
-        evidence[b, j] = _evidence(likelihood[b, j], posterior[b])
-        if evidence[b, j] < 1.92:
+        evidence[b, j] = pulse.evidence
+        if pulse.evidence < _IN_LIKELIHOOD_INTERVAL:
             p_lo[b, j] = 0.0
-        of_site = full.sum(axis=(0, 1, 2))  # (n, p_release)
-        at_n = of_site[n_sites[b] - 1]
+        at_n = pulse.probability[n_sites[b] - 1]
         p_site[b, j] = at_n @ grid.p_site[n_sites[b] - 1] / at_n.sum()
-        site_lo[b, j], site_hi[b, j] = _weighted_interval(grid.p_site.ravel(), of_site.ravel())
-        given_active = _posterior_release(a[b, :, j], sd[b, :, j], scales[b][0], full, grid)
-        p_released[b, :, j] = (1.0 - axon.silent[b]) * given_active
+        site_lo[b, j], site_hi[b, j] = weighted_interval(grid.p_site.ravel(), pulse.probability.ravel())
+        p_released[b, known, j] = (1.0 - axon.silent[b]) * pulse.released
 
     n_sets = tuple(_credible_set(row) for row in n_probability)
     q_posterior = posterior.sum(axis=(1, 3, 4))
-    q_mid, q_lo, q_hi = np.array([_log_quantiles(grid.q, row) for row in q_posterior]).reshape(-1, 3).T
+    q_mid, q_lo, q_hi = np.array([log_quantiles(grid.q, row) for row in q_posterior]).reshape(-1, 3).T
     measured = np.isfinite(a).any(axis=(1, 2))
     return AxonRelease(
         p_release=p_release,
@@ -248,7 +235,7 @@ def fit_axon_release(
         q=np.where(measured, q_mid, np.nan),
         q_lo=np.where(measured, q_lo, np.nan),
         q_hi=np.where(measured, q_hi, np.nan),
-        q_own=_own_share(q_posterior, axon, grid),
+        q_own=own_share(q_posterior, axon, grid),
         q_cv=axon.q_cv,
         q_cv_lo=axon.q_cv_lo,
         q_cv_hi=axon.q_cv_hi,
@@ -263,37 +250,41 @@ def fit_axon_release(
     )
 
 
-def _make_grid(a: Floats, sd: Floats, *, n_max: int) -> _Grid:
-    typical = _median(sd)
-    largest = np.nanmax(a, initial=0.0)
-    top = max(12.0 * typical, 1.1 * largest)
-    q = np.exp(np.arange(np.log(0.7 * typical), np.log(top) + _Q_STEP, _Q_STEP))
-    n_points = int(np.clip(5 * np.sqrt(a.shape[1]), 48, 160))
-    angle = (np.arange(n_points) + 0.5) * (np.pi / 2 / n_points)  # equal steps of the angle are the Jeffreys prior
-    p_release = np.sin(angle) ** 2
-    sites = np.arange(1, n_max + 1)
-    log_failure = np.log1p(-p_release)[None, :] / sites[:, None]
-    p_site = -np.expm1(log_failure)
-    m = np.arange(n_max + 1)
-    n = sites[:, None, None]
-    with np.errstate(divide="ignore", invalid="ignore"):
-        log_choose = np.where(m <= n, gammaln(n + 1) - gammaln(m + 1) - gammaln(np.maximum(n - m, 0) + 1), -np.inf)
-    log_weight = log_choose + m * np.log(p_site)[..., None] + np.maximum(n - m, 0) * log_failure[..., None]
-    return _Grid(
-        q=q,
-        q_cv=np.array(_Q_CVS),
-        p_release=p_release,
-        p_site=p_site,
-        weights=np.exp(log_weight).reshape(-1, n_max + 1).astype(np.float32),
-        n_max=n_max,
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Pulse:
+    """Posterior of one bouton's pulse."""
+
+    probability: Floats  # (n_max, n_p) of n_sites and p_release
+    released: Floats  # (n_trials,) of at least one vesicle
+    evidence: float  # log-likelihood ratio of the best p_release against the smallest, the rest integrated
+
+
+def _look_at_pulse(a: Floats, sd: Floats, scales: Floats, posterior: Floats, grid: ReleaseGrid) -> _Pulse:
+    """Spread the posterior of noise, q, q_cv and n_sites over p_release, where it is not negligible."""
+    n_max, n_p = grid.p_site.shape
+    of_pairs = posterior.reshape(len(scales), -1, n_max)
+    probability = np.zeros((n_max, n_p))
+    failed = np.zeros(a.size)
+    at_each_p = np.full(n_p, -np.inf)
+    least = _NEGLIGIBLE * of_pairs.sum(axis=2).max()
+    for k, scale in enumerate(scales):
+        for pair, mixture, failure, log_unit in mixtures(
+            a, scale * sd, grid, at=np.flatnonzero(of_pairs[k].sum(axis=1) > least)
+        ):
+            likelihood = np.log(mixture).sum(axis=1, dtype=np.float64).reshape(n_max, n_p)
+            given = np.exp(likelihood - log_sum(likelihood, axis=1, keepdims=True))
+            here = of_pairs[k, pair][:, None] * given
+            probability += here
+            failed += here.ravel() @ (grid.weights[:, :1] * failure / mixture)
+            with np.errstate(divide="ignore"):
+                weighted = np.log(of_pairs[k, pair])[:, None] + likelihood + log_unit.sum()
+            at_each_p = np.logaddexp(at_each_p, np.logaddexp.reduce(weighted, axis=0))
+    total = probability.sum()
+    return _Pulse(
+        probability=probability / total,
+        released=np.clip(1.0 - failed / total, 0.0, 1.0),
+        evidence=float(at_each_p.max() - at_each_p[0]),
     )
-
-
-def _log_sum(values: NDArray[np.floating], *, axis: int | tuple[int, ...], keepdims: bool = False) -> Floats:
-    """Logarithm of the sum of exponentials; an axon without boutons is fine."""
-    largest = np.max(values, axis=axis, keepdims=True, initial=-1e30)
-    total = np.log(np.sum(np.exp(values - largest), axis=axis, keepdims=True)) + largest
-    return np.asarray(total if keepdims else np.squeeze(total, axis=axis))
 
 
 def _median(sd: Floats) -> float:
@@ -301,147 +292,10 @@ def _median(sd: Floats) -> float:
     return float(np.median(usable)) if usable.size else 1.0
 
 
-def _noise_scales(n_null: float) -> tuple[Floats, Floats]:
-    """Three Gauss-Hermite nodes for the true noise over the given one, and their weights."""
-    doubt = np.sqrt(1.0 / (2.0 * max(n_null, 2.0)) + _NOISE_DOUBT**2)
-    return np.exp(np.array([-np.sqrt(3.0), 0.0, np.sqrt(3.0)]) * min(doubt, 0.3)), np.array([1.0, 4.0, 1.0]) / 6.0
-
-
-def _densities(a: Floats, sd: Floats, scale: float, grid: _Grid) -> tuple[NDArray[np.float32], Floats]:
-    """Density of each amplitude given m vesicles, over its largest (q * q_cv, vesicles, trials); log of the largest."""
-    log_density = gamma_vesicles_logpdf(
-        a,
-        vesicles=np.arange(grid.n_max + 1)[None, :, None],
-        q=np.repeat(grid.q, len(grid.q_cv))[:, None, None],
-        q_cv=np.tile(grid.q_cv, len(grid.q))[:, None, None],
-        noise_sd=scale * sd,
-    )
-    largest = log_density.max(axis=1)
-    return np.exp(log_density - largest[:, None, :]).astype(np.float32), largest
-
-
-def _log_likelihood(a: Floats, sd: Floats, scales: Floats, grid: _Grid) -> NDArray[np.float32]:
-    """Log-likelihood of one bouton's amplitudes at one pulse, on the grid, up to a constant."""
-    used = np.isfinite(a)
-    shape = (len(grid.q), len(grid.q_cv), grid.n_max, len(grid.p_release))
-    result = np.zeros((len(scales), *shape), dtype=np.float32)
-    if not used.any():
-        return result
-    reference = -0.5 * (a[used] ** 2 / sd[used] ** 2 + np.log(2.0 * np.pi * sd[used] ** 2))  # no release
-    for k, scale in enumerate(scales):
-        density, largest = _densities(a[used], sd[used], scale, grid)
-        offset = (largest - reference).sum(axis=1)
-        for i, block in enumerate(density):
-            mixture = grid.weights @ block
-            np.maximum(mixture, np.float32(1e-37), out=mixture)
-            np.log(mixture, out=mixture)
-            result[k].reshape(len(density), -1)[i] = mixture.sum(axis=1) + offset[i]
-    return result
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class _Axon:
-    log_prior: Floats  # (bouton, q, q_cv): prior of each bouton's q and q_cv given all the others
-    silent: Floats  # (bouton,): probability that it never releases
-    q: float
-    q_lo: float
-    q_hi: float
-    q_spread: float
-    q_cv: float
-    q_cv_lo: float
-    q_cv_hi: float
-    prior_variance: float  # of log q of a bouton, before its own amplitudes
-
-
 def _prior_of_n(n_max: int) -> Floats:
     """Prior of n_sites, falling as 1/n: no number of sites is a preferred scale."""
     weights = 1.0 / np.arange(1, n_max + 1)
     return np.asarray(weights / weights.sum())
-
-
-def _silent_log_likelihood(a: Floats, sd: Floats, scales: Floats) -> Floats:
-    """Log-likelihood of a bouton that never releases, over that at the noise given, for each noise scale."""
-    z = (a / sd)[np.isfinite(a)]
-    return np.asarray(-0.5 * np.sum(z**2) * (1.0 / scales**2 - 1.0) - z.size * np.log(scales))
-
-
-def _fit_axon(
-    marginal: Floats, silent: Floats, grid: _Grid, *, noise_sd: float, q_cv: float, q_cv_doubt: float
-) -> _Axon:
-    """Posterior of the axon's quantal size, its spread and q_cv; and what they say beforehand of each bouton."""
-    log_q = np.log(grid.q)
-    spreads = np.array(_Q_SPREADS)
-    centre = np.repeat(log_q, len(spreads))
-    spread = np.tile(spreads, len(log_q))
-    prior = np.exp(-0.5 * ((log_q[None, :] - centre[:, None]) / spread[:, None]) ** 2)
-    prior /= prior.sum(axis=1, keepdims=True)  # (hyper, q)
-
-    # A bouton may be silent for good: then it says nothing of q, rather than that q must be too small to be seen.
-    largest = np.maximum(marginal.max(axis=(1, 2)), silent)[:, None, None]
-    evidence = (1.0 - _SILENT) * np.einsum("bqc,hq->bhc", np.exp(marginal - largest), prior)
-    evidence += _SILENT * np.exp(silent[:, None, None] - largest)
-    evidence = np.maximum(evidence, 1e-300)
-    hyper = -0.5 * ((centre - np.log(_TYPICAL_Q[0] * noise_sd)) / _TYPICAL_Q[1]) ** 2
-    variation = -0.5 * (np.log(grid.q_cv / q_cv) / q_cv_doubt) ** 2
-    log_posterior = np.log(evidence).sum(axis=0) + hyper[:, None] + variation[None, :]
-    posterior = np.exp(log_posterior - log_posterior.max())
-    posterior /= posterior.sum()
-
-    expected = np.einsum("hc,bhc,hq->bqc", posterior, 1.0 / evidence, prior)
-    never = _SILENT * np.exp(silent - largest[:, 0, 0]) * np.einsum("hc,bhc->b", posterior, 1.0 / evidence)
-    of_centre = posterior.sum(axis=1).reshape(len(log_q), len(spreads))
-    middle, low, high = _log_quantiles(grid.q, of_centre.sum(axis=1))
-    of_cv = posterior.sum(axis=0)
-    cv_low, cv_high = _weighted_interval(grid.q_cv, of_cv)
-    overall = posterior.sum(axis=1) @ prior
-    mean = overall @ log_q
-    return _Axon(
-        log_prior=np.log(np.maximum(expected, 1e-300)),
-        silent=np.clip(never, 0.0, 1.0),
-        q=middle,
-        q_lo=low,
-        q_hi=high,
-        q_spread=float(of_centre.sum(axis=0) @ spreads),
-        q_cv=float(of_cv @ grid.q_cv),
-        q_cv_lo=cv_low,
-        q_cv_hi=cv_high,
-        prior_variance=float(overall @ (log_q - mean) ** 2),
-    )
-
-
-def _own_share(q_posterior: Floats, axon: _Axon, grid: _Grid) -> Floats:
-    log_q = np.log(grid.q)
-    mean = q_posterior @ log_q
-    variance = np.sum(q_posterior * (log_q - mean[:, None]) ** 2, axis=1)
-    return np.asarray(np.clip(1.0 - variance / axon.prior_variance, 0.0, 1.0))
-
-
-def _evidence(likelihood: NDArray[np.float32], posterior: Floats) -> float:
-    """Log-likelihood ratio of the best p_release against the smallest, the rest integrated over its posterior."""
-    largest = float(likelihood.max())
-    at_each_p = np.einsum("sqcn,sqcnp->p", posterior, np.exp(likelihood - largest, dtype=np.float64))
-    with np.errstate(divide="ignore"):
-        logarithm = np.log(at_each_p)
-    return float(logarithm.max() - logarithm[0])
-
-
-def _posterior_release(a: Floats, sd: Floats, scales: Floats, full: Floats, grid: _Grid) -> Floats:
-    """Probability that each amplitude holds at least one vesicle, averaged over the posterior."""
-    result = np.full(a.shape, np.nan)
-    used = np.isfinite(a)
-    silent = np.zeros(int(used.sum()))
-    flat = full.reshape(len(scales), -1, grid.weights.shape[0])
-    threshold = 1e-4 * flat.sum(axis=2).max()
-    kept = 0.0
-    for k, scale in enumerate(scales):
-        density, _ = _densities(a[used], sd[used], scale, grid)
-        for i in np.flatnonzero(flat[k].sum(axis=1) > threshold):
-            mixture = np.maximum(grid.weights @ density[i], np.float32(1e-37))
-            none = grid.weights[:, :1] * density[i][:1]
-            silent += flat[k, i] @ (none / mixture)
-            kept += flat[k, i].sum()
-    result[used] = 1.0 - silent / kept
-    return np.asarray(np.clip(result, 0.0, 1.0))
 
 
 def _quantiles_of_p(mass: Floats, silent: float) -> tuple[float, float, float]:
@@ -453,25 +307,6 @@ def _quantiles_of_p(mass: Floats, silent: float) -> tuple[float, float, float]:
     low, high = np.interp([tail, 1.0 - tail], cumulative, edges)
     middle = np.interp(0.5, silent + (1.0 - silent) * cumulative, edges) if silent < 0.5 else 0.0
     middle, low, high = np.sin([middle, low, high]) ** 2
-    return float(middle), float(low), float(high)
-
-
-def _weighted_interval(values: Floats, mass: Floats) -> tuple[float, float]:
-    order = np.argsort(values)
-    cumulative = np.cumsum(mass[order])
-    tail = (1.0 - _INTERVAL) / 2
-    low, high = np.searchsorted(cumulative / cumulative[-1], [tail, 1.0 - tail])
-    top = len(values) - 1
-    return float(values[order][min(low, top)]), float(values[order][min(high, top)])
-
-
-def _log_quantiles(values: Floats, mass: Floats) -> tuple[float, float, float]:
-    """Median and central 95 % of a posterior on log-spaced values."""
-    step = np.log(values[1] / values[0])
-    edges = np.log(values[0]) - step / 2 + step * np.arange(len(values) + 1)
-    cumulative = np.concatenate([[0.0], np.cumsum(mass)])
-    tail = (1.0 - _INTERVAL) / 2
-    middle, low, high = np.exp(np.interp([0.5, tail, 1.0 - tail], cumulative / cumulative[-1], edges))
     return float(middle), float(low), float(high)
 
 
