@@ -10,7 +10,14 @@ import numpy as np
 
 from napari_boutonrelease.boutons import Optics
 from napari_boutonrelease.errors import AnalysisWarning
-from napari_boutonrelease.recording import fill_dead, measure_drift, measure_light, no_drift, resolve_timing
+from napari_boutonrelease.recording import (
+    fill_dead,
+    light_at_rest,
+    measure_drift,
+    measure_light,
+    no_drift,
+    resolve_timing,
+)
 from napari_boutonrelease.responses import (
     ASSUMED_SHAPE,
     Responses,
@@ -171,6 +178,7 @@ def measure(
         )
     else:
         drift = no_drift(light=light)
+    light = light_at_rest(movie, light=light, drift=drift)
     optics = _optics(light, drift)
 
     shape = protocol.reporter

@@ -190,8 +190,8 @@ def fit_axon_release(
     marginal = log_sum(joint, axis=(1, 4))  # (bouton, q, q_cv)
     axon = fit_axon_quanta(marginal, log_sum(silent, axis=1), grid, noise_sd=noise_sd, q_cv=q_cv, q_cv_doubt=q_cv_doubt)
     log_posterior = joint + axon.log_prior[:, None, :, :, None]
-    # A silent bouton tells nothing of q. Given that it releases after all, its own likelihood would choose a q too small
-    # to be seen; so it takes q as all the others have it.
+    # A silent bouton tells nothing of q. Given that it releases after all, its own likelihood would choose a q too
+    # small to be seen; so it takes q as all the others have it.
     told = np.where(axon.silent < 0.5, 0.0, 1.0)[:, None, None]
     log_posterior -= (told * marginal)[:, None, :, :, None]
     posterior = np.exp(log_posterior - log_sum(log_posterior, axis=(1, 2, 3, 4), keepdims=True))
