@@ -178,8 +178,10 @@ def _release(movies):
     rows = []
     for name, records in _with_release(movies):
         boutons = summary.releasing(records)
-        for pulse in range(len(boutons[0]["p"])):
-            rows.append((f"{name}, pulse {pulse + 1}", *_release_row(summary.release(boutons, pulse=pulse))))
+        rows += [
+            (f"{name}, pulse {pulse + 1}", *_release_row(summary.release(boutons, pulse=pulse)))
+            for pulse in range(len(boutons[0]["p"]))
+        ]
         if len(boutons[0]["p"]) > 1:
             rows.append((f"{name}, all", *_release_row(summary.release(boutons))))
     return _table(_RELEASE_HEADER, rows)

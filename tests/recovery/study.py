@@ -1,4 +1,4 @@
-"""Simulate a recording, analyse it, let the ideal observer look at it, and keep what compares the two with the truth."""
+"""Simulate a recording, analyse it, let the ideal observer look at it, and keep what both say beside the truth."""
 
 from __future__ import annotations
 
@@ -81,7 +81,8 @@ def study(recipe, *, seed, settings=SETTINGS, keep=None):
     simulated = time.time()
     measured = measure(movie, simulation.protocol, settings=settings, boutons=None, axon=None, progress=None)
     analysed = time.time()
-    observed = observe(simulation, movie)
+    # Where nothing ever releases there is nothing to observe.
+    observed = observe(simulation, movie) if np.any(simulation.truth.p_site > 0) else None
     record = compare(simulation, measured, observed, settings=settings)
     record["seconds"] = [simulated - started, analysed - simulated, time.time() - analysed]
     record["seed"] = seed
@@ -97,14 +98,7 @@ def compare(simulation, measured, observed, *, settings=SETTINGS):
     row_of, stray = match(truth, measured)
     quanta, fit = measured.quanta, measured.responses.amplitudes
     flags = bouton_flags(measured)
-    ideal = fit_axon_release(
-        observed.fit.amplitude,
-        observed.fit.amplitude_se,
-        n_null=np.isfinite(observed.fit.null_amplitude).sum(axis=1),
-        n_max=settings.quanta.n_max,
-        q_cv=settings.quanta.q_cv,
-        q_cv_doubt=settings.quanta.q_cv_doubt,
-    )
+    ideal = None if observed is None else _infer(observed.fit, settings)
     spots = []
     for index, kind in enumerate(truth.kind):
         one = {
@@ -116,7 +110,7 @@ def compare(simulation, measured, observed, *, settings=SETTINGS):
             "f0": float(recipe.gain * truth.f0_photons[index] * truth.light.mean()),
             "nearest_um": _nearest_um(truth, index),
         }
-        if kind != "speck":
+        if observed is not None and ideal is not None and kind != "speck":
             b = int(np.flatnonzero(observed.spots == index)[0])
             one["observer"] = _of_bouton(
                 truth,
@@ -155,9 +149,7 @@ def compare(simulation, measured, observed, *, settings=SETTINGS):
         "drift_rms_px": [float(np.std(dy[drift.used])), float(np.std(dx[drift.used]))],
         "shape": [shape.latency_s, shape.rise_s, shape.decay_s, shape.slow_fraction, shape.slow_decay_s],
         "sigma_px": float(measured.places.footprints.spot_sigma_px),
-        "q_axon": [quanta.axon.axon_q, ideal.axon_q],
-        "q_cv": [quanta.axon.q_cv, ideal.q_cv],
-        "q_spread": [quanta.axon.axon_q_spread, ideal.axon_q_spread],
+        "axon": [_of_axon(quanta.axon), None if ideal is None else _of_axon(ideal)],
     }
 
 
@@ -193,6 +185,22 @@ def match(truth, measured):
         for row in np.flatnonzero(free)
     ]
     return row_of, stray
+
+
+def _infer(fit, settings):
+    """Release of the axon from amplitudes, as the analysis infers it."""
+    return fit_axon_release(
+        fit.amplitude,
+        fit.amplitude_se,
+        n_null=np.isfinite(fit.null_amplitude).sum(axis=1),
+        n_max=settings.quanta.n_max,
+        q_cv=settings.quanta.q_cv,
+        q_cv_doubt=settings.quanta.q_cv_doubt,
+    )
+
+
+def _of_axon(axon):
+    return _plain({name: getattr(axon, name) for name in ("axon_q", "axon_q_lo", "axon_q_hi", "q_cv", "axon_q_spread")})
 
 
 def _of_bouton(truth, index, *, fit, axon, b, sd, pair):
@@ -232,14 +240,10 @@ def _of_bouton(truth, index, *, fit, axon, b, sd, pair):
             for j in range(p_pulse.size)
         ]
         posterior = [
-            released_if_all_known(
-                amplitude[:, j], noise[:, j], n_sites=n, p_site=1 - (1 - p) ** (1 / n), q=q, q_cv=cv
-            )
+            released_if_all_known(amplitude[:, j], noise[:, j], n_sites=n, p_site=1 - (1 - p) ** (1 / n), q=q, q_cv=cv)
             for j, p in enumerate(p_pulse)
         ]
-        one["wrong_calls_if_known"] = np.sum(
-            (np.column_stack(posterior) > 0.5) != (vesicles > 0), axis=0, where=known
-        )
+        one["wrong_calls_if_known"] = np.sum((np.column_stack(posterior) > 0.5) != (vesicles > 0), axis=0, where=known)
     return one
 
 

@@ -1,7 +1,7 @@
 """Release of whole axons from amplitudes of known truth, held against an observer who knows all but p_release.
 
-Limits stand 3.5 SD of chance, measured by resampling axons of the long runs, beyond what is expected at these sizes; the
-long runs hold the requirements themselves.
+Limits stand 3.5 SD of chance, measured by resampling axons of the long runs, beyond what is expected at these sizes;
+the long runs hold the requirements themselves.
 """
 
 import numpy as np
