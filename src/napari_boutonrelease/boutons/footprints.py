@@ -29,6 +29,7 @@ FootprintMode = Literal["weighted", "disc", "adaptive"]
 
 _CORE = 0.5  # of the peak: pixels that the label image and `footprint_px` count
 _SEEN = 0.25  # of the peak: a saturated or dead pixel in here matters
+_CLEARLY = 5.0  # SD of the texture of the surroundings
 _CUT_SHARE = 0.02  # of the profile's energy: more than that beyond the border is an edge
 _ADAPTIVE_REACH = 2.5  # sigmas
 _RIM_SIGMAS = 1.5  # light of a drawn mask spills so far and must not count as background
@@ -297,16 +298,31 @@ def _shaft_counts(
         return float("nan")
     near = np.flatnonzero(np.hypot(ys - ys[index], xs - xs[index]) < radius_px + 4 * sigma_px)
     image = Patch(y0=weights.y0, x0=weights.x0, values=np.asarray(optics.mean_image[weights.slices], dtype=np.float64))
+    reading = float(np.sum(weights.values * image.values))
+    own = profiles[index].onto(weights)
     # Equal weights: the axon's course is a matter of light, not of noise.
     used = np.where(precision[weights.slices] > 0, 1.0, 0.0)
-    columns = [profiles[index].onto(weights).ravel(), np.ones(image.values.size)]
+    used[_brighter(image.values, than=reading, usable=used > 0, sigma_px=sigma_px) & (own < _SEEN)] = 0.0
+    columns = [own.ravel(), np.ones(image.values.size)]
     columns += [profiles[j].onto(weights).ravel() for j in near.tolist() if j != index]
     columns = [column for column in columns if np.sum(used.ravel() * column**2) > 1e-6]
     others = np.stack(columns)
     rays = shaft_rays(image, y_px=ys[index], x_px=xs[index], precision=used, other_columns=others, sigma_px=sigma_px)
     design = np.vstack([others, rays]) * used.ravel()
     height = float(np.linalg.lstsq(design.T, image.values.ravel() * used.ravel(), rcond=1e-8)[0][0])
-    return float(np.sum(weights.values * image.values)) - height
+    return reading - height
+
+
+def _brighter(
+    image: NDArray[np.float64], *, than: float, usable: NDArray[np.bool_], sigma_px: float
+) -> NDArray[np.bool_]:
+    """Pixels that shine more than a bouton does, and what these spill around: not its axon, but something else."""
+    from scipy.ndimage import binary_dilation
+
+    floor = float(np.median(image[usable])) if usable.any() else 0.0
+    texture = 1.482602 * float(np.median(np.abs(image[usable] - floor))) if usable.any() else 0.0
+    bright = image > floor + max(than, _CLEARLY * texture)
+    return np.asarray(binary_dilation(bright, iterations=int(np.ceil(sigma_px))) if bright.any() else bright)
 
 
 def _flags(y: float, x: float, profile: Patch, optics: Optics) -> frozenset[str]:
