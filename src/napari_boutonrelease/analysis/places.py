@@ -162,12 +162,16 @@ def find_places(
         rng=rng,
         progress=progress,
     )
+    sigma = found.spot_sigma_px
+    if sigma == spot_sigma_px(settings.detection, pixel_size_um=timing.pixel_size_um):
+        # No response was clear enough to measure the width.
+        sigma = _seen_sigma_px(found.y_px, found.x_px, optics=optics, expected_px=sigma)
     footprints = build_footprints(
         y_px=found.y_px,
         x_px=found.x_px,
         optics=optics,
-        spot_sigma_px=found.spot_sigma_px,
-        background_radius_px=_background_px(settings, pixel_um, found.spot_sigma_px),
+        spot_sigma_px=sigma,
+        background_radius_px=_background_px(settings, pixel_um, sigma),
         mode=settings.detection.footprint,
         response_image=None,
         response_variance=None,
@@ -246,14 +250,11 @@ def given_places(
             given.label, optics=optics, spot_sigma_px=sigma, background_radius_px=radius
         )
     else:
-        measured = estimate_spot_sigma(
-            optics.mean_image, y_px=given.y_px, x_px=given.x_px, start_sigma_px=sigma, usable=optics.usable()
-        )
         footprints = build_footprints(
             y_px=given.y_px,
             x_px=given.x_px,
             optics=optics,
-            spot_sigma_px=measured,
+            spot_sigma_px=_seen_sigma_px(given.y_px, given.x_px, optics=optics, expected_px=sigma),
             background_radius_px=radius,
             mode=settings.detection.footprint,
             response_image=None,
@@ -268,6 +269,15 @@ def given_places(
         timing=timing,
         detection=None,
         image=optics.mean_image,
+    )
+
+
+def _seen_sigma_px(
+    y_px: NDArray[np.float64], x_px: NDArray[np.float64], *, optics: Optics, expected_px: float
+) -> float:
+    """Measure the width of boutons in the mean image, in px."""
+    return estimate_spot_sigma(
+        optics.mean_image, y_px=y_px, x_px=x_px, start_sigma_px=expected_px, usable=optics.usable()
     )
 
 

@@ -184,7 +184,7 @@ class SpotModel:
         self.y_px, self.x_px = fitted[:, 0], fitted[:, 1]
         self.position_se_px = np.sqrt(2.0) * self.spot_sigma_px / np.maximum(strength, 1e-6)
         clear = [i for i in range(len(profiles)) if strength[i] > 20 and self._isolated(i) and fitted[i, 3] > 0]
-        if len(clear) >= 3:
+        if clear:
             measured = float(np.median(fitted[clear, 2]))
             self.spot_sigma_px = float(np.clip(measured, 0.6 * self._filter_sigma, 1.7 * self._filter_sigma))
 

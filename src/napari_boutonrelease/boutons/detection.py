@@ -50,7 +50,7 @@ class Detection:
     expected_false : float
         False ones expected among those found by responses.
     spot_sigma_px : float
-        Gaussian sigma of a bouton's image, measured where at least three clear boutons stand alone, else as given (px).
+        Gaussian sigma of a bouton's image, measured where clear boutons stand alone, else as given (px).
     """
 
     y_px: NDArray[np.float64]
