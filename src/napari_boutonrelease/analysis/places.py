@@ -202,7 +202,8 @@ def _detect(
     pre_s, post_s = map_window_s(timing, shape)
     sigma_px = spot_sigma_px(settings.detection, pixel_size_um=timing.pixel_size_um)
     spacing_px = settings.detection.spacing_um / (timing.pixel_size_um or _UNKNOWN_PIXEL_UM)
-    exclude = ~optics.usable()
+    # A pixel that clips bright responses still tells where they are, though not how large.
+    exclude = ~(optics.always_inside() & ~optics.on_sample(optics.dead))
     try:
         stack = project_responses(
             movie,
