@@ -18,19 +18,15 @@ from napari_boutonrelease.boutons import (
     estimate_spot_sigma,
     footprints_from_labels,
     project_responses,
-    read_axon,
-    read_positions,
     scan_shapes,
 )
 from napari_boutonrelease.errors import AnalysisWarning, TooFewResponsesError
 from napari_boutonrelease.response_shape import ResponseShape
 
 if TYPE_CHECKING:
-    from pathlib import Path
-
     from numpy.typing import NDArray
 
-    from napari_boutonrelease.boutons import Detection
+    from napari_boutonrelease.boutons import Detection, GivenBoutons
     from napari_boutonrelease.recording import Drift, Movie, Timing
 
     from .progress import Progress
@@ -145,7 +141,7 @@ def find_places(
     drift: Drift,
     optics: Optics,
     shape: ResponseShape,
-    axon: str | Path | None,
+    axon: NDArray[np.float64] | None,
     settings: Settings,
     rng: np.random.Generator,
     progress: Progress | None,
@@ -234,16 +230,14 @@ def _detect(
 
 
 def given_places(
-    path: str | Path,
+    given: GivenBoutons,
     *,
     timing: Timing,
     optics: Optics,
-    axon: str | Path | None,
+    axon: NDArray[np.float64] | None,
     settings: Settings,
 ) -> Places:
-    """Take the boutons from a table of positions or a label image, and compute their weights."""
-    height, width = optics.mean_image.shape
-    given = read_positions(path, pixel_size_um=timing.pixel_size_um, image_shape=(height, width))
+    """Take the boutons of a table of positions or a label image, and compute their weights."""
     sigma = spot_sigma_px(settings.detection, pixel_size_um=timing.pixel_size_um)
     radius = _background_px(settings, timing.pixel_size_um or _UNKNOWN_PIXEL_UM, sigma)
     if given.label is not None:
@@ -291,7 +285,7 @@ def _ordered(
     *,
     found_by: tuple[str, ...],
     ids: NDArray[np.int64] | None,
-    axon: str | Path | None,
+    axon: NDArray[np.float64] | None,
     timing: Timing,
     detection: Detection | None,
     image: NDArray[np.float64],
@@ -299,9 +293,7 @@ def _ordered(
     n = len(footprints.y_px)
     along, aside = np.full(n, np.nan), np.full(n, np.nan)
     if axon is not None:
-        along, aside = distance_along(
-            read_axon(axon, pixel_size_um=timing.pixel_size_um), y_px=footprints.y_px, x_px=footprints.x_px
-        )
+        along, aside = distance_along(axon, y_px=footprints.y_px, x_px=footprints.x_px)
     if ids is not None:
         order = np.argsort(ids, kind="stable")
     elif axon is not None:

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from napari_boutonrelease.quanta import (
+    AxonRelease,
     Estimate,
     LogPrior,
     PulsePair,
@@ -16,12 +17,12 @@ from napari_boutonrelease.quanta import (
     SitesFit,
     balanced_threshold,
     benjamini_hochberg,
+    fit_axon_release,
     fit_sites,
     measure_history,
     measure_pulse_pair,
     rogan_gladen,
 )
-from napari_boutonrelease.quanta.pooled import AxonRelease, fit_axon_release
 from napari_boutonrelease.responses import AmplitudeFit, ReleaseCalls, call_releases
 
 if TYPE_CHECKING:

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from napari_boutonrelease.boutons import Optics
+from napari_boutonrelease.boutons import Optics, read_axon, read_positions
 from napari_boutonrelease.errors import AnalysisWarning
 from napari_boutonrelease.recording import (
     fill_dead,
@@ -163,7 +163,11 @@ def measure(
     steps = StepProgress(progress, shares=_SHARES)
     # Each step that draws random numbers has its own stream, so that changing one step does not change another.
     seeds = np.random.SeedSequence(settings.seed).spawn(3)
+    # What can be wrong with the inputs is said before the long work begins.
     timing = resolve_timing(movie, protocol)
+    pixel_um, image_shape = timing.pixel_size_um, (movie.shape[1], movie.shape[2])
+    given = None if boutons is None else read_positions(boutons, pixel_size_um=pixel_um, image_shape=image_shape)
+    path = None if axon is None else read_axon(axon, pixel_size_um=pixel_um)
     light = measure_light(
         movie, camera_offset=timing.camera_offset, block_frames=BLOCK_FRAMES, progress=steps.step("light")
     )
@@ -182,8 +186,8 @@ def measure(
     optics = _optics(light, drift)
 
     shape = protocol.reporter
-    if boutons is not None:
-        places = given_places(boutons, timing=timing, optics=optics, axon=axon, settings=settings)
+    if given is not None:
+        places = given_places(given, timing=timing, optics=optics, axon=path, settings=settings)
     else:
         guess = shape or guess_shape(movie, timing=timing, drift=drift, settings=settings, progress=steps.step("shape"))
 
@@ -194,7 +198,7 @@ def measure(
                 drift=drift,
                 optics=optics,
                 shape=course,
-                axon=axon,
+                axon=path,
                 settings=settings,
                 rng=np.random.default_rng(seeds[0]),
                 progress=steps.step(step),
@@ -203,7 +207,7 @@ def measure(
         places = find(guess or ASSUMED_SHAPE, "places")
     f = _traces(movie, places=places, timing=timing, drift=drift, settings=settings, progress=steps.step("traces"))
     responses = _responses(f, places=places, timing=timing, drift=drift, shape=shape, settings=settings)
-    if boutons is None and shape is None and responses.shape_from == "recording":
+    if given is None and shape is None and responses.shape_from == "recording":
         change = responses.shape.decay_s / (guess or ASSUMED_SHAPE).decay_s
         if not 1 / _OTHER_SHAPE < change < _OTHER_SHAPE:
             places = find(responses.shape, "again")

@@ -35,6 +35,7 @@ from .likelihoods import (
 )
 from .mixture_fit import LogPrior
 from .poisson import PoissonHistogramFit, fit_poisson_histogram
+from .pooled import AxonRelease, fit_axon_release
 from .pulse_pairs import PulsePair, ReleaseHistory, fisher_exact_p, measure_history, measure_pulse_pair
 from .ratios import FiellerInterval, bootstrap_ratio_interval, fieller_interval, unbiased_ratio
 from .site_search import ReleaseModel
@@ -49,6 +50,7 @@ from .threshold import (
 from .vesicle_sizes import gamma_vesicles_logpdf
 
 __all__ = [
+    "AxonRelease",
     "Estimate",
     "FiellerInterval",
     "LogPrior",
@@ -73,6 +75,7 @@ __all__ = [
     "false_call_rate",
     "fieller_interval",
     "fisher_exact_p",
+    "fit_axon_release",
     "fit_binomial",
     "fit_poisson_histogram",
     "fit_sites",

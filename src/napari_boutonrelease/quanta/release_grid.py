@@ -12,10 +12,12 @@ from typing import TYPE_CHECKING
 import numpy as np
 from scipy.special import gammaln
 
+from .vesicle_sizes import gamma_vesicles_logpdf
+
 if TYPE_CHECKING:
     from collections.abc import Iterator
 
-    from numpy.typing import ArrayLike, NDArray
+    from numpy.typing import NDArray
 
     Floats = NDArray[np.float64]
 
@@ -23,7 +25,6 @@ _Q_STEP = 0.07  # of log q
 _Q_CVS = (0.1, 0.18, 0.26, 0.35, 0.45, 0.6)
 _SMALLEST_Q_SD, _LARGEST_Q_SD = 0.7, 12.0
 _NOISE_DOUBT = 0.02  # relative: nulls and evoked amplitudes are not measured at the same moments
-_LEAST_SKEW = 0.02  # stands for none: the gamma law is then normal
 _LEAST_MIXTURE = np.float32(1e-37)
 N_SCALES = 3
 
@@ -87,42 +88,6 @@ def noise_scales(n_null: float) -> tuple[Floats, Floats]:
     return np.exp(np.array([-np.sqrt(3.0), 0.0, np.sqrt(3.0)]) * min(doubt, 0.3)), np.array([1.0, 4.0, 1.0]) / 6.0
 
 
-def vesicle_log_density(
-    amplitude: ArrayLike, *, vesicles: ArrayLike, q: ArrayLike, q_cv: ArrayLike, noise_sd: ArrayLike
-) -> Floats:
-    """Log density of an amplitude that holds a number of vesicles.
-
-    Parameters
-    ----------
-    amplitude, vesicles, q, q_cv, noise_sd : array_like
-        Amplitude, number of vesicles in it, mean response to one, its coefficient of variation, and SD of the normal
-        noise. They broadcast.
-
-    Returns
-    -------
-    ndarray
-        Normal noise plus gamma-distributed vesicles, by the Pearson type III density of the same mean, variance and
-        skewness; without skew it is the normal density of Boyd & Martin 1956.
-
-    References
-    ----------
-    Pearson 1895 Phil Trans R Soc A 186:343; Boyd & Martin 1956 J Physiol 132:74.
-
-    Examples
-    --------
-    >>> vesicle_log_density([0.0, 0.1], vesicles=0, q=0.5, q_cv=0.3, noise_sd=0.1).round(2)
-    array([1.38, 0.88])
-    """
-    m, size, variation = np.asarray(vesicles), np.asarray(q, dtype=np.float64), np.asarray(q_cv, dtype=np.float64)
-    variance = np.asarray(noise_sd, dtype=np.float64) ** 2 + m * (size * variation) ** 2
-    third = 2.0 * m * size**3 * variation**4
-    skew = np.maximum(third / variance**1.5, _LEAST_SKEW)
-    shape = 4.0 / skew**2
-    z = np.maximum((np.asarray(amplitude, dtype=np.float64) - m * size) / np.sqrt(variance), -1.95 / skew)
-    log_norm = np.log(2.0 / skew) + (shape - 1.0) * np.log(shape) - shape - gammaln(shape) - 0.5 * np.log(variance)
-    return np.asarray(log_norm + (shape - 1.0) * np.log1p(z * skew / 2.0) - 2.0 * z / skew)
-
-
 def mixtures(
     a: Floats, sd: Floats, grid: ReleaseGrid, *, at: NDArray[np.intp]
 ) -> Iterator[tuple[int, NDArray[np.float32], NDArray[np.float32], Floats]]:
@@ -149,7 +114,7 @@ def mixtures(
     m = np.arange(grid.n_max + 1)[:, None]
     for pair in at:
         i, k = divmod(int(pair), len(grid.q_cv))
-        log_density = vesicle_log_density(a, vesicles=m, q=grid.q[i], q_cv=grid.q_cv[k], noise_sd=sd)
+        log_density = gamma_vesicles_logpdf(a, vesicles=m, q=grid.q[i], q_cv=grid.q_cv[k], noise_sd=sd)
         log_unit = log_density.max(axis=0)
         density = np.exp(log_density - log_unit).astype(np.float32)
         mixture = grid.weights @ density
@@ -169,7 +134,7 @@ def integrated_likelihood(a: Floats, sd: Floats, scales: Floats, grid: ReleaseGr
     result = np.zeros((len(scales), n_pairs, grid.n_max))
     if used.any():
         amplitude, noise = a[used], sd[used]
-        silent = vesicle_log_density(amplitude, vesicles=0, q=1.0, q_cv=0.0, noise_sd=noise)
+        silent = gamma_vesicles_logpdf(amplitude, vesicles=0, q=1.0, q_cv=0.0, noise_sd=noise)
         for k, scale in enumerate(scales):
             for pair, mixture, _, log_unit in mixtures(amplitude, scale * noise, grid, at=np.arange(n_pairs)):
                 at_each = np.log(mixture, out=mixture).sum(axis=1).reshape(grid.n_max, -1)
