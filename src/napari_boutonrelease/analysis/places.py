@@ -52,7 +52,7 @@ class Places:
     found_by : tuple of str
         `responses`, `shape`, `both` or `file`.
     axon_um, axon_offset_um : (n,) ndarray
-        Distance along the axon's path and from it; NaN without a path (in px where the pixel size is unknown).
+        Distance along the axon's path and from it; NaN without a path or where the pixel size is unknown.
     footprints : Footprints
         Weights of each, in the same order; the label image holds the ids.
     evidence : (y, x) ndarray
@@ -301,7 +301,7 @@ def _ordered(
     else:
         order = np.lexsort((footprints.x_px, footprints.y_px))
     names = np.arange(1, n + 1) if ids is None else ids[order]
-    scale = timing.pixel_size_um or 1.0
+    scale = timing.pixel_size_um or np.nan
     return Places(
         bouton=names.astype(np.int64),
         found_by=tuple(found_by[i] for i in order),

@@ -7,12 +7,12 @@ import platform
 from dataclasses import dataclass
 from datetime import UTC, datetime
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, Literal
 
 from pydantic import ValidationError
 
 from napari_boutonrelease.errors import SavedAnalysisError
-from napari_boutonrelease.recording import Protocol, content_digest, protocol_from_dict, protocol_to_dict
+from napari_boutonrelease.recording import Protocol, content_digest, file_digest, protocol_from_dict, protocol_to_dict
 
 from .settings import Settings
 
@@ -37,24 +37,73 @@ class SavedAnalysis:
     protocol : Protocol
         When the axon was stimulated.
     movie_files : tuple of Path
-        Where the movie was; relative ones are looked for beside the saved file's folder, too.
-    movie_digest : str
-        SHA-256 of the movie's content.
+        Where the movie was; empty if it was an array.
+    movie_digest : str or None
+        SHA-256 of the movie's content; None if it was an array.
     boutons, axon : Path or None
         Files that were given.
+    digests : dict of str to str
+        SHA-256 of those two files, by the names `boutons` and `axon`.
     """
 
     path: Path
     settings: Settings
     protocol: Protocol
     movie_files: tuple[Path, ...]
-    movie_digest: str
+    movie_digest: str | None
     boutons: Path | None
     axon: Path | None
+    digests: dict[str, str]
+
+    def find_movie(self) -> tuple[Path, ...]:
+        """Return the movie's files, where they were or beside the folder of results.
+
+        Raises
+        ------
+        SavedAnalysisError
+            If they are in neither place.
+        """
+        if not self.movie_files:
+            raise SavedAnalysisError(f"{self.path} was made from an array, not from a file: give the MOVIE to analyse.")
+        beside = self.path.resolve().parent.parent
+        folder = self.movie_files[0].parent.name
+        for files in (
+            self.movie_files,
+            tuple(beside / file.name for file in self.movie_files),
+            tuple(beside / folder / file.name for file in self.movie_files),
+        ):
+            if all(file.is_file() for file in files):
+                return files
+        missing = next(file for file in self.movie_files if not file.is_file())
+        raise SavedAnalysisError(
+            f"{missing}, from which {self.path} was made, is no longer there: give the MOVIE's new path together with "
+            "--from."
+        )
+
+    def find_given(self, name: Literal["boutons", "axon"]) -> Path | None:
+        """Return the file of boutons or of the axon's path that was used; None if there was none.
+
+        Raises
+        ------
+        SavedAnalysisError
+            If the file is gone or has changed.
+        """
+        path: Path | None = getattr(self, name)
+        if path is None:
+            return None
+        if not path.is_file():
+            raise SavedAnalysisError(
+                f"{path}, with which {self.path} was made, is no longer there: give its new path as --{name}."
+            )
+        if file_digest(path) != self.digests.get(name):
+            raise SavedAnalysisError(
+                f"{path} has changed since {self.path} was made: give the file to use as --{name}."
+            )
+        return path
 
     def check_movie(self, movie: Movie) -> None:
-        """Raise `SavedAnalysisError` unless the movie has the content that was analysed."""
-        if movie.files and content_digest(movie) != self.movie_digest:
+        """Raise `SavedAnalysisError` unless the movie has the content that was analysed, as far as that is known."""
+        if movie.files and self.movie_digest and content_digest(movie) != self.movie_digest:
             raise SavedAnalysisError(
                 f"{movie.files[0]} is not the movie that {self.path} was made from (its content differs). "
                 "Give the right movie, or analyse this one with --settings instead of --from."
@@ -82,6 +131,9 @@ def provenance_of(measured: Measured, *, boutons: str | Path | None, axon: str |
         "settings": measured.settings.model_dump(mode="json"),
         "boutons": None if boutons is None else str(Path(boutons).resolve()),
         "axon": None if axon is None else str(Path(axon).resolve()),
+        "sha256": {
+            name: file_digest(Path(path)) for name, path in (("boutons", boutons), ("axon", axon)) if path is not None
+        },
         "hand_edits": [],
     }
 
@@ -98,9 +150,13 @@ def read_saved(path: str | Path) -> SavedAnalysis:
     try:
         content = json.loads(path.read_text(encoding="utf-8"))
     except OSError as error:
-        raise SavedAnalysisError(f"Cannot read {path}: {error.strerror}.") from error
+        raise SavedAnalysisError(
+            f"{path} cannot be read ({error.strerror}): give the analysis.json of a results folder."
+        ) from error
     except ValueError as error:
-        raise SavedAnalysisError(f"{path} is not a saved analysis: {error}.") from error
+        raise SavedAnalysisError(
+            f"{path} is not a saved analysis ({error}): give the analysis.json of a results folder."
+        ) from error
     if not isinstance(content, dict) or content.get("format") != "boutonrelease analysis":
         raise SavedAnalysisError(f"{path} is not a saved analysis; give the analysis.json of a results folder.")
     version = content.get("format_version")
@@ -115,11 +171,12 @@ def read_saved(path: str | Path) -> SavedAnalysis:
             settings=Settings.model_validate(content["settings"]),
             protocol=protocol_from_dict(content["protocol"], source=path),
             movie_files=tuple(Path(file) for file in content["movie"]["files"]),
-            movie_digest=str(content["movie"]["sha256"]),
+            movie_digest=content["movie"]["sha256"],
             boutons=None if content["boutons"] is None else Path(content["boutons"]),
             axon=None if content["axon"] is None else Path(content["axon"]),
+            digests=dict(content["sha256"]),
         )
-    except (KeyError, TypeError) as error:
+    except (KeyError, TypeError, AttributeError) as error:
         raise SavedAnalysisError(f"{path} is damaged: {error} is missing or has the wrong type.") from error
     except ValidationError as error:
         first = error.errors()[0]

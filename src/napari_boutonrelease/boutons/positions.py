@@ -16,6 +16,7 @@ if TYPE_CHECKING:
     from numpy.typing import ArrayLike, NDArray
 
 _TABLE_SUFFIXES = frozenset({".csv", ".txt", ".tsv"})
+_APART_PX = 0.5
 _IMAGE_SUFFIXES = frozenset({".tif", ".tiff"})
 
 
@@ -82,6 +83,7 @@ def read_positions(path: str | Path, *, pixel_size_um: float | None, image_shape
                 f"{path}, row {line}: the bouton at y = {y:g}, x = {x:g} px lies outside the image of {height} x "
                 f"{width} pixels (height x width). Check the unit and the order of the columns."
             )
+    _check_apart(path, y_px, x_px, lines)
     return GivenBoutons(y_px=y_px, x_px=x_px, bouton=_ids(path, rows), label=None)
 
 
@@ -159,7 +161,9 @@ def _read_labels(path: Path, *, image_shape: tuple[int, int]) -> GivenBoutons:
     try:
         label = np.squeeze(tifffile.imread(path))
     except (tifffile.TiffFileError, ValueError, OSError) as error:
-        raise BoutonFileError(f"{path} is not a TIFF image that can be read: {error}.") from error
+        raise BoutonFileError(
+            f"{path} is not a TIFF image that can be read ({error}): save the labels as TIFF, one number a bouton."
+        ) from error
     if label.shape != image_shape:
         size = " x ".join(str(n) for n in label.shape)
         raise BoutonFileError(
@@ -238,6 +242,18 @@ def _number(path: Path, line: int, name: str, text: str) -> float:
     if not math.isfinite(value):
         raise BoutonFileError(f"{path}, row {line}, column {name}: a number is needed (given {text!r}).")
     return value
+
+
+def _check_apart(path: Path, y_px: NDArray[np.float64], x_px: NDArray[np.float64], lines: list[int]) -> None:
+    """Refuse a bouton that is there twice: its light would be shared out between the two at random."""
+    for row in range(1, len(lines)):
+        distance = np.hypot(y_px[:row] - y_px[row], x_px[:row] - x_px[row])
+        nearest = int(np.argmin(distance))
+        if distance[nearest] < _APART_PX:
+            raise BoutonFileError(
+                f"{path}, row {lines[row]}: the bouton lies {distance[nearest]:.2g} px from that of row {lines[nearest]}: "
+                "too near to be another; leave one of them out."
+            )
 
 
 def _ids(path: Path, rows: list[tuple[int, dict[str, str]]]) -> NDArray[np.int64]:

@@ -81,13 +81,13 @@ def _saved_inputs(args: argparse.Namespace) -> "tuple[Settings, str, dict[str, A
 
     saved = read_saved(args.saved)
     settings = read_settings(args, base=saved.settings)
-    movie = open_movie(_source(args.movie or saved.movie_files), channel=settings.recording.channel)
+    movie = open_movie(_source(args.movie or saved.find_movie()), channel=settings.recording.channel)
     saved.check_movie(movie)
     inputs = {
         "movie": movie,
         "protocol": read_protocol(args.protocol) if args.protocol else saved.protocol,
-        "boutons": args.boutons or saved.boutons,
-        "axon": args.axon or saved.axon,
+        "boutons": args.boutons or saved.find_given("boutons"),
+        "axon": args.axon or saved.find_given("axon"),
     }
     return settings, str(movie.files[0]), inputs
 

@@ -130,7 +130,7 @@ def _settings_of_file(path: str) -> "dict[str, Any]":
         text = Path(path).read_text(encoding="utf-8")
         content = json.loads(text) if path.endswith(".json") else tomllib.loads(text)
     except OSError as error:
-        raise InputError(f"{path}: the settings cannot be read ({error.strerror}).") from error
+        raise InputError(f"{path}: the settings cannot be read ({error.strerror}); check the path.") from error
     except ValueError as error:
         raise InputError(
             f"{path}: the settings are not valid {Path(path).suffix[1:].upper() or 'TOML'} ({error})."

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from .light import Light, light_at_rest, measure_light
 from .motion import Drift, measure_drift, no_drift
-from .movie import Movie, content_digest, fill_dead, movie_from_array, open_movie
+from .movie import Movie, content_digest, file_digest, fill_dead, movie_from_array, open_movie
 from .protocol import Protocol, protocol_from_dict, protocol_to_dict, read_protocol, write_protocol
 from .stimuli import RegularStimuli, StimulusTable, read_stimulus_table
 from .timing import Timing, frame_times_s, resolve_timing, segment_frames, stimulus_frame
@@ -18,6 +18,7 @@ __all__ = [
     "StimulusTable",
     "Timing",
     "content_digest",
+    "file_digest",
     "fill_dead",
     "frame_times_s",
     "light_at_rest",

@@ -303,11 +303,12 @@ def content_digest(movie: Movie) -> str:
         for _, block in movie.blocks(64):
             digest.update(np.ascontiguousarray(block).data)
         return digest.hexdigest()
-    digests = [_file_digest(path) for path in movie.files]
+    digests = [file_digest(path) for path in movie.files]
     return digests[0] if len(digests) == 1 else hashlib.sha256("".join(digests).encode()).hexdigest()
 
 
-def _file_digest(path: Path) -> str:
+def file_digest(path: Path) -> str:
+    """SHA-256 of a file, hexadecimal."""
     digest = hashlib.sha256()
     with path.open("rb") as file:
         while block := file.read(_HASH_BYTES):

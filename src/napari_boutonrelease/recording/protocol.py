@@ -109,7 +109,9 @@ def read_protocol(path: str | Path) -> Protocol:
     try:
         document = tomllib.loads(path.read_text(encoding="utf-8-sig"))
     except OSError as error:
-        raise ProtocolError(f"{path} cannot be opened: {error.strerror or error}.") from error
+        raise ProtocolError(
+            f"{path} cannot be opened ({error.strerror or error}): check the protocol's path."
+        ) from error
     except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
         raise ProtocolError(f"{path.name} is not valid TOML: {error}. Text needs quotes, numbers a point.") from error
     try:
@@ -150,7 +152,7 @@ def write_protocol(protocol: Protocol, path: str | Path) -> None:
 
 
 def protocol_to_dict(protocol: Protocol) -> dict[str, Any]:
-    """Return the protocol as JSON-ready sections; `protocol_from_dict` gives it back. A table is written out in full."""
+    """Return the protocol as JSON-ready sections, a table in full; `protocol_from_dict` gives it back."""
     if isinstance(protocol.stimuli, StimulusTable):
         table = {key: getattr(protocol.stimuli, key).tolist() for key in _TABLE}
         return _sections(protocol, stimuli=table)

@@ -144,7 +144,10 @@ def read_stimulus_table(path: Path) -> StimulusTable:
             header = [title.strip() for title in next(reader, [])]
             lines = [(reader.line_num, row) for row in reader if any(cell.strip() for cell in row)]
     except OSError as error:
-        raise ProtocolError(f"[stimuli] times: {path} cannot be opened: {error.strerror or error}.") from error
+        raise ProtocolError(
+            f"[stimuli] times: {path} cannot be opened ({error.strerror or error}): give its path relative to the "
+            "protocol's folder."
+        ) from error
     except (UnicodeDecodeError, csv.Error) as error:
         raise ProtocolError(
             f"[stimuli] times: {path} is not a CSV text file ({error}): save it as CSV, UTF-8."

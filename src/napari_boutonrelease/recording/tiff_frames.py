@@ -92,7 +92,9 @@ def map_file(path: Path) -> mmap.mmap:
                 raise MovieError(f"{path} is empty: copy or export the movie again.")
             return mmap.mmap(file.fileno(), 0, access=mmap.ACCESS_READ)
     except OSError as error:
-        raise MovieError(f"{path} cannot be opened: {error.strerror or error}.") from error
+        raise MovieError(
+            f"{path} cannot be opened ({error.strerror or error}): check its path and permissions."
+        ) from error
 
 
 def open_tiff(path: Path, *, channel: int | None, keep_open: bool) -> TiffFrames:
