@@ -9,6 +9,7 @@ from .footprints import (
     Footprints,
     build_footprints,
     crosstalk_matrix,
+    drawn_pixels,
     footprints_from_labels,
 )
 from .maps import ResponseStack, project_responses, scan_shapes
@@ -31,6 +32,7 @@ __all__ = [
     "detect_boutons",
     "detect_by_shape",
     "distance_along",
+    "drawn_pixels",
     "estimate_spot_sigma",
     "find_shape_candidates",
     "footprints_from_labels",

@@ -11,7 +11,7 @@ fit with two rays of axon; subtracted from the baseline, it leaves the brightnes
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Literal
 
@@ -88,6 +88,7 @@ def build_footprints(
     mode: FootprintMode,
     response_image: NDArray[np.floating] | None,
     response_variance: NDArray[np.floating] | None,
+    drawn: Mapping[int, NDArray[np.intp]] | None = None,
 ) -> Footprints:
     """Compute the extraction weights of boutons at given places.
 
@@ -107,6 +108,8 @@ def build_footprints(
         profile seen in `response_image`, shrunk towards the Gaussian by as much as it is noise.
     response_image, response_variance : (y, x) ndarray or None
         Mean response and its variance, for `adaptive`.
+    drawn : mapping of int to (k, 2) ndarray of int, optional
+        Pixels (y, x) of boutons whose footprint was drawn: their plain mean is read instead. Keys are indices.
 
     Returns
     -------
@@ -117,7 +120,7 @@ def build_footprints(
     InputError
         If `adaptive` is asked for without a response image.
     """
-    ys, xs = np.atleast_1d(np.asarray(y_px, dtype=np.float64)), np.atleast_1d(np.asarray(x_px, dtype=np.float64))
+    ys, xs = (np.array(values, dtype=np.float64, ndmin=1) for values in (y_px, x_px))
     shape = (optics.mean_image.shape[0], optics.mean_image.shape[1])
     profiles = [gaussian_patch(y, x, sigma_px=spot_sigma_px, shape=shape) for y, x in zip(ys, xs, strict=True)]
     precision = np.where(optics.usable(), 1.0 / optics.variance_image, 0.0)
@@ -133,6 +136,14 @@ def build_footprints(
             _adapted(profile, y, x, image=response_image, variance=response_variance, sigma_px=spot_sigma_px)
             for profile, y, x in zip(profiles, ys, xs, strict=True)
         ]
+    drawn = drawn or {}
+    for index, pixels in drawn.items():
+        profiles[index] = _mask(pixels)
+        ys[index], xs[index] = pixels.mean(axis=0)
+    label = _core_labels(profiles, shape)
+    if drawn:
+        precision = np.where(_rim(drawn, shape, reach_px=_RIM_SIGMAS * spot_sigma_px), 0.0, precision)
+    widest = max((max(profiles[index].values.shape) for index in drawn), default=0)
     return _assemble(
         ys,
         xs,
@@ -140,8 +151,8 @@ def build_footprints(
         optics=optics,
         precision=precision,
         spot_sigma_px=spot_sigma_px,
-        radius_px=background_radius_px,
-        label=None,
+        radius_px=background_radius_px + widest / 2,
+        label=label,
     )
 
 
@@ -165,31 +176,44 @@ def footprints_from_labels(
     -------
     Footprints
     """
-    from scipy.ndimage import distance_transform_edt, find_objects
-
-    ids, dense = np.unique(label, return_inverse=True)
-    dense = dense.reshape(label.shape) + (0 if ids[0] == 0 else 1)
-    profiles: list[Patch] = []
-    centres: list[tuple[float, float]] = []
-    for index, box in enumerate(find_objects(dense), start=1):
-        mask = (dense[box] == index).astype(np.float64)
-        rows, columns = np.nonzero(mask)
-        centres.append((rows.mean() + box[0].start, columns.mean() + box[1].start))
-        profiles.append(Patch(y0=box[0].start, x0=box[1].start, values=mask))
-    ys, xs = np.array(centres).reshape(-1, 2).T
-    rim = (dense == 0) & (distance_transform_edt(dense == 0) <= _RIM_SIGMAS * spot_sigma_px)
-    precision = np.where(optics.usable() & ~rim, 1.0 / optics.variance_image, 0.0)
-    widest = max((max(profile.values.shape) for profile in profiles), default=0)
-    return _assemble(
-        ys,
-        xs,
-        profiles,
+    pixels = list(drawn_pixels(label).values())
+    nowhere = np.zeros(len(pixels))
+    return build_footprints(
+        y_px=nowhere,
+        x_px=nowhere,
         optics=optics,
-        precision=precision,
         spot_sigma_px=spot_sigma_px,
-        radius_px=background_radius_px + widest / 2,
-        label=dense.astype(np.int32),
+        background_radius_px=background_radius_px,
+        mode="weighted",
+        response_image=None,
+        response_variance=None,
+        drawn=dict(enumerate(pixels)),
     )
+
+
+def drawn_pixels(label: NDArray[np.integer]) -> dict[int, NDArray[np.intp]]:
+    """Pixels of every value of a label image above 0, by value in ascending order."""
+    rows, columns = np.nonzero(label)
+    values = label[rows, columns]
+    pixels = np.column_stack([rows, columns])
+    return {int(value): pixels[values == value] for value in np.unique(values)}
+
+
+def _mask(pixels: NDArray[np.intp]) -> Patch:
+    y0, x0 = pixels.min(axis=0)
+    values = np.zeros(tuple(np.ptp(pixels, axis=0) + 1))
+    values[pixels[:, 0] - y0, pixels[:, 1] - x0] = 1.0
+    return Patch(y0=int(y0), x0=int(x0), values=values)
+
+
+def _rim(drawn: Mapping[int, NDArray[np.intp]], shape: tuple[int, int], *, reach_px: float) -> NDArray[np.bool_]:
+    """Pixels just outside drawn masks: light of the bouton falls there, so that they are no background."""
+    from scipy.ndimage import distance_transform_edt
+
+    outside = np.ones(shape, dtype=np.bool_)
+    for pixels in drawn.values():
+        outside[pixels[:, 0], pixels[:, 1]] = False
+    return np.asarray(outside & (distance_transform_edt(outside) <= reach_px))
 
 
 def _assemble(
@@ -201,7 +225,7 @@ def _assemble(
     precision: NDArray[np.float64],
     spot_sigma_px: float,
     radius_px: float,
-    label: NDArray[np.int32] | None,
+    label: NDArray[np.int32],
 ) -> Footprints:
     weights, naive = (
         separated_weights(
@@ -209,7 +233,6 @@ def _assemble(
         )
         for separate in (True, False)
     )
-    label = _core_labels(profiles, optics.mean_image.shape) if label is None else label
     shaft = [
         _shaft_counts(
             i,
