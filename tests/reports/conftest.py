@@ -19,6 +19,7 @@ from napari_boutonrelease.response_shape import ResponseShape
 INTERVAL_S, TRIAL_S, PIXEL_UM, NOISE_SD = 0.010, 1.0, 0.1, 0.022
 SHAPE = ResponseShape(latency_s=0.001, rise_s=0.002, decay_s=0.06)
 BRIGHT, SILENT, UNUSABLE = 1, 3, 6  # rows
+AXON, ALONE = "whole axon, this bouton's amplitudes", "this bouton alone"
 
 
 def _wilson(called, trials):
@@ -212,20 +213,21 @@ def make_result(*, seed: int = 1, boutons: int = 9, trials: int = 60, pulses: in
         bouton_rows.append(row)
         m = -np.log(max(1 - rate, 1e-3))
         for quantity, method, value, spread in (
-            ("p_release", "mixture, q pooled", row["p_release"], 0.25),
-            ("p_release", "mixture, alone", rate, 0.3),
-            ("p_release", "counted", rate, 0.3),
+            ("p_release", AXON, row["p_release"], 0.25),
+            ("p_release", ALONE, rate, 0.3),
             ("p_release", "counted, corrected", row["p_corrected"], 0.3),
-            ("m", "mixture, q pooled", n_sites[b] * p_site[b], 0.25),
-            ("m", "failures", m, 0.3),
-            ("m", "1/CV²", m * 1.1, 0.5),
-            ("n_sites", "mixture, q pooled", row["n_sites"], 0.4),
-            ("p_site", "mixture, q pooled", p_site[b], 0.25),
+            ("p_release", "counted", rate, 0.3),
+            ("n_sites", AXON, row["n_sites"], 0.4),
+            ("p_site", AXON, p_site[b], 0.25),
+            ("q", AXON, q[b], 0.12),
+            ("q", ALONE, 1.04 * q[b], 0.2),
+            ("m", AXON, n_sites[b] * p_site[b], np.nan),
+            ("m", "failures, Poisson", m, 0.3),
+            ("m", "mean over q", m * 1.02, 0.3),
+            ("m", "1/CV²", m * 1.1, 1e16 if b == 1 else 0.5),
             ("p_site", "failures", p_site[b] * 0.97, 0.3),
-            ("q", "mixture, q pooled", q[b], 0.12),
-            ("q", "mixture, alone", 1.04 * q[b], 0.2),
         ):
-            low, high = value * (1 - spread), value * (1 + spread)
+            low, high = value * (1 - min(spread, 0.9)), value * (1 + spread)
             high = min(high, 1.0) if quantity.startswith("p_") else high
             estimates.append(
                 {"bouton": b + 1, "quantity": quantity, "method": method, "value": value, "lo": low, "hi": high}
@@ -340,6 +342,10 @@ def _summary(frames, height, width, trials, pulses, bouton_rows):
             "p_release": measured.mean(),
             "p_release_lo": measured.mean() - 1.96 * error,
             "p_release_hi": measured.mean() + 1.96 * error,
+            "boutons_found_by_responses": len(measured) - 1,
+            "p_release_found_by_responses": 1.1 * measured.mean(),
+            "p_release_found_by_responses_lo": 1.1 * measured.mean() - 1.96 * error,
+            "p_release_found_by_responses_hi": 1.1 * measured.mean() + 1.96 * error,
             "q": 0.121,
             "q_lo": 0.112,
             "q_hi": 0.131,
@@ -377,6 +383,18 @@ def small_result() -> AnalysisResult:
 def empty_result() -> AnalysisResult:
     """No bouton at all, and nothing known about the recording."""
     return make_result(seed=3, boutons=0, trials=3)
+
+
+@pytest.fixture(scope="session")
+def quiet_result() -> AnalysisResult:
+    """Boutons of which none releases."""
+    full = make_result(seed=5, boutons=3, trials=12)
+    nothing = ["ppr", "ppr_lo", "ppr_hi", "ppf", "n_sites", "n_sites_lo", "n_sites_hi", "potency"]
+    limits = {"p_release": 0.0, "p_release_lo": 0.0, "p_release_hi": [0.08, 0.11, 0.2], "flags": "silent"}
+    boutons = full.boutons.assign(**dict.fromkeys(nothing, np.nan), **limits, n_set=None, found_by="shape")
+    population = {"boutons": 3, "selection": "3 by shape alone", "p_release": 0.0, "p_release_lo": 0.0}
+    summary = {**full.summary, "population": population}
+    return replace(full, boutons=boutons, summary=summary)
 
 
 @pytest.fixture(scope="session")

@@ -11,13 +11,24 @@ import pytest
 from matplotlib.text import Text
 
 from napari_boutonrelease.flags import FLAGS
+from napari_boutonrelease.quanta import gamma_vesicles_logpdf
 from napari_boutonrelease.reports import figures_style as style
-from napari_boutonrelease.reports.figures import figures_of, write_figure
+from napari_boutonrelease.reports.figures import (
+    figure_bouton,
+    figure_pulse_pairs,
+    figure_release_along_axon,
+    figures_of,
+    write_figure,
+)
 from napari_boutonrelease.reports.figures_bouton import envelope
 from napari_boutonrelease.reports.figures_page import text_width_mm, wrapped
 from napari_boutonrelease.reports.figures_pages import pages
+from napari_boutonrelease.reports.figures_trials import align_trials, mean_of_trials
 from napari_boutonrelease.reports.histogram import amplitude_density, bin_edges, fitted_components
 from napari_boutonrelease.reports.report import write_report
+from napari_boutonrelease.response_shape import ResponseShape
+
+BRIGHT, SILENT = 1, 3  # rows of the invented recording
 
 # Machado, Oliveira & Fernandes (2009), severity 1, linear RGB.
 DEFICIENCIES = {
@@ -83,8 +94,12 @@ def texts_of(figure):
     return drawn
 
 
-def check_layout(figure):
-    """No text reaches over the paper's edge, and no two texts of one page cover each other; return what is said."""
+def check_layout(figure, *, dpi=300):
+    """No text reaches over the paper's edge, and no two texts of one page cover each other; return what is said.
+
+    A PDF has no pixels; at few of them each letter's width would be rounded.
+    """
+    figure.set_dpi(dpi)
     extents = texts_of(figure)
     assert extents
     for text, box in extents:
@@ -102,7 +117,7 @@ def check_layout(figure):
     return " ".join(text.get_text() for text, _ in extents)
 
 
-@pytest.mark.parametrize("name", ["result", "blank_result", "empty_result"])
+@pytest.mark.parametrize("name", ["result", "quiet_result", "blank_result", "empty_result"])
 def test_no_text_on_a_page_is_cut_or_covered(request, name):
     for page in pages(request.getfixturevalue(name)):
         check_layout(page())
@@ -123,12 +138,109 @@ def test_long_names_many_flags_and_many_cautions_fit(small_result):
     assert all(f"Caution {i}:" in said for i in range(12))
 
 
+def said_by(figure):
+    return check_layout(figure, dpi=150)
+
+
+def test_a_silent_bouton_is_not_drawn_as_if_it_had_vesicles(result):
+    words = said_by(figure_bouton(result, SILENT))
+    assert "No release was seen. The 95 % interval of p_release ends at" in words
+    assert "as the axon's other boutons have them" in words
+    assert "n_sites" not in words
+    assert "binomial" not in words
+    words = said_by(figure_bouton(result, SILENT - 1))
+    assert "n_sites" in words
+    assert "No release" not in words
+
+    q_panel = figure_release_along_axon(result).axes[1]
+    silent_at = float(result.boutons["axon_um"][SILENT])
+    drawn_at = {float(line.get_xdata()[0]) for line in q_panel.lines}
+    assert silent_at not in drawn_at
+    assert float(result.boutons["axon_um"][SILENT - 1]) in drawn_at
+    probabilities = figure_pulse_pairs(result).axes[1]
+    assert str(SILENT + 1) not in [text.get_text() for text in probabilities.texts]
+    assert str(SILENT) in [text.get_text() for text in probabilities.texts]
+
+
+def test_where_nothing_releases_no_mean_of_zeros_is_given(quiet_result):
+    words = said_by(pages(quiet_result)[0]())
+    assert "< 0.20" in words
+    assert "no release seen" in words
+    assert "mean p_release" not in words
+    assert "of an assumed size" in said_by(figure_bouton(quiet_result, 0))
+
+
+def test_the_mean_of_boutons_found_by_responses_stands_beside_that_of_all(result):
+    words = said_by(pages(result)[0]())
+    assert "mean p_release, all boutons" in words
+    assert "those found by responses" in words
+    assert f"{result.summary['population']['p_release_found_by_responses']:.2f}" in words
+
+
+def test_an_interval_without_an_end_is_said_to_have_none(result):
+    words = said_by(figure_bouton(result, BRIGHT))
+    assert "over 1000" in words
+
+
+def test_without_a_path_nothing_is_said_to_lie_along_the_axon(result):
+    lost = replace(result, boutons=result.boutons.assign(axon_um=np.nan))
+    words = check_layout(pages(lost)[1]())
+    assert "along the axon (µm)" not in words
+    assert "give the course of the axon" in words
+    assert [label.get_text() for label in figure_release_along_axon(lost).axes[1].get_xticklabels()] == [
+        str(bouton) for bouton in lost.boutons["bouton"]
+    ]
+
+
+def test_given_positions_have_no_map_of_evidence(result):
+    given = replace(result, evidence=np.zeros_like(result.evidence), evidence_cut=np.nan)
+    assert "Evidence" not in check_layout(pages(given)[1]())
+    assert "Evidence" in check_layout(pages(result)[1]())
+
+
+def test_noise_without_evidence_stays_pale(result):
+    noise = np.random.default_rng(3).gamma(1.0, 0.7, result.evidence.shape)
+    figure = pages(replace(result, evidence=noise, evidence_cut=10.0))[1]()
+    image = next(axes.images[0] for axes in figure.axes if axes.images)
+    assert image.norm.vmin == 0
+    assert np.median(np.asarray(image.norm(noise))) < 0.25
+
+
+def test_trials_are_aligned_on_their_first_pulse(result):
+    trials = align_trials(result, BRIGHT)
+    assert trials.frames_a_bin == 1
+    used = (result.responses["bouton"] == BRIGHT + 1) & (result.responses["pulse"] == 1)
+    first = result.responses[used & (result.responses["used"] == 1)]
+    np.testing.assert_array_equal(trials.called, first["called"] == 1)
+    time_s, mean = mean_of_trials(trials)
+    assert np.all(np.diff(time_s) > 0)
+    assert abs(mean[time_s < -0.005].mean()) < 0.02
+    peak = mean[(time_s > 0) & (time_s < 0.02)].max()
+    assert peak == pytest.approx(0.9 * float(result.boutons["amplitude_mean"][BRIGHT]), rel=0.25)
+    # The last points must not rest on the few trials that reach furthest.
+    assert np.abs(np.diff(mean[-4:])).max() < 0.1
+
+
+def test_slow_recordings_are_binned_and_drawn_in_seconds(result):
+    slow = replace(
+        result,
+        time_s=1000 * result.time_s,
+        stimulus_s=1000 * result.stimulus_s,
+        shape=ResponseShape(latency_s=0.0, rise_s=2.0, decay_s=60.0),
+        summary={},
+    )
+    trials = align_trials(slow, BRIGHT)
+    assert trials.level.shape[1] <= 92
+    axes = next(axes for axes in figure_bouton(slow, BRIGHT).axes if "pulse 1" in axes.get_xlabel())
+    assert axes.get_xlabel() == "time from pulse 1 (s)"
+
+
 def test_every_figure_stands_alone_without_cut_text(result):
     listing = figures_of(result)
     assert {"map", "release_along_axon", "calls", "quality", "pulse_pairs", "bouton_01", "bouton_09"} <= listing.keys()
     for stem, draw in listing.items():
-        if not stem.startswith("bouton") or stem in ("bouton_01", "bouton_07"):
-            check_layout(draw())
+        if not stem.startswith("bouton") or stem in ("bouton_01", "bouton_04", "bouton_07"):
+            check_layout(draw(), dpi=150)
 
 
 def test_text_in_svg_stays_text(written):
@@ -190,26 +302,51 @@ def test_model_components_follow_the_binomial_law(result):
     step = amplitude[1] - amplitude[0]
     boutons = result.boutons
     row = int(np.flatnonzero(boutons["n_sites"] == 3)[0])
-    n, p, q, q_cv, sd = (float(boutons[name][row]) for name in ("n_sites", "p_site", "q", "q_cv", "noise_sd"))
-    components = fitted_components(boutons, row, amplitude)
+    n, p, q, q_cv = (float(boutons[name][row]) for name in ("n_sites", "p_site", "q", "q_cv"))
+    noise = np.array([0.02, 0.03, np.nan])
+    components = fitted_components(boutons, row, amplitude, noise_sd=noise)
     assert len(components) == 4
     np.testing.assert_allclose(
-        components.sum(axis=1) * step, [(1 - p) ** 3, 3 * p * (1 - p) ** 2, 3 * p**2 * (1 - p), p**3], rtol=1e-6
+        components.sum(axis=1) * step, [(1 - p) ** 3, 3 * p * (1 - p) ** 2, 3 * p**2 * (1 - p), p**3], rtol=1e-5
     )
     total = components.sum(axis=0)
     mean = np.sum(total * amplitude) * step
     variance = np.sum(total * (amplitude - mean) ** 2) * step
-    assert mean == pytest.approx(n * p * q, rel=1e-6)
-    assert variance == pytest.approx(sd**2 + n * p * (q * q_cv) ** 2 + n * p * (1 - p) * q**2, rel=1e-5)
+    assert mean == pytest.approx(n * p * q, rel=1e-4)
+    expected = np.nanmean(noise**2) + n * p * (q * q_cv) ** 2 + n * p * (1 - p) * q**2
+    assert variance == pytest.approx(expected, rel=1e-4)
+
+
+def test_the_model_drawn_is_that_of_the_fit(result):
+    boutons = result.boutons
+    row = int(np.flatnonzero(boutons["n_sites"] == 2)[0])
+    at = np.array([0.0, 0.1, 0.25])
+    drawn = fitted_components(boutons, row, at, noise_sd=np.array([0.02]))[2]
+    q, q_cv, p = (float(boutons[name][row]) for name in ("q", "q_cv", "p_site"))
+    density = np.exp(gamma_vesicles_logpdf(at, vesicles=2, q=q, q_cv=q_cv, noise_sd=0.02))
+    np.testing.assert_allclose(drawn, p**2 * density, rtol=1e-9)
+
+
+def test_many_trials_are_stood_for_by_few_noise_levels(result):
+    noise = np.random.default_rng(5).uniform(0.02, 0.03, 400)
+    row = int(np.flatnonzero(result.boutons["n_sites"] == 2)[0])
+    at = np.linspace(-0.2, 0.8, 300)
+    few = fitted_components(result.boutons, row, at, noise_sd=noise).sum(axis=0)
+    all_of_them = np.mean(
+        [fitted_components(result.boutons, row, at, noise_sd=one[None]).sum(axis=0) for one in noise], axis=0
+    )
+    assert np.abs(few - all_of_them).max() < 0.005 * all_of_them.max()
 
 
 def test_a_poisson_model_has_the_failures_of_its_p_release(result):
     boutons = result.boutons.assign(quantal_model="poisson")
     amplitude = np.linspace(-1.0, 6.0, 20_001)
-    areas = fitted_components(boutons, 1, amplitude).sum(axis=1) * (amplitude[1] - amplitude[0])
-    assert areas.sum() == pytest.approx(1.0, abs=1e-6)
-    assert areas[0] == pytest.approx(1 - boutons["p_release"][1], rel=1e-6)
-    assert len(fitted_components(result.boutons.assign(quantal_model="none"), 1, amplitude)) == 0
+    noise = np.array([0.022])
+    areas = fitted_components(boutons, 1, amplitude, noise_sd=noise).sum(axis=1) * (amplitude[1] - amplitude[0])
+    assert areas.sum() == pytest.approx(1.0, abs=1e-5)
+    assert areas[0] == pytest.approx(1 - boutons["p_release"][1], rel=1e-5)
+    assert len(fitted_components(result.boutons.assign(quantal_model="none"), 1, amplitude, noise_sd=noise)) == 0
+    assert len(fitted_components(result.boutons, 1, amplitude, noise_sd=np.array([np.nan]))) == 0
 
 
 def test_histograms_hold_every_amplitude():
@@ -220,6 +357,14 @@ def test_histograms_hold_every_amplitude():
     assert edges[-1] >= max(evoked.max(), null.max())
     assert np.sum(amplitude_density(evoked, edges) * np.diff(edges)) == pytest.approx(1.0)
     assert len(bin_edges(np.zeros(3), np.empty(0), noise_sd=float("nan"))) >= 2
+
+
+def test_bins_widen_where_amplitudes_are_few():
+    rng = np.random.default_rng(4)
+    null = rng.normal(0, 0.1, 300)
+    many, few = (rng.choice([0.0, 0.4, 0.8], size) + rng.normal(0, 0.1, size) for size in (2000, 30))
+    assert np.diff(bin_edges(many, null, noise_sd=0.1))[0] == pytest.approx(0.05)
+    assert np.diff(bin_edges(few, null, noise_sd=0.1))[0] > 0.08
 
 
 def test_wrapped_text_keeps_its_width_and_its_words():

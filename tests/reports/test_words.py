@@ -15,7 +15,7 @@ def test_the_main_results_are_said_with_their_intervals(result):
     assert f"Mean p_release is {expected} over 8 boutons (all boutons with a usable baseline, however found)." in said
     assert "One vesicle gives 0.121 (95 % interval 0.112 to 0.131) dF/F." in said
     assert "no more alike than chance (Moran's I −0.12, p = 0.41)" in said
-    assert "Bouton 4 shows no release: p_release is an upper limit there." in said
+    assert "Bouton 4 shows no release; the 95 % interval of p_release ends at 0.06." in said
     assert "sampling taken out, p < 0.001" in said
 
 
@@ -56,3 +56,25 @@ def test_flags_name_their_boutons(result):
     assert holders["silent"] == [4]
     assert holders["edge"] == [1, 7]
     assert "poor_fit" not in holders
+
+
+def test_both_means_are_said_where_some_boutons_were_found_by_shape_alone(result):
+    population = result.summary["population"]
+    said = " ".join(headlines(result))
+    assert f"Over the 7 boutons found by their responses it is {population['p_release_found_by_responses']:.2f}" in said
+    all_by_response = {**population, "boutons_found_by_responses": population["boutons"]}
+    assert "Over the" not in " ".join(headlines(replace(result, summary={"population": all_by_response})))
+
+
+def test_where_nothing_releases_only_limits_are_said(quiet_result):
+    said = " ".join(headlines(quiet_result))
+    assert said == "No release was seen at any of 3 boutons; the 95 % intervals of p_release end between 0.08 and 0.20."
+
+
+def test_verdicts_on_pulse_pairs_are_counted(result):
+    def verdict(*names):
+        boutons = result.boutons.assign(paired_pulse=[*names, *[None] * (len(result.boutons) - len(names))])
+        return " ".join(headlines(replace(result, boutons=boutons)))
+
+    assert "at no single bouton is it beyond doubt other than 1" in verdict("unresolved", "unresolved")
+    assert "bouton by bouton: 1 facilitation and 2 unresolved" in verdict("unresolved", "facilitation", "unresolved")

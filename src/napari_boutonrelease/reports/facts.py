@@ -77,3 +77,19 @@ def amplitude_grid(result: AnalysisResult, column: str) -> NDArray[np.float64]:
     kept = (values(responses, "used") == 1) & (rows >= 0) & (trial < grid.shape[1]) & (pulse < grid.shape[2])
     grid[rows[kept], trial[kept], pulse[kept]] = values(responses, column)[kept]
     return grid
+
+
+def silent(result: AnalysisResult) -> NDArray[np.bool_]:
+    """Return which boutons show no release: nothing can be said about their own quanta."""
+    return np.array(["silent" in flags.split(";") for flags in texts(result.boutons, "flags")], dtype=bool)
+
+
+def nothing_released(result: AnalysisResult) -> bool:
+    """Whether boutons were measured, and none of them shows release: a mean of zeros would look exact."""
+    measured = np.isfinite(values(result.boutons, "p_release"))
+    return bool(measured.any() and silent(result)[measured].all())
+
+
+def on_a_path(result: AnalysisResult) -> bool:
+    """Whether the boutons' distances along the axon are known."""
+    return bool(np.isfinite(values(result.boutons, "axon_um")).any())

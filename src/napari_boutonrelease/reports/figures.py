@@ -32,7 +32,7 @@ __all__ = [
     "write_figure",
 ]
 
-_PNG_DPI = 200
+_PNG_DPI = 150
 
 
 def figures_of(result: AnalysisResult) -> dict[str, Callable[[], Figure]]:
@@ -58,4 +58,4 @@ def figures_of(result: AnalysisResult) -> dict[str, Callable[[], Figure]]:
 def write_figure(figure: Figure, path: Path) -> None:
     """Write a figure as SVG (text stays text) and as PNG beside it; `path` ends in `.svg`."""
     figure.savefig(path, metadata={"Date": None})
-    figure.savefig(path.with_suffix(".png"), dpi=_PNG_DPI)
+    figure.savefig(path.with_suffix(".png"), dpi=_PNG_DPI, pil_kwargs={"compress_level": 4})

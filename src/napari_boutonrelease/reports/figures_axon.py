@@ -11,7 +11,7 @@ from matplotlib.lines import Line2D
 from numpy.typing import NDArray
 
 from ..analysis.results import AnalysisResult
-from .facts import fact, number, texts, values
+from .facts import fact, nothing_released, number, on_a_path, silent, texts, values
 from .figures_page import Area, blank_figure
 from .figures_style import FOUND_BY, HAIRLINE, INK, MUTED, NULL, SHADE, SMALL, say_nothing_to_show, styled
 from .words import short
@@ -42,8 +42,10 @@ def draw_release_along_axon(area: Area, result: AnalysisResult) -> None:
     upper.set_ylim(-0.03, 1.03)
     upper.set_ylabel("p_release")
     upper.tick_params(labelbottom=False)
-    _write_ids(upper, result, where)
-    _draw_by_found(lower, result, where, "q", pale=[source == "axon" for source in texts(result.boutons, "q_from")])
+    if on_a_path(result):
+        _write_ids(upper, result, where)
+    borrowed = [source == "axon" for source in texts(result.boutons, "q_from")]
+    _draw_by_found(lower, result, where, "q", pale=borrowed, hidden=silent(result))
     lower.set_ylabel("q, one vesicle (dF/F)")
     lower.set_ylim(bottom=0.0)
     lower.locator_params(axis="y", nbins=5)
@@ -52,23 +54,26 @@ def draw_release_along_axon(area: Area, result: AnalysisResult) -> None:
     lower.set_xlabel(label)
     span = float(np.nanmax(where) - np.nanmin(where)) or 1.0
     upper.set_xlim(float(np.nanmin(where)) - 0.04 * span, float(np.nanmax(where)) + 0.04 * span)
-    if label == "bouton":
-        lower.locator_params(axis="x", integer=True, min_n_ticks=1)
-    for axes, name in ((upper, "p_release"), (lower, "q")):
-        if not np.isfinite(values(result.boutons, name)).any():
+    if not on_a_path(result):
+        step = max(1, -(-len(where) // 40))
+        lower.set_xticks(where[::step], [f"{bouton:g}" for bouton in where[::step]])
+    for axes, name, shown in ((upper, "p_release", np.isfinite(where)), (lower, "q", ~silent(result))):
+        if not np.isfinite(values(result.boutons, name)[shown]).any():
             sentence = f"{name} could be measured at no bouton."
+            axes.set_yticks([])
             axes.text(0.5, 0.5, sentence, transform=axes.transAxes, ha="center", color=MUTED)
     _legend(upper, result)
 
 
 def _places(result: AnalysisResult) -> tuple[NDArray[np.float64], str]:
-    along = values(result.boutons, "axon_um")
-    if np.isfinite(along).any():
-        return along, "distance along the axon (µm)"
+    if on_a_path(result):
+        return values(result.boutons, "axon_um"), "distance along the axon (µm)"
     return values(result.boutons, "bouton"), "bouton"
 
 
 def _draw_population(axes: Axes, result: AnalysisResult) -> None:
+    if nothing_released(result):
+        return
     mean, low, high = (number(result, f"population.p_release{end}") for end in ("", "_lo", "_hi"))
     if not math.isfinite(mean):
         return
@@ -79,12 +84,19 @@ def _draw_population(axes: Axes, result: AnalysisResult) -> None:
 
 
 def _draw_by_found(
-    axes: Axes, result: AnalysisResult, where: NDArray[np.float64], column: str, pale: list[bool] | None = None
+    axes: Axes,
+    result: AnalysisResult,
+    where: NDArray[np.float64],
+    column: str,
+    *,
+    pale: list[bool] | None = None,
+    hidden: NDArray[np.bool_] | None = None,
 ) -> None:
     """Points with intervals, marked by how each bouton was found; pale where the number is borrowed."""
+    shown = np.isfinite(where) if hidden is None else np.isfinite(where) & ~hidden
     value, low, high = (values(result.boutons, column + end) for end in ("", "_lo", "_hi"))
     found_by = texts(result.boutons, "found_by")
-    for row in np.flatnonzero(np.isfinite(value) & np.isfinite(where)):
+    for row in np.flatnonzero(np.isfinite(value) & shown):
         colour, marker, filled, _ = FOUND_BY.get(found_by[row], (MUTED, "o", True, ""))
         alpha = 0.4 if pale and pale[row] else 1.0
         if np.isfinite(low[row]) and np.isfinite(high[row]):
@@ -143,13 +155,22 @@ def _legend(axes: Axes, result: AnalysisResult) -> None:
     axes.legend(handles=handles, loc="lower left", bbox_to_anchor=(0.0, 1.13), ncols=len(handles), handlelength=1.0)
 
 
+def axon_title(result: AnalysisResult) -> str:
+    """Title of the page, which must not promise an order along the axon that is not known."""
+    return "Release along the axon" if on_a_path(result) else "Release, bouton by bouton"
+
+
 def selection_words(result: AnalysisResult) -> str:
-    """Say which boutons the shaded mean rests on."""
+    """Say which boutons the shaded mean rests on, and what is not drawn."""
+    words = "Bars: 95 % intervals. Pale q: borrowed from the axon's other boutons."
+    if silent(result).any():
+        words += " Boutons that show no release have no q of their own."
+    if not on_a_path(result):
+        words += (
+            " Boutons stand in the order of their ids: give the course of the axon (--axon) to see distances along it."
+        )
     selection = fact(result, "population.selection")
+    if not selection or not math.isfinite(number(result, "population.p_release")) or nothing_released(result):
+        return f"No population mean is given. {words}"
     count = number(result, "population.boutons")
-    if not selection or not math.isfinite(number(result, "population.p_release")):
-        return "No population mean is given."
-    return (
-        f"Line and band: mean p_release of {count:g} boutons with its 95 % interval; selection: {selection}. "
-        "Bars: 95 % intervals. Pale q: borrowed from the axon's other boutons."
-    )
+    return f"Line and band: mean p_release of {count:g} boutons with its 95 % interval; selection: {selection}. {words}"

@@ -6,12 +6,11 @@ import math
 
 import numpy as np
 from matplotlib.axes import Axes
-from matplotlib.collections import LineCollection
 from matplotlib.figure import Figure
 from numpy.typing import NDArray
 
 from ..analysis.results import AnalysisResult
-from .facts import amplitude_grid, frame_interval_s, number, texts, values
+from .facts import amplitude_grid, frame_interval_s, nothing_released, silent, texts, values
 from .figures_page import Area, blank_figure, wrapped
 from .figures_style import (
     EVOKED,
@@ -26,12 +25,12 @@ from .figures_style import (
     say_nothing_to_show,
     styled,
 )
+from .figures_trials import draw_trials
 from .histogram import amplitude_density, bin_edges, fitted_components
 from .words import MISSING, fixed, short, with_limits
 
 BLOCK_MM = (178.0, 126.0)
-_TRACE_BINS = 900
-_MANY_POINTS = 20_000
+_TRACE_BINS = 700
 _QUANTITIES = {"m": "m (vesicles)", "n_sites": "n_sites", "p_site": "p_site", "q": "q (dF/F)"}
 
 
@@ -48,7 +47,7 @@ def draw_bouton(area: Area, result: AnalysisResult, row: int) -> None:
     below = _draw_heading(area, result, row)
     _draw_trace(area.axes(14.0, below + 6.5, area.width - 30.0, 17.0), result, row)
     top, high = below + 40.5, 30.0
-    _draw_trials(area.axes(14.0, top, 42.0, high), result, row)
+    draw_trials(area.axes(14.0, top, 42.0, high), result, row)
     _draw_histogram(area.axes(70.0, top, 50.0, high), result, row)
     _draw_release_estimates(area.axes(148.0, top, 29.0, high), result, row)
     foot = top + high + 11.0
@@ -68,15 +67,19 @@ def _draw_heading(area: Area, result: AnalysisResult, row: int) -> float:
     f0 = f"F0 {short(one['f0'], digits=3)} counts" if math.isfinite(one["f0"]) else ""
     about = [place, f"found by {found}" if found else "", f0, trials]
     area.text(27.0, 2.9, "   ·   ".join(part for part in about if part), color=MUTED)
-    model, fit = texts(boutons, "quantal_model")[row], one["fit_p"]
+    model = texts(boutons, "quantal_model")[row]
+    quiet = bool(silent(result)[row])
+    called = f"{one['p_called'] * one['trials']:.0f} of {one['trials']:g}" if one["trials"] > 0 else MISSING
+    by_noise = f" (noise: {short(one['false_calls_expected'])})" if math.isfinite(one["false_calls_expected"]) else ""
     numbers = {
         "p_release": with_limits(one["p_release"], one["p_release_lo"], one["p_release_hi"]),
-        "one vesicle q (dF/F)": with_limits(one["q"], one["q_lo"], one["q_hi"], decimals=3),
+        "called": called + by_noise,
+        "one vesicle q (dF/F)": MISSING if quiet else with_limits(one["q"], one["q_lo"], one["q_hi"], decimals=3),
         "noise_sd (dF/F)": fixed(one["noise_sd"], decimals=3),
         "paired-pulse ratio": with_limits(one["ppr"], one["ppr_lo"], one["ppr_hi"]),
-        "release model": (model or MISSING) + (f", fit p {short(fit)}" if math.isfinite(fit) else ""),
+        "release model": MISSING if quiet else _model_words(model, one["fit_p"]),
     }
-    for x, (name, text) in zip((0.0, 38.0, 79.0, 106.0, 143.0), numbers.items(), strict=True):
+    for x, (name, text) in zip((0.0, 29.0, 60.0, 95.0, 117.0, 151.0), numbers.items(), strict=True):
         area.text(x, 8.2, name, size=SMALL, color=MUTED)
         area.text(x, 11.3, text)
     flags = texts(boutons, "flags")[row].replace(";", ", ")
@@ -85,9 +88,13 @@ def _draw_heading(area: Area, result: AnalysisResult, row: int) -> float:
     )
 
 
+def _model_words(model: str, fit_p: float) -> str:
+    return (model or MISSING) + (f", fit p {short(fit_p)}" if math.isfinite(fit_p) else "")
+
+
 _HEADING_NUMBERS = (
     *("bouton", "axon_um", "y_px", "x_px", "trials", "f0", "fit_p", "p_release", "p_release_lo", "p_release_hi"),
-    *("q", "q_lo", "q_hi", "noise_sd", "ppr", "ppr_lo", "ppr_hi"),
+    *("q", "q_lo", "q_hi", "noise_sd", "ppr", "ppr_lo", "ppr_hi", "p_called", "false_calls_expected"),
 )
 
 
@@ -154,83 +161,6 @@ def envelope(
     return np.stack([starts, starts + 0.5 * step], axis=1).ravel(), limits.ravel()
 
 
-def _draw_trials(axes: Axes, result: AnalysisResult, row: int) -> None:
-    """Overlay the trials on their first stimulus, with their mean and the fitted response."""
-    axes.set_title("trials", loc="left", color=MUTED, fontsize=SMALL, pad=3)
-    since, level = _aligned(result, row)
-    if not np.isfinite(level).any():
-        say_nothing_to_show(axes, "no usable trial")
-        return
-    lines = [np.column_stack(pair) for pair in zip(1e3 * since, level, strict=True)]
-    lines = [line[np.isfinite(line).all(axis=1)] for line in lines]
-    many = level.size > _MANY_POINTS
-    axes.add_collection(LineCollection(lines, colors=NULL, linewidths=0.35, alpha=0.45, rasterized=many))
-    grid, mean = _binned_mean(since, level, frame_interval_s(result))
-    axes.plot(1e3 * grid, mean, color=INK, linewidth=1.1, label="mean")
-    amplitudes = np.array([_mean(one) for one in amplitude_grid(result, "amplitude")[row].T])
-    delays = result.stimulus_s - result.stimulus_s[:, :1]
-    exposure = number(result, "recording.exposure_s")
-    exposure = exposure if exposure > 0 else frame_interval_s(result)
-    fitted = np.zeros(400)
-    fine = np.linspace(np.nanmin(since), np.nanmax(since), 400)
-    for pulse, amplitude in enumerate(amplitudes):
-        delay = _mean(delays[:, pulse])
-        if math.isfinite(amplitude) and math.isfinite(delay):
-            # As the camera would see it, so that it can be held against the mean.
-            fitted += amplitude * result.shape.frame_average(fine - 0.5 * exposure - delay, exposure_s=exposure)
-            axes.axvline(1e3 * delay, color=HAIRLINE, linewidth=0.8, zorder=0)
-    if np.isfinite(amplitudes).any():
-        axes.plot(1e3 * fine, fitted, color=FIT, linewidth=1.1, label="fit")
-    low, high = np.nanpercentile(level, [0.5, 99.8])
-    axes.set_ylim(low - 0.1 * (high - low), high + 0.12 * (high - low))
-    axes.set_xlim(1e3 * float(np.nanmin(since)), 1e3 * float(np.nanmax(since)))
-    axes.set_xlabel("time from pulse 1 (ms)")
-    axes.set_ylabel("dF/F")
-    axes.legend(loc="lower right", bbox_to_anchor=(1.0, 1.01), ncols=2, columnspacing=1.0)
-
-
-def _aligned(result: AnalysisResult, row: int) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Return times since pulse 1 (s) and dF/F less its level before the pulse, a row a usable trial."""
-    interval = frame_interval_s(result)
-    used = np.isfinite(amplitude_grid(result, "amplitude")[row]).any(axis=1)
-    used &= np.isfinite(result.stimulus_s[:, 0])
-    if not used.any() or not interval > 0:
-        return np.empty((0, 0)), np.empty((0, 0))
-    stimuli = result.stimulus_s[used]
-    room = np.diff(result.stimulus_s[np.isfinite(result.stimulus_s[:, 0]), 0])
-    until = float(np.nanmax(stimuli - stimuli[:, :1])) + 4.0 * result.shape.decay_s
-    until = min(until, 0.8 * float(np.min(room))) if room.size else until
-    before, after = math.ceil(0.3 * until / interval), math.ceil(until / interval)
-    exposure = number(result, "recording.exposure_s")
-    middle = 0.5 * (exposure if exposure > 0 else interval)
-    frames = np.searchsorted(result.time_s, stimuli[:, :1]) + np.arange(-before, after)
-    inside = (frames >= 0) & (frames < len(result.time_s))
-    frames = np.clip(frames, 0, len(result.time_s) - 1)
-    since = result.time_s[frames] + middle - stimuli[:, :1]
-    level = np.where(inside, result.dff[row][frames], np.nan)
-    level = np.where((since > -(before + 1) * interval) & (since < (after + 1) * interval), level, np.nan)
-    quiet = [_mean(one[early]) for one, early in zip(level, since < -middle, strict=True)]
-    return np.where(np.isfinite(level), since, np.nan), level - np.array(quiet)[:, None]
-
-
-def _binned_mean(
-    since: NDArray[np.float64], level: NDArray[np.float64], interval: float
-) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Mean level over trials, in bins of one frame interval."""
-    known = np.isfinite(since) & np.isfinite(level)
-    bins = np.round(since[known] / interval).astype(int)
-    first = int(bins.min())
-    count = np.bincount(bins - first)
-    kept = count > 0
-    time = np.bincount(bins - first, since[known])[kept] / count[kept]
-    return time, np.bincount(bins - first, level[known])[kept] / count[kept]
-
-
-def _mean(numbers: NDArray[np.float64]) -> float:
-    known = numbers[np.isfinite(numbers)]
-    return float(known.mean()) if known.size else math.nan
-
-
 def _draw_histogram(axes: Axes, result: AnalysisResult, row: int) -> None:
     """Draw amplitudes of pulse 1, amplitudes without stimulus, and the fitted model component by component."""
     evoked = amplitude_grid(result, "amplitude")[row, :, 0]
@@ -243,14 +173,15 @@ def _draw_histogram(axes: Axes, result: AnalysisResult, row: int) -> None:
         float(values(result.boutons, n)[row]) for n in ("noise_sd", "threshold", "p_release")
     )
     edges = bin_edges(evoked, null, noise_sd=noise_sd)
-    axes.stairs(amplitude_density(evoked, edges), edges, fill=True, color=EVOKED, alpha=0.28, label="evoked")
+    trials_a_density = len(evoked) * float(edges[1] - edges[0])
+    axes.stairs(np.histogram(evoked, edges)[0], edges, fill=True, color=EVOKED, alpha=0.28, label="evoked")
     if null.size:  # scaled to the share of failures, which it should then explain
         share = 1.0 - p_release if math.isfinite(p_release) else 1.0
-        axes.stairs(
-            share * amplitude_density(null, edges), edges, color=MUTED, linewidth=0.9, label="no stimulus, scaled"
-        )
-    fine = np.linspace(edges[0], edges[-1], 500)
-    components = fitted_components(result.boutons, row, fine)
+        scaled = share * trials_a_density * amplitude_density(null, edges)
+        axes.stairs(scaled, edges, color=MUTED, linewidth=0.9, label="no stimulus, scaled")
+    fine = np.linspace(edges[0], edges[-1], 400)
+    trial_noise = amplitude_grid(result, "amplitude_se")[row, :, 0]
+    components = trials_a_density * fitted_components(result.boutons, row, fine, noise_sd=trial_noise)
     for component in components:
         axes.plot(fine, component, color=FIT, linewidth=0.6, linestyle=(0, (3, 1.5)))
     if len(components):
@@ -259,9 +190,9 @@ def _draw_histogram(axes: Axes, result: AnalysisResult, row: int) -> None:
         axes.axvline(threshold, color=INK, linewidth=0.7, linestyle=":", label="threshold")
     axes.set_ylim(0.0, 1.08 * axes.dataLim.y1)
     axes.set_xlim(edges[0], edges[-1])
-    axes.locator_params(axis="y", nbins=4)
+    axes.locator_params(axis="y", nbins=4, integer=True)
     axes.set_xlabel("amplitude of pulse 1 (dF/F)")
-    axes.set_ylabel("density")
+    axes.set_ylabel("trials")
     axes.legend(loc="lower left", bbox_to_anchor=(-0.02, 1.01), ncols=2, columnspacing=1.2, labelspacing=0.25)
 
 
@@ -306,6 +237,9 @@ def _write_estimates(area: Area, result: AnalysisResult, row: int) -> None:
     """Write the estimates of the quantal parameters, a line a method."""
     found = {quantity: {entry[0]: entry for entry in _estimates_of(result, row, quantity)} for quantity in _QUANTITIES}
     methods = list(dict.fromkeys(method for entries in found.values() for method in entries))
+    if silent(result)[row]:
+        _write_limit(area, result, row)
+        return
     if not methods:
         return
     left = [0.0, *(52.0 + 32.0 * i for i in range(len(_QUANTITIES)))]
@@ -319,5 +253,19 @@ def _write_estimates(area: Area, result: AnalysisResult, row: int) -> None:
         for x, quantity in zip(left[1:], _QUANTITIES, strict=True):
             entry = found[quantity].get(method)
             decimals = {"q": 3, "n_sites": 0}.get(quantity, 2)
-            text = with_limits(*entry[1:], decimals=decimals) if entry else MISSING
+            exact = entry is not None and entry[1] == entry[2] == entry[3]
+            text = MISSING if entry is None else with_limits(*entry[1:], decimals=decimals)
+            text = fixed(entry[1], decimals=decimals) if entry and exact else text
             area.text(x, y, text, size=SMALL, color=INK if entry else NULL)
+
+
+def _write_limit(area: Area, result: AnalysisResult, row: int) -> None:
+    """Say what is known of a bouton that shows no release, and what is not."""
+    high, low_q, high_q = (float(values(result.boutons, name)[row]) for name in ("p_release_hi", "q_lo", "q_hi"))
+    text = "No release was seen."
+    if math.isfinite(high) and math.isfinite(low_q):
+        whose = "of an assumed size" if nothing_released(result) else "as the axon's other boutons have them"
+        sizes = f"{fixed(low_q, decimals=3)} to {fixed(high_q, decimals=3)} dF/F"
+        text += f" The 95 % interval of p_release ends at {fixed(high)}, for vesicles {whose} ({sizes})."
+    text += " This bouton's own vesicles, release sites and paired-pulse ratio cannot be known."
+    area.paragraph(0.0, 0.0, area.width, text, color=MUTED)

@@ -53,7 +53,7 @@ def draw_calls(area: Area, result: AnalysisResult) -> None:
         share.set_xlabel("trial")
         if index == 0:
             share.set_ylabel(
-                "releases" if n_pulses > 2 else "boutons", rotation=0, ha="right", va="center", fontsize=SMALL
+                "calls" if n_pulses > 2 else "boutons", rotation=0, ha="right", va="center", fontsize=SMALL
             )
         else:
             share.tick_params(labelleft=False)

@@ -8,15 +8,16 @@ from typing import Any
 import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.cm import ScalarMappable
-from matplotlib.colors import Normalize
+from matplotlib.colors import Normalize, PowerNorm
 from matplotlib.figure import Figure
 from numpy.typing import NDArray
 
 from ..analysis.results import AnalysisResult
-from .facts import pixel_size_um, values
+from .facts import pixel_size_um, texts, values
 from .figures_page import Area, blank_figure
-from .figures_style import INK, MUTED, SMALL, say_nothing_to_show, sequential, styled
+from .figures_style import EVOKED, FIT, INK, MUTED, SMALL, say_nothing_to_show, sequential, styled
 
+_EVIDENCE_TICKS = (0, *(digit * 10.0**power for power in range(6) for digit in (1, 2, 5)))
 _BAR_UM = (0.5, 1, 2, 5, 10, 20, 50, 100, 200)
 _RING, _LABEL_POINTS, _CROWD = 80.0, 10.5, 20
 
@@ -42,26 +43,55 @@ def draw_map(area: Area, result: AnalysisResult) -> None:
     _draw_rings(axes, result, colours.to_rgba(p_release), np.isfinite(p_release))
     _draw_ids(axes, result)
     _draw_scale_bar(area, axes, result)
-    box = axes.get_position()
-    height = area.figure.get_figheight() * box.height * 25.4
-    top = (1.0 - box.y1) * area.figure.get_figheight() * 25.4 - area.top
-    left = box.x1 * area.figure.get_figwidth() * 25.4 - area.left + 3.0
-    length = min(height, 45.0)
-    bar_axes = area.axes(left, top + (height - length) / 2, 2.6, length)
-    bar = area.figure.colorbar(colours, cax=bar_axes, label="p_release", ticks=[0, 0.25, 0.5, 0.75, 1])
+    bar = area.figure.colorbar(colours, cax=_bar_axes(area, axes), label="p_release", ticks=[0, 0.25, 0.5, 0.75, 1])
     bar.outline.set_visible(False)
 
 
 def draw_evidence(area: Area, result: AnalysisResult) -> None:
-    """Draw the detection evidence with the boutons that were kept."""
+    """Draw the detection evidence on a scale that starts at none, with the boutons that were kept."""
     axes = _image_axes(area, result.evidence, right_mm=22.0, foot_mm=7.0)
-    if not _show(axes, result.evidence, percentiles=(5.0, 99.8)):
+    seen, cut = result.evidence[np.isfinite(result.evidence)], result.evidence_cut
+    if not seen.any() or not cut > 0:
         say_nothing_to_show(axes, "There is no evidence map.")
         return
-    count = len(result.boutons)
-    _draw_rings(axes, result, np.tile((0.106, 0.392, 0.659, 1.0), (count, 1)), np.ones(count, dtype=bool))
+    # The top never falls near the cut, or noise would look like evidence where nothing releases.
+    scale = PowerNorm(0.5, vmin=0.0, vmax=max(float(np.percentile(seen, 99.8)), 4.0 * cut), clip=True)
+    _frame(axes)
+    image = axes.imshow(result.evidence, cmap="gray_r", norm=scale, interpolation="nearest", aspect="auto")
+    by_shape = np.array([way == "shape" for way in texts(result.boutons, "found_by")], dtype=bool)
+    y, x = values(result.boutons, "y_px"), values(result.boutons, "x_px")
+    for kept, line in ((~by_shape, "-"), (by_shape, "--")):
+        if kept.any():
+            axes.scatter(
+                x[kept], y[kept], s=1.5 * _ring_size(result), facecolors="none", edgecolors=EVOKED, linewidths=0.9,
+                linestyles=line,
+            )  # fmt: skip
     _draw_ids(axes, result)
     _draw_scale_bar(area, axes, result)
+    bar = area.figure.colorbar(
+        image, cax=_bar_axes(area, axes), label="log-likelihood ratio", ticks=_apart(_EVIDENCE_TICKS, scale)
+    )
+    bar.outline.set_visible(False)
+    bar.ax.axhline(cut, color=FIT, linewidth=1.4)
+
+
+def _apart(ticks: tuple[float, ...], scale: Normalize) -> list[float]:
+    """Those ticks that lie on the scale and far enough apart to be read, from the top down."""
+    kept: list[float] = []
+    for tick in sorted(ticks, reverse=True):
+        if tick <= (scale.vmax or 0.0) and all(abs(scale(tick) - scale(other)) > 0.12 for other in kept):
+            kept.append(tick)
+    return kept
+
+
+def _bar_axes(area: Area, image: Axes) -> Axes:
+    """Axes of a colour bar at the right of an image."""
+    box = image.get_position()
+    height = area.figure.get_figheight() * box.height * 25.4
+    top = (1.0 - box.y1) * area.figure.get_figheight() * 25.4 - area.top
+    left = box.x1 * area.figure.get_figwidth() * 25.4 - area.left + 3.0
+    length = min(height, 45.0)
+    return area.axes(left, top + (height - length) / 2, 2.6, length)
 
 
 def _image_axes(area: Area, image: NDArray[np.float64], *, right_mm: float, foot_mm: float) -> Axes:
@@ -79,18 +109,26 @@ def _show(axes: Axes, image: NDArray[np.float64], *, percentiles: tuple[float, f
         return False
     low, high = np.percentile(seen, percentiles)
     axes.imshow(image, cmap="gray_r", vmin=low, vmax=max(high, low + 1e-9), interpolation="nearest", aspect="auto")
+    _frame(axes)
+    return True
+
+
+def _frame(axes: Axes) -> None:
     axes.set_xticks([])
     axes.set_yticks([])
     for spine in axes.spines.values():
         spine.set_visible(True)
         spine.set_color("#b9c2ca")
-    return True
+
+
+def _ring_size(result: AnalysisResult) -> float:
+    return _RING if len(result.boutons) <= _CROWD else 0.5 * _RING
 
 
 def _draw_rings(axes: Axes, result: AnalysisResult, colours: Any, known: NDArray[np.bool_]) -> None:
     """Ring each bouton, so that the bouton itself stays visible; dashed where there is no number."""
     y, x = values(result.boutons, "y_px"), values(result.boutons, "x_px")
-    size = _RING if len(y) <= _CROWD else 0.5 * _RING
+    size = _ring_size(result)
 
     def ring(kept: NDArray[np.bool_], colour: Any, width: float, line: str = "-") -> None:
         if kept.any():

@@ -106,13 +106,17 @@ def line_mm(size: float) -> float:
     return size * LINE_FACTOR * MM_PER_POINT
 
 
-@lru_cache(maxsize=8192)
 def text_width_mm(text: str, *, size: float = BODY, weight: str = "normal") -> float:
     """Width of one line of text, mm."""
+    return sum(_advance_mm(letter, weight) for letter in text) * size
+
+
+@lru_cache(maxsize=2048)
+def _advance_mm(letter: str, weight: str) -> float:
+    """How far a letter moves the pen at a font size of one point, mm."""
     font = get_font(findfont(FontProperties(family="DejaVu Sans", weight=weight)))
     font.set_size(_MEASURED_POINTS, 72)  # large, so that rounding to whole pixels does not matter
-    font.set_text(text, 0.0)
-    return float(font.get_width_height()[0]) / 64.0 * MM_PER_POINT * size / _MEASURED_POINTS
+    return float(font.load_char(ord(letter)).linearHoriAdvance) / 65536.0 * MM_PER_POINT / _MEASURED_POINTS
 
 
 def wrapped(text: str, width_mm: float, *, size: float = BODY, weight: str = "normal") -> list[str]:

@@ -10,8 +10,8 @@ import numpy as np
 from matplotlib.figure import Figure
 
 from ..analysis.results import AnalysisResult
-from .facts import number, texts, values
-from .figures_axon import draw_release_along_axon, selection_words
+from .facts import nothing_released, number, silent, values
+from .figures_axon import axon_title, draw_release_along_axon, selection_words
 from .figures_bouton import BLOCK_MM, draw_bouton
 from .figures_calls import draw_calls
 from .figures_map import draw_evidence, draw_map
@@ -20,13 +20,13 @@ from .figures_pairs import draw_pulse_pairs, draw_train
 from .figures_quality import draw_quality
 from .figures_style import BODY, HEAD, INK, MUTED, SHADE, SMALL, TITLE, styled
 from .figures_text import caution_pages, flag_blocks, paged, table_pages
-from .words import counted, fixed, headlines, listed, recording_facts, recording_line
+from .words import counted, fixed, headlines, listed, recording_facts, recording_line, selected_differ, short
 
 Page = Callable[[], Figure]
 
-_HISTOGRAM_CAPTION = (
-    "Grey outline: amplitudes where nothing was stimulated, scaled to the share of failures. Dashed: the model's "
-    "components for 0, 1, 2, ... vesicles. Bars and brackets: 95 % intervals."
+_BOUTON_CAPTION = (
+    "Grey outline: amplitudes without stimulus, scaled to the share of failures. Dashed: the model's 0, 1, 2, ... "
+    "vesicles. Brackets: 95 %."
 )
 
 
@@ -85,21 +85,34 @@ def title_page(result: AnalysisResult) -> Figure:
 
 
 def _draw_tiles(area: Area, result: AnalysisResult) -> None:
-    """Write the four numbers that a reader looks for first."""
-    flags = [text.split(";") for text in texts(result.boutons, "flags")]
-    silent = sum("silent" in codes for codes in flags)
+    """Write the numbers that a reader looks for first."""
     measured = int(np.isfinite(values(result.boutons, "p_release")).sum())
-    tiles = (
-        ("mean p_release", *_tile_numbers(result, "population.p_release", 2)),
+    tiles = [
+        *_release_tiles(result),
         ("one vesicle, dF/F", *_tile_numbers(result, "population.q", 3)),
         ("paired-pulse ratio", *_tile_numbers(result, "population.ppr", 2)),
-        ("boutons measured", f"{measured} of {len(result.boutons)}", f"{silent} silent"),
-    )
+        ("boutons measured", f"{measured} of {len(result.boutons)}", f"{silent(result).sum()} silent"),
+    ]
     for index, (name, value, interval) in enumerate(tiles):
         x = index * area.width / len(tiles)
         area.text(x, 0.0, name, size=SMALL, color=MUTED)
         area.text(x, 3.0, value, size=TITLE, weight="bold")
         area.text(x, 11.5, interval, size=SMALL, color=MUTED)
+
+
+def _release_tiles(result: AnalysisResult) -> list[tuple[str, str, str]]:
+    """Mean p_release, with and without the boutons that were found by their shape alone."""
+    if nothing_released(result):
+        limits = values(result.boutons, "p_release_hi")
+        highest = float(np.nanmax(limits)) if np.isfinite(limits).any() else math.nan
+        return [("p_release", f"< {fixed(highest)}" if math.isfinite(highest) else "0", "no release seen")]
+    everyone = _tile_numbers(result, "population.p_release", 2)
+    if not selected_differ(result):
+        return [("mean p_release", *everyone)]
+    return [
+        ("mean p_release, all boutons", *everyone),
+        ("those found by responses", *_tile_numbers(result, "population.p_release_found_by_responses", 2)),
+    ]
 
 
 def _tile_numbers(result: AnalysisResult, path: str, decimals: int) -> tuple[str, str]:
@@ -109,7 +122,7 @@ def _tile_numbers(result: AnalysisResult, path: str, decimals: int) -> tuple[str
     if not (math.isfinite(low) and math.isfinite(high)):
         return fixed(value, decimals=decimals), "no interval"
     limits = f"{fixed(low, decimals=decimals)} to {fixed(high, decimals=decimals)}"
-    return fixed(value, decimals=decimals), f"95 % interval {limits}"
+    return fixed(value, decimals=decimals), f"95 %: {limits}"
 
 
 def _write_headlines(area: Area, result: AnalysisResult) -> float:
@@ -165,12 +178,16 @@ def _box_mm(paragraphs: list[list[str]], *, more: bool) -> float:
 @styled
 def axon_page(result: AnalysisResult) -> Figure:
     """Draw release along the axon and the evidence that found the boutons."""
-    figure, area = _new_page("Release along the axon")
+    figure, area = _new_page(axon_title(result))
     draw_release_along_axon(area.part(0.0, 10.0, area.width, 136.0), result)
-    y = area.paragraph(0.0, 150.0, area.width, selection_words(result), size=SMALL, color=MUTED)
+    y = area.paragraph(0.0, 148.0, area.width, selection_words(result), size=SMALL, color=MUTED)
+    if not math.isfinite(result.evidence_cut):  # the boutons were given
+        return figure
     area.text(0.0, y + 5.0, "Evidence of release", size=HEAD, weight="bold")
-    cut = f" Maxima above {result.evidence_cut:.3g} were accepted." if math.isfinite(result.evidence_cut) else ""
-    words = f"Log-likelihood ratio of release against silence, pixel by pixel; darker is more.{cut}"
+    words = (
+        "Log-likelihood ratio of release against silence at each pixel, on a square-root scale; the mark on the bar is "
+        "the cut above which a maximum was accepted. Solid rings: found by responses; dashed: by shape alone."
+    )
     y = area.paragraph(0.0, y + 10.5, area.width, words, size=SMALL, color=MUTED)
     draw_evidence(area.part(0.0, y + 2.0, area.width, area.height - y - 6.0), result)
     return figure
@@ -194,12 +211,22 @@ def calls_page(result: AnalysisResult) -> Figure:
     figure, area = _new_page("Calls, trial by trial")
     height = min(max(_calls_mm(result), _CALLS_MM), area.height - 20.0)
     draw_calls(area.part(0.0, 10.0, area.width, height), result)
-    words = "Below the raster: how many boutons released in each trial."
+    words = "Below the raster: how many were called in each trial." + _false_calls_words(result)
     y = area.paragraph(0.0, 12.0 + height, area.width, words, size=SMALL, color=MUTED)
     if _pairs_fit_below(result):
         area.text(0.0, y + 9.0, "Pulse pairs", size=HEAD + 3.0, weight="bold")
         _draw_pairs(area.part(0.0, y + 17.0, area.width, _PAIRS_MM), result)
     return figure
+
+
+def _false_calls_words(result: AnalysisResult) -> str:
+    expected, trials = values(result.boutons, "false_calls_expected"), values(result.boutons, "trials")
+    if not np.isfinite(expected).any():
+        return ""
+    return (
+        f" Of a bouton that never releases, noise alone is expected to call {short(float(np.nanmedian(expected)))} of "
+        f"{float(np.nanmedian(trials)):g} pulses."
+    )
 
 
 @styled
@@ -215,10 +242,16 @@ def pairs_page(result: AnalysisResult) -> Figure:
 
 def _draw_pairs(area: Area, result: AnalysisResult) -> float:
     """Draw the pulse pairs and say how to read them; return the y below."""
+    if not np.isfinite(values(result.boutons, "ppr")).any():
+        return area.paragraph(0.0, 0.0, area.width, "No bouton has a paired-pulse ratio.", color=MUTED)
     draw_pulse_pairs(area.part(0.0, 0.0, area.width, 86.0), result)
     without = [f"{b:g}" for b in values(result.boutons, "bouton")[~np.isfinite(values(result.boutons, "ppr"))]]
     missing = f" No ratio: bouton{'s' if len(without) > 1 else ''} {listed(without)}." if without else ""
-    words = "Ratios of mean amplitudes; bars: 95 % intervals; band: all boutons. A verdict needs an interval without 1."
+    words = (
+        "Ratios of mean amplitudes; bars: 95 % intervals; band: all boutons together. A verdict must hold although "
+        "many boutons were looked at (Benjamini and Hochberg 1995), so an interval without 1 may not suffice. At the "
+        "right, boutons that show no release are left out."
+    )
     return area.paragraph(0.0, 90.0, area.width, words + missing, size=SMALL, color=MUTED)
 
 
@@ -226,7 +259,7 @@ def _draw_pairs(area: Area, result: AnalysisResult) -> float:
 def bouton_page(result: AnalysisResult, first: int) -> Figure:
     """Draw two boutons, from row `first` on."""
     figure, area = _new_page("Bouton by bouton")
-    area.paragraph(0.0, 6.4, area.width, _HISTOGRAM_CAPTION, size=SMALL - 0.4, color=MUTED)
+    area.paragraph(0.0, 6.4, area.width, _BOUTON_CAPTION, size=SMALL - 0.4, color=MUTED)
     for place, row in enumerate(range(first, min(first + 2, len(result.boutons)))):
         draw_bouton(area.part(0.0, 13.5 + place * BLOCK_MM[1], area.width, BLOCK_MM[1]), result, row)
     return figure

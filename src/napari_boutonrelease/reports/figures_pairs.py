@@ -11,7 +11,7 @@ from matplotlib.lines import Line2D
 from numpy.typing import NDArray
 
 from ..analysis.results import AnalysisResult
-from .facts import number, texts, values
+from .facts import number, silent, texts, values
 from .figures_page import Area, blank_figure
 from .figures_style import EVOKED, HAIRLINE, MUTED, NULL, SHADE, SMALL, VERDICTS, say_nothing_to_show, styled
 from .words import short
@@ -82,19 +82,28 @@ def _draw_population(axes: Axes, result: AnalysisResult) -> None:
     if math.isfinite(mean) and math.isfinite(low) and math.isfinite(high):
         axes.axhspan(low, high, color=SHADE, linewidth=0, zorder=0)
         axes.axhline(mean, color=NULL, linewidth=0.8, zorder=0.5)
-        axes.text(1.01, mean, f"all\n{short(mean)}", transform=axes.get_yaxis_transform(), va="center", fontsize=SMALL)
+        axes.text(
+            1.01,
+            mean,
+            f"all\n{short(mean, digits=3)}",
+            transform=axes.get_yaxis_transform(),
+            va="center",
+            fontsize=SMALL,
+        )
 
 
 def _draw_probabilities(axes: Axes, result: AnalysisResult) -> None:
-    """Scatter the release probability of pulse 2 against that of pulse 1."""
-    first, second = values(result.boutons, "p_release"), values(result.boutons, "p2_release")
-    known = np.isfinite(first) & np.isfinite(second)
+    """Scatter the release probability of pulse 2 against that of pulse 1, with both intervals."""
+    first, second = _limits(result, 1), _limits(result, 2)
+    known = np.isfinite(first[0]) & np.isfinite(second[0]) & ~silent(result)
     if not known.any():
-        say_nothing_to_show(axes, "No bouton has both\nrelease probabilities.")
+        say_nothing_to_show(axes, "No releasing bouton has both\nrelease probabilities.")
         return
     axes.plot([0, 1], [0, 1], color=HAIRLINE, linewidth=0.8, zorder=0)
-    axes.plot(first[known], second[known], "o", color=EVOKED, markersize=4)
-    points = np.column_stack([first[known], second[known]])
+    axes.hlines(second[0][known], first[1][known], first[2][known], color=NULL, linewidth=0.6)
+    axes.vlines(first[0][known], second[1][known], second[2][known], color=NULL, linewidth=0.6)
+    axes.plot(first[0][known], second[0][known], "o", color=EVOKED, markersize=4)
+    points = np.column_stack([first[0][known], second[0][known]])
     for (x, y), bouton in zip(points, values(result.boutons, "bouton")[known], strict=True):
         offset = _away_from_neighbour(points, x, y)
         axes.annotate(
@@ -106,7 +115,19 @@ def _draw_probabilities(axes: Axes, result: AnalysisResult) -> None:
     axes.set_xticks([0, 0.25, 0.5, 0.75, 1])
     axes.set_yticks([0, 0.25, 0.5, 0.75, 1])
     axes.set_xlabel("p_release, pulse 1")
-    axes.set_ylabel("p_release, pulse 2")
+    axes.set_ylabel("p_release, pulse 2", labelpad=4)
+
+
+def _limits(result: AnalysisResult, pulse: int) -> NDArray[np.float64]:
+    """p_release of one pulse and the ends of its interval, a column a bouton."""
+    numbers, at = values(result.pulses, "pulse"), values(result.pulses, "bouton")
+    found = np.full((3, len(result.boutons)), np.nan)
+    rows = {bouton: row for row, bouton in enumerate(values(result.boutons, "bouton"))}
+    mine = np.array([one == pulse and bouton in rows for one, bouton in zip(numbers, at, strict=True)], dtype=bool)
+    columns = [rows[bouton] for bouton in at[mine]]
+    for line, end in enumerate(("", "_lo", "_hi")):
+        found[line, columns] = values(result.pulses, f"p_release{end}")[mine]
+    return found
 
 
 def _away_from_neighbour(points: NDArray[np.float64], x: float, y: float) -> tuple[float, float]:
@@ -115,7 +136,7 @@ def _away_from_neighbour(points: NDArray[np.float64], x: float, y: float) -> tup
     distance = np.hypot(*from_others.T)
     distance[distance == 0] = np.inf
     if not np.isfinite(distance).any() or distance.min() > 0.12:
-        return (-5.5, 4.0) if x > 0.9 else (6.0, -2.5)
+        return (-6.0, 4.5) if x > 0.9 else (6.0, 4.5)
     direction = from_others[np.argmin(distance)] / distance.min()
     return 6.5 * float(direction[0]), 6.5 * float(direction[1])
 

@@ -8,7 +8,7 @@ from matplotlib.figure import Figure
 from numpy.typing import NDArray
 
 from ..analysis.results import AnalysisResult
-from .facts import amplitude_grid, values
+from .facts import amplitude_grid, silent, values
 from .figures_bouton import envelope
 from .figures_page import Area, blank_figure
 from .figures_style import EVOKED, FIT, HAIRLINE, INK, MUTED, NULL, PULSE_2, SMALL, say_nothing_to_show, styled
@@ -104,6 +104,7 @@ def _draw_noise(axes: Axes, result: AnalysisResult) -> None:
     if not np.isfinite(noise).any():
         say_nothing_to_show(axes, "Noise could be measured at no bouton.")
         return
+    q = np.where(silent(result), np.nan, q)  # what shows no release has no vesicle of its own
     axes.plot(place, q, "_", color=FIT, markersize=7, markeredgewidth=1.2, label="one vesicle (q)")
     axes.plot(place, noise, "o", color=EVOKED, label="noise_sd")
     if np.isfinite(limit).any():

@@ -10,23 +10,23 @@ from pydantic import BaseModel
 
 from ..analysis.results import AnalysisResult
 from ..flags import FLAGS
-from .facts import texts, values
+from .facts import silent, texts, values
 from .figures_page import A4_MM, MARGIN_MM, Area, line_mm, wrapped
 from .figures_style import BODY, FIT, HEAD, INK, MUTED, SMALL
-from .words import MISSING, STANDING_CAUTIONS, fixed, flag_holders, listed, with_limits
+from .words import MISSING, STANDING_CAUTIONS, fixed, flag_holders, listed, ranges, with_limits
 
 Draw = Callable[[Area], None]
 
 _ROOM_MM = A4_MM[1] - 2 * MARGIN_MM - 14.0
 _WIDTH_MM = A4_MM[0] - 2 * MARGIN_MM
 _TABLE_MM = {
-    "bouton": 11.0,
-    "place": 17.0,
-    "found by": 17.0,
-    "trials": 11.0,
-    "p_release": 25.0,
-    "potency": 14.0,
-    "q (dF/F)": 29.0,
+    "bouton": 10.5,
+    "place": 15.0,
+    "found by": 15.5,
+    "trials": 9.5,
+    "p_release": 24.5,
+    "potency": 12.5,
+    "q (dF/F)": 28.0,
     "n_sites": 15.0,
     "PPR": 25.0,
 }
@@ -112,7 +112,7 @@ def _table_row(result: AnalysisResult, row: int) -> Block:
         return with_limits(one(name), one(f"{name}_lo"), one(f"{name}_hi"), decimals=decimals)
 
     along = fixed(one("axon_um"), decimals=1)
-    n_set = texts(boutons, "n_set")[row].replace(";", ", ")
+    n_set = ranges(int(n) for n in texts(boutons, "n_set")[row].split(";") if n)
     n_sites = fixed(one("n_sites"), decimals=0)
     cells = (
         fixed(one("bouton"), decimals=0),
@@ -121,7 +121,7 @@ def _table_row(result: AnalysisResult, row: int) -> Block:
         fixed(one("trials"), decimals=0),
         triple("p_release"),
         fixed(one("potency"), decimals=3),
-        triple("q", 3),
+        MISSING if silent(result)[row] else triple("q", 3),
         f"{n_sites} ({n_set})" if n_set and n_set != n_sites else n_sites,
         triple("ppr"),
     )
@@ -161,10 +161,8 @@ def flag_blocks(result: AnalysisResult) -> list[Block]:
 
 def caution_pages(result: AnalysisResult) -> list[Sheet]:
     """Return cautions, settings and origin, page by page."""
-    blocks = [_heading("Of this recording")]
-    blocks += [_paragraph(caution) for caution in result.cautions] or [_paragraph("None.")]
-    blocks += [_gap(), _heading("Of every such analysis")]
-    blocks += [_paragraph(caution) for caution in STANDING_CAUTIONS]
+    blocks = [_heading("Before you quote these numbers")]
+    blocks += [_paragraph(caution) for caution in (*result.cautions, *STANDING_CAUTIONS)]
     blocks += [_gap(), _heading("Settings")]
     blocks += [_line(*entry) for entry in _settings_lines(result.settings)]
     origin = _origin_lines(result.provenance)

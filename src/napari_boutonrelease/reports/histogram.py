@@ -7,21 +7,26 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from ..quanta import binomial_log_weights, gamma_vesicles_logpdf, poisson_log_weights, poisson_m_max
 from .facts import texts, values
 
 if TYPE_CHECKING:
     import pandas as pd
     from numpy.typing import NDArray
 
-_MOST_COMPONENTS = 40
+_NOISE_LEVELS = 9
 
 
 def bin_edges(evoked: NDArray[np.float64], null: NDArray[np.float64], *, noise_sd: float) -> NDArray[np.float64]:
-    """Edges of bins of half a noise_sd (at most 80 bins) over evoked and null amplitudes."""
+    """Edges of equal bins over evoked and null amplitudes.
+
+    Half a noise_sd wide, or wider where the evoked amplitudes are too few to fill such bins.
+    """
     everything = np.concatenate([evoked, null])
     low, high = float(everything.min()), float(everything.max())
     spread = (high - low) or max(abs(high), 1e-6)
-    width = max(0.5 * noise_sd if noise_sd > 0 else spread / 20.0, spread / 80.0)
+    filled = float(np.ptp(evoked)) / (2.0 * math.sqrt(max(len(evoked), 1)))
+    width = max(0.5 * noise_sd if noise_sd > 0 else spread / 20.0, filled, spread / 80.0)
     first, last = math.floor((low - 0.02 * spread) / width), math.ceil((high + 0.02 * spread) / width)
     return width * np.arange(first, max(last, first + 1) + 1, dtype=np.float64)
 
@@ -31,11 +36,13 @@ def amplitude_density(amplitudes: NDArray[np.float64], edges: NDArray[np.float64
     return np.histogram(amplitudes, edges)[0] / (max(len(amplitudes), 1) * np.diff(edges))
 
 
-def fitted_components(boutons: pd.DataFrame, row: int, amplitude: NDArray[np.float64]) -> NDArray[np.float64]:
-    """Return the density of each number of vesicles under the bouton's fitted model (Boyd and Martin 1956).
+def fitted_components(
+    boutons: pd.DataFrame, row: int, amplitude: NDArray[np.float64], *, noise_sd: NDArray[np.float64]
+) -> NDArray[np.float64]:
+    """Return the density of each number of vesicles under the bouton's fitted model.
 
-    Component m is Binomial(m; n_sites, p_site), or Poisson(m; -ln(1 - p_release)), times
-    Normal(m q, noise_sd² + m (q q_cv)²).
+    The probability of m vesicles, Binomial(m; n_sites, p_site) or Poisson(m; -ln(1 - p_release)), times the density of
+    an amplitude of m gamma-distributed vesicles under noise, averaged over the trials' noise.
 
     Parameters
     ----------
@@ -45,34 +52,37 @@ def fitted_components(boutons: pd.DataFrame, row: int, amplitude: NDArray[np.flo
         Row of the bouton.
     amplitude : (n,) ndarray
         Where to evaluate, dF/F.
+    noise_sd : (n_trials,) ndarray
+        Noise of each trial's amplitude, dF/F; one value stands for all.
 
     Returns
     -------
     (n_components, n) ndarray
         In 1/(dF/F); no component where there is no model or a parameter is missing.
     """
-    none = np.empty((0, len(amplitude)))
-    one = {
-        name: float(values(boutons, name)[row]) for name in ("n_sites", "p_site", "p_release", "q", "q_cv", "noise_sd")
-    }
+    one = {name: float(values(boutons, name)[row]) for name in ("n_sites", "p_site", "p_release", "q", "q_cv")}
     weights = _weights(texts(boutons, "quantal_model")[row], one)
-    if not weights or not (one["noise_sd"] > 0 and math.isfinite(one["q"])):
-        return none
-    vesicles = np.arange(len(weights))
-    q_cv = one["q_cv"] if math.isfinite(one["q_cv"]) else 0.0
-    variance = one["noise_sd"] ** 2 + vesicles * (one["q"] * q_cv) ** 2
-    distance = amplitude[None, :] - vesicles[:, None] * one["q"]
-    normal = np.exp(-0.5 * distance**2 / variance[:, None]) / np.sqrt(2 * np.pi * variance[:, None])
-    return np.asarray(weights, dtype=np.float64)[:, None] * np.asarray(normal, dtype=np.float64)
+    noise = noise_sd[np.isfinite(noise_sd) & (noise_sd > 0)]
+    if not weights.size or not noise.size or not one["q"] > 0:
+        return np.empty((0, len(amplitude)))
+    if noise.size > _NOISE_LEVELS:  # a few levels stand for hundreds of trials
+        noise = np.quantile(noise, (np.arange(_NOISE_LEVELS) + 0.5) / _NOISE_LEVELS)
+    log_density = gamma_vesicles_logpdf(
+        amplitude,
+        vesicles=np.arange(len(weights))[:, None],
+        q=one["q"],
+        q_cv=max(np.nan_to_num(one["q_cv"]), 1e-3),
+        noise_sd=noise[:, None, None],
+    )
+    return np.asarray(weights[:, None] * np.exp(log_density).mean(axis=0))
 
 
-def _weights(model: str, one: dict[str, float]) -> list[float]:
+def _weights(model: str, one: dict[str, float]) -> NDArray[np.float64]:
     """Probability of 0, 1, 2, ... vesicles."""
     n_sites, p_site, p_release = one["n_sites"], one["p_site"], one["p_release"]
     if model == "binomial" and n_sites >= 1 and 0.0 <= p_site <= 1.0:
-        n = int(n_sites)
-        return [math.comb(n, m) * p_site**m * (1.0 - p_site) ** (n - m) for m in range(n + 1)]
+        return np.exp(binomial_log_weights(p_site, n_sites=int(n_sites), m_max=int(n_sites)))
     if model == "poisson" and 0.0 <= p_release < 1.0:
         mean = -math.log1p(-p_release)
-        return [math.exp(-mean) * mean**m / math.factorial(m) for m in range(_MOST_COMPONENTS)]
-    return []
+        return np.exp(poisson_log_weights(mean, m_max=poisson_m_max(mean)))
+    return np.empty(0)

@@ -7,24 +7,25 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from .facts import fact, number, texts, values
+from .facts import fact, nothing_released, number, silent, texts, values
 
 if TYPE_CHECKING:
     from collections.abc import Iterable
 
+    from numpy.typing import NDArray
+
     from ..analysis.results import AnalysisResult
 
 MISSING = "–"
+_NO_LIMIT = 1000  # an upper end beyond it says only that there is none
 
 STANDING_CAUTIONS = (
-    "A reporter's dF/F is not transmitter: a reporter near saturation compresses large responses and hides the "
-    "release of several vesicles at once.",
     "Boutons found by their responses release more than boutons do on average: a mean over them overstates p_release.",
     "The number of release sites is only as good as one vesicle is large against the noise: quote the set of numbers "
     "that the data cannot exclude, not the single most likely one.",
     "Intervals are 95 % intervals of one bouton's estimate; of many such intervals, one in twenty misses.",
-    "Results are for research, not for diagnosis.",
 )
+"""What holds for every recording, beyond what its own cautions say."""
 
 
 def short(value: float, *, digits: int = 2) -> str:
@@ -62,14 +63,15 @@ def with_limits(value: float, low: float, high: float, *, decimals: int = 2) -> 
 
     Examples
     --------
-    >>> with_limits(0.42, 0.31, 0.53), with_limits(0.02, -0.01, 0.05)
-    ('0.42 (0.31–0.53)', '0.02 (−0.01 to 0.05)')
+    >>> with_limits(0.42, 0.31, 0.53), with_limits(0.02, -0.01, 0.05), with_limits(2, 0, 3e9, decimals=0)
+    ('0.42 (0.31–0.53)', '0.02 (−0.01 to 0.05)', '2 (0–over 1000)')
     """
     text = fixed(value, decimals=decimals)
     if not (math.isfinite(low) and math.isfinite(high)):
         return text
     dash = "–" if low >= 0 else " to "  # next to a minus, a dash would be misread
-    return f"{text} ({fixed(low, decimals=decimals)}{dash}{fixed(high, decimals=decimals)})"
+    upper = fixed(high, decimals=decimals) if high < _NO_LIMIT else f"over {_NO_LIMIT}"
+    return f"{text} ({fixed(low, decimals=decimals)}{dash}{upper})"
 
 
 def counted(count: float, noun: str, plural: str | None = None) -> str:
@@ -81,6 +83,35 @@ def counted(count: float, noun: str, plural: str | None = None) -> str:
     ('1 bouton', '9 boutons')
     """
     return f"{count:g} {noun if count == 1 else plural or noun + 's'}"
+
+
+def duration(time_s: float, *, digits: int = 2) -> str:
+    """Write a time in the unit that suits it.
+
+    Examples
+    --------
+    >>> duration(0.0032), duration(6.094)
+    ('3.2 ms', '6.1 s')
+    """
+    return f"{short(time_s, digits=digits)} s" if time_s >= 1.0 else f"{short(1e3 * time_s, digits=digits)} ms"
+
+
+def ranges(numbers: Iterable[int]) -> str:
+    """Write whole numbers with runs of them drawn together.
+
+    Examples
+    --------
+    >>> ranges([1, 2, 3, 5]), ranges([2, 3]), ranges([4])
+    ('1–3, 5', '2, 3', '4')
+    """
+    runs: list[list[int]] = []
+    for one in sorted(numbers):
+        if runs and one == runs[-1][-1] + 1:
+            runs[-1].append(one)
+        else:
+            runs.append([one])
+    parts = [f"{run[0]}–{run[-1]}" if len(run) > 2 else ", ".join(map(str, run)) for run in runs]
+    return ", ".join(parts)
 
 
 def p_words(p: float) -> str:
@@ -125,14 +156,18 @@ def recording_facts(result: AnalysisResult) -> list[tuple[str, str]]:
         value = number(result, path)
         return [(name, f"{short(factor * value, digits=digits)} {unit}".strip())] if math.isfinite(value) else []
 
+    def time(name: str, path: str) -> list[tuple[str, str]]:
+        value = number(result, path)
+        return [(name, duration(value, digits=3))] if math.isfinite(value) else []
+
     height, width, frames = (number(result, f"recording.{key}") for key in ("height_px", "width_px", "frames"))
     size = [("Movie", f"{frames:g} frames of {height:g} × {width:g} px")] if frames > 0 and height > 0 else []
     return [
         *size,
-        *entry("Frame interval", "recording.frame_interval_s", "ms", 1e3),
-        *entry("Exposure", "recording.exposure_s", "ms", 1e3),
+        *time("Frame interval", "recording.frame_interval_s"),
+        *time("Exposure", "recording.exposure_s"),
         *entry("Pixel size", "recording.pixel_size_um", "µm"),
-        *entry("Pulse interval", "recording.pulse_interval_s", "ms", 1e3),
+        *time("Pulse interval", "recording.pulse_interval_s"),
         *entry("Gain", "quality.gain", "counts per electron"),
         *entry("Read noise", "quality.read_noise_counts", "counts"),
         *entry("Light lost by bleaching", "quality.bleaching", "%", 100.0, 2),
@@ -147,7 +182,9 @@ def headlines(result: AnalysisResult) -> list[str]:
     """Say the main results in sentences, each with its interval."""
     if not len(result.boutons):
         return ["No bouton was found or given, so there is nothing to report beyond the quality of the recording."]
-    sentences = [_population_sentence(result)]
+    if nothing_released(result):
+        return [_nothing_released_sentence(result)]
+    sentences = _population_sentences(result)
     if math.isfinite(number(result, "heterogeneity.sd")):
         p = number(result, "heterogeneity.p")
         differ = "differ in p_release" if p < 0.05 else "may all share one p_release"
@@ -158,27 +195,64 @@ def headlines(result: AnalysisResult) -> list[str]:
     if math.isfinite(number(result, "population.q")):
         sentences.append(f"One vesicle gives {_between(result, 'population.q', decimals=3)} dF/F.")
     if math.isfinite(number(result, "population.ppr")):
-        sentences.append(f"The paired-pulse ratio is {_between(result, 'population.ppr')}; {_verdict_counts(result)}.")
+        ratio = _between(result, "population.ppr")
+        sentences.append(f"The paired-pulse ratio of all boutons together is {ratio}; {_verdict_words(result)}.")
     sentences += _axon_sentences(result)
-    silent = [int(b) for b, codes in _flagged(result) if "silent" in codes]
-    if silent:
-        bouton = "Bouton" if len(silent) == 1 else "Boutons"
-        verb = "shows" if len(silent) == 1 else "show"
-        sentences.append(f"{bouton} {listed(silent)} {verb} no release: p_release is an upper limit there.")
-    return sentences
+    return [*sentences, *_silent_sentences(result)]
 
 
-def _population_sentence(result: AnalysisResult) -> str:
+def _nothing_released_sentence(result: AnalysisResult) -> str:
+    everyone = np.flatnonzero(silent(result))
+    return f"No release was seen at any of {counted(len(everyone), 'bouton')}{_limits(result, everyone)}."
+
+
+def _silent_sentences(result: AnalysisResult) -> list[str]:
+    rows = np.flatnonzero(silent(result))
+    if not rows.size:
+        return []
+    bouton, shows = ("Bouton", "shows") if len(rows) == 1 else ("Boutons", "show")
+    ids = listed(f"{one:g}" for one in values(result.boutons, "bouton")[rows])
+    return [f"{bouton} {ids} {shows} no release{_limits(result, rows)}."]
+
+
+def _limits(result: AnalysisResult, rows: NDArray[np.intp]) -> str:
+    """Say up to where p_release may reach at boutons that show no release."""
+    limits = values(result.boutons, "p_release_hi")[rows]
+    limits = limits[np.isfinite(limits)]
+    if not limits.size:
+        return ""
+    low, high = fixed(float(limits.min())), fixed(float(limits.max()))
+    interval = "interval" if len(rows) == 1 else "intervals"
+    end = ("ends" if len(rows) == 1 else "end") + (f" at {low}" if low == high else f" between {low} and {high}")
+    return f"; the 95 % {interval} of p_release {end}"
+
+
+def _population_sentences(result: AnalysisResult) -> list[str]:
+    """Say the mean p_release, and beside it that of the boutons found by their responses where it differs."""
     measured = int(np.isfinite(values(result.boutons, "p_release")).sum())
     if not measured:
-        return "p_release could be measured at no bouton; the flags say why."
+        return ["p_release could be measured at no bouton; the flags say why."]
     if not math.isfinite(number(result, "population.p_release")):
-        return f"p_release was measured at {counted(measured, 'bouton')}; no mean over them is given."
+        return [f"p_release was measured at {counted(measured, 'bouton')}; no mean over them is given."]
     count = number(result, "population.boutons")
     over = f" over {counted(count, 'bouton')}" if math.isfinite(count) else ""
     selection = fact(result, "population.selection")
     chosen = f" ({selection})" if selection else ""
-    return f"Mean p_release is {_between(result, 'population.p_release')}{over}{chosen}."
+    sentences = [f"Mean p_release is {_between(result, 'population.p_release')}{over}{chosen}."]
+    if selected_differ(result):
+        found = counted(number(result, "population.boutons_found_by_responses"), "bouton")
+        mean = _between(result, "population.p_release_found_by_responses")
+        sentences.append(
+            f"Over the {found} found by their responses it is {mean}. This mean is too high where the other spots are "
+            "boutons, the mean over all too low where they are none."
+        )
+    return sentences
+
+
+def selected_differ(result: AnalysisResult) -> bool:
+    """Whether some, but not all, of the measured boutons were found by their responses."""
+    selected = number(result, "population.boutons_found_by_responses")
+    return 0 < selected < number(result, "population.boutons")
 
 
 def _axon_sentences(result: AnalysisResult) -> list[str]:
@@ -205,10 +279,12 @@ def _axon_sentences(result: AnalysisResult) -> list[str]:
     return sentences
 
 
-def _verdict_counts(result: AnalysisResult) -> str:
+def _verdict_words(result: AnalysisResult) -> str:
     verdicts = texts(result.boutons, "paired_pulse")
     counts = [(name, verdicts.count(name)) for name in ("facilitation", "depression", "unresolved")]
-    return listed(f"{count} {name}" for name, count in counts) + " among the boutons"
+    if not any(count for name, count in counts if name != "unresolved"):
+        return "at no single bouton is it beyond doubt other than 1"
+    return f"bouton by bouton: {listed(f'{count} {name}' for name, count in counts if count)}"
 
 
 def _between(result: AnalysisResult, path: str, *, decimals: int = 2) -> str:
@@ -222,10 +298,8 @@ def _between(result: AnalysisResult, path: str, *, decimals: int = 2) -> str:
 def _shape_words(result: AnalysisResult) -> str:
     shape = result.shape
     source = {"protocol": "given in the protocol", "recording": "fitted to this recording", "assumed": "assumed"}
-    return (
-        f"rise {short(1e3 * shape.rise_s)} ms, decay {short(1e3 * shape.decay_s)} ms, "
-        f"{source.get(result.shape_from, result.shape_from)}"
-    )
+    times = f"rise {duration(shape.rise_s)}, decay {duration(shape.decay_s)}"
+    return f"{times}, {source.get(result.shape_from, result.shape_from)}"
 
 
 def _flagged(result: AnalysisResult) -> list[tuple[float, list[str]]]:
