@@ -8,6 +8,7 @@ import numpy as np
 from observer import p_release_if_all_else_known, released_if_all_known
 
 from napari_boutonrelease.analysis.settings import Settings
+from napari_boutonrelease.quanta import measure_pulse_pair
 from napari_boutonrelease.quanta.pooled import fit_axon_release
 
 
@@ -121,6 +122,41 @@ def study_axons(population, *, axons, rng):
             for name, value in values.items():
                 rows[name].append(value)
     return {name: np.asarray(values) for name, values in rows.items()}
+
+
+def study_pairs(population, *, axons, rng):
+    """Paired-pulse ratio of each bouton: truth, estimate, interval, and the true p_release of pulse 1."""
+    rows = []
+    for _ in range(axons):
+        axon = draw_axon(population, rng=rng)
+        p_site = 1.0 - (1.0 - axon.p_release) ** (1.0 / axon.n_sites[:, None])
+        for b in range(population.boutons):
+            pair = measure_pulse_pair(
+                axon.amplitude[b, :, 0],
+                axon.amplitude[b, :, 1],
+                noise_sd=axon.noise_sd[b],
+                confidence=0.95,
+                n_bootstrap=Settings().pairs.bootstrap,
+                rng=rng,
+            )
+            ratio = pair.ppr
+            rows.append([p_site[b, 1] / p_site[b, 0], ratio.value, ratio.lo, ratio.hi, axon.p_release[b, 0]])
+    return dict(zip(("true", "estimate", "lo", "hi", "p_first"), np.array(rows).T, strict=True))
+
+
+def summarise_pairs(found, *, p_first):
+    """Bias and coverage of the ratios of boutons whose first release probability lies in a range."""
+    meant = (found["p_first"] >= p_first[0]) & (found["p_first"] < p_first[1])
+    known = meant & np.isfinite(found["estimate"])
+    true, estimate, lo, hi = (found[name][known] for name in ("true", "estimate", "lo", "hi"))
+    relative = (estimate - true) / true
+    return {
+        "boutons": int(meant.sum()),
+        "undefined": int((meant & ~known).sum()),
+        "bias": relative.mean(),
+        "bias_se": relative.std() / np.sqrt(relative.size),
+        "coverage": np.mean((lo <= true) & (true <= hi)),
+    }
 
 
 def summarise(found):

@@ -6,7 +6,7 @@ the long runs hold the requirements themselves.
 
 import numpy as np
 import pytest
-from population import AXONS, Population, study_axons, summarise
+from population import AXONS, Population, study_axons, study_pairs, summarise, summarise_pairs
 
 
 def study(population, *, axons, seed):
@@ -60,6 +60,16 @@ def test_few_trials_widen_the_intervals_and_do_not_break_them():
     assert summary["coverage"] > 0.86
     assert abs(summary["bias"]) < 0.04
     assert np.median(found["hi"] - found["lo"]) > 0.25
+
+
+@pytest.mark.parametrize(("q", "p_least"), [(4.5, 0.2), (2.1, 0.3)])
+def test_paired_pulse_ratio_is_unbiased_and_its_interval_holds(q, p_least):
+    pairs = study_pairs(Population(q=q, pulses=2), axons=60, rng=np.random.default_rng(7))
+    summary = summarise_pairs(pairs, p_first=(p_least, 1.0))
+    assert abs(summary["bias"]) < 3.5 * summary["bias_se"]
+    assert summary["bias_se"] < 0.04
+    assert 0.90 < summary["coverage"] < 0.985
+    assert summary["undefined"] <= 2
 
 
 @pytest.mark.validation
