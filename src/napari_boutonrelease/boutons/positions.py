@@ -251,8 +251,8 @@ def _check_apart(path: Path, y_px: NDArray[np.float64], x_px: NDArray[np.float64
         nearest = int(np.argmin(distance))
         if distance[nearest] < _APART_PX:
             raise BoutonFileError(
-                f"{path}, row {lines[row]}: the bouton lies {distance[nearest]:.2g} px from that of row {lines[nearest]}: "
-                "too near to be another; leave one of them out."
+                f"{path}, row {lines[row]}: the bouton lies {distance[nearest]:.2g} px from that of row "
+                f"{lines[nearest]}; that is one bouton: leave one row out."
             )
 
 
