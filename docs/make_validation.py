@@ -29,6 +29,7 @@ MOVIES = {
     "mixed": 8,
     "crowded": 10,
     "crowded-silent": 8,
+    "seldom": 6,
     "silent": 20,
     "equal-25ms": 8,
     "slow-decay": 8,

@@ -33,6 +33,7 @@ SCENARIOS = {
         "fast-pair",
         {"trials": 80, "n_boutons": 12, "width_px": 264, "p_release": (0.1, 0.9), "silent_boutons": 4},
     ),
+    "seldom": ("fast-single", {"trials": 80, "n_boutons": 12, "width_px": 264, "p_release": (0.02, 0.15)}),
     "slow-decay": (
         "fast-pair",
         {
