@@ -13,6 +13,7 @@ if TYPE_CHECKING:
     import numpy as np
     from numpy.typing import NDArray
 
+    from .analysis.hand_edits import HandEdits
     from .analysis.settings import Settings
     from .recording.movie import Movie
     from .recording.protocol import Protocol
@@ -64,7 +65,8 @@ def analyse(
     *,
     settings: Settings | None = None,
     boutons: str | Path | None = None,
-    axon: str | Path | None = None,
+    axon: str | Path | NDArray[np.float64] | None = None,
+    edits: HandEdits | None = None,
     progress: Callable[[int, int], None] | None = None,
 ) -> Analysis:
     """Analyse one recording from the movie to the axon's release map.
@@ -79,8 +81,10 @@ def analyse(
         Choices of the analysis; the defaults of `Settings` where left out.
     boutons : path, optional
         CSV of positions or label TIFF, instead of finding the boutons.
-    axon : path, optional
-        CSV of points along the axon.
+    axon : path or (k, 2) ndarray, optional
+        Points along the axon: a CSV file, or (y, x) in px.
+    edits : HandEdits, optional
+        Changes by hand.
     progress : callable, optional
         Called with (done, total) steps.
 
@@ -111,6 +115,7 @@ def analyse(
         settings=settings,
         boutons=boutons,
         axon=axon,
+        edits=edits,
         progress=progress,
     )
     return Analysis(**{field.name: getattr(result, field.name) for field in fields(AnalysisResult)})

@@ -51,7 +51,8 @@ class ResponseShape:
         """Weights and rates of the exponentials whose sum is the unscaled shape."""
         rise = 1.0 / self.rise_s
         decays = ((1.0 - self.slow_fraction, 1.0 / self.decay_s), (self.slow_fraction, 1.0 / self.slow_decay_s))
-        terms = [(sign * share, rate + extra) for share, rate in decays if share for sign, extra in ((1, 0.0), (-1, rise))]
+        parts = ((1.0, 0.0), (-1.0, rise))
+        terms = [(sign * share, rate + extra) for share, rate in decays if share for sign, extra in parts]
         weights, rates = zip(*terms, strict=True)
         return np.asarray(weights), np.asarray(rates)
 

@@ -6,7 +6,8 @@ import numpy as np
 import pytest
 
 from napari_boutonrelease.analysis.columns import TABLES
-from napari_boutonrelease.analysis.run import measure, run_analysis
+from napari_boutonrelease.analysis.pipeline import Pipeline
+from napari_boutonrelease.analysis.run import run_analysis
 from napari_boutonrelease.analysis.settings import Settings
 from napari_boutonrelease.flags import FLAGS
 from napari_boutonrelease.recording import movie_from_array
@@ -103,7 +104,7 @@ def test_a_fixed_reporter_shape_is_used_as_given(recording):
     movie, simulation = recording
     shape = ResponseShape(latency_s=0.002, rise_s=0.003, decay_s=0.05)
     fixed = replace(simulation.protocol, reporter=shape)
-    measured = measure(movie, fixed, settings=SETTINGS, boutons=None, axon=None, progress=None)
+    measured = Pipeline(movie, fixed).measure(SETTINGS)
     assert measured.responses.shape == shape
     assert measured.responses.shape_from == "protocol"
 

@@ -8,7 +8,7 @@ import time
 import numpy as np
 from observer import observe, p_release_if_all_else_known, released_if_all_known
 
-from napari_boutonrelease.analysis.run import measure
+from napari_boutonrelease.analysis.pipeline import Pipeline
 from napari_boutonrelease.analysis.settings import PairSettings, QuantalSettings, Settings
 from napari_boutonrelease.analysis.tables import bouton_flags
 from napari_boutonrelease.quanta.pooled import fit_axon_release
@@ -80,7 +80,7 @@ def study(recipe, *, seed, settings=SETTINGS, keep=None):
         simulation.frames, frame_interval_s=recipe.frame_interval_s, pixel_size_um=recipe.pixel_size_um
     )
     simulated = time.time()
-    measured = measure(movie, simulation.protocol, settings=settings, boutons=None, axon=None, progress=None)
+    measured = Pipeline(movie, simulation.protocol).measure(settings)
     analysed = time.time()
     # Where nothing ever releases there is nothing to observe.
     observed = observe(simulation, movie) if np.any(simulation.truth.p_site > 0) else None
@@ -97,7 +97,7 @@ def compare(simulation, measured, observed, *, settings=SETTINGS):
     truth = simulation.truth
     recipe = truth.recipe
     row_of, stray = match(truth, measured)
-    quanta, fit = measured.quanta, measured.responses.amplitudes
+    release, calls, fit = measured.release, measured.counts.calls, measured.amplitudes
     flags = bouton_flags(measured)
     ideal = None if observed is None else _infer(observed.fit, settings)
     spots = []
@@ -133,12 +133,12 @@ def compare(simulation, measured, observed, *, settings=SETTINGS):
             ]
             one["flags"] = flags[row]
             one["f0_found"] = float(np.nanmean(measured.responses.baseline.f0[row]))
-            one["silent_probability"] = float(quanta.axon.silent_probability[row])
-            one["evidence"] = quanta.axon.release_evidence[row]
-            one["called"] = int(quanta.calls.n_called[row, 0])
-            one["false_calls_expected"] = float(quanta.calls.false_calls_expected[row, 0])
-            one["verdict"] = quanta.verdicts[row]
-            one["ours"] = _of_bouton(truth, index, fit=fit, axon=quanta.axon, b=row, sd=None, pair=quanta.pairs[row])
+            one["silent_probability"] = float(release.axon.silent_probability[row])
+            one["evidence"] = release.axon.release_evidence[row]
+            one["called"] = int(calls.n_called[row, 0])
+            one["false_calls_expected"] = float(calls.false_calls_expected[row, 0])
+            one["verdict"] = release.verdicts[row]
+            one["ours"] = _of_bouton(truth, index, fit=fit, axon=release.axon, b=row, sd=None, pair=release.pairs[row])
         spots.append(_plain(one))
     drift = measured.drift
     dy, dx = drift.dy_px - truth.dy_px, drift.dx_px - truth.dx_px
@@ -150,7 +150,7 @@ def compare(simulation, measured, observed, *, settings=SETTINGS):
         "drift_rms_px": [float(np.std(dy[drift.used])), float(np.std(dx[drift.used]))],
         "shape": [shape.latency_s, shape.rise_s, shape.decay_s, shape.slow_fraction, shape.slow_decay_s],
         "sigma_px": float(measured.places.footprints.spot_sigma_px),
-        "axon": [_of_axon(quanta.axon), None if ideal is None else _of_axon(ideal)],
+        "axon": [_of_axon(release.axon), None if ideal is None else _of_axon(ideal)],
     }
 
 
@@ -174,7 +174,7 @@ def match(truth, measured):
         if free[row] and int(spot) not in row_of:
             row_of[int(spot)] = int(row)
             free[row] = False
-    axon = measured.quanta.axon
+    axon = measured.release.axon
     stray = [
         {
             "found_by": measured.places.found_by[row],

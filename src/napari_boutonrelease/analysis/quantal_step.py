@@ -29,7 +29,7 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from .progress import Progress
-    from .settings import Settings
+    from .settings import CallSettings, PairSettings, QuantalSettings
 
 CONFIDENCE = 0.95
 _TELLING = 1.1  # sensitivity and specificity must add up to this, or the correction blows up
@@ -37,60 +37,69 @@ _VERDICT_SHARE = 0.05  # false verdicts tolerated among the boutons said to faci
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
-class Quanta:
-    """Release of every bouton.
+class ReleaseFits:
+    """What the amplitudes of every bouton say about its release, whatever the threshold.
+
+    Attributes
+    ----------
+    axon : AxonRelease
+        Release and quanta of all boutons together.
+    own : tuple of SitesFit
+        Each bouton fitted alone, from pulse 1.
+    pairs : tuple of PulsePair or None
+        Pulse 2 against pulse 1; None without a second pulse.
+    verdicts : tuple of str
+        `facilitation`, `depression`, `unresolved`, or empty; corrected for the number of boutons.
+    """
+
+    axon: AxonRelease
+    own: tuple[SitesFit, ...]
+    pairs: tuple[PulsePair | None, ...]
+    verdicts: tuple[str, ...]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Counts:
+    """What the calls say.
 
     Attributes
     ----------
     calls : ReleaseCalls
         Responses above threshold.
-    axon : AxonRelease
-        Release and quanta of all boutons together.
-    own : tuple of SitesFit
-        Each bouton fitted alone, from pulse 1.
     corrected : tuple of Estimate
         Called fraction of pulse 1 freed of false calls and misses (Rogan & Gladen 1978).
-    pairs : tuple of PulsePair or None
-        Pulse 2 against pulse 1; None without a second pulse.
-    verdicts : tuple of str
-        `facilitation`, `depression`, `unresolved`, or empty; corrected for the number of boutons.
     histories : tuple of ReleaseHistory or None
         Calls of pulse 2 after a call, and after a failure, of pulse 1.
     """
 
     calls: ReleaseCalls
-    axon: AxonRelease
-    own: tuple[SitesFit, ...]
     corrected: tuple[Estimate, ...]
-    pairs: tuple[PulsePair | None, ...]
-    verdicts: tuple[str, ...]
     histories: tuple[ReleaseHistory | None, ...]
 
 
-def measure_quanta(
-    fit: AmplitudeFit, *, settings: Settings, rng: np.random.Generator, progress: Progress | None
-) -> Quanta:
-    """Estimate release and quanta of every bouton from its amplitudes."""
+def fit_release(
+    fit: AmplitudeFit,
+    *,
+    quanta: QuantalSettings,
+    pulse_pairs: PairSettings,
+    rng: np.random.Generator,
+    progress: Progress | None,
+) -> ReleaseFits:
+    """Fit the release model to all boutons together and to each alone, and compare the pulses."""
     amplitude, noise = fit.amplitude, fit.amplitude_se
     n_boutons, _, n_pulses = amplitude.shape
     axon = fit_axon_release(
         amplitude,
         noise,
         n_null=fit.n_null_effective,
-        n_max=settings.quanta.n_max,
-        q_cv=settings.quanta.q_cv,
-        q_cv_doubt=settings.quanta.q_cv_doubt,
+        n_max=quanta.n_max,
+        q_cv=quanta.q_cv,
+        q_cv_doubt=quanta.q_cv_doubt,
         progress=None,
     )
-    threshold_sd = np.full(n_boutons, settings.calls.threshold_sd)
-    if settings.calls.threshold_rule == "balanced":
-        threshold_sd = np.array([_balanced(axon, b, fit.noise_sd[b], settings) for b in range(n_boutons)])
-    calls = call_releases(amplitude, amplitude_se=noise, noise_sd=fit.noise_sd, threshold_sd=threshold_sd)
-
-    own, corrected, pairs, histories = [], [], [], []
-    priors = ReleasePriors(
-        q=None, q_cv=LogPrior(centre=settings.quanta.q_cv, log_sd=settings.quanta.q_cv_doubt), noise=None
-    )
+    own: list[SitesFit] = []
+    pairs: list[PulsePair | None] = []
+    priors = ReleasePriors(q=None, q_cv=LogPrior(centre=quanta.q_cv, log_sd=quanta.q_cv_doubt), noise=None)
     for b in range(n_boutons):
         with np.errstate(invalid="ignore", divide="ignore"):
             relative = noise[b, :, 0] / fit.noise_sd[b]
@@ -99,41 +108,47 @@ def measure_quanta(
                 amplitude[b, :, 0],
                 fit.null_amplitude[b],
                 relative_noise=np.where(np.isfinite(relative), relative, 1.0),
-                n_max=settings.quanta.n_max,
+                n_max=quanta.n_max,
                 priors=priors if fit.null_amplitude[b].size else _with_noise(priors, fit.noise_sd[b]),
                 confidence=CONFIDENCE,
-                n_bootstrap=settings.quanta.bootstrap,
+                n_bootstrap=quanta.bootstrap,
                 rng=rng,
             )
         )
-        corrected.append(_corrected(axon, calls, b, fit.noise_sd[b]))
-        second = n_pulses > 1 and np.isfinite(fit.noise_sd[b])
         pairs.append(
             measure_pulse_pair(
                 amplitude[b, :, 0],
                 amplitude[b, :, 1],
                 noise_sd=fit.noise_sd[b],
                 confidence=CONFIDENCE,
-                n_bootstrap=settings.pairs.bootstrap,
+                n_bootstrap=pulse_pairs.bootstrap,
                 rng=rng,
             )
-            if second
+            if n_pulses > 1 and np.isfinite(fit.noise_sd[b])
             else None
-        )
-        histories.append(
-            measure_history(calls.called[b, :, 0], calls.called[b, :, 1], confidence=CONFIDENCE) if second else None
         )
         if progress is not None:
             progress(b + 1, n_boutons)
-    return Quanta(
-        calls=calls,
-        axon=axon,
-        own=tuple(own),
-        corrected=tuple(corrected),
-        pairs=tuple(pairs),
-        verdicts=_verdicts(pairs),
-        histories=tuple(histories),
+    return ReleaseFits(axon=axon, own=tuple(own), pairs=tuple(pairs), verdicts=_verdicts(pairs))
+
+
+def count_releases(fit: AmplitudeFit, axon: AxonRelease, *, settings: CallSettings) -> Counts:
+    """Call releases by the threshold, and say what the calls are worth."""
+    n_boutons, _, n_pulses = fit.amplitude.shape
+    threshold_sd = np.full(n_boutons, settings.threshold_sd)
+    if settings.threshold_rule == "balanced":
+        threshold_sd = np.array([_balanced(axon, b, fit.noise_sd[b], settings) for b in range(n_boutons)])
+    calls = call_releases(
+        fit.amplitude, amplitude_se=fit.amplitude_se, noise_sd=fit.noise_sd, threshold_sd=threshold_sd
     )
+    histories = tuple(
+        measure_history(calls.called[b, :, 0], calls.called[b, :, 1], confidence=CONFIDENCE)
+        if n_pulses > 1 and np.isfinite(fit.noise_sd[b])
+        else None
+        for b in range(n_boutons)
+    )
+    corrected = tuple(_corrected(axon, calls, b, fit.noise_sd[b]) for b in range(n_boutons))
+    return Counts(calls=calls, corrected=corrected, histories=histories)
 
 
 def vesicle_weights(axon: AxonRelease, bouton: int, *, pulse: int) -> NDArray[np.float64]:
@@ -145,9 +160,9 @@ def vesicle_weights(axon: AxonRelease, bouton: int, *, pulse: int) -> NDArray[np
     return np.asarray(choose * p**m * (1.0 - p) ** (n - m))
 
 
-def _balanced(axon: AxonRelease, bouton: int, noise_sd: float, settings: Settings) -> float:
+def _balanced(axon: AxonRelease, bouton: int, noise_sd: float, settings: CallSettings) -> float:
     if not np.isfinite(axon.p_site[bouton, 0]) or not noise_sd > 0:
-        return settings.calls.threshold_sd
+        return settings.threshold_sd
     weights = vesicle_weights(axon, bouton, pulse=0)
     return balanced_threshold(weights, q=axon.q[bouton], q_cv=axon.q_cv, noise_sd=noise_sd) / noise_sd
 

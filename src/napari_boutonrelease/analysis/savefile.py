@@ -9,17 +9,21 @@ from datetime import UTC, datetime
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Literal
 
+import numpy as np
 from pydantic import ValidationError
 
 from napari_boutonrelease.errors import SavedAnalysisError
 from napari_boutonrelease.recording import Protocol, content_digest, file_digest, protocol_from_dict, protocol_to_dict
 
+from .hand_edits import HandEdits, edits_from_dict
 from .settings import Settings
 
 if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
     from napari_boutonrelease.recording import Movie
 
-    from .run import Measured
+    from .pipeline import Measured, Pipeline
 
 FORMAT_VERSION = 1
 
@@ -42,8 +46,12 @@ class SavedAnalysis:
         SHA-256 of the movie's content; None if it was an array.
     boutons, axon : Path or None
         Files that were given.
+    axon_px : (k, 2) ndarray or None
+        Axon that was drawn, (y, x) in px.
     digests : dict of str to str
         SHA-256 of those two files, by the names `boutons` and `axon`.
+    edits : HandEdits
+        Changes by hand.
     """
 
     path: Path
@@ -53,7 +61,9 @@ class SavedAnalysis:
     movie_digest: str | None
     boutons: Path | None
     axon: Path | None
+    axon_px: NDArray[np.float64] | None
     digests: dict[str, str]
+    edits: HandEdits
 
     def find_movie(self) -> tuple[Path, ...]:
         """Return the movie's files, where they were or beside the folder of results.
@@ -110,9 +120,11 @@ class SavedAnalysis:
             )
 
 
-def provenance_of(measured: Measured, *, boutons: str | Path | None, axon: str | Path | None) -> dict[str, Any]:
+def provenance_of(measured: Measured, *, pipeline: Pipeline) -> dict[str, Any]:
     """Put together what is needed to repeat an analysis, JSON-ready."""
-    movie = measured.movie
+    movie, axon = pipeline.movie, pipeline.axon
+    drawn = axon.tolist() if isinstance(axon, np.ndarray) else None
+    given = {"boutons": pipeline.boutons, "axon": None if isinstance(axon, np.ndarray) else axon}
     return {
         "format": "boutonrelease analysis",
         "format_version": FORMAT_VERSION,
@@ -129,12 +141,10 @@ def provenance_of(measured: Measured, *, boutons: str | Path | None, axon: str |
         },
         "protocol": protocol_to_dict(measured.protocol),
         "settings": measured.settings.model_dump(mode="json"),
-        "boutons": None if boutons is None else str(Path(boutons).resolve()),
-        "axon": None if axon is None else str(Path(axon).resolve()),
-        "sha256": {
-            name: file_digest(Path(path)) for name, path in (("boutons", boutons), ("axon", axon)) if path is not None
-        },
-        "hand_edits": [],
+        **{name: None if path is None else str(Path(path).resolve()) for name, path in given.items()},
+        "axon_px": drawn,
+        "sha256": {name: file_digest(Path(path)) for name, path in given.items() if path is not None},
+        "hand_edits": measured.edits.as_dict(),
     }
 
 
@@ -174,7 +184,9 @@ def read_saved(path: str | Path) -> SavedAnalysis:
             movie_digest=content["movie"]["sha256"],
             boutons=None if content["boutons"] is None else Path(content["boutons"]),
             axon=None if content["axon"] is None else Path(content["axon"]),
+            axon_px=None if content["axon_px"] is None else np.asarray(content["axon_px"], dtype=np.float64),
             digests=dict(content["sha256"]),
+            edits=edits_from_dict(content["hand_edits"]),
         )
     except (KeyError, TypeError, AttributeError) as error:
         raise SavedAnalysisError(f"{path} is damaged: {error} is missing or has the wrong type.") from error

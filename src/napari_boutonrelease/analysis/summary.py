@@ -14,7 +14,7 @@ if TYPE_CHECKING:
     import pandas as pd
     from numpy.typing import NDArray
 
-    from .run import Measured
+    from .pipeline import Measured
 
 _METHODS_FROM_AXON = "whole axon, this bouton's amplitudes"
 _ALONE = "this bouton alone"
@@ -22,8 +22,8 @@ _ALONE = "this bouton alone"
 
 def summarise(measured: Measured) -> dict[str, Any]:
     """Put together the results of the whole axon, JSON-ready; the keys are described in the data dictionary."""
-    timing, light, drift = measured.timing, measured.light, measured.drift
-    n_frames, height, width = measured.movie.shape
+    timing, light, drift = measured.timing, measured.recording.light, measured.drift
+    n_frames, height, width = measured.recording.movie.shape
     n_trials, n_pulses = timing.stimulus_s.shape
     found_by = measured.places.found_by
     return {
@@ -71,7 +71,7 @@ def summarise(measured: Measured) -> dict[str, Any]:
 
 
 def _population(measured: Measured) -> dict[str, Any]:
-    axon, pairs = measured.quanta.axon, measured.quanta.pairs
+    axon, pairs = measured.release.axon, measured.release.pairs
     known = np.isfinite(axon.p_release[:, 0])
     selected = np.array([way in ("responses", "both") for way in measured.places.found_by], dtype=bool) & known
     p_all = _mean_with_interval(axon.p_release[known, 0], upper_limits=axon.p_release_hi[known, 0])
@@ -103,7 +103,7 @@ def _population(measured: Measured) -> dict[str, Any]:
 
 
 def _any_release(measured: Measured) -> bool:
-    return bool(np.any(measured.quanta.axon.silent_probability < 0.5))
+    return bool(np.any(measured.release.axon.silent_probability < 0.5))
 
 
 def _selection_in_words(measured: Measured, known: NDArray[np.bool_]) -> str:
@@ -140,7 +140,7 @@ def _population_ratio(measured: Measured, known: NDArray[np.bool_]) -> tuple[flo
     """Second over first amplitude, summed over boutons: none need be left out. Interval over trials (Fieller 1954)."""
     from napari_boutonrelease.quanta import fieller_interval
 
-    amplitude = measured.responses.amplitudes.amplitude
+    amplitude = measured.amplitudes.amplitude
     if amplitude.shape[2] < 2 or not known.any():
         return None, None, None
     first = np.nansum(amplitude[known, :, 0], axis=0)
@@ -168,10 +168,10 @@ def estimates_table(measured: Measured) -> pd.DataFrame:
     """Put every estimate of the same quantity side by side, from pulse 1."""
     import pandas as pd
 
-    axon, calls, fit = measured.quanta.axon, measured.quanta.calls, measured.responses.amplitudes
+    axon, calls, fit = measured.release.axon, measured.counts.calls, measured.amplitudes
     rows: list[tuple[int, str, str, float, float, float]] = []
     for b, bouton in enumerate(measured.places.bouton):
-        own, corrected = measured.quanta.own[b], measured.quanta.corrected[b]
+        own, corrected = measured.release.own[b], measured.counts.corrected[b]
         n_trials, n_called = int(calls.n_trials[b, 0]), int(calls.n_called[b, 0])
 
         def add(quantity: str, method: str, value: float, lo: float, hi: float, name: int = int(bouton)) -> None:
@@ -245,9 +245,9 @@ def cautions_of(measured: Measured) -> tuple[str, ...]:
         cautions.append("The response shape is assumed: too few responses were clear enough to measure it.")
     if not measured.drift.corrected and measured.settings.recording.correct_motion:
         cautions.append("The image has too little structure to follow its movement: none was corrected.")
-    if (measured.light.bleaching or 0) > 0.3:
+    if (measured.recording.light.bleaching or 0) > 0.3:
         cautions.append(
-            f"{100 * measured.light.bleaching:.0f} % of the light was lost: noise grows over the recording."
+            f"{100 * measured.recording.light.bleaching:.0f} % of the light was lost: noise grows over the recording."
         )
     cautions += [
         "Reporter saturation compresses large responses and hides multivesicular release.",

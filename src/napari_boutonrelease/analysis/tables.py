@@ -18,7 +18,7 @@ if TYPE_CHECKING:
     import pandas as pd
     from numpy.typing import NDArray
 
-    from .run import Measured
+    from .pipeline import Measured
 
 _FEW_TRIALS = 20
 _LOW_SIGNAL = 2.0
@@ -38,8 +38,8 @@ def _frame(name: str, rows: dict[str, Any]) -> pd.DataFrame:
 
 def bouton_table(measured: Measured) -> pd.DataFrame:
     """Return a row a bouton."""
-    places, quanta = measured.places, measured.quanta
-    fit, axon, calls = measured.responses.amplitudes, quanta.axon, quanta.calls
+    places, histories = measured.places, measured.counts.histories
+    fit, axon, calls = measured.amplitudes, measured.release.axon, measured.counts.calls
     footprints = places.footprints
     scale = measured.timing.pixel_size_um
     n = len(places.bouton)
@@ -54,7 +54,7 @@ def bouton_table(measured: Measured) -> pd.DataFrame:
         excess = fit.noise_sd / limit
     known = np.isfinite(axon.p_release[:, 0])
     releases = known & (axon.silent_probability < 0.5)
-    pairs = quanta.pairs
+    pairs = measured.release.pairs
     mean, se = _mean_and_se(first_release)
     return _frame(
         "boutons",
@@ -90,10 +90,14 @@ def bouton_table(measured: Measured) -> pd.DataFrame:
             "ppr_hi": [np.nan if pair is None else pair.ppr.hi for pair in pairs],
             "ppf": [np.nan if pair is None else pair.ppf for pair in pairs],
             "ppr_release": ppr_release,
-            "paired_pulse": list(quanta.verdicts),
-            "p2_given_release": [np.nan if one is None else one.after_release.value for one in quanta.histories],
-            "p2_given_failure": [np.nan if one is None else one.after_failure.value for one in quanta.histories],
-            "history_p": [np.nan if one is None else one.history_p for one in quanta.histories],
+            "paired_pulse": list(measured.release.verdicts),
+            "p2_given_release": [
+                np.nan if one is None else one.after_release.value for one in measured.counts.histories
+            ],
+            "p2_given_failure": [
+                np.nan if one is None else one.after_failure.value for one in measured.counts.histories
+            ],
+            "history_p": [np.nan if one is None else one.history_p for one in histories],
             "n_sites": np.where(releases, axon.n_sites, np.nan),
             "n_sites_lo": np.where(releases, axon.n_sites_lo, np.nan),
             "n_sites_hi": np.where(releases, axon.n_sites_hi, np.nan),
@@ -106,17 +110,17 @@ def bouton_table(measured: Measured) -> pd.DataFrame:
             "q_from": _choice(known, np.where(axon.q_own > _OWN_SHARE, "own", "axon")),
             "q_cv": np.where(known, axon.q_cv, np.nan),
             "quantal_model": np.where(known, "binomial", "none"),
-            "fit_p": [one.fit_p for one in quanta.own],
+            "fit_p": [one.fit_p for one in measured.release.own],
             "spontaneous_per_min": measured.spontaneous.per_min,
             "crosstalk": crosstalk(measured),
-            "p_corrected": [one.value for one in quanta.corrected],
-            "p_corrected_lo": [one.lo for one in quanta.corrected],
-            "p_corrected_hi": [one.hi for one in quanta.corrected],
+            "p_corrected": [one.value for one in measured.counts.corrected],
+            "p_corrected_lo": [one.lo for one in measured.counts.corrected],
+            "p_corrected_hi": [one.hi for one in measured.counts.corrected],
             "noise_photon_limit_sd": limit,
             "noise_excess": excess,
             "n_set": _choice(releases, np.array([";".join(map(str, members)) for members in axon.n_set], dtype=object)),
-            "q_own": [one.q.value for one in quanta.own],
-            "p_release_own": [one.p_release.value for one in quanta.own],
+            "q_own": [one.q.value for one in measured.release.own],
+            "p_release_own": [one.p_release.value for one in measured.release.own],
             "flags": bouton_flags(measured),
         },
     )
@@ -124,7 +128,7 @@ def bouton_table(measured: Measured) -> pd.DataFrame:
 
 def pulse_table(measured: Measured) -> pd.DataFrame:
     """Return a row a bouton and pulse."""
-    fit, axon, calls = measured.responses.amplitudes, measured.quanta.axon, measured.quanta.calls
+    fit, axon, calls = measured.amplitudes, measured.release.axon, measured.counts.calls
     n, _, n_pulses = fit.amplitude.shape
     lo, hi = wilson_interval(calls.n_called, calls.n_trials, confidence=CONFIDENCE)
     statistics = [_mean_and_se(fit.amplitude[:, :, j]) for j in range(n_pulses)]
@@ -154,14 +158,16 @@ def pulse_table(measured: Measured) -> pd.DataFrame:
 
 def response_table(measured: Measured) -> pd.DataFrame:
     """Return a row a bouton, trial and pulse of the protocol."""
-    fit, quanta = measured.responses.amplitudes, measured.quanta
+    fit = measured.amplitudes
     stimulus = np.broadcast_to(measured.timing.stimulus_s, fit.amplitude.shape)
     bouton, trial, pulse = np.nonzero(np.isfinite(stimulus))
     at = (bouton, trial, pulse)
-    amplitude = fit.amplitude[at]
-    used = np.isfinite(amplitude)
-    usable_f0 = measured.responses.baseline.usable[bouton]
-    called = quanta.calls.called[at]
+    # Excluded trials keep their amplitude, so that a reader sees what was left out.
+    amplitude = measured.responses.amplitudes.amplitude[at]
+    used = np.isfinite(fit.amplitude[at])
+    reason = np.where(measured.responses.baseline.usable[bouton], "frames missing", "f0 unusable").astype(object)
+    for excluded, why in measured.edits.excluded:
+        reason[trial == excluded - 1] = why
     return _frame(
         "responses",
         {
@@ -171,10 +177,10 @@ def response_table(measured: Measured) -> pd.DataFrame:
             "stimulus_s": stimulus[at],
             "amplitude": amplitude,
             "amplitude_se": fit.amplitude_se[at],
-            "called": called,
-            "p_released": quanta.axon.p_released[at],
+            "called": measured.counts.calls.called[at],
+            "p_released": measured.release.axon.p_released[at],
             "used": used.astype(np.int64),
-            "reason": np.where(used, "", np.where(usable_f0, "frames missing", "f0 unusable")),
+            "reason": np.where(used, "", reason),
         },
     )
 
@@ -212,8 +218,8 @@ def drift_table(measured: Measured) -> pd.DataFrame:
 
 def photon_limit_sd(measured: Measured) -> NDArray[np.float64]:
     """Return the noise_sd that photon and read noise alone would give each bouton, dF/F."""
-    fit, baseline = measured.responses.amplitudes, measured.responses.baseline
-    variance = measured.optics.variance_image
+    fit, baseline = measured.amplitudes, measured.responses.baseline
+    variance = measured.recording.optics.variance_image
     limit = np.full(len(measured.places.bouton), np.nan)
     footprints = measured.places.footprints
     patches = zip(footprints.y0, footprints.x0, footprints.weights, strict=True)
@@ -230,7 +236,7 @@ def photon_limit_sd(measured: Measured) -> NDArray[np.float64]:
 
 def crosstalk(measured: Measured) -> NDArray[np.float64]:
     """Return the share of each bouton's mean amplitude that its neighbours would give it, were they not separated."""
-    fit = measured.responses.amplitudes
+    fit = measured.amplitudes
     mean, _ = _mean_and_se(fit.amplitude_counts[:, :, 0]) if len(measured.places.bouton) else (np.empty(0), None)
     response = np.maximum(np.nan_to_num(mean), 0.0)
     leak = crosstalk_matrix(measured.places.footprints)
@@ -242,9 +248,9 @@ def crosstalk(measured: Measured) -> NDArray[np.float64]:
 
 def bouton_flags(measured: Measured) -> list[str]:
     """Say why to doubt each bouton."""
-    fit, axon, quanta = measured.responses.amplitudes, measured.quanta.axon, measured.quanta
+    fit, axon = measured.amplitudes, measured.release.axon
     usable = measured.responses.baseline.usable
-    rundown = measure_rundown(fit.amplitude, called=quanta.calls.called)
+    rundown = measure_rundown(fit.amplitude, called=measured.counts.calls.called)
     shared = crosstalk(measured)
     all_silent = bool(np.all(axon.silent_probability > 0.5)) if len(shared) else False
     flags = []
@@ -252,7 +258,7 @@ def bouton_flags(measured: Measured) -> list[str]:
         codes = set(found)
         if not usable[b]:
             codes.add("f0_unusable")
-        if quanta.calls.n_trials[b, 0] < _FEW_TRIALS:
+        if measured.counts.calls.n_trials[b, 0] < _FEW_TRIALS:
             codes.add("few_trials")
         if axon.q[b] < _LOW_SIGNAL * fit.noise_sd[b]:
             codes.add("low_signal")
@@ -262,20 +268,20 @@ def bouton_flags(measured: Measured) -> list[str]:
             codes.add("n_unresolved")
         if all_silent:
             codes.add("q_assumed")
-        if quanta.own[b].fit_p < _POOR_FIT:
+        if measured.release.own[b].fit_p < _POOR_FIT:
             codes.add("poor_fit")
         if shared[b] > _CROSSTALK:
             codes.add("crosstalk")
         if rundown.release_p[b] < _RUNDOWN or rundown.amplitude_p[b] < _RUNDOWN:
             codes.add("rundown")
-        pair = quanta.pairs[b]
+        pair = measured.release.pairs[b]
         if pair is not None:
             codes |= pair.flags
         if fit.noise_from[b] == "residuals":
             codes.add("noise_from_residuals")
         if measured.responses.shape_from == "assumed":
             codes.add("shape_assumed")
-        if quanta.own[b].n_spontaneous > 0.05 * max(quanta.own[b].n_null, 1):
+        if measured.release.own[b].n_spontaneous > 0.05 * max(measured.release.own[b].n_null, 1):
             codes.add("spontaneous_in_noise")
         flags.append(join_flags(codes))
     return flags

@@ -87,7 +87,8 @@ def _saved_inputs(args: argparse.Namespace) -> "tuple[Settings, str, dict[str, A
         "movie": movie,
         "protocol": read_protocol(args.protocol) if args.protocol else saved.protocol,
         "boutons": args.boutons or saved.find_given("boutons"),
-        "axon": args.axon or saved.find_given("axon"),
+        "axon": args.axon or (saved.find_given("axon") if saved.axon_px is None else saved.axon_px),
+        "edits": saved.edits,
     }
     return settings, str(movie.files[0]), inputs
 

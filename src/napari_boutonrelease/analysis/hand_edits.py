@@ -1,0 +1,135 @@
+"""What a person changed by hand: places added, moved, deleted or redrawn, and trials left out.
+
+Edits name places, not ids, so that they hold when boutons are looked for again. Every change makes a new `HandEdits`;
+undo goes back to an older one.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field, replace
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+Place = tuple[float, float]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class PlacedByHand:
+    """A bouton that a person placed.
+
+    Attributes
+    ----------
+    y_px, x_px : float
+        Where.
+    pixels : tuple of (int, int)
+        Its footprint, where that was drawn; empty for a spot of the usual shape.
+    """
+
+    y_px: float
+    x_px: float
+    pixels: tuple[tuple[int, int], ...] = ()
+
+    @property
+    def place(self) -> Place:
+        """Where, as (y, x)."""
+        return self.y_px, self.x_px
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class HandEdits:
+    """All changes by hand, in a state that can be saved and compared.
+
+    Attributes
+    ----------
+    placed : tuple of PlacedByHand
+        Boutons added, moved to, or redrawn.
+    cleared : tuple of (float, float)
+        Places at which a found bouton does not count: deleted, or moved away from, or redrawn.
+    excluded : tuple of (int, str)
+        Trials left out, from 1, and why; in ascending order.
+    """
+
+    placed: tuple[PlacedByHand, ...] = ()
+    cleared: tuple[Place, ...] = ()
+    excluded: tuple[tuple[int, str], ...] = field(default=())
+
+    def add(self, y_px: float, x_px: float, pixels: tuple[tuple[int, int], ...] = ()) -> HandEdits:
+        """Place a bouton, with a drawn footprint where `pixels` are given."""
+        return replace(self, placed=(*self.placed, PlacedByHand(y_px=y_px, x_px=x_px, pixels=pixels)))
+
+    def delete(self, place: Place) -> HandEdits:
+        """Take away the bouton at a place, found or placed."""
+        kept = tuple(one for one in self.placed if one.place != place)
+        cleared = self.cleared if len(kept) < len(self.placed) else (*self.cleared, place)
+        return replace(self, placed=kept, cleared=cleared)
+
+    def move(self, place: Place, to: Place) -> HandEdits:
+        """Move the bouton at a place."""
+        return self.delete(place).add(*to)
+
+    def redraw(self, place: Place, pixels: tuple[tuple[int, int], ...]) -> HandEdits:
+        """Give the bouton at a place a drawn footprint; its place becomes the footprint's centre."""
+        centre = np.mean(np.asarray(pixels, dtype=np.float64), axis=0)
+        return self.delete(place).add(float(centre[0]), float(centre[1]), pixels)
+
+    def merge(self, places: tuple[Place, ...]) -> HandEdits:
+        """Replace several boutons by one at their mean."""
+        edits = self
+        for place in places:
+            edits = edits.delete(place)
+        centre = np.mean(np.asarray(places, dtype=np.float64), axis=0)
+        return edits.add(float(centre[0]), float(centre[1]))
+
+    def exclude(self, trial: int, reason: str) -> HandEdits:
+        """Leave a trial out of every estimate."""
+        others = tuple(one for one in self.excluded if one[0] != trial)
+        return replace(self, excluded=tuple(sorted((*others, (trial, reason)))))
+
+    def include(self, trial: int) -> HandEdits:
+        """Let a trial count again."""
+        return replace(self, excluded=tuple(one for one in self.excluded if one[0] != trial))
+
+    def spared(self, y_px: NDArray[np.float64], x_px: NDArray[np.float64], *, reach_px: float) -> NDArray[np.bool_]:
+        """Tell which found boutons still count: those that no cleared and no placed place lies within `reach_px` of."""
+        kept = np.ones(len(y_px), dtype=np.bool_)
+        for y, x in (*self.cleared, *(one.place for one in self.placed)):
+            distance = np.hypot(y_px - y, x_px - x)
+            if kept.any():
+                nearest = int(np.argmin(np.where(kept, distance, np.inf)))
+                kept[nearest] &= distance[nearest] > reach_px
+        return kept
+
+    def as_dict(self) -> dict[str, Any]:
+        """Return the edits JSON-ready."""
+        return {
+            "placed": [
+                {"y_px": one.y_px, "x_px": one.x_px, "pixels": [list(pixel) for pixel in one.pixels]}
+                for one in self.placed
+            ],
+            "cleared": [list(place) for place in self.cleared],
+            "excluded": [{"trial": trial, "reason": reason} for trial, reason in self.excluded],
+        }
+
+
+def edits_from_dict(content: dict[str, Any]) -> HandEdits:
+    """Rebuild edits from `HandEdits.as_dict`.
+
+    Raises
+    ------
+    KeyError, TypeError, ValueError
+        If a key is missing or has the wrong type.
+    """
+    return HandEdits(
+        placed=tuple(
+            PlacedByHand(
+                y_px=float(one["y_px"]),
+                x_px=float(one["x_px"]),
+                pixels=tuple((int(y), int(x)) for y, x in one["pixels"]),
+            )
+            for one in content["placed"]
+        ),
+        cleared=tuple((float(y), float(x)) for y, x in content["cleared"]),
+        excluded=tuple((int(one["trial"]), str(one["reason"])) for one in content["excluded"]),
+    )

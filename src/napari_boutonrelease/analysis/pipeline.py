@@ -1,0 +1,407 @@
+"""The steps of an analysis, each computed again only when something it rests on has changed.
+
+`Pipeline` remembers the last value of every step with a key: the settings and hand edits that the step looks at, and
+the keys of the steps before it. Asked again with other settings, it computes the steps whose key differs and takes the
+others as they are; of the traces, it reads only those of boutons whose weights have changed.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import warnings
+from collections.abc import Callable, Hashable
+from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING, Any, TypeVar
+
+import numpy as np
+
+from napari_boutonrelease.errors import AnalysisWarning, TooFewResponsesError
+from napari_boutonrelease.responses import (
+    ASSUMED_SHAPE,
+    detect_spontaneous,
+    extract_traces,
+    measure_baseline,
+    measure_responses,
+    plan_trial_windows,
+    rest_s,
+)
+
+from .hand_edits import HandEdits
+from .places import Places, lay_footprints, take_footprints
+from .progress import StepProgress
+from .quantal_step import Counts, ReleaseFits, count_releases, fit_release
+from .recording_step import BLOCK_FRAMES, Recording, look_at_recording
+from .response_maps import guess_shape, map_responses
+from .sites import Sites, correct_by_hand, find_sites, given_sites, put_in_order, read_axon_px, spot_sigma_px
+
+if TYPE_CHECKING:
+    from pathlib import Path
+
+    from numpy.typing import NDArray
+    from pydantic import BaseModel
+
+    from napari_boutonrelease.boutons import ResponseStack
+    from napari_boutonrelease.recording import Drift, Movie, Protocol, Timing
+    from napari_boutonrelease.response_shape import ResponseShape
+    from napari_boutonrelease.responses import AmplitudeFit, Responses, SpontaneousReleases
+
+    from .progress import Progress
+    from .settings import Settings
+
+Value = TypeVar("Value")
+
+STEPS = {
+    # name: how long it takes, compared with the others
+    "light": 1.0,
+    "drift": 2.0,
+    "shape": 1.0,
+    "maps": 2.0,
+    "sites": 1.0,
+    "traces": 1.0,
+    "responses": 1.0,
+    "spontaneous": 0.7,
+    "release": 2.0,
+}
+_OTHER_SHAPE = 1.6  # a decay this many times longer or shorter than guessed is worth looking for boutons again
+_MOST_SHAFT = 0.6  # of the baseline: a bouton hardly brighter than its axon is doubtful, not infinitely responsive
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Measured:
+    """Everything that the steps of one analysis found, before it is put into tables.
+
+    Attributes
+    ----------
+    protocol, settings, edits
+        What was asked for.
+    recording : Recording
+        Movie, timing, light and movement.
+    places : Places
+        Boutons and their footprints.
+    f : (n_boutons, n_frames) ndarray
+        Brightness of each bouton, background, neighbours and bare axon taken off (counts).
+    responses : Responses
+        Baseline, response shape and amplitudes of all trials.
+    amplitudes : AmplitudeFit
+        Those amplitudes that count: excluded trials are NaN.
+    spontaneous : SpontaneousReleases
+        Releases without stimulus.
+    release : ReleaseFits
+        Release and quanta.
+    counts : Counts
+        Calls.
+    """
+
+    protocol: Protocol
+    settings: Settings
+    edits: HandEdits
+    recording: Recording
+    places: Places
+    f: NDArray[np.float64]
+    responses: Responses
+    amplitudes: AmplitudeFit
+    spontaneous: SpontaneousReleases
+    release: ReleaseFits
+    counts: Counts
+
+    @property
+    def timing(self) -> Timing:
+        """Frames and stimuli."""
+        return self.recording.timing
+
+    @property
+    def drift(self) -> Drift:
+        """Movement of every frame."""
+        return self.recording.drift
+
+
+class Pipeline:
+    """The analysis of one recording, step by step, with what is already known.
+
+    Parameters
+    ----------
+    movie : Movie
+        The recording.
+    protocol : Protocol
+        When the axon was stimulated.
+    boutons : path, optional
+        Table of positions or label image, instead of finding the boutons.
+    axon : path or (k, 2) ndarray, optional
+        Points along the axon: a table, or (y, x) in px.
+    """
+
+    def __init__(
+        self,
+        movie: Movie,
+        protocol: Protocol,
+        *,
+        boutons: str | Path | None = None,
+        axon: str | Path | NDArray[np.float64] | None = None,
+    ) -> None:
+        self.movie = movie
+        self.protocol = protocol
+        self.boutons = boutons
+        self.axon = axon
+        self._known: dict[str, tuple[Hashable, Any]] = {}
+        self._traces: dict[str, NDArray[np.float64]] = {}
+
+    def measure(
+        self, settings: Settings, *, edits: HandEdits | None = None, progress: Progress | None = None
+    ) -> Measured:
+        """Run the steps that are not known yet.
+
+        Parameters
+        ----------
+        settings : Settings
+            Every choice.
+        edits : HandEdits, optional
+            Changes by hand.
+        progress : callable, optional
+            Called with (done, total). Raising from it ends the analysis; the steps done so far stay known.
+
+        Returns
+        -------
+        Measured
+
+        Raises
+        ------
+        InputError
+            If the protocol does not fit the movie, or a file of boutons or axon cannot be used.
+        """
+        edits = edits or HandEdits()
+        steps = StepProgress(progress, shares=STEPS)
+        recording = self.look(settings, steps=steps)
+        sites, shape = self.find(settings, steps=steps)
+        places, f, responses = self._respond(sites, recording, edits, settings, steps=steps)
+        if shape is not None and self.protocol.reporter is None and responses.shape_from == "recording":
+            # Looked for with a shape far from the true one, boutons may have been missed.
+            ratio = responses.shape.decay_s / shape.decay_s
+            if not 1 / _OTHER_SHAPE < ratio < _OTHER_SHAPE and not edits.placed:
+                sites, _ = self.find(settings, steps=steps, shape=responses.shape)
+                places, f, responses = self._respond(sites, recording, edits, settings, steps=steps)
+        spontaneous = self._step(
+            "spontaneous",
+            (self._key("responses"), settings.calls.threshold_sd, settings.responses.false_spontaneous),
+            lambda: detect_spontaneous(
+                f,
+                baseline=responses.baseline,
+                fit=responses.amplitudes,
+                timing=recording.timing,
+                y_px=places.footprints.y_px,
+                shape=responses.shape,
+                used=recording.drift.used,
+                threshold_sd=settings.calls.threshold_sd,
+                false_per_bouton=settings.responses.false_spontaneous,
+            ),
+        )
+        amplitudes = _without(responses.amplitudes, edits.excluded)
+        release = self._step(
+            "release",
+            (self._key("responses"), edits.excluded, _digest(settings.quanta), _digest(settings.pairs), settings.seed),
+            lambda: fit_release(
+                amplitudes,
+                quanta=settings.quanta,
+                pulse_pairs=settings.pairs,
+                rng=np.random.default_rng([settings.seed, 1]),
+                progress=steps.step("release"),
+            ),
+        )
+        counts = self._step(
+            "counts",
+            (self._key("release"), _digest(settings.calls)),
+            lambda: count_releases(amplitudes, release.axon, settings=settings.calls),
+        )
+        return Measured(
+            protocol=self.protocol,
+            settings=settings,
+            edits=edits,
+            recording=recording,
+            places=places,
+            f=f,
+            responses=responses,
+            amplitudes=amplitudes,
+            spontaneous=spontaneous,
+            release=release,
+            counts=counts,
+        )
+
+    def look(self, settings: Settings, *, steps: StepProgress) -> Recording:
+        """Measure light, noise and movement."""
+        return self._step(
+            "recording",
+            (self.protocol, _digest(settings.recording)),
+            lambda: look_at_recording(self.movie, self.protocol, settings=settings.recording, steps=steps),
+        )
+
+    def find(
+        self, settings: Settings, *, steps: StepProgress, shape: ResponseShape | None = None
+    ) -> tuple[Sites, ResponseShape | None]:
+        """Find the boutons, or take those given; with the response shape they were looked for with."""
+        recording = self.look(settings, steps=steps)
+        axon = self.axon if isinstance(self.axon, np.ndarray) else read_axon_px(self.axon, recording=recording)
+        where = None if axon is None else axon.tobytes()
+        if self.boutons is not None:
+            given = self.boutons
+            sites = self._step(
+                "sites",
+                (self._key("recording"), str(given), where, _digest(settings.detection)),
+                lambda: put_in_order(given_sites(given, recording, settings=settings.detection), axon=axon),
+            )
+            return sites, None
+        looked_for = shape or self._shape_to_look_for(recording, settings, steps)
+        stack = self._step(
+            "maps",
+            (self._key("recording"), looked_for),
+            lambda: _maps(recording, looked_for, steps=steps, by_shape_too=settings.detection.shape_candidates),
+        )
+        steps.step("sites")
+        sites = self._step(
+            "sites",
+            (self._key("maps"), where, _digest(settings.detection), settings.seed),
+            lambda: put_in_order(
+                find_sites(
+                    recording, stack, settings=settings.detection, rng=np.random.default_rng([settings.seed, 0])
+                ),
+                axon=axon,
+            ),
+        )
+        return sites, looked_for
+
+    def _shape_to_look_for(self, recording: Recording, settings: Settings, steps: StepProgress) -> ResponseShape:
+        if self.protocol.reporter is not None:
+            return self.protocol.reporter
+        sigma = spot_sigma_px(settings.detection, pixel_um=recording.pixel_um)
+        guess = self._step(
+            "shape",
+            (self._key("recording"), sigma),
+            lambda: guess_shape(recording, spot_sigma_px=sigma, progress=steps.step("shape")),
+        )
+        return guess or ASSUMED_SHAPE
+
+    def _respond(
+        self, sites: Sites, recording: Recording, edits: HandEdits, settings: Settings, *, steps: StepProgress
+    ) -> tuple[Places, NDArray[np.float64], Responses]:
+        """Lay the footprints, read the traces, fit the amplitudes."""
+        axon = self.axon if isinstance(self.axon, np.ndarray) else read_axon_px(self.axon, recording=recording)
+        corrected = correct_by_hand(
+            sites, edits, axon=axon, spacing_px=settings.detection.spacing_um / recording.pixel_um
+        )
+        places = self._step(
+            "places",
+            (
+                self._key("sites"),
+                edits.placed,
+                edits.cleared,
+                settings.responses.background_um,
+                settings.detection.footprint,
+            ),
+            lambda: lay_footprints(corrected, recording, settings=settings),
+        )
+        f = self._step(
+            "traces",
+            (self._key("places"), settings.responses.baseline_s),
+            lambda: self._read(places, recording, settings, progress=steps.step("traces")),
+        )
+        steps.step("responses")
+        chosen = settings.responses
+        responses = self._step(
+            "responses",
+            (self._key("traces"), _digest(chosen)),
+            lambda: measure_responses(
+                f,
+                timing=recording.timing,
+                y_px=places.footprints.y_px,
+                used=recording.drift.used,
+                shape=self.protocol.reporter,
+                baseline_method=chosen.baseline,
+                baseline_s=chosen.baseline_s,
+                percentile=chosen.percentile,
+                running_s=chosen.percentile_s,
+                slope=chosen.slope,
+            ),
+        )
+        return places, f, responses
+
+    def _read(
+        self, places: Places, recording: Recording, settings: Settings, *, progress: Progress
+    ) -> NDArray[np.float64]:
+        """Brightness of each bouton without background, neighbours and the bare axon under it.
+
+        The axon's light is taken off as a constant share of the baseline: it bleaches as the bouton does.
+        """
+        footprints = places.footprints
+        recorded = repr(self._key("recording"))
+        marks = [
+            hashlib.sha256(f"{recorded}{y0},{x0}{weights.shape}".encode() + weights.tobytes()).hexdigest()
+            for y0, x0, weights in zip(footprints.y0, footprints.x0, footprints.weights, strict=True)
+        ]
+        new = np.array([i for i, mark in enumerate(marks) if mark not in self._traces], dtype=np.intp)
+        if new.size:
+            read = extract_traces(
+                recording.movie,
+                footprints=take_footprints(footprints, new),
+                drift=recording.drift,
+                block_frames=BLOCK_FRAMES,
+                progress=progress,
+            )
+            self._traces |= {marks[i]: trace for i, trace in zip(new, read, strict=True)}
+        self._traces = {mark: self._traces[mark] for mark in marks}
+        f = np.array([self._traces[mark] for mark in marks]).reshape(len(marks), self.movie.shape[0])
+        rough = measure_baseline(
+            f,
+            timing=recording.timing,
+            windows=plan_trial_windows(
+                timing=recording.timing, tail_s=rest_s(ASSUMED_SHAPE), baseline_s=settings.responses.baseline_s
+            ),
+            used=recording.drift.used,
+            method="bleaching",
+            percentile=settings.responses.percentile,
+            running_s=settings.responses.percentile_s,
+        )
+        mean = rough.f0.mean(axis=1)
+        with np.errstate(invalid="ignore", divide="ignore"):
+            share = np.where(mean > 0, footprints.shaft_counts / mean, 0.0)
+        share = np.clip(np.nan_to_num(share), 0.0, _MOST_SHAFT)
+        return np.asarray(f - share[:, None] * rough.f0)
+
+    def _step(self, name: str, key: Hashable, compute: Callable[[], Value]) -> Value:
+        known = self._known.get(name)
+        if known is None or known[0] != key:
+            known = (key, compute())
+            self._known[name] = known
+        value: Value = known[1]
+        return value
+
+    def _key(self, name: str) -> Hashable:
+        return self._known[name][0]
+
+
+def _maps(
+    recording: Recording, shape: ResponseShape, *, steps: StepProgress, by_shape_too: bool
+) -> ResponseStack | None:
+    try:
+        return map_responses(recording, shape, progress=steps.step("maps"))
+    except TooFewResponsesError as error:
+        if not by_shape_too:
+            raise
+        warnings.warn(f"{error} Boutons are looked for by their shape alone.", AnalysisWarning, stacklevel=2)
+        return None
+
+
+def _without(fit: AmplitudeFit, excluded: tuple[tuple[int, str], ...]) -> AmplitudeFit:
+    """Leave trials out: their amplitudes are NaN."""
+    trials = [trial - 1 for trial, _ in excluded if trial <= fit.amplitude.shape[1]]
+    if not trials:
+        return fit
+    counts = np.ones(fit.amplitude.shape[1])
+    counts[trials] = np.nan
+    return replace(
+        fit,
+        amplitude=fit.amplitude * counts[None, :, None],
+        amplitude_counts=fit.amplitude_counts * counts[None, :, None],
+    )
+
+
+def _digest(settings: BaseModel) -> str:
+    return json.dumps(settings.model_dump(mode="json"), sort_keys=True)

@@ -1,0 +1,99 @@
+"""Maps of the response to every pulse, and the time course with which to look for it."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from napari_boutonrelease.boutons import ResponseStack, project_responses, scan_shapes
+from napari_boutonrelease.response_shape import ResponseShape
+
+from .recording_step import BLOCK_FRAMES
+
+if TYPE_CHECKING:
+    from napari_boutonrelease.recording import Timing
+
+    from .progress import Progress
+    from .recording_step import Recording
+
+_MAP_BYTES = 500e6
+_CANDIDATE_RATIO = 2.0
+_RISE_OF_DECAY = 0.04
+
+
+def guess_shape(recording: Recording, *, spot_sigma_px: float, progress: Progress | None) -> ResponseShape | None:
+    """Guess the reporter's time course from which of several shows most clearly in the mean response.
+
+    Returns
+    -------
+    ResponseShape or None
+        None where nothing responds clearly under any of them.
+    """
+    timing = recording.timing
+    room_s = _room_s(timing)
+    decay = 1.5 * timing.frame_interval_s
+    candidates: list[ResponseShape] = []
+    while decay <= room_s / 2 or not candidates:
+        candidates.append(
+            ResponseShape(latency_s=0.0, rise_s=max(_RISE_OF_DECAY * decay, 1e-4), decay_s=decay, slow_fraction=0.0)
+        )
+        decay *= _CANDIDATE_RATIO
+    pre_s, post_s = _window_s(timing, candidates[len(candidates) // 2])
+    scores = scan_shapes(
+        recording.movie,
+        timing=timing,
+        drift=recording.drift,
+        candidates=candidates,
+        pre_s=pre_s,
+        post_s=post_s,
+        spot_sigma_px=spot_sigma_px,
+        block_frames=BLOCK_FRAMES,
+        progress=progress,
+    )
+    return candidates[int(np.argmax(scores))] if np.max(scores) > 0 else None
+
+
+def map_responses(recording: Recording, shape: ResponseShape, *, progress: Progress | None) -> ResponseStack:
+    """Project every pixel on the response to every pulse, and on pseudo-stimuli.
+
+    Raises
+    ------
+    TooFewResponsesError
+        If fewer than two pulses can be fitted.
+    """
+    pre_s, post_s = _window_s(recording.timing, shape)
+    return project_responses(
+        recording.movie,
+        timing=recording.timing,
+        drift=recording.drift,
+        shape=shape,
+        pre_s=pre_s,
+        post_s=post_s,
+        memory_bytes=_MAP_BYTES,
+        block_frames=BLOCK_FRAMES,
+        progress=progress,
+    )
+
+
+def _window_s(timing: Timing, shape: ResponseShape) -> tuple[float, float]:
+    """Time before the first and after the last pulse that response maps use, in s.
+
+    Long enough for the offset and the response; short enough to fit, for the null maps, into stimulus-free time.
+    """
+    after = shape.latency_s + 3.0 * shape.rise_s + 3.0 * shape.decay_s
+    before = 2.0 * shape.decay_s
+    least = 3.0 * timing.frame_interval_s
+    free = _room_s(timing) - 5.0 * shape.decay_s
+    shrink = min(1.0, max(free / (before + after), 0.4))
+    return max(before * shrink, least), max(after * shrink, least)
+
+
+def _room_s(timing: Timing) -> float:
+    """Time from a trial's last pulse to the next trial or the end of its file, typically, in s."""
+    first = np.nanmin(timing.stimulus_s, axis=1)
+    last = np.nanmax(timing.stimulus_s, axis=1)
+    ends = np.array([timing.frame_start_s[timing.segment == k][-1] for k in timing.trial_segment])
+    following = np.minimum(np.append(first[1:], np.inf), ends + timing.frame_interval_s)
+    gaps = following - last
+    return float(max(np.median(gaps[gaps > 0]) if np.any(gaps > 0) else 0.0, 4.0 * timing.frame_interval_s))

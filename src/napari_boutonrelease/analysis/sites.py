@@ -1,0 +1,194 @@
+"""Where boutons are before their footprints are laid: found in the recording, given by a file, corrected by hand."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from napari_boutonrelease.boutons import (
+    detect_boutons,
+    detect_by_shape,
+    distance_along,
+    drawn_pixels,
+    estimate_spot_sigma,
+    read_axon,
+    read_positions,
+)
+
+if TYPE_CHECKING:
+    from pathlib import Path
+
+    from numpy.typing import NDArray
+
+    from napari_boutonrelease.boutons import ResponseStack
+
+    from .hand_edits import HandEdits
+    from .recording_step import Recording
+    from .settings import DetectionSettings
+
+_FWHM_TO_SIGMA = 1.0 / 2.354820
+_EDIT_REACH = 0.5  # of the spacing: an edit this near a found bouton speaks of it
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Sites:
+    """Boutons of one recording, in order of their ids.
+
+    Attributes
+    ----------
+    bouton : (n,) ndarray of int
+        Ids: as in a given file, else from 1 along the axon, or top to bottom; those placed by hand follow.
+    y_px, x_px : (n,) ndarray
+        Centres in reference coordinates (px).
+    found_by : tuple of str
+        `responses`, `shape`, `both`, `hand` or `file`.
+    axon_px, axon_offset_px : (n,) ndarray
+        Distance along the axon's path and from it (px); NaN without a path.
+    drawn : tuple of ((k, 2) ndarray of int or None)
+        Pixels of drawn footprints.
+    spot_sigma_px : float
+        Gaussian sigma of a bouton's image (px).
+    evidence : (y, x) ndarray
+        Evidence of release at every pixel (nats); 0 where boutons were given.
+    evidence_cut, expected_false : float
+        Evidence that a maximum needed, and false ones expected among those found by responses; NaN where given.
+    """
+
+    bouton: NDArray[np.int64]
+    y_px: NDArray[np.float64]
+    x_px: NDArray[np.float64]
+    found_by: tuple[str, ...]
+    axon_px: NDArray[np.float64]
+    axon_offset_px: NDArray[np.float64]
+    drawn: tuple[NDArray[np.intp] | None, ...]
+    spot_sigma_px: float
+    evidence: NDArray[np.float64]
+    evidence_cut: float
+    expected_false: float
+
+    def take(self, order: NDArray[np.intp] | NDArray[np.bool_]) -> Sites:
+        """Keep or reorder boutons."""
+        index = np.arange(len(self.bouton))[order]
+        return replace(
+            self,
+            bouton=self.bouton[index],
+            y_px=self.y_px[index],
+            x_px=self.x_px[index],
+            found_by=tuple(self.found_by[i] for i in index),
+            axon_px=self.axon_px[index],
+            axon_offset_px=self.axon_offset_px[index],
+            drawn=tuple(self.drawn[i] for i in index),
+        )
+
+
+def spot_sigma_px(settings: DetectionSettings, *, pixel_um: float) -> float:
+    """Return the Gaussian sigma of a bouton's image that the settings expect, in px."""
+    return settings.bouton_um * _FWHM_TO_SIGMA / pixel_um
+
+
+def find_sites(
+    recording: Recording, stack: ResponseStack | None, *, settings: DetectionSettings, rng: np.random.Generator
+) -> Sites:
+    """Find boutons by response and by shape; by shape alone where there is no stack of responses."""
+    sigma = spot_sigma_px(settings, pixel_um=recording.pixel_um)
+    spacing = settings.spacing_um / recording.pixel_um
+    exclude = ~recording.optics.usable()
+    if stack is None:
+        found = detect_by_shape(recording.optics.mean_image, spot_sigma_px=sigma, spacing_px=spacing, exclude=exclude)
+    else:
+        found = detect_boutons(
+            stack,
+            spot_sigma_px=sigma,
+            spacing_px=spacing,
+            false_discovery=settings.false_discovery,
+            shape_candidates=settings.shape_candidates,
+            exclude=exclude,
+            rng=rng,
+            progress=None,
+        )
+    n = len(found.y_px)
+    return Sites(
+        bouton=np.arange(1, n + 1),
+        y_px=found.y_px,
+        x_px=found.x_px,
+        found_by=found.found_by,
+        axon_px=np.full(n, np.nan),
+        axon_offset_px=np.full(n, np.nan),
+        drawn=(None,) * n,
+        spot_sigma_px=found.spot_sigma_px,
+        evidence=found.evidence.astype(np.float64),
+        evidence_cut=found.cut,
+        expected_false=found.expected_false,
+    )
+
+
+def given_sites(path: str | Path, recording: Recording, *, settings: DetectionSettings) -> Sites:
+    """Take boutons from a table of positions or a label image."""
+    optics = recording.optics
+    height, width = optics.mean_image.shape
+    given = read_positions(path, pixel_size_um=recording.timing.pixel_size_um, image_shape=(height, width))
+    sigma = spot_sigma_px(settings, pixel_um=recording.pixel_um)
+    drawn: tuple[NDArray[np.intp] | None, ...] = (None,) * len(given.bouton)
+    if given.label is not None:
+        pixels = drawn_pixels(given.label)
+        drawn = tuple(pixels[int(name)] for name in given.bouton)
+    else:
+        sigma = estimate_spot_sigma(
+            optics.mean_image, y_px=given.y_px, x_px=given.x_px, start_sigma_px=sigma, usable=optics.usable()
+        )
+    n = len(given.bouton)
+    sites = Sites(
+        bouton=given.bouton,
+        y_px=given.y_px,
+        x_px=given.x_px,
+        found_by=("file",) * n,
+        axon_px=np.full(n, np.nan),
+        axon_offset_px=np.full(n, np.nan),
+        drawn=drawn,
+        spot_sigma_px=sigma,
+        evidence=np.zeros((height, width)),
+        evidence_cut=float("nan"),
+        expected_false=float("nan"),
+    )
+    return sites.take(np.argsort(given.bouton, kind="stable"))
+
+
+def put_in_order(sites: Sites, *, axon: NDArray[np.float64] | None) -> Sites:
+    """Give distances along the axon; number found boutons along it, or top to bottom without it."""
+    if axon is not None:
+        along, aside = distance_along(axon, y_px=sites.y_px, x_px=sites.x_px)
+        sites = replace(sites, axon_px=along, axon_offset_px=aside)
+    if "file" in sites.found_by:
+        return sites
+    order = np.lexsort((sites.x_px, sites.y_px)) if axon is None else np.argsort(sites.axon_px, kind="stable")
+    return replace(sites.take(order), bouton=np.arange(1, len(order) + 1))
+
+
+def read_axon_px(path: str | Path | None, *, recording: Recording) -> NDArray[np.float64] | None:
+    """Read the axon's path, (k, 2) in px; None where there is none."""
+    return None if path is None else read_axon(path, pixel_size_um=recording.timing.pixel_size_um)
+
+
+def correct_by_hand(sites: Sites, edits: HandEdits, *, axon: NDArray[np.float64] | None, spacing_px: float) -> Sites:
+    """Apply edits by hand. Ids of what is left stay; boutons placed by hand take the next ones."""
+    if not (edits.placed or edits.cleared):
+        return sites
+    kept = sites.take(edits.spared(sites.y_px, sites.x_px, reach_px=_EDIT_REACH * spacing_px))
+    ys = np.array([one.y_px for one in edits.placed])
+    xs = np.array([one.x_px for one in edits.placed])
+    along, aside = np.full(len(ys), np.nan), np.full(len(ys), np.nan)
+    if axon is not None and len(ys):
+        along, aside = distance_along(axon, y_px=ys, x_px=xs)
+    first = int(sites.bouton.max(initial=0)) + 1
+    return replace(
+        kept,
+        bouton=np.concatenate([kept.bouton, first + np.arange(len(ys))]),
+        y_px=np.concatenate([kept.y_px, ys]),
+        x_px=np.concatenate([kept.x_px, xs]),
+        found_by=(*kept.found_by, *("hand",) * len(ys)),
+        axon_px=np.concatenate([kept.axon_px, along]),
+        axon_offset_px=np.concatenate([kept.axon_offset_px, aside]),
+        drawn=(*kept.drawn, *(np.array(one.pixels, dtype=np.intp) if one.pixels else None for one in edits.placed)),
+    )
