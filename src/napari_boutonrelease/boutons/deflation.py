@@ -24,6 +24,7 @@ _WINDOW_SIGMAS = 6.0  # radius within which heights are read against a constant 
 _FIT_SIGMAS = 3.5  # half width of the image a position is fitted to
 _ALONE_SIGMAS = 3.0  # a neighbour beyond that, taken out trial by trial, leaves a spot its width
 _SWEEPS = 3
+_MOSTLY = 0.8  # of the 5 x 5 pixels around an unusable one: more than at a border
 
 
 class SpotModel:
@@ -166,8 +167,6 @@ class SpotModel:
                 sigma=self.spot_sigma_px,
                 free_sigma=False,
             )
-            if self._inverse_variance[round(y_new) + y0, round(x_new) + x0] == 0:
-                y_new, x_new = y - y0, x - x0  # nothing can be said of a place that no frame shows
             if not self._usable(y_new + y0, x_new + x0):
                 y_new, x_new = y - y0, x - x0  # nothing can be said of a place that not every frame shows
             free_sigma = self.spot_sigma_px
@@ -189,9 +188,12 @@ class SpotModel:
             self.spot_sigma_px = float(np.clip(measured, 0.6 * self._filter_sigma, 1.7 * self._filter_sigma))
 
     def _usable(self, y: float, x: float) -> bool:
+        """Whether a place can be seen: its pixel is usable, or a single unusable one among others that are."""
         row, column = round(y), round(x)
-        inside = 0 <= row < self._shape[0] and 0 <= column < self._shape[1]
-        return inside and bool(self._inverse_variance[row, column] > 0)
+        if not (0 <= row < self._shape[0] and 0 <= column < self._shape[1]):
+            return False
+        around = self._inverse_variance[max(row - 2, 0) : row + 3, max(column - 2, 0) : column + 3] > 0
+        return bool(self._inverse_variance[row, column] > 0 or np.mean(around) >= _MOSTLY)
 
     def _isolated(self, index: int) -> bool:
         distance = np.hypot(self.y_px - self.y_px[index], self.x_px - self.x_px[index])
