@@ -1,0 +1,328 @@
+"""One analysis as an interactive window holds it: recording, settings, edits by hand, results, and what is selected.
+
+The model knows neither windows nor threads. Views watch its signals and call its methods, on one thread; `compute` is
+the exception: it takes a frozen `Request` and may run anywhere, one at a time.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from psygnal import Signal
+
+from napari_boutonrelease.errors import InputError
+
+from .hand_edits import HandEdits
+from .pipeline import Measured, Pipeline
+from .quantal_step import count_releases
+from .run import put_together
+from .settings import Settings
+from .tables import bouton_table, pulse_table, response_table, spontaneous_table
+
+if TYPE_CHECKING:
+    from pathlib import Path
+
+    import pandas as pd
+    from numpy.typing import NDArray
+
+    from napari_boutonrelease.recording import Movie, Protocol
+
+    from .progress import Progress
+    from .results import AnalysisResult
+
+_TABLES = {
+    "boutons": bouton_table,
+    "pulses": pulse_table,
+    "responses": response_table,
+    "spontaneous": spontaneous_table,
+}
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Request:
+    """What is to be computed: the pipeline with the choices of one moment."""
+
+    pipeline: Pipeline
+    settings: Settings
+    edits: HandEdits
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Selection:
+    """What the views show in detail.
+
+    Attributes
+    ----------
+    bouton : int or None
+        Id of a bouton.
+    trial, pulse : int or None
+        From 1.
+    """
+
+    bouton: int | None = None
+    trial: int | None = None
+    pulse: int | None = None
+
+
+class AnalysisModel:
+    """State that all views of one analysis share.
+
+    Signals
+    -------
+    recording_changed
+        Another movie or protocol; everything measured is gone.
+    settings_changed, edits_changed
+        A choice, or a change by hand; what was measured may be stale.
+    measured_changed
+        New results.
+    selection_changed
+        Another bouton, trial or pulse.
+    """
+
+    recording_changed = Signal()
+    settings_changed = Signal()
+    edits_changed = Signal()
+    measured_changed = Signal()
+    selection_changed = Signal()
+
+    def __init__(self) -> None:
+        self._pipeline: Pipeline | None = None
+        self._settings = Settings()
+        self._edits = HandEdits()
+        self._undone: list[HandEdits] = []
+        self._done: list[HandEdits] = []
+        self._measured: Measured | None = None
+        self._tables: dict[str, pd.DataFrame] = {}
+        self._selection = Selection()
+
+    # recording
+
+    @property
+    def movie(self) -> Movie | None:
+        """The recording, once chosen."""
+        return None if self._pipeline is None else self._pipeline.movie
+
+    @property
+    def protocol(self) -> Protocol | None:
+        """When the axon was stimulated, once known."""
+        return None if self._pipeline is None else self._pipeline.protocol
+
+    @property
+    def pipeline(self) -> Pipeline | None:
+        """The steps of the analysis with what is known of them."""
+        return self._pipeline
+
+    def open(
+        self,
+        movie: Movie,
+        protocol: Protocol,
+        *,
+        boutons: str | Path | None = None,
+        axon: str | Path | NDArray[np.float64] | None = None,
+    ) -> None:
+        """Take a recording; edits and results of another one are dropped."""
+        same_movie = self.movie is movie
+        self._pipeline = Pipeline(movie, protocol, boutons=boutons, axon=axon)
+        self._measured = None
+        self._tables = {}
+        if not same_movie:
+            self._edits, self._done, self._undone = HandEdits(), [], []
+        self._selection = Selection()
+        self.recording_changed.emit()
+
+    def draw_axon(self, path_px: NDArray[np.float64] | None) -> None:
+        """Take another axon path, (k, 2) in px; None takes it away."""
+        if self._pipeline is None:
+            return
+        self._pipeline.axon = path_px
+        self.settings_changed.emit()
+
+    # choices
+
+    @property
+    def settings(self) -> Settings:
+        """Every choice."""
+        return self._settings
+
+    @settings.setter
+    def settings(self, settings: Settings) -> None:
+        if settings != self._settings:
+            self._settings = settings
+            self.settings_changed.emit()
+
+    def choose(self, step: str, **choices: Any) -> None:
+        """Change some settings of one step, for example ``choose("calls", threshold_sd=3.0)``.
+
+        Raises
+        ------
+        ValidationError
+            If a value is out of range.
+        """
+        content = self._settings.model_dump()
+        content[step] |= choices
+        self.settings = Settings.model_validate(content)
+
+    def set_threshold(self, threshold_sd: float) -> None:
+        """Call the releases anew at another threshold, at once; everything else stays."""
+        self.choose("calls", threshold_sd=threshold_sd, threshold_rule="sd")
+        if self._measured is not None:
+            counts = count_releases(
+                self._measured.amplitudes, self._measured.release.axon, settings=self._settings.calls
+            )
+            calls = self._settings.calls
+            self._take(
+                replace(
+                    self._measured,
+                    counts=counts,
+                    settings=self._measured.settings.model_copy(update={"calls": calls}),
+                )
+            )
+
+    # edits by hand
+
+    @property
+    def edits(self) -> HandEdits:
+        """Changes by hand."""
+        return self._edits
+
+    def edit(self, edits: HandEdits) -> None:
+        """Take changes by hand; the state before can be had back."""
+        if edits != self._edits:
+            self._done.append(self._edits)
+            self._undone = []
+            self._edits = edits
+            self.edits_changed.emit()
+
+    @property
+    def can_undo(self) -> bool:
+        """Whether there is a change by hand to take back."""
+        return bool(self._done)
+
+    @property
+    def can_redo(self) -> bool:
+        """Whether there is a change to make again."""
+        return bool(self._undone)
+
+    def undo(self) -> None:
+        """Take the last change by hand back."""
+        if self._done:
+            self._undone.append(self._edits)
+            self._edits = self._done.pop()
+            self.edits_changed.emit()
+
+    def redo(self) -> None:
+        """Make the last change that was taken back again."""
+        if self._undone:
+            self._done.append(self._edits)
+            self._edits = self._undone.pop()
+            self.edits_changed.emit()
+
+    # results
+
+    @property
+    def measured(self) -> Measured | None:
+        """What was measured last."""
+        return self._measured
+
+    @property
+    def stale(self) -> bool:
+        """Whether choices or edits have changed since."""
+        measured = self._measured
+        return measured is not None and (measured.settings != self._settings or measured.edits != self._edits)
+
+    def request(self) -> Request:
+        """Say what is to be computed now.
+
+        Raises
+        ------
+        InputError
+            If there is no recording yet.
+        """
+        if self._pipeline is None:
+            raise InputError("There is no recording yet: choose a movie and give the stimulus times first.")
+        return Request(pipeline=self._pipeline, settings=self._settings, edits=self._edits)
+
+    def accept(self, request: Request, measured: Measured) -> bool:
+        """Take what was measured, unless another recording was opened meanwhile; tell whether it was taken."""
+        if request.pipeline is not self._pipeline:
+            return False
+        self._take(measured)
+        return True
+
+    def _take(self, measured: Measured) -> None:
+        self._measured = measured
+        self._tables = {}
+        if self._selection.bouton not in measured.places.bouton:
+            first = int(measured.places.bouton[0]) if len(measured.places.bouton) else None
+            self._selection = replace(self._selection, bouton=first)
+        self.measured_changed.emit()
+
+    def table(self, name: str) -> pd.DataFrame:
+        """Return one of the tables `boutons`, `pulses`, `responses`, `spontaneous`.
+
+        Raises
+        ------
+        InputError
+            If nothing was measured yet.
+        """
+        if self._measured is None:
+            raise InputError("Nothing was measured yet: run the analysis first.")
+        if name not in self._tables:
+            self._tables[name] = _TABLES[name](self._measured)
+        return self._tables[name]
+
+    def result(self) -> AnalysisResult:
+        """Put together all tables, arrays and provenance, as the command line writes them.
+
+        Raises
+        ------
+        InputError
+            If nothing was measured yet, or choices have changed since.
+        """
+        if self._measured is None or self._pipeline is None:
+            raise InputError("Nothing was measured yet: run the analysis first.")
+        if self.stale:
+            raise InputError("Settings or boutons have changed since the analysis: run it again first.")
+        return put_together(self._measured, pipeline=self._pipeline)
+
+    # selection
+
+    @property
+    def selection(self) -> Selection:
+        """What the views show in detail."""
+        return self._selection
+
+    def select(self, **what: int | None) -> None:
+        """Select a bouton, trial or pulse, for example ``select(bouton=3)``."""
+        selection = replace(self._selection, **what)
+        if selection != self._selection:
+            self._selection = selection
+            self.selection_changed.emit()
+
+    def step_bouton(self, by: int) -> None:
+        """Select the next or previous bouton."""
+        if self._measured is not None and len(self._measured.places.bouton):
+            ids = self._measured.places.bouton
+            now = np.flatnonzero(ids == self._selection.bouton)
+            at = int(now[0]) + by if now.size else 0
+            self.select(bouton=int(ids[np.clip(at, 0, len(ids) - 1)]))
+
+    def step_trial(self, by: int) -> None:
+        """Select the next or previous trial."""
+        if self._measured is not None:
+            n_trials = len(self._measured.timing.stimulus_s)
+            self.select(trial=int(np.clip((self._selection.trial or 1 - by) + by, 1, n_trials)))
+
+    def row(self) -> int | None:
+        """Index of the selected bouton in arrays of `measured`."""
+        if self._measured is None or self._selection.bouton is None:
+            return None
+        at = np.flatnonzero(self._measured.places.bouton == self._selection.bouton)
+        return int(at[0]) if at.size else None
+
+
+def compute(request: Request, *, progress: Progress | None = None) -> Measured:
+    """Run the steps of a request that are not known yet."""
+    return request.pipeline.measure(request.settings, edits=request.edits, progress=progress)
