@@ -94,9 +94,11 @@ def find_sites(
     """Find boutons by response and by shape; by shape alone where there is no stack of responses."""
     sigma = spot_sigma_px(settings, pixel_um=recording.pixel_um)
     spacing = settings.spacing_um / recording.pixel_um
-    exclude = ~recording.optics.usable()
+    # A pixel that clips bright responses still tells where they are, though not how large.
+    optics = recording.optics
+    exclude = ~(optics.always_inside() & ~optics.on_sample(optics.dead))
     if stack is None:
-        found = detect_by_shape(recording.optics.mean_image, spot_sigma_px=sigma, spacing_px=spacing, exclude=exclude)
+        found = detect_by_shape(optics.mean_image, spot_sigma_px=sigma, spacing_px=spacing, exclude=exclude)
     else:
         found = detect_boutons(
             stack,
