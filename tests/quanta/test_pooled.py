@@ -92,7 +92,7 @@ def test_a_silent_bouton_among_active_ones_has_a_tight_upper_limit():
     amplitude, _ = draw_axon(rng, n_sites=n_sites, p_release=p_release, q=np.full(5, 0.5))
     found = fit(amplitude)
     # 80 failures in 80 trials: exact one-sided 97.5 % limit 1 - 0.025**(1/80) = 0.045 (binomial)
-    assert found.p_release[4, 0] == 0
+    assert found.p_release[4, 0] < 0.01
     assert found.silent_probability[4] > 0.5
     assert found.p_release_hi[4, 0] < 0.07
 

@@ -27,6 +27,8 @@ if TYPE_CHECKING:
 
 FootprintMode = Literal["weighted", "disc", "adaptive"]
 
+_MOST_SHAFT_OF_MEDIAN = 2.0
+_ENOUGH_SHAFTS = 3
 _CORE = 0.5  # of the peak: pixels that the label image and `footprint_px` count
 _SEEN = 0.25  # of the peak: a saturated or dead pixel in here matters
 _CLEARLY = 5.0  # SD of the texture of the surroundings
@@ -257,7 +259,7 @@ def _assemble(
         profiles=tuple(profile.onto(patch) for profile, patch in zip(profiles, weights, strict=True)),
         label=label,
         footprint_px=np.bincount(label.ravel(), minlength=len(ys) + 1)[1 : len(ys) + 1],
-        shaft_counts=np.array(shaft, dtype=np.float64),
+        shaft_counts=_like_the_others(np.array(shaft, dtype=np.float64)),
         spot_sigma_px=spot_sigma_px,
         flags=tuple(_flags(y, x, profile, optics) for y, x, profile in zip(ys, xs, profiles, strict=True)),
     )
@@ -302,6 +304,12 @@ def _core_labels(profiles: Sequence[Patch], shape: tuple[int, ...]) -> NDArray[n
         label[profile.slices][wins] = index
         best[profile.slices][wins] = profile.values[wins]
     return label
+
+
+def _like_the_others(shaft: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Limit what is read of the axon: it is about as bright at one bouton as at the next, so much more is no axon."""
+    seen = shaft[shaft > 0]
+    return np.minimum(shaft, _MOST_SHAFT_OF_MEDIAN * np.median(seen)) if seen.size >= _ENOUGH_SHAFTS else shaft
 
 
 def _shaft_counts(

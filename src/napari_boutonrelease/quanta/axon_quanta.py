@@ -16,7 +16,7 @@ if TYPE_CHECKING:
 
 _Q_SPREADS = (0.04, 0.1, 0.2, 0.35)  # SD of log q between the boutons of an axon
 _TYPICAL_Q = (4.0, 0.5)  # weak prior of the axon's centre: q in noise SDs, and SD of its logarithm
-_SILENT = 0.5  # prior probability that a bouton never releases
+_SILENT_SHARES = (np.arange(10) + 0.5) / 10  # of the boutons that never release: all equally likely beforehand
 _TAIL = 0.025
 
 
@@ -83,17 +83,21 @@ def fit_axon_quanta(
 
     # A bouton may be silent for good: then it says nothing of q, rather than that q must be too small to be seen.
     largest = np.maximum(marginal.max(axis=(1, 2)), silent)[:, None, None]
-    evidence = (1.0 - _SILENT) * np.einsum("bqc,hq->bhc", np.exp(marginal - largest), prior)
-    evidence += _SILENT * np.exp(silent[:, None, None] - largest)
-    evidence = np.maximum(evidence, 1e-300)
+    # How many are silent is learned with the rest: in an axon of silent boutons, one more is no surprise.
+    share = _SILENT_SHARES[:, None, None, None]
+    releasing = np.einsum("bqc,hq->bhc", np.exp(marginal - largest), prior)
+    never = np.exp(silent[:, None, None] - largest)
+    evidence = np.maximum((1.0 - share) * releasing + share * never, 1e-300)  # (share, bouton, hyper, q_cv)
     hyper = -0.5 * ((centre - np.log(_TYPICAL_Q[0] * noise_sd)) / _TYPICAL_Q[1]) ** 2
     variation = -0.5 * (np.log(grid.q_cv / q_cv) / q_cv_doubt) ** 2
-    log_posterior = np.log(evidence).sum(axis=0) + hyper[:, None] + variation[None, :]
-    posterior = np.exp(log_posterior - log_posterior.max())
-    posterior /= posterior.sum()
+    log_joint = np.log(evidence).sum(axis=1) + hyper[:, None] + variation[None, :]
+    joint = np.exp(log_joint - log_joint.max())
+    joint /= joint.sum()  # (share, hyper, q_cv)
 
-    expected = np.einsum("hc,bhc,hq->bqc", posterior, 1.0 / evidence, prior)
-    never = _SILENT * np.exp(silent - largest[:, 0, 0]) * np.einsum("hc,bhc->b", posterior, 1.0 / evidence)
+    over_evidence = joint[:, None] / evidence
+    expected = np.einsum("bhc,hq->bqc", ((1.0 - share) * over_evidence).sum(axis=0), prior)
+    is_silent = never[:, 0, 0] * (share * over_evidence).sum(axis=(0, 2, 3))
+    posterior = joint.sum(axis=0)
     of_centre = posterior.sum(axis=1).reshape(len(log_q), len(spreads))
     middle, low, high = log_quantiles(grid.q, of_centre.sum(axis=1))
     of_cv = posterior.sum(axis=0)
@@ -102,7 +106,7 @@ def fit_axon_quanta(
     mean = overall @ log_q
     return AxonQuanta(
         log_prior=np.log(np.maximum(expected, 1e-300)),
-        silent=np.clip(never, 0.0, 1.0),
+        silent=np.clip(is_silent, 0.0, 1.0),
         q=middle,
         q_lo=low,
         q_hi=high,

@@ -54,7 +54,7 @@ class AxonRelease:
     Attributes
     ----------
     p_release, p_release_lo, p_release_hi : (n_boutons, n_pulses) ndarray
-        Probability of at least one vesicle: posterior median and central 95 % interval. The lower limit is 0 where a
+        Probability of at least one vesicle: posterior mean and central 95 % interval. The lower limit is 0 where a
         probability of 0 is within the 95 % likelihood interval.
     release_evidence : (n_boutons, n_pulses) ndarray
         Log-likelihood ratio of the best p_release against none.
@@ -81,8 +81,8 @@ class AxonRelease:
     axon_q_spread : float
         SD of log q between boutons: posterior mean.
     silent_probability : (n_boutons,) ndarray
-        Probability that the bouton never releases at all, from an even prior. It enters `p_release` and `p_released`;
-        intervals and everything about quanta hold given that the bouton does release.
+        Probability that the bouton never releases at all; how many do not is learned from the axon. It enters
+        `p_release` and `p_released`; intervals and everything about quanta hold given that the bouton does release.
     noise_scale : (n_boutons,) ndarray
         Posterior mean of the true noise over the noise given.
     """
@@ -205,10 +205,11 @@ def fit_axon_release(
         known = np.isfinite(a[b, :, j])
         pulse = _look_at_pulse(a[b, known, j], sd[b, known, j], scales[b][0], posterior[b], grid)
         of_p = pulse.probability.sum(axis=0)
-        p_release[b, j], p_lo[b, j], p_hi[b, j] = _quantiles_of_p(of_p, axon.silent[b])
+        p_release[b, j], p_lo[b, j], p_hi[b, j] = _summary_of_p(of_p, grid.p_release, axon.silent[b])
         evidence[b, j] = pulse.evidence
         if pulse.evidence < _IN_LIKELIHOOD_INTERVAL:
             p_lo[b, j] = 0.0
+        p_lo[b, j] = min(p_lo[b, j], p_release[b, j])  # the chance of silence lowers the mean, not the interval
         at_n = pulse.probability[n_sites[b] - 1]
         p_site[b, j] = at_n @ grid.p_site[n_sites[b] - 1] / at_n.sum()
         site_lo[b, j], site_hi[b, j] = weighted_interval(grid.p_site.ravel(), pulse.probability.ravel())
@@ -298,16 +299,13 @@ def _prior_of_n(n_max: int) -> Floats:
     return np.asarray(weights / weights.sum())
 
 
-def _quantiles_of_p(mass: Floats, silent: float) -> tuple[float, float, float]:
-    """Median, with the chance of a silent bouton, and central 95 % without it; on equal steps of the arcsine angle."""
+def _summary_of_p(mass: Floats, p_release: Floats, silent: float) -> tuple[float, float, float]:
+    """Mean, with the chance of a silent bouton, and central 95 % without it; on equal steps of the arcsine angle."""
     edges = np.linspace(0.0, np.pi / 2, len(mass) + 1)
     cumulative = np.concatenate([[0.0], np.cumsum(mass)])
-    cumulative /= cumulative[-1]
     tail = (1.0 - _INTERVAL) / 2
-    low, high = np.interp([tail, 1.0 - tail], cumulative, edges)
-    middle = np.interp(0.5, silent + (1.0 - silent) * cumulative, edges) if silent < 0.5 else 0.0
-    middle, low, high = np.sin([middle, low, high]) ** 2
-    return float(middle), float(low), float(high)
+    low, high = np.sin(np.interp([tail, 1.0 - tail], cumulative / cumulative[-1], edges)) ** 2
+    return float((1.0 - silent) * (mass @ p_release) / cumulative[-1]), float(low), float(high)
 
 
 def _credible_set(probability: Floats) -> tuple[int, ...]:
