@@ -372,3 +372,11 @@ def test_wrapped_text_keeps_its_width_and_its_words():
     lines = wrapped(text, 40.0)
     assert all(text_width_mm(line) <= 40.0 for line in lines)
     assert "".join(lines).replace(" ", "") == text.replace(" ", "")
+
+
+def test_a_ratio_without_an_upper_end_shows_it(result):
+    endless = result.boutons["ppr_hi"].where(result.boutons.index != BRIGHT, np.inf)
+    open_ended = replace(result, boutons=result.boutons.assign(ppr_hi=endless))
+    assert "to ∞)" in said_by(figure_bouton(open_ended, BRIGHT))
+    bars = [line for line in figure_pulse_pairs(open_ended).axes[0].lines if list(line.get_xdata()) == [BRIGHT] * 2]
+    assert max(bars[0].get_ydata()) > figure_pulse_pairs(open_ended).axes[0].get_ylim()[1]

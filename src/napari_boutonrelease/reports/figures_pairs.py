@@ -53,8 +53,9 @@ def _draw_ratios(axes: Axes, result: AnalysisResult) -> None:
     lowest, highest = float(ratio[known].min()) / 2.5, float(ratio[known].max()) * 2.5
     for row in np.flatnonzero(known):
         colour, marker = VERDICTS.get(verdicts[row], VERDICTS["unresolved"])
-        if math.isfinite(low[row]) and math.isfinite(high[row]):
-            axes.plot([row, row], [max(low[row], 1e-3), max(high[row], 1e-3)], color=colour, linewidth=1.1)
+        if math.isfinite(low[row]) and not math.isnan(high[row]):
+            top = min(high[row], 1e3)  # beyond any axis, where the interval has no upper end
+            axes.plot([row, row], [max(low[row], 1e-3), max(top, 1e-3)], color=colour, linewidth=1.1)
             lowest, highest = min(lowest, max(low[row], lowest / 2)), max(highest, min(high[row], 2 * highest))
         face = colour if verdicts[row] in ("facilitation", "depression") else "white"
         axes.plot(row, ratio[row], marker, color=colour, markerfacecolor=face, markersize=5)

@@ -63,12 +63,16 @@ def with_limits(value: float, low: float, high: float, *, decimals: int = 2) -> 
 
     Examples
     --------
-    >>> with_limits(0.42, 0.31, 0.53), with_limits(0.02, -0.01, 0.05), with_limits(2, 0, 3e9, decimals=0)
-    ('0.42 (0.31–0.53)', '0.02 (−0.01 to 0.05)', '2 (0–over 1000)')
+    >>> with_limits(0.42, 0.31, 0.53), with_limits(0.02, -0.01, 0.05)
+    ('0.42 (0.31–0.53)', '0.02 (−0.01 to 0.05)')
+    >>> with_limits(1.2, 0.4, math.inf), with_limits(2, 0, 3e9, decimals=0)
+    ('1.20 (0.40 to ∞)', '2 (0–over 1000)')
     """
     text = fixed(value, decimals=decimals)
-    if not (math.isfinite(low) and math.isfinite(high)):
+    if not math.isfinite(low) or math.isnan(high):
         return text
+    if math.isinf(high):
+        return f"{text} ({fixed(low, decimals=decimals)} to ∞)"
     dash = "–" if low >= 0 else " to "  # next to a minus, a dash would be misread
     upper = fixed(high, decimals=decimals) if high < _NO_LIMIT else f"over {_NO_LIMIT}"
     return f"{text} ({fixed(low, decimals=decimals)}{dash}{upper})"
