@@ -16,7 +16,9 @@ from typing import TYPE_CHECKING, Any, TypeVar
 
 import numpy as np
 
+from napari_boutonrelease.boutons import read_axon, read_positions
 from napari_boutonrelease.errors import AnalysisWarning, TooFewResponsesError
+from napari_boutonrelease.recording import resolve_timing
 from napari_boutonrelease.responses import (
     ASSUMED_SHAPE,
     detect_spontaneous,
@@ -170,6 +172,7 @@ class Pipeline:
             If the protocol does not fit the movie, or a file of boutons or axon cannot be used.
         """
         edits = edits or HandEdits()
+        self.check_inputs()
         steps = StepProgress(progress, shares=STEPS)
         recording = self.look(settings, steps=steps)
         sites, shape = self.find(settings, steps=steps)
@@ -225,6 +228,15 @@ class Pipeline:
             release=release,
             counts=counts,
         )
+
+    def check_inputs(self) -> None:
+        """Raise `InputError` if the protocol or a file of boutons or axon is wrong, before the long work begins."""
+        timing = resolve_timing(self.movie, self.protocol)
+        if self.boutons is not None:
+            _, height, width = self.movie.shape
+            read_positions(self.boutons, pixel_size_um=timing.pixel_size_um, image_shape=(height, width))
+        if self.axon is not None and not isinstance(self.axon, np.ndarray):
+            read_axon(self.axon, pixel_size_um=timing.pixel_size_um)
 
     def look(self, settings: Settings, *, steps: StepProgress) -> Recording:
         """Measure light, noise and movement."""

@@ -30,7 +30,7 @@ class Places:
     found_by : tuple of str
         `responses`, `shape`, `both`, `hand` or `file`.
     axon_um, axon_offset_um : (n,) ndarray
-        Distance along the axon's path and from it; NaN without a path (in px where the pixel size is unknown).
+        Distance along the axon's path and from it; NaN without a path or where the pixel size is unknown.
     footprints : Footprints
         Weights of each, in the same order; the label image holds the ids.
     evidence : (y, x) ndarray
@@ -67,7 +67,7 @@ def lay_footprints(sites: Sites, recording: Recording, *, settings: Settings) ->
         drawn={i: pixels for i, pixels in enumerate(sites.drawn) if pixels is not None},
     )
     ids = np.concatenate([[0], sites.bouton]).astype(np.int32)
-    scale = recording.timing.pixel_size_um or 1.0
+    scale = recording.timing.pixel_size_um or np.nan
     return Places(
         bouton=sites.bouton.astype(np.int64),
         found_by=sites.found_by,

@@ -110,6 +110,12 @@ def find_sites(
             rng=rng,
             progress=None,
         )
+    if found.spot_sigma_px == sigma:  # no response was clear enough to measure it
+        sigma = estimate_spot_sigma(
+            optics.mean_image, y_px=found.y_px, x_px=found.x_px, start_sigma_px=sigma, usable=optics.usable()
+        )
+    else:
+        sigma = found.spot_sigma_px
     n = len(found.y_px)
     return Sites(
         bouton=np.arange(1, n + 1),
@@ -119,7 +125,7 @@ def find_sites(
         axon_px=np.full(n, np.nan),
         axon_offset_px=np.full(n, np.nan),
         drawn=(None,) * n,
-        spot_sigma_px=found.spot_sigma_px,
+        spot_sigma_px=sigma,
         evidence=found.evidence.astype(np.float64),
         evidence_cut=found.cut,
         expected_false=found.expected_false,
