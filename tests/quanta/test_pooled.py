@@ -47,6 +47,10 @@ def test_release_probability_is_recovered_with_its_interval(axon):
     assert np.all(found.p_release_lo <= found.p_release)
     assert np.all(found.p_release <= found.p_release_hi)
     assert found.axon_q == pytest.approx(0.6, rel=0.12)
+    # the mean number of vesicles is the mean amplitude over q
+    np.testing.assert_allclose(found.vesicles, amplitude.mean(axis=1) / found.q[:, None], rtol=0.25)
+    assert np.all(found.vesicles_lo < found.vesicles)
+    assert np.all(found.vesicles < found.vesicles_hi)
 
 
 def test_single_pulses_are_told_apart(axon):

@@ -193,7 +193,7 @@ def estimates_table(measured: Measured) -> pd.DataFrame:
         add("p_site", _ALONE, own.p_site.value, own.p_site.lo, own.p_site.hi)
         add("q", _ALONE, own.q.value, own.q.lo, own.q.hi)
         failures = n_trials - n_called
-        add("m", _METHODS_FROM_AXON, n * p, np.nan, np.nan)
+        add("m", _METHODS_FROM_AXON, axon.vesicles[b, 0], axon.vesicles_lo[b, 0], axon.vesicles_hi[b, 0])
         for name, estimate in (
             ("failures, Poisson", poisson_failures(failures, n_trials, confidence=CONFIDENCE)),
             (

@@ -53,7 +53,14 @@ class AxonQuanta:
 
 
 def fit_axon_quanta(
-    marginal: Floats, silent: Floats, grid: ReleaseGrid, *, noise_sd: float, q_cv: float, q_cv_doubt: float
+    marginal: Floats,
+    silent: Floats,
+    grid: ReleaseGrid,
+    *,
+    tells: NDArray[np.bool_],
+    noise_sd: float,
+    q_cv: float,
+    q_cv_doubt: float,
 ) -> AxonQuanta:
     """Estimate the axon's quantal size, its spread between boutons and q_cv.
 
@@ -65,6 +72,8 @@ def fit_axon_quanta(
         The same if it never does.
     grid : ReleaseGrid
         The points.
+    tells : (n_boutons,) ndarray of bool
+        Boutons whose responses say how large a vesicle is; the others learn from these.
     noise_sd : float
         Typical noise of an amplitude.
     q_cv, q_cv_doubt : float
@@ -90,12 +99,13 @@ def fit_axon_quanta(
     evidence = np.maximum((1.0 - share) * releasing + share * never, 1e-300)  # (share, bouton, hyper, q_cv)
     hyper = -0.5 * ((centre - np.log(_TYPICAL_Q[0] * noise_sd)) / _TYPICAL_Q[1]) ** 2
     variation = -0.5 * (np.log(grid.q_cv / q_cv) / q_cv_doubt) ** 2
-    log_joint = np.log(evidence).sum(axis=1) + hyper[:, None] + variation[None, :]
+    log_joint = np.log(evidence[:, tells]).sum(axis=1) + hyper[:, None] + variation[None, :]
     joint = np.exp(log_joint - log_joint.max())
     joint /= joint.sum()  # (share, hyper, q_cv)
 
     over_evidence = joint[:, None] / evidence
-    expected = np.einsum("bhc,hq->bqc", ((1.0 - share) * over_evidence).sum(axis=0), prior)
+    without_own = np.where(tells[:, None, None], over_evidence, joint[:, None])
+    expected = np.einsum("bhc,hq->bqc", ((1.0 - share) * without_own).sum(axis=0), prior)
     is_silent = never[:, 0, 0] * (share * over_evidence).sum(axis=(0, 2, 3))
     posterior = joint.sum(axis=0)
     of_centre = posterior.sum(axis=1).reshape(len(log_q), len(spreads))

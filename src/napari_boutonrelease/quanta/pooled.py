@@ -62,6 +62,8 @@ class AxonRelease:
         Posterior probability that this pulse released; NaN where the amplitude is.
     p_site, p_site_lo, p_site_hi : (n_boutons, n_pulses) ndarray
         Release probability of one site: at `n_sites`; the interval includes the doubt about n_sites.
+    vesicles, vesicles_lo, vesicles_hi : (n_boutons, n_pulses) ndarray
+        Mean number of vesicles a pulse releases, n_sites times p_site: posterior mean and 95 % interval.
     n_sites, n_sites_lo, n_sites_hi : (n_boutons,) ndarray of int
         Most probable number of sites, and the ends of `n_set`.
     n_set : tuple of tuple of int
@@ -95,6 +97,9 @@ class AxonRelease:
     p_site: Floats
     p_site_lo: Floats
     p_site_hi: Floats
+    vesicles: Floats
+    vesicles_lo: Floats
+    vesicles_hi: Floats
     n_sites: NDArray[np.int64]
     n_sites_lo: NDArray[np.int64]
     n_sites_hi: NDArray[np.int64]
@@ -123,6 +128,7 @@ def fit_axon_release(
     n_max: int,
     q_cv: float,
     q_cv_doubt: float,
+    tells: ArrayLike | None = None,
     progress: Callable[[int, int], None] | None = None,
 ) -> AxonRelease:
     """Estimate release probability, sites and quanta of all boutons of one axon.
@@ -141,6 +147,9 @@ def fit_axon_release(
         Expected coefficient of variation of one vesicle's size.
     q_cv_doubt : float
         SD of the logarithm of that expectation; small holds it fixed.
+    tells : (n_boutons,) array_like of bool, optional
+        Boutons whose responses say how large a vesicle is, where some do not (they are clipped by the detector). The
+        others take the vesicle of these as their prior and give nothing back. All, where left out or none does.
     progress : callable, optional
         Called with (done, total).
 
@@ -172,7 +181,12 @@ def fit_axon_release(
         raise InputError(f"n_max must be at least 1 (given {n_max}).")
     a = np.where((sd > 0) & np.isfinite(sd), a, np.nan)
 
-    noise_sd = _median(sd)
+    informing = np.ones(len(a), dtype=np.bool_) if tells is None else np.asarray(tells, dtype=np.bool_)
+    if informing.shape != (len(a),):
+        raise InputError(f"tells must have one entry a bouton, {len(a)} (given shape {informing.shape}).")
+    if not np.isfinite(a[informing]).any():
+        informing = np.ones_like(informing)
+    noise_sd = _median(sd[informing])
     grid = make_grid(noise_sd=noise_sd, largest=float(np.nanmax(a, initial=0.0)), n_trials=a.shape[1], n_max=n_max)
     n_boutons, _, n_pulses = a.shape
     scales = [noise_scales(count) for count in nulls]
@@ -198,6 +212,8 @@ def fit_axon_release(
 
     p_release, p_lo, p_hi, evidence = (np.full((n_boutons, n_pulses), np.nan) for _ in range(4))
     p_site, site_lo, site_hi = (np.full((n_boutons, n_pulses), np.nan) for _ in range(3))
+    vesicles, vesicles_lo, vesicles_hi = (np.full((n_boutons, n_pulses), np.nan) for _ in range(3))
+    m = np.arange(1, n_max + 1)[:, None] * grid.p_site
     p_released = np.full(a.shape, np.nan)
     n_probability = posterior.sum(axis=(1, 2, 3))
     n_sites = n_probability.argmax(axis=1) + 1
@@ -213,6 +229,8 @@ def fit_axon_release(
         at_n = pulse.probability[n_sites[b] - 1]
         p_site[b, j] = at_n @ grid.p_site[n_sites[b] - 1] / at_n.sum()
         site_lo[b, j], site_hi[b, j] = weighted_interval(grid.p_site.ravel(), pulse.probability.ravel())
+        vesicles[b, j] = np.sum(pulse.probability * m)
+        vesicles_lo[b, j], vesicles_hi[b, j] = weighted_interval(m.ravel(), pulse.probability.ravel())
         p_released[b, known, j] = (1.0 - axon.silent[b]) * pulse.released
 
     n_sets = tuple(_credible_set(row) for row in n_probability)
@@ -228,6 +246,9 @@ def fit_axon_release(
         p_site=p_site,
         p_site_lo=site_lo,
         p_site_hi=site_hi,
+        vesicles=vesicles,
+        vesicles_lo=vesicles_lo,
+        vesicles_hi=vesicles_hi,
         n_sites=n_sites,
         n_sites_lo=np.array([min(members) for members in n_sets], dtype=np.int64),
         n_sites_hi=np.array([max(members) for members in n_sets], dtype=np.int64),
