@@ -152,7 +152,8 @@ def _legend(axes: Axes, result: AnalysisResult) -> None:
         for name in present
     ]
     handles.insert(0, Line2D([], [], linestyle="none", label="found by"))
-    axes.legend(handles=handles, loc="lower left", bbox_to_anchor=(0.0, 1.13), ncols=len(handles), handlelength=1.0)
+    height = 1.13 if on_a_path(result) else 1.04  # ids stand between
+    axes.legend(handles=handles, loc="lower left", bbox_to_anchor=(0.0, height), ncols=len(handles), handlelength=1.0)
 
 
 def axon_title(result: AnalysisResult) -> str:

@@ -237,6 +237,7 @@ def _write_estimates(area: Area, result: AnalysisResult, row: int) -> None:
     """Write the estimates of the quantal parameters, a line a method."""
     found = {quantity: {entry[0]: entry for entry in _estimates_of(result, row, quantity)} for quantity in _QUANTITIES}
     methods = list(dict.fromkeys(method for entries in found.values() for method in entries))
+    methods.sort(key=lambda method: "bouton" not in method)  # the model's own fits first, classical estimates below
     if silent(result)[row]:
         _write_limit(area, result, row)
         return

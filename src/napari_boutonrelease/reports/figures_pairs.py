@@ -16,6 +16,8 @@ from .figures_page import Area, blank_figure
 from .figures_style import EVOKED, HAIRLINE, MUTED, NULL, SHADE, SMALL, VERDICTS, say_nothing_to_show, styled
 from .words import short
 
+_MOST_NAMED = 25
+
 
 @styled
 def figure_pulse_pairs(result: AnalysisResult) -> Figure:
@@ -105,7 +107,8 @@ def _draw_probabilities(axes: Axes, result: AnalysisResult) -> None:
     axes.vlines(first[0][known], second[1][known], second[2][known], color=NULL, linewidth=0.6)
     axes.plot(first[0][known], second[0][known], "o", color=EVOKED, markersize=4)
     points = np.column_stack([first[0][known], second[0][known]])
-    for (x, y), bouton in zip(points, values(result.boutons, "bouton")[known], strict=True):
+    named = values(result.boutons, "bouton")[known] if len(points) <= _MOST_NAMED else []
+    for (x, y), bouton in zip(points, named, strict=False):
         offset = _away_from_neighbour(points, x, y)
         axes.annotate(
             f"{bouton:g}", (x, y), xytext=offset, textcoords="offset points", ha="center", va="center",
