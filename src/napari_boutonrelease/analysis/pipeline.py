@@ -204,6 +204,7 @@ class Pipeline:
             (self._key("responses"), edits.excluded, _digest(settings.quanta), _digest(settings.pairs), settings.seed),
             lambda: fit_release(
                 amplitudes,
+                saturated=np.array(["saturated" in flags for flags in places.footprints.flags], dtype=np.bool_),
                 quanta=settings.quanta,
                 pulse_pairs=settings.pairs,
                 rng=np.random.default_rng([settings.seed, 1]),

@@ -80,12 +80,16 @@ class Counts:
 def fit_release(
     fit: AmplitudeFit,
     *,
+    saturated: NDArray[np.bool_],
     quanta: QuantalSettings,
     pulse_pairs: PairSettings,
     rng: np.random.Generator,
     progress: Progress | None,
 ) -> ReleaseFits:
-    """Fit the release model to all boutons together and to each alone, and compare the pulses."""
+    """Fit the release model to all boutons together and to each alone, and compare the pulses.
+
+    Where the detector clips, responses do not say how large a vesicle is; other boutons are not to believe them.
+    """
     amplitude, noise = fit.amplitude, fit.amplitude_se
     n_boutons, _, n_pulses = amplitude.shape
     axon = fit_axon_release(
@@ -95,6 +99,7 @@ def fit_release(
         n_max=quanta.n_max,
         q_cv=quanta.q_cv,
         q_cv_doubt=quanta.q_cv_doubt,
+        tells=~saturated,
         progress=None,
     )
     own: list[SitesFit] = []

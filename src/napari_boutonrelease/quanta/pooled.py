@@ -202,7 +202,15 @@ def fit_axon_release(
         if progress is not None:
             progress(b + 1, n_boutons)
     marginal = log_sum(joint, axis=(1, 4))  # (bouton, q, q_cv)
-    axon = fit_axon_quanta(marginal, log_sum(silent, axis=1), grid, noise_sd=noise_sd, q_cv=q_cv, q_cv_doubt=q_cv_doubt)
+    axon = fit_axon_quanta(
+        marginal,
+        log_sum(silent, axis=1),
+        grid,
+        tells=informing,
+        noise_sd=noise_sd,
+        q_cv=q_cv,
+        q_cv_doubt=q_cv_doubt,
+    )
     log_posterior = joint + axon.log_prior[:, None, :, :, None]
     # A silent bouton tells nothing of q. Given that it releases after all, its own likelihood would choose a q too
     # small to be seen; so it takes q as all the others have it.
