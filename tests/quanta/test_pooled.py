@@ -19,7 +19,7 @@ def draw_axon(rng, *, n_sites, p_release, q, n_trials=80, n_pulses=1, q_cv=0.3):
     return q * sizes + rng.normal(0, NOISE, sizes.shape), vesicles
 
 
-def fit(amplitude, *, n_null=300, n_max=6, q_cv=0.3, q_cv_doubt=0.15, noise=NOISE):
+def fit(amplitude, *, n_null=300, n_max=6, q_cv=0.3, q_cv_doubt=0.15, noise=NOISE, tells=None):
     return fit_axon_release(
         amplitude,
         np.full(amplitude.shape, noise),
@@ -27,6 +27,7 @@ def fit(amplitude, *, n_null=300, n_max=6, q_cv=0.3, q_cv_doubt=0.15, noise=NOIS
         n_max=n_max,
         q_cv=q_cv,
         q_cv_doubt=q_cv_doubt,
+        tells=tells,
     )
 
 
@@ -141,6 +142,21 @@ def test_a_bouton_without_amplitudes_has_no_numbers_and_does_no_harm():
     np.testing.assert_allclose(found.p_release[:2], fit(amplitude).p_release, atol=0.01)
 
 
+def test_boutons_that_do_not_tell_how_large_a_vesicle_is_learn_it_from_the_others():
+    rng = np.random.default_rng(6)
+    amplitude, _ = draw_axon(rng, n_sites=[2, 1, 1, 1], p_release=[0.6, 0.5, 0.5, 0.9], q=[0.6, 0.6, 0.6, 0.6])
+    amplitude[2:] = np.minimum(amplitude[2:], 0.25)  # clipped
+    tells = np.array([True, True, False, False])
+    found, alone = fit(amplitude, tells=tells), fit(amplitude[:2])
+    np.testing.assert_allclose(found.p_release[:2], alone.p_release, atol=0.01)
+    np.testing.assert_allclose(found.q[:2], alone.q, rtol=0.02)
+    assert found.axon_q == pytest.approx(alone.axon_q, rel=0.02)
+    assert fit(amplitude).axon_q < 0.85 * found.axon_q
+    assert np.all(np.isfinite(found.p_release))
+    nobody = fit(amplitude, tells=np.zeros(4, dtype=bool))
+    np.testing.assert_allclose(nobody.q, fit(amplitude).q)
+
+
 @pytest.mark.parametrize("n_boutons", [0, 1])
 def test_few_boutons(n_boutons):
     rng = np.random.default_rng(4)
@@ -153,6 +169,8 @@ def test_wrong_input_is_named():
     good = np.zeros((2, 5, 1))
     with pytest.raises(InputError, match="must describe the same boutons"):
         fit_axon_release(good, good[:1], n_null=[1, 1], n_max=3, q_cv=0.3, q_cv_doubt=0.2)
+    with pytest.raises(InputError, match="tells must have one entry a bouton, 2"):
+        fit(good + 1, tells=[True])
     with pytest.raises(InputError, match="n_max must be at least 1"):
         fit_axon_release(good, good + 1, n_null=[1, 1], n_max=0, q_cv=0.3, q_cv_doubt=0.2)
     with pytest.raises(InputError, match="q_cv_doubt must be greater than 0"):

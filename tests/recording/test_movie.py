@@ -15,7 +15,7 @@ import pytest
 import tifffile
 
 from napari_boutonrelease.errors import AnalysisWarning, MovieError
-from napari_boutonrelease.recording import Movie, content_digest, movie_from_array, open_movie
+from napari_boutonrelease.recording import Movie, content_digest, fill_dead, movie_from_array, open_movie
 
 FRAMES = np.random.default_rng(1).integers(0, 4000, (30, 20, 33)).astype(np.uint16)
 
@@ -553,3 +553,24 @@ def test_the_digest_follows_content_not_name(tmp_path: Path) -> None:
     ]
     assert both[0] != both[1]
     assert content_digest(movie_from_array(FRAMES)) != content_digest(movie_from_array(FRAMES + 1))
+
+
+def test_dead_pixels_show_what_their_nearest_neighbour_shows():
+    frames = np.random.default_rng(2).normal(size=(5, 6, 7)).astype(np.float32)
+    frames[:, 2, 3] = np.nan
+    frames[:, :, 0] = np.nan
+    dead = np.isnan(frames[0])
+    movie = movie_from_array(frames)
+    filled = fill_dead(movie, dead=dead)
+    assert filled.shape == movie.shape
+    np.testing.assert_array_equal(filled.read(1, 4)[:, ~dead], frames[1:4][:, ~dead])
+    np.testing.assert_array_equal(filled.read(0, 5)[:, :, 0], frames[:, :, 1])
+    neighbours = [frames[3, y, x] for y, x in ((1, 3), (3, 3), (2, 2), (2, 4))]
+    assert filled.read(3, 4)[0, 2, 3] in neighbours
+    assert np.isnan(movie.read(0, 5)[:, 2, 3]).all()  # the movie itself stays as it is
+
+
+@pytest.mark.parametrize("value", [False, True])
+def test_without_a_dead_or_a_living_pixel_there_is_nothing_to_fill(value):
+    movie = movie_from_array(FRAMES)
+    assert fill_dead(movie, dead=np.full(FRAMES.shape[1:], value)) is movie
