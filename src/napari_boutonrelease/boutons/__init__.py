@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from .axon_path import trace_axon
 from .detection import Detection, detect_boutons, detect_by_shape
 from .evidence import MatchedMaps, matched_filter, mixture_evidence, release_posterior, standardise
 from .false_discovery import FalseRate, measure_false_rate
@@ -45,4 +46,5 @@ __all__ = [
     "release_posterior",
     "scan_shapes",
     "standardise",
+    "trace_axon",
 ]
