@@ -14,6 +14,8 @@ if TYPE_CHECKING:
     import pandas as pd
     from numpy.typing import NDArray
 
+    from napari_boutonrelease.quanta import AxonRelease
+
     from .pipeline import Measured
 
 _METHODS_FROM_AXON = "whole axon, this bouton's amplitudes"
@@ -74,8 +76,7 @@ def _population(measured: Measured) -> dict[str, Any]:
     axon, pairs = measured.release.axon, measured.release.pairs
     known = np.isfinite(axon.p_release[:, 0])
     selected = np.array([way in ("responses", "both") for way in measured.places.found_by], dtype=bool) & known
-    p_all = _mean_with_interval(axon.p_release[known, 0], upper_limits=axon.p_release_hi[known, 0])
-    p_selected = _mean_with_interval(axon.p_release[selected, 0], upper_limits=axon.p_release_hi[selected, 0])
+    p_all, p_selected = _mean_with_interval(axon, known), _mean_with_interval(axon, selected)
     ratios = np.array([np.nan if pair is None else pair.ppr.value for pair in pairs])
     ppr = _population_ratio(measured, known)
     return {
@@ -120,14 +121,15 @@ def _selection_in_words(measured: Measured, known: NDArray[np.bool_]) -> str:
 
 
 def _mean_with_interval(
-    values: NDArray[np.float64], *, upper_limits: NDArray[np.float64]
+    axon: AxonRelease, chosen: NDArray[np.bool_]
 ) -> tuple[float | None, float | None, float | None]:
-    """Mean over boutons and its 95 % interval (Student's t over boutons; of silent ones the mean of their limits)."""
+    """Mean p_release over boutons and its 95 % interval: Student's t over boutons; if all are silent, of their limits."""
+    values = axon.p_release[chosen, 0]
     if values.size == 0:
         return None, None, None
     mean = float(values.mean())
-    if not values.any():
-        return 0.0, 0.0, float(upper_limits.mean())
+    if np.all(axon.silent_probability[chosen] > 0.5):
+        return mean, 0.0, float(axon.p_release_hi[chosen, 0].mean())
     if values.size < 2:
         return mean, None, None
     from scipy.special import stdtrit

@@ -123,7 +123,7 @@ def doubts(light: Light, drift: Drift, timing: Timing) -> list[str]:
     if timing.pixel_size_um is None:
         found.append("The pixel size is unknown: set pixel_size_um in the protocol, else sizes in µm are guessed.")
     if timing.camera_offset is None:
-        found.append("The camera offset is unknown: give camera_offset in the protocol, else dF/F is too small.")
+        found.append("The camera offset is unknown: give camera_offset in the protocol, else photon counts are too high and read noise is unknown.")
     if light.saturated.any():
         found.append("Saturated pixels clip large responses: record with less light or gain.")
     if light.bleaching > 0.5:
