@@ -70,11 +70,14 @@ class Counts:
         Called fraction of pulse 1 freed of false calls and misses (Rogan & Gladen 1978).
     histories : tuple of ReleaseHistory or None
         Calls of pulse 2 after a call, and after a failure, of pulse 1.
+    missed_expected : (n_boutons, n_pulses) ndarray
+        Releases that the fitted model expects to stay below threshold; NaN where there is no model.
     """
 
     calls: ReleaseCalls
     corrected: tuple[Estimate, ...]
     histories: tuple[ReleaseHistory | None, ...]
+    missed_expected: NDArray[np.float64]
 
 
 def fit_release(
@@ -153,7 +156,39 @@ def count_releases(fit: AmplitudeFit, axon: AxonRelease, *, settings: CallSettin
         for b in range(n_boutons)
     )
     corrected = tuple(_corrected(axon, calls, b, fit.noise_sd[b]) for b in range(n_boutons))
-    return Counts(calls=calls, corrected=corrected, histories=histories)
+    missed = expected_misses(
+        axon, amplitude_se=np.where(np.isnan(calls.called), np.nan, fit.amplitude_se), threshold=calls.threshold
+    )
+    return Counts(calls=calls, corrected=corrected, histories=histories, missed_expected=missed)
+
+
+def expected_misses(
+    axon: AxonRelease, *, amplitude_se: NDArray[np.float64], threshold: NDArray[np.float64]
+) -> NDArray[np.float64]:
+    """Count the releases that stay below threshold, each under the noise of its own trial.
+
+    Parameters
+    ----------
+    axon : AxonRelease
+        The fitted model.
+    amplitude_se : (n_boutons, n_trials, n_pulses) ndarray
+        Noise of each amplitude, dF/F; NaN where there is none.
+    threshold : (n_boutons,) ndarray
+        Amplitude above which a response counts, dF/F.
+
+    Returns
+    -------
+    (n_boutons, n_pulses) ndarray
+        NaN where there is no model.
+    """
+    n_boutons, _, n_pulses = amplitude_se.shape
+    missed = np.full((n_boutons, n_pulses), np.nan)
+    for b, pulse in np.argwhere(np.isfinite(axon.p_site) & np.isfinite(threshold)[:, None]):
+        noise_sd = amplitude_se[b, :, pulse]
+        noise_sd = noise_sd[np.isfinite(noise_sd)]
+        weights = vesicle_weights(axon, b, pulse=pulse)[1:]
+        missed[b, pulse] = np.sum(weights * (1.0 - _caught(axon, b, threshold[b], noise_sd[:, None])))
+    return missed
 
 
 def vesicle_weights(axon: AxonRelease, bouton: int, *, pulse: int) -> NDArray[np.float64]:
@@ -180,16 +215,11 @@ def _with_noise(priors: ReleasePriors, noise_sd: float) -> ReleasePriors:
 
 
 def _corrected(axon: AxonRelease, calls: ReleaseCalls, bouton: int, noise_sd: float) -> Estimate:
-    from scipy.special import ndtr
-
     n_trials = int(calls.n_trials[bouton, 0])
     if n_trials == 0 or not np.isfinite(axon.p_site[bouton, 0]):
         return Estimate(value=np.nan, lo=np.nan, hi=np.nan, method="none: no trial")
     weights = vesicle_weights(axon, bouton, pulse=0)[1:]
-    m = np.arange(1, len(weights) + 1)
-    q = axon.q[bouton]
-    spread = np.sqrt(noise_sd**2 + m * (q * axon.q_cv) ** 2)
-    caught = ndtr((m * q - calls.threshold[bouton]) / spread)
+    caught = _caught(axon, bouton, calls.threshold[bouton], np.array(noise_sd))
     sensitivity = float(weights @ caught / weights.sum()) if weights.sum() > 0 else float(caught[0])
     specificity = 1.0 - float(calls.false_calls_expected[bouton, 0]) / n_trials
     if sensitivity + specificity < _TELLING:
@@ -204,6 +234,16 @@ def _corrected(axon: AxonRelease, calls: ReleaseCalls, bouton: int, noise_sd: fl
         confidence=CONFIDENCE,
     )
     return estimate
+
+
+def _caught(axon: AxonRelease, bouton: int, threshold: float, noise_sd: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Chance that 1, 2, ... vesicles (last axis) exceed the threshold under noise."""
+    from scipy.special import ndtr
+
+    m = np.arange(1, int(axon.n_sites[bouton]) + 1)
+    q = axon.q[bouton]
+    spread = np.sqrt(noise_sd**2 + m * (q * axon.q_cv) ** 2)
+    return np.asarray(ndtr((m * q - threshold) / spread))
 
 
 def _verdicts(pairs: list[PulsePair | None]) -> tuple[str, ...]:

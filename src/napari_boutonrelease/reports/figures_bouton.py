@@ -26,7 +26,7 @@ from .figures_style import (
     styled,
 )
 from .figures_trials import draw_trials
-from .histogram import amplitude_density, bin_edges, fitted_components
+from .histogram import amplitude_histogram
 from .words import MISSING, fixed, short, with_limits
 
 BLOCK_MM = (178.0, 126.0)
@@ -98,6 +98,9 @@ _HEADING_NUMBERS = (
 )
 
 
+_MODEL_NUMBERS = ("noise_sd", "threshold", "n_sites", "p_site", "p_release", "q", "q_cv")
+
+
 def _draw_trace(axes: Axes, result: AnalysisResult, row: int) -> None:
     """Draw the whole recording as an envelope, with the stimuli below and the calls above."""
     trace, unit = result.dff[row], "dF/F"
@@ -163,29 +166,26 @@ def envelope(
 
 def _draw_histogram(axes: Axes, result: AnalysisResult, row: int) -> None:
     """Draw amplitudes of pulse 1, amplitudes without stimulus, and the fitted model component by component."""
-    evoked = amplitude_grid(result, "amplitude")[row, :, 0]
-    evoked, null = evoked[np.isfinite(evoked)], result.null_amplitude[row]
-    null = null[np.isfinite(null)]
-    if not evoked.size:
+    one = {name: float(values(result.boutons, name)[row]) for name in _MODEL_NUMBERS}
+    threshold = one.pop("threshold")
+    histogram = amplitude_histogram(
+        amplitude_grid(result, "amplitude")[row, :, 0],
+        result.null_amplitude[row],
+        trial_noise_sd=amplitude_grid(result, "amplitude_se")[row, :, 0],
+        model=texts(result.boutons, "quantal_model")[row],
+        **one,
+    )
+    if histogram is None:
         say_nothing_to_show(axes, "no amplitude")
         return
-    noise_sd, threshold, p_release = (
-        float(values(result.boutons, n)[row]) for n in ("noise_sd", "threshold", "p_release")
-    )
-    edges = bin_edges(evoked, null, noise_sd=noise_sd)
-    trials_a_density = len(evoked) * float(edges[1] - edges[0])
-    axes.stairs(np.histogram(evoked, edges)[0], edges, fill=True, color=EVOKED, alpha=0.28, label="evoked")
-    if null.size:  # scaled to the share of failures, which it should then explain
-        share = 1.0 - p_release if math.isfinite(p_release) else 1.0
-        scaled = share * trials_a_density * amplitude_density(null, edges)
-        axes.stairs(scaled, edges, color=MUTED, linewidth=0.9, label="no stimulus, scaled")
-    fine = np.linspace(edges[0], edges[-1], 400)
-    trial_noise = amplitude_grid(result, "amplitude_se")[row, :, 0]
-    components = trials_a_density * fitted_components(result.boutons, row, fine, noise_sd=trial_noise)
-    for component in components:
-        axes.plot(fine, component, color=FIT, linewidth=0.6, linestyle=(0, (3, 1.5)))
-    if len(components):
-        axes.plot(fine, components.sum(axis=0), color=FIT, linewidth=1.2, label="model")
+    edges = histogram.edges
+    axes.stairs(histogram.evoked, edges, fill=True, color=EVOKED, alpha=0.28, label="evoked")
+    if histogram.null.size:
+        axes.stairs(histogram.null, edges, color=MUTED, linewidth=0.9, label="no stimulus, scaled")
+    for component in histogram.components:
+        axes.plot(histogram.fine, component, color=FIT, linewidth=0.6, linestyle=(0, (3, 1.5)))
+    if len(histogram.components):
+        axes.plot(histogram.fine, histogram.components.sum(axis=0), color=FIT, linewidth=1.2, label="model")
     if math.isfinite(threshold):
         axes.axvline(threshold, color=INK, linewidth=0.7, linestyle=":", label="threshold")
     axes.set_ylim(0.0, 1.08 * axes.dataLim.y1)

@@ -2,9 +2,6 @@
 
 from __future__ import annotations
 
-import math
-from dataclasses import dataclass
-
 import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.collections import LineCollection
@@ -12,37 +9,14 @@ from matplotlib.lines import Line2D
 from numpy.typing import NDArray
 
 from ..analysis.results import AnalysisResult
+from .aligned_trials import AlignedTrials, cut_trials, fitted_response, known_mean, mean_delays, mean_of_trials
 from .facts import amplitude_grid, frame_interval_s, number
 from .figures_style import EVOKED, FIT, HAIRLINE, INK, NULL, say_nothing_to_show
 
-_MOST_BINS = 90
+__all__ = ["align_trials", "draw_trials", "mean_of_trials", "time_unit"]
+
 _MANY_POINTS = 20_000
 _IN_MS = 2.0  # s; longer spans are drawn in seconds
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class AlignedTrials:
-    """The usable trials of one bouton on one clock.
-
-    Attributes
-    ----------
-    since_s : (n_trials, n_bins) ndarray
-        Middle of each bin after pulse 1, s; NaN where there is no frame.
-    level : (n_trials, n_bins) ndarray
-        dF/F less its level before the pulse, a bin of frames averaged.
-    called : (n_trials,) ndarray of bool
-        Whether pulse 1 was called a release.
-    frames_a_bin : int
-        Frames averaged.
-    exposure_s : float
-        Time for which a bin gathers light, s.
-    """
-
-    since_s: NDArray[np.float64]
-    level: NDArray[np.float64]
-    called: NDArray[np.bool_]
-    frames_a_bin: int
-    exposure_s: float
 
 
 def draw_trials(axes: Axes, result: AnalysisResult, row: int) -> None:
@@ -52,7 +26,7 @@ def draw_trials(axes: Axes, result: AnalysisResult, row: int) -> None:
         say_nothing_to_show(axes, "no usable trial")
         return
     first, last = float(np.nanmin(trials.since_s)), float(np.nanmax(trials.since_s))
-    factor, unit = (1e3, "ms") if last < _IN_MS else (1.0, "s")
+    factor, unit = time_unit(last)
     for called, colour in ((False, NULL), (True, EVOKED)):
         lines = [
             np.column_stack([factor * since, level])[np.isfinite(level)]
@@ -76,18 +50,20 @@ def draw_trials(axes: Axes, result: AnalysisResult, row: int) -> None:
     _legend(axes, trials)
 
 
+def time_unit(last_s: float) -> tuple[float, str]:
+    """Return the factor and the name of the unit that suits times up to `last_s`."""
+    return (1e3, "ms") if last_s < _IN_MS else (1.0, "s")
+
+
 def _draw_fit(
     axes: Axes, result: AnalysisResult, row: int, time_s: NDArray[np.float64], exposure_s: float, factor: float
 ) -> None:
     """Draw the sum of the fitted responses of mean amplitude, as the camera would see it."""
-    amplitudes = [_mean(one) for one in amplitude_grid(result, "amplitude")[row].T]
-    delays = result.stimulus_s - result.stimulus_s[:, :1]
-    fitted = np.zeros(len(time_s))
-    for pulse, amplitude in enumerate(amplitudes):
-        delay = _mean(delays[:, pulse])
-        if math.isfinite(amplitude) and math.isfinite(delay):
-            fitted += amplitude * result.shape.frame_average(time_s - 0.5 * exposure_s - delay, exposure_s=exposure_s)
-            axes.axvline(factor * delay, color=HAIRLINE, linewidth=0.8, zorder=0)
+    amplitude = known_mean(amplitude_grid(result, "amplitude")[row].T)
+    delay_s = mean_delays(result.stimulus_s)
+    for delay in delay_s[np.isfinite(amplitude) & np.isfinite(delay_s)]:
+        axes.axvline(factor * delay, color=HAIRLINE, linewidth=0.8, zorder=0)
+    fitted = fitted_response(time_s, amplitude=amplitude, delay_s=delay_s, shape=result.shape, exposure_s=exposure_s)
     axes.plot(factor * time_s, fitted, color=FIT, linewidth=1.2)
 
 
@@ -102,74 +78,21 @@ def _legend(axes: Axes, trials: AlignedTrials) -> None:
 
 
 def align_trials(result: AnalysisResult, row: int) -> AlignedTrials | None:
-    """Cut the trials of a bouton out of its trace, from before pulse 1 until the response has decayed.
+    """Cut the usable trials of a bouton out of its trace, from before pulse 1 until the response has decayed.
 
     Returns
     -------
     AlignedTrials or None
         None where no trial can be used.
     """
-    interval = frame_interval_s(result)
-    used = np.isfinite(amplitude_grid(result, "amplitude")[row]).any(axis=1)
-    used &= np.isfinite(result.stimulus_s[:, 0])
-    if not used.any() or not interval > 0:
-        return None
-    stimuli = result.stimulus_s[used]
-    room = np.diff(result.stimulus_s[np.isfinite(result.stimulus_s[:, 0]), 0])
-    until = float(np.nanmax(stimuli - stimuli[:, :1])) + 4.0 * result.shape.decay_s
-    until = min(until, 0.8 * float(np.min(room))) if room.size else until
-    size = max(1, math.ceil(1.3 * until / interval / _MOST_BINS))
-    before, after = math.ceil(0.3 * until / interval / size), math.ceil(until / interval / size)
-    exposure = number(result, "recording.exposure_s")
-    exposure = exposure if exposure > 0 else interval
-    frames = np.searchsorted(result.time_s, stimuli[:, :1]) + np.arange(-before * size, after * size)
-    inside = (frames >= 0) & (frames < len(result.time_s))
-    frames = np.clip(frames, 0, len(result.time_s) - 1)
-    since = result.time_s[frames] + 0.5 * exposure - stimuli[:, :1]
-    inside &= (since > -(before * size + 1) * interval) & (since < (after * size + 1) * interval)
-    level = np.where(inside, result.dff[row][frames], np.nan)
-    if not np.isfinite(level).any():
-        return None
-    quiet = [_mean(one[early]) for one, early in zip(level, since < -0.5 * exposure, strict=True)]
-    level -= np.nan_to_num(quiet)[:, None]
-    shape = (len(stimuli), before + after, size)
-    return AlignedTrials(
-        since_s=_binned(np.where(np.isfinite(level), since, np.nan).reshape(shape)),
-        level=_binned(level.reshape(shape)),
-        called=amplitude_grid(result, "called")[row, used, 0] == 1,
-        frames_a_bin=size,
-        exposure_s=exposure if size == 1 else size * interval,
+    interval, exposure = frame_interval_s(result), number(result, "recording.exposure_s")
+    return cut_trials(
+        result.dff[row],
+        time_s=result.time_s,
+        stimulus_s=result.stimulus_s,
+        wanted=np.isfinite(amplitude_grid(result, "amplitude")[row]).any(axis=1),
+        called=amplitude_grid(result, "called")[row, :, 0],
+        shape=result.shape,
+        frame_interval_s=interval,
+        exposure_s=exposure if exposure > 0 else interval,
     )
-
-
-def mean_of_trials(trials: AlignedTrials) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Average the trials at each time since the pulse that at least half of them reach.
-
-    Returns
-    -------
-    time_s, mean : (n,) ndarray
-    """
-    known = np.isfinite(trials.level)
-    steps = np.diff(trials.since_s, axis=1)
-    step = float(np.nanmedian(steps)) if np.isfinite(steps).any() else 1.0
-    bins = np.round(trials.since_s[known] / step).astype(int)
-    bins -= bins.min()
-    count = np.bincount(bins)
-    kept = count >= 0.5 * len(trials.level)
-    count = np.maximum(count, 1)
-    time_s = np.bincount(bins, trials.since_s[known]) / count
-    mean = np.bincount(bins, trials.level[known]) / count
-    return time_s[kept], mean[kept]
-
-
-def _binned(blocks: NDArray[np.float64]) -> NDArray[np.float64]:
-    """Mean over the last axis of what is known there, NaN where nothing is."""
-    known = np.isfinite(blocks)
-    count = known.sum(axis=-1)
-    total = np.where(known, blocks, 0.0).sum(axis=-1)
-    return np.where(count > 0, total / np.maximum(count, 1), np.nan)
-
-
-def _mean(numbers: NDArray[np.float64]) -> float:
-    known = numbers[np.isfinite(numbers)]
-    return float(known.mean()) if known.size else math.nan

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -15,6 +16,82 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
 _NOISE_LEVELS = 9
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class AmplitudeHistogram:
+    """Amplitudes of one pulse beside those without stimulus and the model's, all in trials a bin.
+
+    Attributes
+    ----------
+    edges : (n_bins + 1,) ndarray
+        Edges of the bins, dF/F.
+    evoked : (n_bins,) ndarray
+        Trials.
+    null : (n_bins,) ndarray
+        Amplitudes without stimulus, scaled to the share of failures, which they should then explain; empty where
+        there are none.
+    fine : (n,) ndarray
+        Amplitudes at which the model is evaluated, dF/F.
+    components : (n_components, n) ndarray
+        What the model predicts for 0, 1, 2, ... vesicles; no row where there is no model.
+    """
+
+    edges: NDArray[np.float64]
+    evoked: NDArray[np.float64]
+    null: NDArray[np.float64]
+    fine: NDArray[np.float64]
+    components: NDArray[np.float64]
+
+
+def amplitude_histogram(
+    evoked: NDArray[np.float64],
+    null: NDArray[np.float64],
+    *,
+    noise_sd: float,
+    trial_noise_sd: NDArray[np.float64],
+    model: str,
+    n_sites: float,
+    p_site: float,
+    p_release: float,
+    q: float,
+    q_cv: float,
+) -> AmplitudeHistogram | None:
+    """Count amplitudes into bins and work out what the model predicts there.
+
+    Parameters
+    ----------
+    evoked, null : (n_trials,), (n_null,) ndarray
+        Amplitudes with and without stimulus, dF/F; NaN is skipped.
+    noise_sd : float
+        Sets the width of the bins, dF/F.
+    trial_noise_sd : (n_trials,) ndarray
+        Noise of each evoked amplitude, dF/F.
+    model, n_sites, p_site, p_release, q, q_cv
+        See `vesicle_components`.
+
+    Returns
+    -------
+    AmplitudeHistogram or None
+        None where there is no amplitude.
+    """
+    evoked, null = evoked[np.isfinite(evoked)], null[np.isfinite(null)]
+    if not evoked.size:
+        return None
+    edges = bin_edges(evoked, null, noise_sd=noise_sd)
+    trials_a_density = len(evoked) * float(edges[1] - edges[0])
+    failures = 1.0 - p_release if math.isfinite(p_release) else 1.0
+    fine = np.linspace(edges[0], edges[-1], 400)
+    components = vesicle_components(
+        fine, model=model, n_sites=n_sites, p_site=p_site, p_release=p_release, q=q, q_cv=q_cv, noise_sd=trial_noise_sd
+    )
+    return AmplitudeHistogram(
+        edges=edges,
+        evoked=np.histogram(evoked, edges)[0].astype(np.float64),
+        null=failures * trials_a_density * amplitude_density(null, edges) if null.size else np.empty(0),
+        fine=fine,
+        components=trials_a_density * components,
+    )
 
 
 def bin_edges(evoked: NDArray[np.float64], null: NDArray[np.float64], *, noise_sd: float) -> NDArray[np.float64]:
@@ -61,25 +138,55 @@ def fitted_components(
         In 1/(dF/F); no component where there is no model or a parameter is missing.
     """
     one = {name: float(values(boutons, name)[row]) for name in ("n_sites", "p_site", "p_release", "q", "q_cv")}
-    weights = _weights(texts(boutons, "quantal_model")[row], one)
+    return vesicle_components(amplitude, model=texts(boutons, "quantal_model")[row], noise_sd=noise_sd, **one)
+
+
+def vesicle_components(
+    amplitude: NDArray[np.float64],
+    *,
+    model: str,
+    n_sites: float,
+    p_site: float,
+    p_release: float,
+    q: float,
+    q_cv: float,
+    noise_sd: NDArray[np.float64],
+) -> NDArray[np.float64]:
+    """Return what `fitted_components` does, from the parameters themselves.
+
+    Parameters
+    ----------
+    amplitude : (n,) ndarray
+        Where to evaluate, dF/F.
+    model : str
+        `binomial`, `poisson` or `none`.
+    n_sites, p_site, p_release, q, q_cv : float
+        The model's parameters; q in dF/F. NaN where not known.
+    noise_sd : (n_trials,) ndarray
+        Noise of each trial's amplitude, dF/F; one value stands for all.
+
+    Returns
+    -------
+    (n_components, n) ndarray
+    """
+    weights = _weights(model, n_sites=n_sites, p_site=p_site, p_release=p_release)
     noise = noise_sd[np.isfinite(noise_sd) & (noise_sd > 0)]
-    if not weights.size or not noise.size or not one["q"] > 0:
+    if not weights.size or not noise.size or not q > 0:
         return np.empty((0, len(amplitude)))
     if noise.size > _NOISE_LEVELS:  # a few levels stand for hundreds of trials
         noise = np.quantile(noise, (np.arange(_NOISE_LEVELS) + 0.5) / _NOISE_LEVELS)
     log_density = gamma_vesicles_logpdf(
         amplitude,
         vesicles=np.arange(len(weights))[:, None],
-        q=one["q"],
-        q_cv=max(np.nan_to_num(one["q_cv"]), 1e-3),
+        q=q,
+        q_cv=max(np.nan_to_num(q_cv), 1e-3),
         noise_sd=noise[:, None, None],
     )
     return np.asarray(weights[:, None] * np.exp(log_density).mean(axis=0))
 
 
-def _weights(model: str, one: dict[str, float]) -> NDArray[np.float64]:
+def _weights(model: str, *, n_sites: float, p_site: float, p_release: float) -> NDArray[np.float64]:
     """Probability of 0, 1, 2, ... vesicles."""
-    n_sites, p_site, p_release = one["n_sites"], one["p_site"], one["p_release"]
     if model == "binomial" and n_sites >= 1 and 0.0 <= p_site <= 1.0:
         return np.exp(binomial_log_weights(p_site, n_sites=int(n_sites), m_max=int(n_sites)))
     if model == "poisson" and 0.0 <= p_release < 1.0:
