@@ -12,7 +12,9 @@ import pytest
 
 import napari_boutonrelease as br
 from napari_boutonrelease.analysis.columns import TABLES
+from napari_boutonrelease.analysis.settings import Settings
 from napari_boutonrelease.cli.main import main
+from napari_boutonrelease.reports import write_result
 
 QUICK = ("--quanta-bootstrap", "20", "--pairs-bootstrap", "200", "--n-max", "3")
 
@@ -30,7 +32,7 @@ def run(*words):
 
 @pytest.fixture(scope="module")
 def recording(tmp_path_factory, simulate, write_files):
-    """Two boutons under pulse pairs, with their positions in a file."""
+    """Two boutons under pulse pairs, with their positions in a file beside the movie."""
     simulation = simulate(
         boutons=simulate(trials=1).truth.recipe.boutons[1:], pulses=2, trials=16, trial_interval_s=0.7
     )
@@ -41,24 +43,23 @@ def recording(tmp_path_factory, simulate, write_files):
 
 
 @pytest.fixture(scope="module")
-def results(recording, tmp_path_factory):
-    """Results of the recording, with given boutons, by the command line."""
-    folder = tmp_path_factory.mktemp("results") / "axon.release"
+def results(recording):
+    """Results of the recording, with given boutons, by the command line: beside the movie."""
     places = recording.movie.with_name("places.csv")
-    words = ["analyse", recording.movie, "--protocol", recording.protocol, "--boutons", places, *QUICK]
-    assert run(*words, "--out", folder) == 0
-    return folder
+    assert run("analyse", recording.movie, "--protocol", recording.protocol, "--boutons", places, *QUICK) == 0
+    return recording.movie.with_name("axon.release")
 
 
 @pytest.fixture
-def moved(recording, results, tmp_path):
-    """The recording and its results in a place of their own, so that files can be moved: movie and saved analysis."""
-    for path in recording.movie.parent.iterdir():
-        shutil.copyfile(path, tmp_path / path.name)
-    places = tmp_path / "places.csv"
-    words = ["analyse", tmp_path / "axon.tif", "--protocol", tmp_path / "axon.protocol.toml", "--boutons", places]
-    assert run(*words, *QUICK) == 0
-    return tmp_path / "axon.tif", tmp_path / "axon.release" / "analysis.json"
+def copied(results, tmp_path):
+    """The recording and its results as if they had been made in another folder: movie and saved analysis."""
+    folder = tmp_path / "axon"
+    shutil.copytree(results.parent, folder)
+    saved = folder / "axon.release" / "analysis.json"
+    text = saved.read_text(encoding="utf-8")
+    assert str(results.parent) in text
+    saved.write_text(text.replace(str(results.parent), str(folder)), encoding="utf-8")
+    return folder / "axon.tif", saved
 
 
 def settings_of(folder):
@@ -72,20 +73,17 @@ def test_a_saved_analysis_gives_the_same_tables_byte_by_byte(results, tmp_path):
 
 
 def test_python_gives_the_same_tables_as_the_command_line(recording, results, tmp_path):
-    from napari_boutonrelease.analysis.settings import Settings
-
     analysis = br.analyse(
         recording.movie,
         recording.protocol,
         settings=Settings.model_validate(settings_of(results)),
         boutons=recording.movie.with_name("places.csv"),
     )
-    assert tables(analysis.write(tmp_path / "again")) == tables(results)
+    again = write_result(analysis, tmp_path / "again", overwrite=False, figures=False)
+    assert tables(again) == tables(results)
 
 
-def test_another_seed_changes_intervals_and_tests_by_resampling_alone(recording, results, tmp_path):
-    from napari_boutonrelease.analysis.settings import Settings
-
+def test_another_seed_changes_what_resampling_gives_alone(recording, results, tmp_path):
     settings = Settings.model_validate(settings_of(results))
     analysis = br.analyse(
         recording.movie,
@@ -93,7 +91,7 @@ def test_another_seed_changes_intervals_and_tests_by_resampling_alone(recording,
         settings=settings.model_copy(update={"seed": settings.seed + 1}),
         boutons=recording.movie.with_name("places.csv"),
     )
-    again = analysis.write(tmp_path / "again")
+    again = write_result(analysis, tmp_path / "again", overwrite=False, figures=False)
     assert {name: text for name, text in tables(again).items() if name != "boutons.csv"} == {
         name: text for name, text in tables(results).items() if name != "boutons.csv"
     }
@@ -119,20 +117,17 @@ def test_the_data_package_of_a_real_analysis_is_valid(results):
     assert listed == present - {"datapackage.json"}
 
 
-def test_a_movie_that_moved_with_its_results_is_found(moved, results, tmp_path_factory):
-    movie, _ = moved
-    elsewhere = tmp_path_factory.mktemp("elsewhere") / "copied"
-    movie.parent.rename(elsewhere)
-    places = elsewhere / "places.csv"
-    words = ["--from", elsewhere / "axon.release" / "analysis.json", "--boutons", places, "--out", elsewhere / "again"]
-    assert run("analyse", *words) == 0
+def test_a_movie_that_moved_with_its_results_is_found(copied, results, tmp_path):
+    movie, _ = copied
+    elsewhere = movie.parent.rename(tmp_path / "elsewhere")
+    words = ["--from", elsewhere / "axon.release" / "analysis.json", "--boutons", elsewhere / "places.csv"]
+    assert run("analyse", *words, "--out", elsewhere / "again") == 0
     assert tables(elsewhere / "again") == tables(results)
 
 
-def test_a_movie_that_is_gone_is_asked_for_and_taken(moved, results, tmp_path, capsys):
-    movie, saved = moved
+def test_a_movie_that_is_gone_is_asked_for_and_taken(copied, results, tmp_path, capsys):
+    movie, saved = copied
     renamed = movie.rename(tmp_path / "renamed.tif")
-    capsys.readouterr()
     assert run("analyse", "--from", saved, "--out", tmp_path / "again") == 2
     out, err = capsys.readouterr()
     assert (out, err.count("\n")) == ("", 1)
@@ -144,11 +139,10 @@ def test_a_movie_that_is_gone_is_asked_for_and_taken(moved, results, tmp_path, c
 
 
 @pytest.mark.parametrize(("change", "words"), [("edited", "has changed since"), ("removed", "is no longer there")])
-def test_boutons_that_are_no_longer_the_same_are_not_repeated_silently(moved, tmp_path, capsys, change, words):
-    _, saved = moved
-    places = tmp_path / "places.csv"
+def test_boutons_that_are_no_longer_the_same_are_not_repeated_silently(copied, tmp_path, capsys, change, words):
+    movie, saved = copied
+    places = movie.with_name("places.csv")
     places.write_text("y_px,x_px\n17,33\n", encoding="utf-8") if change == "edited" else places.unlink()
-    capsys.readouterr()
     assert run("analyse", "--from", saved, "--out", tmp_path / "again") == 2
     err = capsys.readouterr().err
     assert "places.csv" in err
