@@ -32,11 +32,10 @@ class Cancelled(Exception):
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Outcome:
-    """How a job ended: with a value, with an error, or cancelled."""
+    """How a job ended: with a value or with an error."""
 
     value: Any = None
     error: Exception | None = None
-    cancelled: bool = False
 
 
 @dataclass(eq=False, slots=True, kw_only=True)
@@ -46,6 +45,7 @@ class _Job:
     work: Work
     on_done: Callable[[Any], object]
     worker: Any = None
+    outcome: Outcome | None = None
     told_s: float = 0.0
 
 
@@ -126,18 +126,18 @@ class Runner(QObject):
     def _start(self, job: _Job) -> None:
         self._running = job
 
-        def task() -> Outcome:
+        def task() -> None:
             try:
-                return Outcome(value=job.work(lambda done, total: self._advance(job, done, total)))
+                job.outcome = Outcome(value=job.work(lambda done, total: self._advance(job, done, total)))
             except Cancelled:
-                return Outcome(cancelled=True)
+                return
             except Exception as error:  # noqa: BLE001
-                return Outcome(error=error)
+                job.outcome = Outcome(error=error)
 
         task.__qualname__ = job.words
         job.worker = create_worker(task, _start_thread=False, _ignore_errors=True)
         job.worker.warned.connect(self._warn)
-        job.worker.returned.connect(self._end)
+        job.worker.finished.connect(self._end)  # `returned` does not come after a cancel
         job.worker.start()
         self.changed.emit()
 
@@ -155,19 +155,18 @@ class Runner(QObject):
         if issubclass(category, AnalysisWarning):
             notifications.show_warning(str(message))
 
-    def _end(self, outcome: Outcome) -> None:
+    def _end(self) -> None:
         job, self._running = self._running, None
-        unwanted = job is None or outcome.cancelled or job.worker.abort_requested
         if self._waiting:
             self._start(self._waiting.pop(next(iter(self._waiting))))
         else:
             self.changed.emit()
-        if job is None or unwanted:
+        if job is None or job.outcome is None or job.worker.abort_requested:
             return
-        if outcome.error is not None:
-            self._tell(outcome.error)
+        if job.outcome.error is not None:
+            self._tell(job.outcome.error)
         else:
-            job.on_done(outcome.value)
+            job.on_done(job.outcome.value)
 
     def _tell(self, error: Exception) -> None:
         if isinstance(error, InputError):
