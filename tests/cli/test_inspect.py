@@ -85,6 +85,18 @@ def test_a_protocol_that_does_not_fit_is_a_verdict(recording, tmp_path, capsys):
     assert "trial" in said["verdict"]
 
 
+@pytest.mark.parametrize("value", [120.0, np.nan])
+def test_a_movie_of_nothing_is_said_to_be_one(tmp_path, capsys, value):
+    tifffile.imwrite(tmp_path / "nothing.tif", np.full((40, 24, 24), value, dtype=np.float32))
+    text = "[recording]\nframe_interval_s = 0.01\ncamera_offset = 100\n[stimuli]\nfirst_s = 0.1\ntrials = 1\n"
+    (tmp_path / "nothing.toml").write_text(text, encoding="utf-8")
+    said = report(capsys, tmp_path / "nothing.tif", "--protocol", tmp_path / "nothing.toml")
+    assert said["verdict"].startswith("cannot be analysed yet\n")
+    assert "No frame can be used" in said["verdict"]
+    assert said["read noise"] == said["bleaching"] == "cannot be measured"
+    assert "nan" not in said["all"]
+
+
 @pytest.mark.parametrize("name", ["none.tif", "text.tif"])
 def test_what_is_no_movie_is_refused(tmp_path, capsys, name):
     (tmp_path / "text.tif").write_text("not a movie", encoding="utf-8")

@@ -55,6 +55,8 @@ def run(args: argparse.Namespace) -> None:
         )
     print("movement", *say.drift_lines(drift, light), sep="\n")
 
+    if light.bad_frame.all():
+        missing.append("No frame can be used: the movie is dark, never changes or holds no numbers.")
     if missing:
         print("verdict: cannot be analysed yet", *(f"  - {sentence}" for sentence in missing), sep="\n")
     elif timing is not None:

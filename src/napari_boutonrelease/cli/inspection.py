@@ -84,10 +84,9 @@ def light_lines(light: Light) -> list[str]:
         gain = "cannot be measured: the pixels are too alike in brightness"
     lines = [_line("gain", gain)]
     if light.offset_known:
-        lines.append(_line("read noise", f"{light.read_noise_counts:.3g} counts"))
-    lines.append(_line("bleaching", f"{100 * light.bleaching:.0f} % of the light lost from first to last frame"))
-    if not light.offset_known:
-        lines[-1] += " (camera offset unknown)"
+        lines.append(_line("read noise", _known(light.read_noise_counts, "{:.3g} counts")))
+    bleaching = _known(100 * light.bleaching, "{:.0f} % of the light lost from first to last frame")
+    lines.append(_line("bleaching", bleaching + ("" if light.offset_known else " (camera offset unknown)")))
     lines.append(_line("saturated", f"{_count(int(light.saturated.sum()), 'pixel')}"))
     lines.append(_line("dead", f"{_count(int(light.dead.sum()), 'pixel')}"))
     reasons = Counter(reason for reason in light.bad_reason if reason)
@@ -123,7 +122,10 @@ def doubts(light: Light, drift: Drift, timing: Timing) -> list[str]:
     if timing.pixel_size_um is None:
         found.append("The pixel size is unknown: set pixel_size_um in the protocol, else sizes in µm are guessed.")
     if timing.camera_offset is None:
-        found.append("The camera offset is unknown: give camera_offset in the protocol, else photon counts are too high and read noise is unknown.")
+        found.append(
+            "The camera offset is unknown: give camera_offset in the protocol, else photon counts are too high and "
+            "read noise is unknown."
+        )
     if light.saturated.any():
         found.append("Saturated pixels clip large responses: record with less light or gain.")
     if light.bleaching > 0.5:
@@ -138,6 +140,10 @@ def doubts(light: Light, drift: Drift, timing: Timing) -> list[str]:
 
 def _line(words: str, text: str) -> str:
     return f"  {words:<15} {text}"
+
+
+def _known(value: float, words: str) -> str:
+    return words.format(value) if np.isfinite(value) else "cannot be measured"
 
 
 def _count(n: int, noun: str) -> str:
