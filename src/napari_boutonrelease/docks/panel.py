@@ -100,7 +100,7 @@ class Panel(QScrollArea):
                 self.unlink()  # the x of the dock was clicked
         return bool(super().event(event))
 
-    def keyPressEvent(self, event: QKeyEvent) -> None:  # noqa: N802
+    def keyPressEvent(self, event: QKeyEvent) -> None:
         """Keep keys that delete things from reaching the viewer's layers."""
         if event.key() not in (Qt.Key.Key_Delete, Qt.Key.Key_Backspace):
             super().keyPressEvent(event)

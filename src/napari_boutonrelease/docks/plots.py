@@ -135,24 +135,24 @@ class Plot(FigureCanvasQTAgg):
             if self._cursor is not None:
                 self._cursor.keep_background()
 
-    def paintEvent(self, event: QPaintEvent) -> None:  # noqa: N802
+    def paintEvent(self, event: QPaintEvent) -> None:
         """Bring the figure up to date before it is shown."""
         if self._outdated:
             self._outdated = False
             self._make()
         super().paintEvent(event)
 
-    def showEvent(self, event: QShowEvent) -> None:  # noqa: N802
+    def showEvent(self, event: QShowEvent) -> None:
         """Draw what has changed while the plot was hidden."""
         super().showEvent(event)
         self.update()
 
-    def resizeEvent(self, event: QResizeEvent) -> None:  # noqa: N802
+    def resizeEvent(self, event: QResizeEvent) -> None:
         """Follow the dock's size."""
         super().resizeEvent(event)
         self.draw_idle()
 
-    def wheelEvent(self, event: QWheelEvent) -> None:  # noqa: N802
+    def wheelEvent(self, event: QWheelEvent) -> None:
         """Let the wheel scroll the dock as well."""
         super().wheelEvent(event)
         event.ignore()
@@ -164,7 +164,7 @@ class Plot(FigureCanvasQTAgg):
 
         @style.styled
         def make() -> None:
-            with mpl.rc_context(palette.rc()):
+            with mpl.rc_context(palette.rc()):  # type: ignore[arg-type]
                 self._draw(self.figure, palette)
 
         make()

@@ -142,7 +142,7 @@ class Runner(QObject):
         self.changed.emit()
 
     def _advance(self, job: _Job, done: int, total: int) -> None:
-        """Called in the other thread."""
+        """Tell how far a job is, and end it where it is no longer wanted; runs in the job's thread."""
         if job.worker.abort_requested:
             raise Cancelled
         now = time.monotonic()
