@@ -88,6 +88,7 @@ def release(boutons, *, pulse=None):
         "values": error.size,
         "bias": float(error.mean()),
         "bias_se": float(error.std() / np.sqrt(error.size)),
+        "bias_known": float(np.mean(known - true)),
         "rms": _rms(error),
         "rms_same": _rms(same - true),
         "rms_known": _rms(known - true),
