@@ -472,10 +472,10 @@ _SHORT = """## Where it falls short
 - **PPR of boutons that hardly release at pulse 1.** See the table above: below 0.2 the mean of the defined ratios is
   too low in dim light. Quote the release probability of both pulses instead.
 - **F0 beside a bouton that was not found.** Where a silent bouton is missed less than a micrometre from others, its
-  light can pass for the axon under these: their F0 comes out too low by up to a third and their amplitudes too high
-  (the SD of the scale in `crowded-silent`); `p_release` is unharmed.
-- **Single flashes of noise.** Few photons have a skewed noise: some dim recordings hold a place found by responses
-  where nothing is; it has no light at rest, hence no usable F0 and no `p_release`.
+  light can pass for the axon under these: F0 of some comes out too low by a quarter to a half and their amplitudes too
+  high (the SD of the scale in `crowded-silent`, where it happened in 2 of 8 recordings); `p_release` is unharmed.
+- **Noise that looks like a response.** About two dim recordings in five hold a place found by responses where nothing
+  is. Most of these have no light at rest, hence no usable F0 and no `p_release`.
 - **Numbers of sites.** From 80 trials of one condition they stay unresolved in four boutons of five, for the observer
   as for the analysis.
 """
