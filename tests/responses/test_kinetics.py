@@ -148,3 +148,14 @@ def test_nothing_to_work_on(make_timing, make_regular, make_traces, shape):
     found = estimate(traces)
     assert found.shape_from == "assumed"
     assert found.clear_z.tolist() == [0.0, 0.0]
+
+
+def test_a_movie_that_ends_with_the_response_does_not_tell_its_decay(make_timing, make_regular, make_traces, shape):
+    """Two frames of a response hardly say how fast it falls: better assumed, and said to be."""
+    timing = make_timing(make_regular(trials=1, pulses=1, first_s=0.5), n_frames=53)
+    traces = make_traces(np.full((1, 1, 1), 0.3), timing=timing, shape=shape, rng=np.random.default_rng(1), noise=0.02)
+    found = estimate(traces)
+    assert found.clear_z[0] > 6
+    assert found.shape_from == "assumed"
+    assert found.shape == ASSUMED_SHAPE
+    assert np.isnan(found.decay_se_s)

@@ -30,6 +30,8 @@ _CLEAR_Z = 6.0
 """A bouton responds clearly when its responses explain this many SD more than noise would."""
 _MAX_BOUTONS = 24
 """The clearest boutons settle the shape; more cost time and add little."""
+_MOST_DOUBT = 0.5
+"""A decay with a larger relative standard error is not known."""
 _MOST_FRAMES, _LEAST_TRIALS = 20_000, 20
 """The first trials, which are the brightest, settle the shape; more would only cost time."""
 
@@ -176,6 +178,8 @@ def fit_response_shape(
         fit = ShapeSearch(blocks, interval_s=interval_s, reference=reference, bounds_s=bounds_s)
         shape, slow_p = fit.with_slow(shape)
     errors = fit.standard_errors(shape)
+    if errors[2] > _MOST_DOUBT * shape.decay_s:  # a movie too short to see the decay
+        return replace(nothing, clear_z=clear_z, correlation=correlation)
     return ShapeFit(
         shape=shape,
         shape_from="recording",
