@@ -56,3 +56,17 @@ def test_trials_are_excluded_once_and_can_come_back():
 def test_edits_survive_json():
     edits = HandEdits().add(1.5, 2.0, ((1, 2), (2, 2))).delete((10.0, 5.0)).exclude(4, "no stimulus")
     assert edits_from_dict(json.loads(json.dumps(edits.as_dict()))) == edits
+
+
+def test_a_drawn_footprint_moves_along():
+    edits = HandEdits().add(10.5, 5.5, ((10, 5), (10, 6), (11, 5), (11, 6)))
+    moved = edits.move((10.5, 5.5), (13.4, 5.5)).placed[0]
+    assert moved.place == (13.5, 5.5)
+    assert moved.pixels == ((13, 5), (13, 6), (14, 5), (14, 6))
+
+
+def test_where_a_bouton_came_from_survives_json():
+    edits = HandEdits().move((10.0, 5.0), (14.0, 6.0))
+    assert edits.placed[0].origin == (10.0, 5.0)
+    assert edits.move((14.0, 6.0), (15.0, 6.0)).placed[0].origin == (10.0, 5.0)
+    assert edits_from_dict(json.loads(json.dumps(edits.as_dict()))) == edits

@@ -9,9 +9,11 @@ from napari_boutonrelease.analysis.pipeline import Pipeline
 from napari_boutonrelease.analysis.run import put_together
 from napari_boutonrelease.analysis.settings import PairSettings, QuantalSettings, Settings
 from napari_boutonrelease.recording import movie_from_array
+from napari_boutonrelease.response_shape import ResponseShape
 from napari_boutonrelease.simulation import BoutonRecipe, preset_recipe, simulate_recording
 
 SETTINGS = Settings(quanta=QuantalSettings(bootstrap=0, n_max=4), pairs=PairSettings(bootstrap=200))
+SLOW = ResponseShape(latency_s=0.0, rise_s=0.002, decay_s=0.4, slow_fraction=0.0, slow_decay_s=1.0)
 COUNTED = (
     "look_at_recording",
     "map_responses",
@@ -172,3 +174,65 @@ def test_an_analysis_can_be_ended_between_and_taken_up_again(recording, ran):
     made.measure(SETTINGS)
     assert "look_at_recording" not in ran
     assert "map_responses" not in ran
+
+
+def test_an_axon_drawn_later_orders_the_boutons_without_looking_for_them_again(pipeline, ran):
+    pipeline.axon = np.array([[18.0, 60.0], [18.0, 2.0]])
+    x_px = pipeline.sites(SETTINGS, edits=HandEdits()).x_px
+    assert np.all(np.diff(x_px) < 0)
+    assert ran == []
+    assert pipeline.trace(SETTINGS).places.footprints.x_px == pytest.approx(x_px)
+    assert "find_sites" not in ran
+    pipeline.axon = None
+    assert np.isnan(pipeline.sites(SETTINGS, edits=HandEdits()).axon_px).all()
+
+
+def test_traces_come_before_the_rest_and_are_not_read_again(pipeline, ran):
+    edits = HandEdits().add(30.0, 40.0)
+    traced = pipeline.trace(SETTINGS, edits=edits)
+    assert ran == ["lay_footprints", "extract_traces"]
+    measured = pipeline.measure(SETTINGS, edits=edits)
+    assert measured.f is traced.f
+    assert ran[2:] == ["measure_responses", "detect_spontaneous", "fit_release", "count_releases"]
+
+
+def test_places_after_an_edit_are_known_before_anything_is_measured(pipeline, ran):
+    edits = HandEdits().add(30.0, 40.0)
+    sites = pipeline.sites(SETTINGS, edits=edits)
+    assert ran == []
+    places = pipeline.trace(SETTINGS, edits=edits).places
+    assert sites.bouton.tolist() == places.bouton.tolist()
+    assert sites.y_px.tolist() == places.footprints.y_px.tolist()
+    assert Pipeline(pipeline.movie, pipeline.protocol).sites(SETTINGS, edits=edits) is None
+
+
+def test_pixels_drawn_beyond_the_border_are_left_out(pipeline):
+    edits = HandEdits().add(0.0, 40.0, ((-1, 40), (0, 40), (0, 41), (1, 40)))
+    sites = pipeline.sites(SETTINGS, edits=edits)
+    assert sites.drawn[-1].tolist() == [[0, 40], [0, 41], [1, 40]]
+
+
+def test_a_change_by_hand_does_not_decide_where_boutons_are_found(recording, ran, monkeypatch):
+    # Looked for with a decay far from the true one, the boutons are looked for again with the fitted one.
+    monkeypatch.setattr(pipeline_module, "guess_shape", lambda *_, **__: SLOW)
+    made = Pipeline(*recording)
+    before = made.trace(SETTINGS).places
+    assert ran.count("map_responses") == 2
+    ran.clear()
+    edits = HandEdits().add(30.0, 40.0)
+    after = made.trace(SETTINGS, edits=edits).places
+    assert "map_responses" not in ran
+    assert after.footprints.x_px[:-1] == pytest.approx(before.footprints.x_px)
+    afresh = Pipeline(*recording).trace(SETTINGS, edits=edits).places
+    assert afresh.footprints.x_px.tolist() == after.footprints.x_px.tolist()
+
+
+def test_a_moved_bouton_keeps_its_id(pipeline):
+    before = pipeline.sites(SETTINGS, edits=HandEdits())
+    places = [(float(y), float(x)) for y, x in zip(before.y_px, before.x_px, strict=True)]
+    edits = HandEdits().add(30.0, 40.0).move(places[0], (places[0][0] + 2.0, places[0][1]))
+    after = pipeline.sites(SETTINGS, edits=edits)
+    assert after.bouton.tolist() == [*before.bouton, before.bouton.max() + 1]
+    assert after.found_by[0] == after.found_by[-1] == "hand"
+    merged = pipeline.sites(SETTINGS, edits=HandEdits().merge((places[1], places[2])))
+    assert merged.bouton.tolist() == before.bouton[:2].tolist()

@@ -25,11 +25,14 @@ class PlacedByHand:
         Where.
     pixels : tuple of (int, int)
         Its footprint, where that was drawn; empty for a spot of the usual shape.
+    origin : (float, float) or None
+        Where the found bouton was that it was moved from or redrawn: it keeps that one's id.
     """
 
     y_px: float
     x_px: float
     pixels: tuple[tuple[int, int], ...] = ()
+    origin: Place | None = None
 
     @property
     def place(self) -> Place:
@@ -57,7 +60,13 @@ class HandEdits:
 
     def add(self, y_px: float, x_px: float, pixels: tuple[tuple[int, int], ...] = ()) -> HandEdits:
         """Place a bouton, with a drawn footprint where `pixels` are given."""
-        return replace(self, placed=(*self.placed, PlacedByHand(y_px=y_px, x_px=x_px, pixels=pixels)))
+        return self._place(PlacedByHand(y_px=y_px, x_px=x_px, pixels=pixels))
+
+    def _place(self, one: PlacedByHand) -> HandEdits:
+        return replace(self, placed=(*self.placed, one))
+
+    def _origin(self, place: Place) -> Place | None:
+        return next((one.origin for one in self.placed if one.place == place), place)
 
     def delete(self, place: Place) -> HandEdits:
         """Take away the bouton at a place, found or placed."""
@@ -66,21 +75,27 @@ class HandEdits:
         return replace(self, placed=kept, cleared=cleared)
 
     def move(self, place: Place, to: Place) -> HandEdits:
-        """Move the bouton at a place."""
-        return self.delete(place).add(*to)
+        """Move the bouton at a place; a drawn footprint moves along by whole pixels."""
+        drawn = next((one.pixels for one in self.placed if one.place == place), ())
+        if not drawn:
+            return self.delete(place)._place(PlacedByHand(y_px=to[0], x_px=to[1], origin=self._origin(place)))
+        dy, dx = round(to[0] - place[0]), round(to[1] - place[1])
+        return self.redraw(place, tuple((y + dy, x + dx) for y, x in drawn))
 
     def redraw(self, place: Place, pixels: tuple[tuple[int, int], ...]) -> HandEdits:
         """Give the bouton at a place a drawn footprint; its place becomes the footprint's centre."""
         centre = np.mean(np.asarray(pixels, dtype=np.float64), axis=0)
-        return self.delete(place).add(float(centre[0]), float(centre[1]), pixels)
+        redrawn = PlacedByHand(y_px=float(centre[0]), x_px=float(centre[1]), pixels=pixels, origin=self._origin(place))
+        return self.delete(place)._place(redrawn)
 
     def merge(self, places: tuple[Place, ...]) -> HandEdits:
-        """Replace several boutons by one at their mean."""
+        """Replace several boutons by one at their mean, which keeps the id of the first."""
         edits = self
         for place in places:
             edits = edits.delete(place)
         centre = np.mean(np.asarray(places, dtype=np.float64), axis=0)
-        return edits.add(float(centre[0]), float(centre[1]))
+        merged = PlacedByHand(y_px=float(centre[0]), x_px=float(centre[1]), origin=self._origin(places[0]))
+        return edits._place(merged)
 
     def exclude(self, trial: int, reason: str) -> HandEdits:
         """Leave a trial out of every estimate."""
@@ -105,7 +120,12 @@ class HandEdits:
         """Return the edits JSON-ready."""
         return {
             "placed": [
-                {"y_px": one.y_px, "x_px": one.x_px, "pixels": [list(pixel) for pixel in one.pixels]}
+                {
+                    "y_px": one.y_px,
+                    "x_px": one.x_px,
+                    "pixels": [list(pixel) for pixel in one.pixels],
+                    "origin": None if one.origin is None else list(one.origin),
+                }
                 for one in self.placed
             ],
             "cleared": [list(place) for place in self.cleared],
@@ -127,6 +147,7 @@ def edits_from_dict(content: dict[str, Any]) -> HandEdits:
                 y_px=float(one["y_px"]),
                 x_px=float(one["x_px"]),
                 pixels=tuple((int(y), int(x)) for y, x in one["pixels"]),
+                origin=None if one.get("origin") is None else (float(one["origin"][0]), float(one["origin"][1])),
             )
             for one in content["placed"]
         ),

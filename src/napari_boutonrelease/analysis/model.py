@@ -12,10 +12,13 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from psygnal import Signal
 
+from napari_boutonrelease.boutons import trace_axon
 from napari_boutonrelease.errors import InputError
 
 from .hand_edits import HandEdits
-from .pipeline import Measured, Pipeline
+from .measured import Measured, Traced
+from .pipeline import Pipeline
+from .progress import StepProgress
 from .quantal_step import count_releases
 from .run import put_together
 from .settings import Settings
@@ -31,6 +34,7 @@ if TYPE_CHECKING:
 
     from .progress import Progress
     from .results import AnalysisResult
+    from .sites import Sites
 
 _TABLES = {
     "boutons": bouton_table,
@@ -75,6 +79,8 @@ class AnalysisModel:
         Another movie or protocol; everything measured is gone.
     settings_changed, edits_changed
         A choice, or a change by hand; what was measured may be stale.
+    traced_changed
+        New footprints and traces; what is measured of them follows.
     measured_changed
         New results.
     selection_changed
@@ -84,6 +90,7 @@ class AnalysisModel:
     recording_changed = Signal()
     settings_changed = Signal()
     edits_changed = Signal()
+    traced_changed = Signal()
     measured_changed = Signal()
     selection_changed = Signal()
 
@@ -93,6 +100,7 @@ class AnalysisModel:
         self._edits = HandEdits()
         self._undone: list[HandEdits] = []
         self._done: list[HandEdits] = []
+        self._traced: Traced | None = None
         self._measured: Measured | None = None
         self._tables: dict[str, pd.DataFrame] = {}
         self._selection = Selection()
@@ -125,6 +133,7 @@ class AnalysisModel:
         """Take a recording; edits and results of another one are dropped."""
         same_movie = self.movie is movie
         self._pipeline = Pipeline(movie, protocol, boutons=boutons, axon=axon)
+        self._traced = None
         self._measured = None
         self._tables = {}
         if not same_movie:
@@ -221,6 +230,23 @@ class AnalysisModel:
 
     # results
 
+    def sites(self) -> Sites | None:
+        """Return where boutons are now: as found last, corrected by hand; None before they were looked for."""
+        return None if self._pipeline is None else self._pipeline.sites(self._settings, edits=self._edits)
+
+    @property
+    def traced(self) -> Traced | None:
+        """Footprints and traces, which may be newer than what is measured of them."""
+        return self._traced
+
+    def accept_traces(self, request: Request, traced: Traced) -> bool:
+        """Take traces unless the recording or the edits have changed meanwhile; tell whether they were taken."""
+        if request.pipeline is not self._pipeline or request.edits != self._edits:
+            return False
+        self._traced = traced
+        self.traced_changed.emit()
+        return True
+
     @property
     def measured(self) -> Measured | None:
         """What was measured last."""
@@ -228,9 +254,13 @@ class AnalysisModel:
 
     @property
     def stale(self) -> bool:
-        """Whether choices or edits have changed since."""
+        """Whether choices, edits or the axon's course have changed since."""
         measured = self._measured
-        return measured is not None and (measured.settings != self._settings or measured.edits != self._edits)
+        return measured is not None and (
+            measured.settings != self._settings
+            or measured.edits != self._edits
+            or (self._pipeline is not None and measured.axon is not self._pipeline.axon)
+        )
 
     def request(self) -> Request:
         """Say what is to be computed now.
@@ -253,6 +283,16 @@ class AnalysisModel:
 
     def _take(self, measured: Measured) -> None:
         self._measured = measured
+        if self._traced is None or self._traced.places is not measured.places:
+            self._traced = Traced(
+                settings=measured.settings,
+                edits=measured.edits,
+                recording=measured.recording,
+                places=measured.places,
+                f=measured.f,
+                axon=measured.axon,
+            )
+            self.traced_changed.emit()
         self._tables = {}
         if self._selection.bouton not in measured.places.bouton:
             first = int(measured.places.bouton[0]) if len(measured.places.bouton) else None
@@ -321,6 +361,21 @@ class AnalysisModel:
             return None
         at = np.flatnonzero(self._measured.places.bouton == self._selection.bouton)
         return int(at[0]) if at.size else None
+
+
+def follow_axon(
+    request: Request, clicks: NDArray[np.float64], *, progress: Progress | None = None
+) -> NDArray[np.float64]:
+    """Trace the axon through clicked places, (k, 2) in px, along its light in the mean image."""
+    pipeline, settings = request.pipeline, request.settings
+    recording = pipeline.look(settings, steps=StepProgress(progress, shares={"light": 1.0, "drift": 2.0}))
+    width_px = settings.detection.bouton_um / recording.pixel_um
+    return trace_axon(recording.optics.mean_image, clicks, width_px=width_px)
+
+
+def trace(request: Request, *, progress: Progress | None = None) -> Traced:
+    """Run the steps of a request as far as the traces; `compute` goes on from there."""
+    return request.pipeline.trace(request.settings, edits=request.edits, progress=progress)
 
 
 def compute(request: Request, *, progress: Progress | None = None) -> Measured:

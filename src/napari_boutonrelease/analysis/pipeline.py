@@ -11,7 +11,7 @@ import hashlib
 import json
 import warnings
 from collections.abc import Callable, Hashable
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from typing import TYPE_CHECKING, Any, TypeVar
 
 import numpy as np
@@ -30,9 +30,10 @@ from napari_boutonrelease.responses import (
 )
 
 from .hand_edits import HandEdits
+from .measured import Measured, Traced
 from .places import Places, lay_footprints, take_footprints
 from .progress import StepProgress
-from .quantal_step import Counts, ReleaseFits, count_releases, fit_release
+from .quantal_step import count_releases, fit_release
 from .recording_step import BLOCK_FRAMES, Recording, look_at_recording
 from .response_maps import guess_shape, map_responses
 from .sites import Sites, correct_by_hand, find_sites, given_sites, put_in_order, read_axon_px, spot_sigma_px
@@ -44,12 +45,14 @@ if TYPE_CHECKING:
     from pydantic import BaseModel
 
     from napari_boutonrelease.boutons import ResponseStack
-    from napari_boutonrelease.recording import Drift, Movie, Protocol, Timing
+    from napari_boutonrelease.recording import Movie, Protocol
     from napari_boutonrelease.response_shape import ResponseShape
-    from napari_boutonrelease.responses import AmplitudeFit, Responses, SpontaneousReleases
+    from napari_boutonrelease.responses import AmplitudeFit, Responses
 
     from .progress import Progress
     from .settings import Settings
+
+__all__ = ["STEPS", "Measured", "Pipeline", "Traced"]
 
 Value = TypeVar("Value")
 
@@ -65,57 +68,9 @@ STEPS = {
     "spontaneous": 0.7,
     "release": 2.0,
 }
+_UP_TO_TRACES = ("light", "drift", "shape", "maps", "sites", "traces", "responses")
 _OTHER_SHAPE = 1.6  # a decay this many times longer or shorter than guessed is worth looking for boutons again
 _MOST_SHAFT = 0.6  # of the baseline: a bouton hardly brighter than its axon is doubtful, not infinitely responsive
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Measured:
-    """Everything that the steps of one analysis found, before it is put into tables.
-
-    Attributes
-    ----------
-    protocol, settings, edits
-        What was asked for.
-    recording : Recording
-        Movie, timing, light and movement.
-    places : Places
-        Boutons and their footprints.
-    f : (n_boutons, n_frames) ndarray
-        Brightness of each bouton, background, neighbours and bare axon taken off (counts).
-    responses : Responses
-        Baseline, response shape and amplitudes of all trials.
-    amplitudes : AmplitudeFit
-        Those amplitudes that count: excluded trials are NaN.
-    spontaneous : SpontaneousReleases
-        Releases without stimulus.
-    release : ReleaseFits
-        Release and quanta.
-    counts : Counts
-        Calls.
-    """
-
-    protocol: Protocol
-    settings: Settings
-    edits: HandEdits
-    recording: Recording
-    places: Places
-    f: NDArray[np.float64]
-    responses: Responses
-    amplitudes: AmplitudeFit
-    spontaneous: SpontaneousReleases
-    release: ReleaseFits
-    counts: Counts
-
-    @property
-    def timing(self) -> Timing:
-        """Frames and stimuli."""
-        return self.recording.timing
-
-    @property
-    def drift(self) -> Drift:
-        """Movement of every frame."""
-        return self.recording.drift
 
 
 class Pipeline:
@@ -145,6 +100,7 @@ class Pipeline:
         self.protocol = protocol
         self.boutons = boutons
         self.axon = axon
+        self._axon = axon
         self._known: dict[str, tuple[Hashable, Any]] = {}
         self._traces: dict[str, NDArray[np.float64]] = {}
 
@@ -174,15 +130,9 @@ class Pipeline:
         edits = edits or HandEdits()
         self.check_inputs()
         steps = StepProgress(progress, shares=STEPS)
-        recording = self.look(settings, steps=steps)
-        sites, shape = self.find(settings, steps=steps)
-        places, f, responses = self._respond(sites, recording, edits, settings, steps=steps)
-        if shape is not None and self.protocol.reporter is None and responses.shape_from == "recording":
-            # Looked for with a shape far from the true one, boutons may have been missed.
-            ratio = responses.shape.decay_s / shape.decay_s
-            if not 1 / _OTHER_SHAPE < ratio < _OTHER_SHAPE and not edits.placed:
-                sites, _ = self.find(settings, steps=steps, shape=responses.shape)
-                places, f, responses = self._respond(sites, recording, edits, settings, steps=steps)
+        traced = self.trace(settings, edits=edits, steps=steps)
+        recording, places, f = traced.recording, traced.places, traced.f
+        responses = self._respond(f, places, recording, settings, steps=steps)
         spontaneous = self._step(
             "spontaneous",
             (self._key("responses"), settings.calls.threshold_sd, settings.responses.false_spontaneous),
@@ -228,6 +178,7 @@ class Pipeline:
             spontaneous=spontaneous,
             release=release,
             counts=counts,
+            axon=traced.axon,
         )
 
     def check_inputs(self) -> None:
@@ -239,6 +190,45 @@ class Pipeline:
         if self.axon is not None and not isinstance(self.axon, np.ndarray):
             read_axon(self.axon, pixel_size_um=timing.pixel_size_um)
 
+    def trace(
+        self,
+        settings: Settings,
+        *,
+        edits: HandEdits | None = None,
+        progress: Progress | None = None,
+        steps: StepProgress | None = None,
+    ) -> Traced:
+        """Run the steps as far as the traces: parameters and errors as of `measure`."""
+        edits = edits or HandEdits()
+        self._axon = self.axon  # another may be drawn meanwhile
+        steps = steps or StepProgress(progress, shares={name: STEPS[name] for name in _UP_TO_TRACES})
+        recording = self.look(settings, steps=steps)
+        sites = self._find(settings, recording, steps=steps)
+        places, f = self._trace(sites, recording, edits, settings, steps=steps)
+        return Traced(settings=settings, edits=edits, recording=recording, places=places, f=f, axon=self._axon)
+
+    @property
+    def recording(self) -> Recording | None:
+        """Light and movement, once they were measured."""
+        known: Recording | None = self._known.get("recording", (None, None))[1]
+        return known
+
+    def sites(self, settings: Settings, *, edits: HandEdits) -> Sites | None:
+        """Return where boutons were found last, corrected by hand; None before that. Nothing is measured for it."""
+        recording, found = self.recording, self._known.get("found", (None, None))[1]
+        if recording is None or found is None:
+            return None
+        axon = self.axon if isinstance(self.axon, np.ndarray) else read_axon_px(self.axon, recording=recording)
+        return correct_by_hand(
+            put_in_order(found, axon=axon),
+            edits,
+            axon=axon,
+            spacing_px=settings.detection.spacing_um / recording.pixel_um,
+        )
+
+    def _axon_px(self, recording: Recording) -> NDArray[np.float64] | None:
+        return self._axon if isinstance(self._axon, np.ndarray) else read_axon_px(self._axon, recording=recording)
+
     def look(self, settings: Settings, *, steps: StepProgress) -> Recording:
         """Measure light, noise and movement."""
         return self._step(
@@ -247,39 +237,58 @@ class Pipeline:
             lambda: look_at_recording(self.movie, self.protocol, settings=settings.recording, steps=steps),
         )
 
-    def find(
-        self, settings: Settings, *, steps: StepProgress, shape: ResponseShape | None = None
-    ) -> tuple[Sites, ResponseShape | None]:
-        """Find the boutons, or take those given; with the response shape they were looked for with."""
-        recording = self.look(settings, steps=steps)
-        axon = self.axon if isinstance(self.axon, np.ndarray) else read_axon_px(self.axon, recording=recording)
-        where = None if axon is None else axon.tobytes()
+    def _find(self, settings: Settings, recording: Recording, *, steps: StepProgress) -> Sites:
+        """Find the boutons, or take those given, and put them in order."""
         if self.boutons is not None:
             given = self.boutons
-            sites = self._step(
-                "sites",
-                (self._key("recording"), str(given), where, _digest(settings.detection)),
-                lambda: put_in_order(given_sites(given, recording, settings=settings.detection), axon=axon),
-            )
-            return sites, None
-        looked_for = shape or self._shape_to_look_for(recording, settings, steps)
+            key: Hashable = (self._key("recording"), str(given), _digest(settings.detection))
+            self._step("found", key, lambda: given_sites(given, recording, settings=settings.detection))
+            return self._order(recording)
+        shape = self._shape_to_look_for(recording, settings, steps)
+        if self.protocol.reporter is None:
+            chosen = settings.responses
+            key = (self._key("recording"), shape, _digest(settings.detection), _digest(chosen), settings.seed)
+            better = self._step("better shape", key, lambda: self._better_shape(shape, recording, settings, steps))
+            shape = better or shape
+        return self._look_for(shape, recording, settings, steps=steps)
+
+    def _look_for(
+        self, shape: ResponseShape, recording: Recording, settings: Settings, *, steps: StepProgress
+    ) -> Sites:
+        detection = settings.detection
         stack = self._step(
             "maps",
-            (self._key("recording"), looked_for),
-            lambda: _maps(recording, looked_for, steps=steps, by_shape_too=settings.detection.shape_candidates),
+            (self._key("recording"), shape),
+            lambda: _maps(recording, shape, steps=steps, by_shape_too=detection.shape_candidates),
         )
         steps.step("sites")
-        sites = self._step(
-            "sites",
-            (self._key("maps"), where, _digest(settings.detection), settings.seed),
-            lambda: put_in_order(
-                find_sites(
-                    recording, stack, settings=settings.detection, rng=np.random.default_rng([settings.seed, 0])
-                ),
-                axon=axon,
-            ),
+        self._step(
+            "found",
+            (self._key("maps"), _digest(detection), settings.seed),
+            lambda: find_sites(recording, stack, settings=detection, rng=np.random.default_rng([settings.seed, 0])),
         )
-        return sites, looked_for
+        return self._order(recording)
+
+    def _order(self, recording: Recording) -> Sites:
+        axon = self._axon_px(recording)
+        where = None if axon is None else axon.tobytes()
+        found: Sites = self._known["found"][1]
+        return self._step("sites", (self._key("found"), where), lambda: put_in_order(found, axon=axon))
+
+    def _better_shape(
+        self, shape: ResponseShape, recording: Recording, settings: Settings, steps: StepProgress
+    ) -> ResponseShape | None:
+        """Return the true shape where the one looked for is far from it: boutons may have been missed then.
+
+        Only found boutons are asked, so that changes by hand do not decide where boutons are found.
+        """
+        sites = self._look_for(shape, recording, settings, steps=steps)
+        places, f = self._trace(sites, recording, HandEdits(), settings, steps=steps)
+        responses = self._respond(f, places, recording, settings, steps=steps)
+        if responses.shape_from != "recording":
+            return None
+        ratio = responses.shape.decay_s / shape.decay_s
+        return None if 1 / _OTHER_SHAPE < ratio < _OTHER_SHAPE else responses.shape
 
     def _shape_to_look_for(self, recording: Recording, settings: Settings, steps: StepProgress) -> ResponseShape:
         if self.protocol.reporter is not None:
@@ -292,13 +301,15 @@ class Pipeline:
         )
         return guess or ASSUMED_SHAPE
 
-    def _respond(
+    def _trace(
         self, sites: Sites, recording: Recording, edits: HandEdits, settings: Settings, *, steps: StepProgress
-    ) -> tuple[Places, NDArray[np.float64], Responses]:
-        """Lay the footprints, read the traces, fit the amplitudes."""
-        axon = self.axon if isinstance(self.axon, np.ndarray) else read_axon_px(self.axon, recording=recording)
+    ) -> tuple[Places, NDArray[np.float64]]:
+        """Lay the footprints and read the traces."""
         corrected = correct_by_hand(
-            sites, edits, axon=axon, spacing_px=settings.detection.spacing_um / recording.pixel_um
+            sites,
+            edits,
+            axon=self._axon_px(recording),
+            spacing_px=settings.detection.spacing_um / recording.pixel_um,
         )
         places = self._step(
             "places",
@@ -316,9 +327,21 @@ class Pipeline:
             (self._key("places"), settings.responses.baseline_s),
             lambda: self._read(places, recording, settings, progress=steps.step("traces")),
         )
+        return places, f
+
+    def _respond(
+        self,
+        f: NDArray[np.float64],
+        places: Places,
+        recording: Recording,
+        settings: Settings,
+        *,
+        steps: StepProgress,
+    ) -> Responses:
+        """Fit the amplitudes."""
         steps.step("responses")
         chosen = settings.responses
-        responses = self._step(
+        return self._step(
             "responses",
             (self._key("traces"), _digest(chosen)),
             lambda: measure_responses(
@@ -334,7 +357,6 @@ class Pipeline:
                 slope=chosen.slope,
             ),
         )
-        return places, f, responses
 
     def _read(
         self, places: Places, recording: Recording, settings: Settings, *, progress: Progress

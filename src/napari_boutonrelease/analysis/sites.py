@@ -22,7 +22,7 @@ if TYPE_CHECKING:
 
     from numpy.typing import NDArray
 
-    from napari_boutonrelease.boutons import ResponseStack
+    from napari_boutonrelease.boutons import Maxima, ResponseStack
 
     from .hand_edits import HandEdits
     from .recording_step import Recording
@@ -54,6 +54,8 @@ class Sites:
         Evidence of release at every pixel (nats); 0 where boutons were given.
     evidence_cut, expected_false : float
         Evidence that a maximum needed, and false ones expected among those found by responses; NaN where given.
+    maxima : Maxima or None
+        Maxima of the evidence, for a preview of other cuts; None where there was no evidence to judge.
     """
 
     bouton: NDArray[np.int64]
@@ -67,6 +69,7 @@ class Sites:
     evidence: NDArray[np.float64]
     evidence_cut: float
     expected_false: float
+    maxima: Maxima | None
 
     def take(self, order: NDArray[np.intp] | NDArray[np.bool_]) -> Sites:
         """Keep or reorder boutons."""
@@ -129,6 +132,7 @@ def find_sites(
         evidence=found.evidence.astype(np.float64),
         evidence_cut=found.cut,
         expected_false=found.expected_false,
+        maxima=found.maxima,
     )
 
 
@@ -159,6 +163,7 @@ def given_sites(path: str | Path, recording: Recording, *, settings: DetectionSe
         evidence=np.zeros((height, width)),
         evidence_cut=float("nan"),
         expected_false=float("nan"),
+        maxima=None,
     )
     return sites.take(np.argsort(given.bouton, kind="stable"))
 
@@ -180,7 +185,7 @@ def read_axon_px(path: str | Path | None, *, recording: Recording) -> NDArray[np
 
 
 def correct_by_hand(sites: Sites, edits: HandEdits, *, axon: NDArray[np.float64] | None, spacing_px: float) -> Sites:
-    """Apply edits by hand. Ids of what is left stay; boutons placed by hand take the next ones."""
+    """Apply edits by hand. Ids stay, also of what was moved or redrawn; boutons added take the next ones."""
     if not (edits.placed or edits.cleared):
         return sites
     kept = sites.take(edits.spared(sites.y_px, sites.x_px, reach_px=_EDIT_REACH * spacing_px))
@@ -189,14 +194,39 @@ def correct_by_hand(sites: Sites, edits: HandEdits, *, axon: NDArray[np.float64]
     along, aside = np.full(len(ys), np.nan), np.full(len(ys), np.nan)
     if axon is not None and len(ys):
         along, aside = distance_along(axon, y_px=ys, x_px=xs)
-    first = int(sites.bouton.max(initial=0)) + 1
-    return replace(
+    corrected = replace(
         kept,
-        bouton=np.concatenate([kept.bouton, first + np.arange(len(ys))]),
+        bouton=np.concatenate([kept.bouton, _ids(sites, edits, kept.bouton, reach_px=_EDIT_REACH * spacing_px)]),
         y_px=np.concatenate([kept.y_px, ys]),
         x_px=np.concatenate([kept.x_px, xs]),
         found_by=(*kept.found_by, *("hand",) * len(ys)),
         axon_px=np.concatenate([kept.axon_px, along]),
         axon_offset_px=np.concatenate([kept.axon_offset_px, aside]),
-        drawn=(*kept.drawn, *(np.array(one.pixels, dtype=np.intp) if one.pixels else None for one in edits.placed)),
+        drawn=(*kept.drawn, *(_inside(one.pixels, sites.evidence.shape) for one in edits.placed)),
     )
+    return corrected.take(np.argsort(corrected.bouton, kind="stable"))
+
+
+def _ids(sites: Sites, edits: HandEdits, taken: NDArray[np.int64], *, reach_px: float) -> NDArray[np.int64]:
+    """Return the id of each bouton placed by hand: that of the found one it comes from, else the next free one."""
+    used = set(taken.tolist())
+    following = int(sites.bouton.max(initial=0)) + 1
+    ids = []
+    for one in edits.placed:
+        name = following
+        if one.origin is not None and len(sites.bouton):
+            distance = np.hypot(sites.y_px - one.origin[0], sites.x_px - one.origin[1])
+            nearest = int(np.argmin(distance))
+            if distance[nearest] <= reach_px and int(sites.bouton[nearest]) not in used:
+                name = int(sites.bouton[nearest])
+        following += name == following
+        used.add(name)
+        ids.append(name)
+    return np.array(ids, dtype=np.int64)
+
+
+def _inside(pixels: tuple[tuple[int, int], ...], shape: tuple[int, ...]) -> NDArray[np.intp] | None:
+    """Pixels of a drawn footprint that lie in the image; None where there are none."""
+    drawn = np.array(pixels, dtype=np.intp).reshape(-1, 2)
+    drawn = drawn[np.all((drawn >= 0) & (drawn < np.array(shape)), axis=1)]
+    return drawn if len(drawn) else None

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from .axon_path import trace_axon
+from .cuts import Cuts, Maxima
 from .detection import Detection, detect_boutons, detect_by_shape
 from .evidence import MatchedMaps, matched_filter, mixture_evidence, release_posterior, standardise
 from .false_discovery import FalseRate, measure_false_rate
@@ -20,11 +21,13 @@ from .shape_candidates import ShapeCandidates, find_shape_candidates
 from .spots import estimate_spot_sigma
 
 __all__ = [
+    "Cuts",
     "Detection",
     "FalseRate",
     "Footprints",
     "GivenBoutons",
     "MatchedMaps",
+    "Maxima",
     "Optics",
     "ResponseStack",
     "ShapeCandidates",

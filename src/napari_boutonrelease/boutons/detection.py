@@ -8,9 +8,10 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from .cuts import Cuts, Maxima, allowed_false, find_maxima
 from .deflation import SpotModel
 from .evidence import MAX_NATS_PER_TRIAL, mixture_evidence, standardise
-from .false_discovery import FalseRate, local_maxima, measure_false_rate
+from .false_discovery import local_maxima, measure_false_rate
 from .shape_candidates import ShapeCandidates, find_shape_candidates
 
 if TYPE_CHECKING:
@@ -18,11 +19,10 @@ if TYPE_CHECKING:
 
     from .maps import ResponseStack
 
-_FIRST_SHARE = 0.1  # of false_discovery: how unlikely the first bouton must be where nothing may release at all
-_MARGIN = 0.3  # the share of false ones is promised for a recording, and scatters about its expectation
 _NULL_CHANCE = 4.0  # nats that noise reaches at one of many places
 _LEAST_SEEN = 0.8  # of the energy of a spot: one cut by the border is averaged over too few pixels to be believed
 _MAX_ROUNDS = 12
+_PREVIEW_SPACING = 1.5  # of the spacing: flanks of strong boutons, not taken out there, are no boutons
 _CLOSEST = 0.75  # of the spacing: nearer than that two fitted places are one bouton
 _SHAPE_POSITION_ERROR = 0.25  # of the spot's sigma: the shaft and unequal neighbours pull a maximum of the mean image
 
@@ -51,6 +51,8 @@ class Detection:
         False ones expected among those found by responses.
     spot_sigma_px : float
         Gaussian sigma of a bouton's image, measured where clear boutons stand alone, else as given (px).
+    maxima : Maxima or None
+        Maxima of the evidence, for a preview of other cuts; None where boutons were looked for by shape alone.
     """
 
     y_px: NDArray[np.float64]
@@ -63,29 +65,7 @@ class Detection:
     cut_at_shape: float
     expected_false: float
     spot_sigma_px: float
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class _Cuts:
-    """Evidence demanded of a maximum anywhere and of one where the mean image shows a spot.
-
-    The expected false ones are shared in halves (weighted hypotheses; Genovese, Roeder & Wasserman 2006): the few spots
-    of the mean image are a small part of the image, so there a smaller evidence is as convincing.
-    """
-
-    rate: FalseRate
-    near_shape: NDArray[np.bool_]
-
-    def at(self, expected: float) -> tuple[float, float]:
-        share = float(np.mean(self.near_shape))
-        if share == 0:
-            return self.rate.cut(expected), np.inf
-        anywhere = self.rate.cut(expected / 2 / max(1 - share, 1e-9))
-        return anywhere, min(anywhere, self.rate.cut(expected / 2 / share))
-
-    def map(self, expected: float) -> NDArray[np.float64]:
-        anywhere, at_shape = self.at(expected)
-        return np.where(self.near_shape, min(at_shape, anywhere), anywhere)
+    maxima: Maxima | None
 
 
 def detect_boutons(
@@ -157,7 +137,7 @@ def detect_boutons(
         if shape_candidates
         else ShapeCandidates(y_px=np.empty(0), x_px=np.empty(0), contrast=np.empty(0))
     )
-    cuts = _Cuts(rate=rate, near_shape=_near(shapes, radius_px=max(spacing_px / 2, 1.0), shape=evidence.shape))
+    cuts = Cuts(rate=rate, near_shape=_near(shapes, radius_px=max(spacing_px / 2, 1.0), shape=evidence.shape))
     model = SpotModel(
         evoked=stack.evoked,
         null=stack.null,
@@ -177,7 +157,7 @@ def detect_boutons(
         blind=blind,
     )
     advance(3, steps)
-    allowed = _allowed(len(score), false_discovery)
+    allowed = allowed_false(len(score), false_discovery)
     anywhere, at_shape = cuts.at(allowed)
     detection = _merge(
         model,
@@ -188,6 +168,7 @@ def detect_boutons(
         cut=anywhere,
         cut_at_shape=at_shape,
         expected_false=allowed if len(score) else 0.0,
+        maxima=find_maxima(evidence, cuts=cuts, spacing_px=_PREVIEW_SPACING * spacing_px),
     )
     advance(4, steps)
     return detection
@@ -226,6 +207,7 @@ def detect_by_shape(
         cut_at_shape=nothing,
         expected_false=nothing,
         spot_sigma_px=spot_sigma_px,
+        maxima=None,
     )
 
 
@@ -241,16 +223,11 @@ def _silently(done: int, total: int) -> None:
     pass
 
 
-def _allowed(n_found: int, false_discovery: float) -> float:
-    """Return the expected false ones allowed with `n_found` boutons in hand."""
-    return false_discovery * (_MARGIN * n_found if n_found else _FIRST_SHARE)
-
-
 def _find_releasing(
     model: SpotModel,
     evidence: NDArray[np.float32],
     *,
-    cuts: _Cuts,
+    cuts: Cuts,
     spacing_px: float,
     false_discovery: float,
     null_is_silent: bool,
@@ -261,7 +238,7 @@ def _find_releasing(
     residual: NDArray[np.floating] = evidence
     refused: list[tuple[float, float, float]] = []
     for _ in range(_MAX_ROUNDS):
-        excess = residual / cuts.map(_allowed(len(score), false_discovery))
+        excess = residual / cuts.map(allowed_false(len(score), false_discovery))
         # Only the highest of each neighbourhood: its own flanks must be gone before the next one is believed.
         y, x = local_maxima(excess, spacing_px=3 * spacing_px, above=1.0)
         new = [
@@ -276,7 +253,8 @@ def _find_releasing(
         model.set_places(np.append(model.y_px, [a for a, _ in new]), np.append(model.x_px, [b for _, b in new]))
         by_itself = _by_itself(model) if null_is_silent else np.zeros(len(model.y_px))
         score = np.maximum(model.evidence() - by_itself, 0.0)
-        keep = _keep(model, score, cuts=cuts, expected=_allowed(len(score), false_discovery), spacing_px=spacing_px)
+        expected = allowed_false(len(score), false_discovery)
+        keep = _keep(model, score, cuts=cuts, expected=expected, spacing_px=spacing_px)
         # The flanks of a place that is active by itself are so, too.
         refused += [
             (*place, (2.5 if active else _CLOSEST) * spacing_px)
@@ -302,7 +280,7 @@ def _by_itself(model: SpotModel) -> NDArray[np.float64]:
 
 
 def _keep(
-    model: SpotModel, score: NDArray[np.float64], *, cuts: _Cuts, expected: float, spacing_px: float
+    model: SpotModel, score: NDArray[np.float64], *, cuts: Cuts, expected: float, spacing_px: float
 ) -> NDArray[np.bool_]:
     """Spots that hold their evidence beside their neighbours and do not sit on a stronger one."""
     height, width = cuts.near_shape.shape
@@ -340,6 +318,7 @@ def _merge(
     cut: float,
     cut_at_shape: float,
     expected_false: float,
+    maxima: Maxima,
 ) -> Detection:
     """Join what was found by responses with what was found by shape, pair by pair from the closest."""
     distance = np.hypot(model.y_px[:, None] - shapes.y_px, model.x_px[:, None] - shapes.x_px)
@@ -378,4 +357,5 @@ def _merge(
         cut_at_shape=cut_at_shape,
         expected_false=expected_false,
         spot_sigma_px=model.spot_sigma_px,
+        maxima=maxima,
     )
