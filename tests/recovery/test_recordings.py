@@ -83,7 +83,7 @@ def test_requirements_hold_for_recordings(name, movies, ratio, tmp_path):
     assert measured["error_over_limit"] < 1.15
     assert 0.9 < measured["failure_over_stated"] < 1.1
     release = summary.release(boutons)
-    assert abs(release["bias"]) < max(0.01, 2 * release["bias_se"])
+    assert abs(release["bias"]) < max(0.01, 3 * release["bias_se"])
     assert release["ratio"] < ratio
     assert 0.92 < release["coverage"] < 0.98
     calls = summary.calls(boutons)

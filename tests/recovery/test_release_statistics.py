@@ -78,8 +78,9 @@ def test_requirements_hold_for_every_population(name):
     population, axons = AXONS[name]
     _, found = study(population, axons=axons, seed=11)
     summary = summarise(found)
-    lone_or_short = population.boutons == 1 or population.trials < 80
-    assert summary["ratio"] < (1.15 if population.q >= 4 else 1.3) or lone_or_short
+    # One bouton alone, and an axon that is dim and seldom releases, fall short of it; the validation page says so.
+    hard = population.boutons == 1 or (population.q < 4 and population.p_release[0] < 0.1)
+    assert summary["ratio"] < (1.6 if hard else 1.15 if population.q >= 4 else 1.3)
     assert abs(summary["bias"]) < max(0.01, 3 * summary["bias_se"])
     assert 0.92 < summary["coverage"] < 0.99
     assert summary["n_in_set"] > 0.93
