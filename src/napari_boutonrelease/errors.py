@@ -12,6 +12,20 @@ class MovieError(InputError):
     """The movie cannot be read, or is not a movie that can be analysed."""
 
 
+class ChannelError(MovieError):
+    """The movie holds several channels, of which one must be chosen.
+
+    Attributes
+    ----------
+    titles : tuple of str
+        Number and name of each channel.
+    """
+
+    def __init__(self, message: str, *, titles: tuple[str, ...]) -> None:
+        super().__init__(message)
+        self.titles = titles
+
+
 class ProtocolError(InputError):
     """The stimulation protocol is incomplete, contradicts itself or does not fit the movie."""
 

@@ -129,15 +129,24 @@ class AnalysisModel:
         *,
         boutons: str | Path | None = None,
         axon: str | Path | NDArray[np.float64] | None = None,
+        edits: HandEdits | None = None,
     ) -> None:
-        """Take a recording; edits and results of another one are dropped."""
+        """Take a recording, with edits by hand where they were saved; edits and results of another one are dropped."""
         same_movie = self.movie is movie
         self._pipeline = Pipeline(movie, protocol, boutons=boutons, axon=axon)
         self._traced = None
         self._measured = None
         self._tables = {}
-        if not same_movie:
-            self._edits, self._done, self._undone = HandEdits(), [], []
+        if edits is not None or not same_movie:
+            self._edits, self._done, self._undone = edits or HandEdits(), [], []
+        self._selection = Selection()
+        self.recording_changed.emit()
+
+    def close(self) -> None:
+        """Let go of the recording, its edits and results."""
+        self._pipeline = self._traced = self._measured = None
+        self._tables = {}
+        self._edits, self._done, self._undone = HandEdits(), [], []
         self._selection = Selection()
         self.recording_changed.emit()
 

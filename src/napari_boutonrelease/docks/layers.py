@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
-from weakref import ReferenceType, WeakKeyDictionary, ref
+from weakref import ReferenceType, WeakKeyDictionary, WeakSet, ref
 
 import numpy as np
 from numpy.typing import NDArray
@@ -18,11 +18,13 @@ if TYPE_CHECKING:
     from napari.layers import Image, Layer
 
     from ..analysis.model import AnalysisModel
+    from ..recording import Timing
 
 _IN_S = {"second": 1.0, "millisecond": 1e-3, "microsecond": 1e-6, "minute": 60.0}
 _IN_UM = {"micrometer": 1.0, "micron": 1.0, "nanometer": 1e-3, "millimeter": 1e3, "meter": 1e6}
 
 _MOVIES: WeakKeyDictionary[Layer, tuple[Movie, Any]] = WeakKeyDictionary()
+_OPENED: WeakSet[Layer] = WeakSet()  # layers that the docks have made, which they may recalibrate
 _MOVIE_LAYERS: WeakKeyDictionary[AnalysisModel, ReferenceType[Image]] = WeakKeyDictionary()
 
 
@@ -52,14 +54,15 @@ def lazy_frames(movie: Movie) -> Any:
     return da.from_array(_Frames(movie), chunks=(1, *movie.shape[1:]), name=False, asarray=False, fancy=False)
 
 
-def add_movie(viewer: Any, movie: Movie, **metadata: Any) -> Image:
+def add_movie(viewer: Any, movie: Movie, **settings: Any) -> Image:
     """Add a movie as an image layer that reads its frames as they are looked at."""
-    layer = viewer.add_image(lazy_frames(movie), **movie_layer_settings(movie, **metadata))
-    remember_movie(layer, movie)
+    layer = viewer.add_image(lazy_frames(movie), **(settings or movie_layer_settings(movie)))
+    _MOVIES[layer] = (movie, layer.data)
+    _OPENED.add(layer)
     return layer
 
 
-def movie_layer_settings(movie: Movie, **metadata: Any) -> dict[str, Any]:
+def movie_layer_settings(movie: Movie) -> dict[str, Any]:
     """Return the settings of an image layer that shows a movie: name, scale, units, contrast from a few frames."""
     middle = movie.shape[0] // 2
     few = np.concatenate([movie.read(k, k + 1) for k in sorted({0, middle, movie.shape[0] - 1})])
@@ -69,7 +72,6 @@ def movie_layer_settings(movie: Movie, **metadata: Any) -> dict[str, Any]:
         "name": movie.name,
         "contrast_limits": (low, high if high > low else low + 1.0),
         "axis_labels": ("t", "y", "x"),
-        "metadata": metadata,
         **calibration(movie.frame_interval_s, movie.pixel_size_um),
     }
 
@@ -81,6 +83,16 @@ def calibration(frame_interval_s: float | None, pixel_size_um: float | None) -> 
     return {"scale": (interval, pixel, pixel), "units": (time_unit, unit, unit)}
 
 
+def recalibrate(viewer: Any, layer: Layer, timing: Timing) -> None:
+    """Give a layer that the docks have opened the calibration of the protocol; others keep their own."""
+    known = calibration(timing.frame_interval_s, timing.pixel_size_um)
+    if layer in _OPENED and tuple(layer.scale) != known["scale"]:
+        frame = current_frame(viewer)
+        layer.scale, layer.units = known["scale"], known["units"]
+        if frame is not None:
+            show_frame(viewer, frame)
+
+
 def on_plane(movie_layer: Layer) -> dict[str, Any]:
     """Return scale, shift, units and axis labels of a two-dimensional layer that lies on a movie's frames."""
     return {
@@ -89,11 +101,6 @@ def on_plane(movie_layer: Layer) -> dict[str, Any]:
         "units": tuple(movie_layer.units[-2:]),
         "axis_labels": tuple(movie_layer.axis_labels[-2:]),
     }
-
-
-def remember_movie(layer: Layer, movie: Movie) -> None:
-    """Note which movie a layer shows."""
-    _MOVIES[layer] = (movie, layer.data)
 
 
 def movie_of_layer(layer: Layer) -> Movie:
@@ -113,7 +120,7 @@ def movie_of_layer(layer: Layer) -> Movie:
     if getattr(layer, "multiscale", False) or getattr(layer, "rgb", False):
         raise MovieError(f"{layer.name} is a colour image or an image pyramid: choose a grey movie, (frame, y, x).")
     movie = _reopened(layer) or _wrapped(layer)
-    remember_movie(layer, movie)
+    _MOVIES[layer] = (movie, layer.data)
     return movie
 
 

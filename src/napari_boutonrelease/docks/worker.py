@@ -84,6 +84,11 @@ class Runner(QObject):
         """What the running job does."""
         return "" if self._running is None else self._running.words
 
+    @property
+    def kind(self) -> str:
+        """Which kind of job runs."""
+        return "" if self._running is None else self._running.kind
+
     def run(self, work: Work, on_done: Callable[[Any], object], *, words: str, kind: str) -> None:
         """Run `work` in another thread and hand its value to `on_done` on this one.
 
@@ -230,8 +235,9 @@ class ProgressRow(QWidget):
         self.setVisible(self._runner.busy)
 
     def _advance(self, done: int, total: int) -> None:
-        self.bar.setRange(0, total)
-        self.bar.setValue(done)
+        if self.button.isEnabled():
+            self.bar.setRange(0, total)
+            self.bar.setValue(done)
 
     def _cancel(self) -> None:
         self.button.setEnabled(False)
@@ -244,7 +250,7 @@ def _if_alive(call: Callable[[Any], object]) -> Callable[[Any], object]:
     owner = getattr(call, "__self__", None)
     if not isinstance(owner, QObject):
         return call
-    method = WeakMethod(call)  # type: ignore[arg-type]
+    method = WeakMethod(call)
 
     def guarded(value: Any) -> None:
         there = method()

@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from ..errors import AnalysisWarning, MovieError
+from ..errors import AnalysisWarning, ChannelError, MovieError
 
 if TYPE_CHECKING:
     from xml.etree.ElementTree import Element
@@ -143,7 +143,8 @@ def read_layout(tiff: Any, *, n_pages: int, height: int, width: int, name: str) 
 def _check_channel(channel: int | None, n_channels: int, names: tuple[str, ...], name: str) -> None:
     titles = [f"{k} ({names[k]})" if k < len(names) and names[k] else str(k) for k in range(n_channels)]
     if channel is None and n_channels > 1:
-        raise MovieError(f"{name} holds {n_channels} channels: choose one with --channel {' or '.join(titles)}.")
+        message = f"{name} holds {n_channels} channels: choose one with --channel {' or '.join(titles)}."
+        raise ChannelError(message, titles=tuple(titles))
     if channel is not None and not 0 <= channel < n_channels:
         raise MovieError(f"{name} has no channel {channel}: it holds {', '.join(titles)} (counted from 0).")
 
