@@ -33,6 +33,7 @@ if TYPE_CHECKING:
 
 CONFIDENCE = 0.95
 _TELLING = 1.1  # sensitivity and specificity must add up to this, or the correction blows up
+_AXON_PARTS = 3  # time that the whole axon takes, in units of what its boutons one by one do
 _VERDICT_SHARE = 0.05  # false verdicts tolerated among the boutons said to facilitate or depress
 
 
@@ -103,7 +104,9 @@ def fit_release(
         q_cv=quanta.q_cv,
         q_cv_doubt=quanta.q_cv_doubt,
         tells=~saturated,
-        progress=None,
+        progress=None
+        if progress is None
+        else lambda done, total: progress(_AXON_PARTS * done, (_AXON_PARTS + 1) * total),
     )
     own: list[SitesFit] = []
     pairs: list[PulsePair | None] = []
@@ -136,7 +139,7 @@ def fit_release(
             else None
         )
         if progress is not None:
-            progress(b + 1, n_boutons)
+            progress(_AXON_PARTS * n_boutons + b + 1, (_AXON_PARTS + 1) * n_boutons)
     return ReleaseFits(axon=axon, own=tuple(own), pairs=tuple(pairs), verdicts=_verdicts(pairs))
 
 
