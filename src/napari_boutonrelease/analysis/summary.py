@@ -166,13 +166,15 @@ def _number(value: float) -> float | None:
     return float(value) if np.isfinite(value) else None
 
 
-def estimates_table(measured: Measured) -> pd.DataFrame:
-    """Put every estimate of the same quantity side by side, from pulse 1."""
+def estimates_table(measured: Measured, *, row: int | None = None) -> pd.DataFrame:
+    """Put every estimate of the same quantity side by side, from pulse 1; of all boutons, or of that in one row."""
     import pandas as pd
 
     axon, calls, fit = measured.release.axon, measured.counts.calls, measured.amplitudes
     rows: list[tuple[int, str, str, float, float, float]] = []
     for b, bouton in enumerate(measured.places.bouton):
+        if row not in (None, b):
+            continue
         own, corrected = measured.release.own[b], measured.counts.corrected[b]
         n_trials, n_called = int(calls.n_trials[b, 0]), int(calls.n_called[b, 0])
 

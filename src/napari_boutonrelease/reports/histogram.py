@@ -15,6 +15,8 @@ if TYPE_CHECKING:
     import pandas as pd
     from numpy.typing import NDArray
 
+    from ..analysis.measured import Measured
+
 _NOISE_LEVELS = 9
 
 
@@ -91,6 +93,24 @@ def amplitude_histogram(
         null=failures * trials_a_density * amplitude_density(null, edges) if null.size else np.empty(0),
         fine=fine,
         components=trials_a_density * components,
+    )
+
+
+def histogram_of(measured: Measured, row: int, *, pulse: int) -> AmplitudeHistogram | None:
+    """Return the histogram of one bouton (row) and pulse (from 0); a bouton that shows no release has no model."""
+    axon, fit = measured.release.axon, measured.amplitudes
+    releases = bool(np.isfinite(axon.p_release[row, 0])) and not axon.silent_probability[row] >= 0.5
+    return amplitude_histogram(
+        fit.amplitude[row, :, pulse],
+        fit.null_amplitude[row],
+        noise_sd=float(fit.noise_sd[row]),
+        trial_noise_sd=fit.amplitude_se[row, :, pulse],
+        model="binomial" if releases else "none",
+        n_sites=float(axon.n_sites[row]),
+        p_site=float(axon.p_site[row, pulse]),
+        p_release=float(axon.p_release[row, pulse]),
+        q=float(axon.q[row]),
+        q_cv=float(axon.q_cv),
     )
 
 

@@ -1,0 +1,176 @@
+"""Pulse 2 against pulse 1, trial by trial, and a train pulse by pulse."""
+
+from __future__ import annotations
+
+from typing import Any, Literal
+
+import numpy as np
+import pandas as pd
+from matplotlib.axes import Axes
+
+from ..reports.words import with_limits
+from .live_plot import LivePlot
+from .panel import Panel
+from .plots import Palette
+from .shown_bouton import ShownBouton
+
+
+class PulsePairPlot(LivePlot):
+    """Amplitudes of both pulses with their thresholds, which part the trials as the history table counts them."""
+
+    margins_px = (54.0, 34.0, 10.0, 34.0)
+
+    def __init__(self, panel: Panel) -> None:
+        self._shown: ShownBouton | None = None
+        super().__init__(panel)
+        self.setToolTip("A point a trial. The thresholds part releases from failures; the corners say how many trials.")
+
+    def show_bouton(self, shown: ShownBouton | None) -> None:
+        """Show another bouton, or the same with other results."""
+        before, self._shown = self._shown, shown
+        same = (
+            before is not None
+            and shown is not None
+            and before.row == shown.row
+            and before.measured.release is shown.measured.release
+        )
+        if same:
+            self.move()
+        else:
+            self.refill()
+
+    def make(self, axes: Axes, palette: Palette) -> None:
+        """Make the artists."""
+        dots: dict[str, Any] = {"linestyle": "none", "marker": "o", "markersize": 3.2, "alpha": 0.8}
+        (self._equal,) = axes.plot([], [], color=palette.hairline, linewidth=0.8, zorder=0)
+        (self._trials,) = axes.plot([], [], color=palette.evoked, **dots)
+        (self._mean,) = axes.plot([], [], color=palette.fit, marker="P", markersize=8, linestyle="none")
+        limit: dict[str, Any] = {"color": palette.ink, "linewidth": 0.9, "linestyle": ":", "animated": True}
+        self._first, self._second = axes.axvline(0.0, **limit), axes.axhline(0.0, **limit)
+        corner: dict[str, Any] = {"transform": axes.transAxes, "fontsize": 7.0, "color": palette.ink, "animated": True}
+        corner["bbox"] = {"facecolor": palette.paper, "alpha": 0.7, "linewidth": 0, "pad": 1.0}
+        self._corners = [
+            axes.text(x, y, "", ha=side, va=edge, **corner)
+            for x, y, side, edge in (
+                (0.99, 0.98, "right", "top"),
+                (0.99, 0.02, "right", "bottom"),
+                (0.02, 0.98, "left", "top"),
+                (0.02, 0.02, "left", "bottom"),
+            )
+        ]
+        self.moving = [self._first, self._second, *self._corners]
+        self._title = axes.set_title("", loc="right", fontsize=7.0, pad=3)
+        axes.set_xlabel("pulse 1 (dF/F)")
+        axes.set_ylabel("pulse 2 (dF/F)")
+
+    def fill(self, axes: Axes) -> None:
+        """Show the trials and the ratio."""
+        shown = self._shown
+        if shown is None:
+            self.say("no bouton selected")
+            return
+        pair = shown.measured.release.pairs[shown.row]
+        amplitude = shown.measured.amplitudes.amplitude[shown.row, :, :2]
+        both = amplitude[np.isfinite(amplitude).all(axis=1)] if amplitude.shape[1] > 1 else np.empty((0, 2))
+        self.say("" if len(both) and pair is not None else "no pair of pulses")
+        if not len(both) or pair is None:
+            return
+        self._trials.set_data(both[:, 0], both[:, 1])
+        self._mean.set_data([pair.first_mean], [pair.second_mean])
+        low, high = min(0.0, float(both.min())), float(both.max())
+        room = 0.08 * (high - low)
+        axes.set_xlim(low - room, high + room)
+        axes.set_ylim(low - 2 * room, high + 2 * room)
+        self._equal.set_data([low - room, high + room], [low - room, high + room])
+        verdict = shown.measured.release.verdicts[shown.row]
+        if np.isfinite(pair.ppr.value):
+            ratio = with_limits(pair.ppr.value, pair.ppr.lo, pair.ppr.hi)
+            self._title.set_text(f"ratio {ratio}\n{verdict}")
+        else:
+            self._title.set_text("ratio undefined")
+
+    def place(self) -> None:
+        """Put the thresholds in place and count the corners."""
+        shown = self._shown
+        if shown is None:
+            return
+        at = shown.threshold
+        for line in (self._first, self._second):
+            line.set_visible(bool(np.isfinite(at)))
+        self._first.set_xdata([at, at])
+        self._second.set_ydata([at, at])
+        history = shown.measured.counts.histories[shown.row]
+        counts = (
+            ("", "", "", "")
+            if history is None
+            else (
+                f"both: {history.both}",
+                f"first only: {history.only_first}",
+                f"second only: {history.only_second}",
+                f"neither: {history.neither}",
+            )
+        )
+        for text, words in zip(self._corners, counts, strict=True):
+            text.set_text(words)
+
+
+class TrainPlot(LivePlot):
+    """Mean amplitude, or p_release, against the pulse number.
+
+    Parameters
+    ----------
+    panel : Panel
+        The dock.
+    quantity : str
+        Which of the two.
+    """
+
+    margins_px = (54.0, 8.0, 10.0, 34.0)
+
+    def __init__(self, panel: Panel, *, quantity: Literal["amplitude", "p_release"]) -> None:
+        self._quantity = quantity
+        self._pulses: pd.DataFrame | None = None
+        super().__init__(panel, height_px=90)
+
+    def show_pulses(self, pulses: pd.DataFrame | None) -> None:
+        """Show the rows of one bouton of the table of pulses."""
+        self._pulses = pulses
+        self.refill()
+
+    def make(self, axes: Axes, palette: Palette) -> None:
+        """Make the artists."""
+        colour, marker = (palette.evoked, "o") if self._quantity == "amplitude" else (palette.fit, "s")
+        (self._bars,) = axes.plot([], [], color=colour, linewidth=1.0)
+        (self._line,) = axes.plot([], [], color=colour, linewidth=1.2, marker=marker, markersize=3.6)
+        axes.axhline(0.0, color=palette.hairline, linewidth=0.8, zorder=0)
+        axes.set_xlabel("pulse")
+        axes.set_ylabel("mean dF/F" if self._quantity == "amplitude" else "p_release")
+
+    def fill(self, axes: Axes) -> None:
+        """Show the means with their errors, or the probabilities with their intervals."""
+        pulses = self._pulses
+        self.say("" if pulses is not None and len(pulses) else "no bouton selected")
+        if pulses is None or not len(pulses):
+            return
+        at = pulses["pulse"].to_numpy(dtype=np.float64)
+        if self._quantity == "amplitude":
+            value = pulses["amplitude_mean"].to_numpy(dtype=np.float64)
+            error = pulses["amplitude_se"].to_numpy(dtype=np.float64)
+            low, high = value - error, value + error
+        else:
+            value, low, high = (
+                pulses[name].to_numpy(dtype=np.float64) for name in ("p_release", "p_release_lo", "p_release_hi")
+            )
+        self._line.set_data(at, value)
+        gap = np.full(len(at), np.nan)
+        self._bars.set_data(np.column_stack([at, at, at]).ravel(), np.column_stack([low, high, gap]).ravel())
+        known = np.concatenate([low, high, value])
+        known = known[np.isfinite(known)]
+        axes.set_xlim(0.4, at.max() + 0.6)
+        axes.locator_params(axis="x", integer=True)
+        if self._quantity == "p_release":
+            axes.set_ylim(-0.03, 1.03)
+            axes.set_yticks([0.0, 0.5, 1.0], ["0", "0.5", "1"])
+        elif known.size:
+            top, bottom = float(known.max()), min(float(known.min()), 0.0)
+            axes.set_ylim(bottom - 0.05 * (top - bottom), top + 0.1 * (top - bottom or 1.0))
