@@ -111,9 +111,13 @@ class SavedAnalysis:
             )
         return path
 
+    def made_from(self, movie: Movie) -> bool:
+        """Tell whether the movie has the content that was analysed, as far as that is known."""
+        return not movie.files or not self.movie_digest or content_digest(movie) == self.movie_digest
+
     def check_movie(self, movie: Movie) -> None:
         """Raise `SavedAnalysisError` unless the movie has the content that was analysed, as far as that is known."""
-        if movie.files and self.movie_digest and content_digest(movie) != self.movie_digest:
+        if not self.made_from(movie):
             raise SavedAnalysisError(
                 f"{movie.files[0]} is not the movie that {self.path} was made from (its content differs). "
                 "Give the right movie, or analyse this one with --settings instead of --from."

@@ -17,6 +17,7 @@ COMMANDS = {
     "simulate": "write a simulated movie, its protocol and its truth",
     "inspect": "say what a movie holds and whether it can be analysed",
     "analyse": "analyse one recording: boutons, release, quanta, report",
+    "view": "open a movie or a saved analysis in napari, with the docks",
 }
 
 DONE, FAILED, WRONG_INPUT, INTERRUPTED = 0, 1, 2, 130

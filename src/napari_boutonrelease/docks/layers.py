@@ -57,9 +57,14 @@ def lazy_frames(movie: Movie) -> Any:
 def add_movie(viewer: Any, movie: Movie, **settings: Any) -> Image:
     """Add a movie as an image layer that reads its frames as they are looked at."""
     layer = viewer.add_image(lazy_frames(movie), **(settings or movie_layer_settings(movie)))
+    own_movie(layer, movie)
+    return layer
+
+
+def own_movie(layer: Layer, movie: Movie) -> None:
+    """Note which movie a layer shows that the docks have made."""
     _MOVIES[layer] = (movie, layer.data)
     _OPENED.add(layer)
-    return layer
 
 
 def movie_layer_settings(movie: Movie) -> dict[str, Any]:
@@ -101,6 +106,14 @@ def on_plane(movie_layer: Layer) -> dict[str, Any]:
         "units": tuple(movie_layer.units[-2:]),
         "axis_labels": tuple(movie_layer.axis_labels[-2:]),
     }
+
+
+def lie_on(movie_layer: Layer, *layers: Layer | None) -> None:
+    """Let two-dimensional layers follow a movie that was calibrated anew."""
+    place = on_plane(movie_layer)
+    for layer in layers:
+        if layer is not None and (tuple(layer.scale), tuple(layer.units)) != (place["scale"], place["units"]):
+            layer.scale, layer.translate, layer.units = place["scale"], place["translate"], place["units"]
 
 
 def movie_of_layer(layer: Layer) -> Movie:

@@ -182,7 +182,7 @@ class Cursor:
 
     def keep_background(self) -> None:
         """Keep the picture without the line, and draw the line."""
-        self._background = self._plot.copy_from_bbox(self._axes.bbox)
+        self._background = self._plot.copy_from_bbox(self._axes.bbox.padded(2))
         self._axes.draw_artist(self._line)
 
     def move(self, at: float) -> None:
@@ -191,7 +191,7 @@ class Cursor:
         if self._background is not None and self._line.figure is not None:
             self._plot.restore_region(self._background)
             self._axes.draw_artist(self._line)
-            self._plot.blit(self._axes.bbox)
+            self._plot.blit(self._axes.bbox.padded(2))
 
 
 def say(axes: Axes, sentence: str, palette: Palette) -> None:

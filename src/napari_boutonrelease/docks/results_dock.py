@@ -1,0 +1,310 @@
+"""The Results dock: tables that follow the selection, export, report, and analyses opened again."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from qtpy.QtCore import QItemSelectionModel, Qt, QUrl
+from qtpy.QtGui import QDesktopServices, QKeySequence
+from qtpy.QtWidgets import (
+    QAbstractItemView,
+    QApplication,
+    QCheckBox,
+    QFileDialog,
+    QHBoxLayout,
+    QLineEdit,
+    QMessageBox,
+    QPushButton,
+    QShortcut,
+    QTableView,
+    QTabWidget,
+    QToolButton,
+)
+
+from ..analysis.columns import TABLES
+from ..analysis.run import put_together
+from ..analysis.summary import cautions_of
+from ..errors import InputError, OutputError
+from ..reports import check_can_write
+from ..reports.apart import write_result_apart
+from .layers import show_frame
+from .panel import Panel, sentence_label
+from .reopen import ask_and_reopen
+from .table_model import TableModel
+from .worker import ProgressRow
+
+if TYPE_CHECKING:
+    import napari
+
+    from ..analysis.measured import Measured
+    from ..analysis.progress import Progress
+    from ..recording import Movie
+
+_TITLES = {"boutons": "Boutons", "pulses": "Pulses", "responses": "Responses", "spontaneous": "Spontaneous"}
+_KEYS = ("bouton", "trial", "pulse")
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class TableTab:
+    """One table and its model."""
+
+    view: QTableView
+    rows: TableModel
+
+
+class ResultsDock(Panel):
+    """Last step: what was found."""
+
+    def __init__(self, napari_viewer: napari.viewer.Viewer) -> None:
+        super().__init__(napari_viewer)
+        self._following = False
+        self._stale_tabs: set[str] = set()
+        self._build()
+        self.link(self.model.measured_changed, self._show_measured)
+        self.link(self.model.recording_changed, self._show_measured)
+        self.link(self.model.settings_changed, self._show_state)
+        self.link(self.model.edits_changed, self._show_state)
+        self.link(self.model.selection_changed, self._follow_selection)
+        self._show_measured()
+
+    def _build(self) -> None:
+        self.tabs = QTabWidget()
+        self.tables = {name: self._make_table(name) for name in _TITLES}
+        for name, tab in self.tables.items():
+            self.tabs.addTab(tab.view, _TITLES[name])
+        self.tabs.setMinimumHeight(180)
+        self.tabs.currentChanged.connect(self._show_tab)
+        self.column.addWidget(self.tabs, 1)
+        self.only_selected = QCheckBox("Only the selected bouton")
+        self.only_selected.setToolTip(
+            "Show the pulses, responses and spontaneous releases of the selected bouton only."
+        )
+        self.only_selected.clicked.connect(self._show_measured)
+        self.copy_button = QPushButton("Copy")
+        self.copy_button.setToolTip("Copy the selected rows, or all, with their header (Ctrl+C).")
+        self.copy_button.clicked.connect(self.copy)
+        row = QHBoxLayout()
+        row.addWidget(self.only_selected, 1)
+        row.addWidget(self.copy_button)
+        self.column.addLayout(row)
+        shortcut = QShortcut(QKeySequence(QKeySequence.StandardKey.Copy), self.tabs)
+        shortcut.setContext(Qt.ShortcutContext.WidgetWithChildrenShortcut)
+        shortcut.activated.connect(self.copy)
+
+        self.folder = QLineEdit()
+        self.folder.setPlaceholderText("folder for the results")
+        self.folder.setAccessibleName("Folder for the results")
+        self.folder.setToolTip("Tables, traces, footprints, figures and report are written here.")
+        self.choose_button = QToolButton()
+        self.choose_button.setText("...")
+        self.choose_button.setToolTip("Choose another folder.")
+        self.choose_button.clicked.connect(self._ask_folder)
+        row = QHBoxLayout()
+        row.addWidget(self.folder, 1)
+        row.addWidget(self.choose_button)
+        self.column.addLayout(row)
+        self.export_button = QPushButton("Export")
+        self.export_button.clicked.connect(self.export)
+        self.report_button = QPushButton("Open report")
+        self.report_button.setToolTip("Show the report that was exported.")
+        self.report_button.clicked.connect(self.open_report)
+        self.reopen_button = QPushButton("Reopen...")
+        self.reopen_button.setToolTip("Open the analysis.json of an earlier export, with its movie and choices.")
+        self.reopen_button.clicked.connect(self._ask_reopen)
+        row = QHBoxLayout()
+        for button in (self.export_button, self.report_button, self.reopen_button):
+            row.addWidget(button)
+        self.column.addLayout(row)
+        self.progress = ProgressRow(self.runner)
+        self.column.addWidget(self.progress)
+        self.state = sentence_label()
+        self.column.addWidget(self.state)
+        self.cautions = sentence_label()
+        self.column.addWidget(self.cautions)
+        self.folder.textChanged.connect(self._show_state)
+        self.runner.changed.connect(self._show_state)
+        self.runner.failed.connect(self.state.setText)
+
+    def _make_table(self, name: str) -> TableTab:
+        rows = TableModel(TABLES[name])
+        view = QTableView()
+        view.setModel(rows)
+        view.setSelectionBehavior(QAbstractItemView.SelectionBehavior.SelectRows)
+        view.setEditTriggers(QAbstractItemView.EditTrigger.NoEditTriggers)
+        view.setHorizontalScrollMode(QAbstractItemView.ScrollMode.ScrollPerPixel)
+        view.setAlternatingRowColors(True)
+        view.setTabKeyNavigation(False)  # Tab leads on to the buttons
+        view.verticalHeader().setVisible(False)
+        view.verticalHeader().setDefaultSectionSize(22)
+        header = view.horizontalHeader()
+        header.setSortIndicatorShown(True)
+        header.setSortIndicator(-1, Qt.SortOrder.AscendingOrder)
+        view.setSortingEnabled(True)
+        view.selectionModel().selectionChanged.connect(self._select_from_table)
+        rows.modelReset.connect(self._follow_selection)
+        return TableTab(view=view, rows=rows)
+
+    # tables
+
+    def _show_measured(self, *_: object) -> None:
+        measured = self.model.measured
+        self._stale_tabs = set(self.tables)
+        self._show_tab()
+        movie = self.model.movie
+        if movie is not None and not self.folder.isModified():
+            self.folder.setText(str(default_folder(movie) or ""))
+        self.cautions.setText("" if measured is None else "\n".join(f"• {one}" for one in cautions_of(measured)))
+        self._show_state()
+
+    def _show_tab(self, *_: object) -> None:
+        """Fill the table that is in sight; the others wait until they are."""
+        name = list(self.tables)[self.tabs.currentIndex()]
+        self.only_selected.setEnabled(name != "boutons")
+        if name not in self._stale_tabs:
+            return
+        self._stale_tabs.discard(name)
+        tab = self.tables[name]
+        fresh = tab.rows.frame is None
+        if self.model.measured is None:
+            tab.rows.show(None)
+            return
+        frame = self.model.table(name)
+        if name != "boutons" and self.only_selected.isChecked():
+            frame = frame[frame["bouton"] == self.model.selection.bouton]
+        tab.rows.show(frame)
+        if fresh:
+            tab.view.resizeColumnsToContents()
+
+    def _follow_selection(self, *_: object) -> None:
+        """Select the rows of what is selected elsewhere."""
+        if self._following or not hasattr(self, "tables"):
+            return
+        if self.only_selected.isChecked() and self.sender() not in [tab.rows for tab in self.tables.values()]:
+            self._stale_tabs |= set(self.tables) - {"boutons"}
+            self._show_tab()
+        chosen = self.model.selection
+        self._following = True
+        try:
+            for name, tab in self.tables.items():
+                keys = {key: getattr(chosen, key) for key in _KEYS}
+                rows = [] if chosen.bouton is None else tab.rows.rows_where(**keys)
+                if name != "boutons" and chosen.trial is None and chosen.pulse is None:
+                    rows = rows[:1]  # the first of many: selecting them all would only colour the table
+                _select_rows(tab.view, rows)
+        finally:
+            self._following = False
+
+    def _select_from_table(self, *_: object) -> None:
+        """Select elsewhere what was selected in the table in sight."""
+        if self._following:
+            return
+        name = list(self.tables)[self.tabs.currentIndex()]
+        tab = self.tables[name]
+        index = tab.view.currentIndex()
+        if not index.isValid() or not tab.view.selectionModel().hasSelection():
+            return
+        row = tab.rows.row(index.row())
+        self._following = True
+        try:
+            self.model.select(**{key: int(row[key]) for key in _KEYS if key in row})
+        finally:
+            self._following = False
+        if name == "spontaneous" and self.model.measured is not None:
+            timing = self.model.measured.timing
+            show_frame(self.viewer, int(timing.frame_start_s.searchsorted(row["time_s"], side="right")) - 1)
+
+    def copy(self) -> None:
+        """Copy the selected rows of the table in sight, or all of it."""
+        tab = list(self.tables.values())[self.tabs.currentIndex()]
+        rows = sorted({index.row() for index in tab.view.selectionModel().selectedRows()})
+        text = tab.rows.as_text(rows)
+        if text:
+            QApplication.clipboard().setText(text)
+
+    # files
+
+    def export(self) -> None:
+        """Write everything into the folder, as the command line does; ask before results are replaced."""
+        text = self.folder.text().strip()
+        measured, pipeline = self.model.measured, self.model.pipeline
+        if not text or measured is None or pipeline is None:
+            return
+        folder = Path(text).expanduser()
+        try:
+            overwrite = self._may_replace(folder)
+        except InputError as error:
+            self.state.setText(str(error))
+            return
+        if overwrite is None:
+            return
+
+        def work(progress: Progress) -> Path:
+            progress(0, 0)
+            result = put_together(measured, pipeline=pipeline)
+            return write_result_apart(result, folder, overwrite=overwrite, progress=progress)
+
+        self.runner.run(work, self._exported, words="Exporting", kind="export")
+
+    def _may_replace(self, folder: Path) -> bool | None:
+        """Tell whether results are to be replaced; None if they are there and are not to be."""
+        check_can_write(folder, overwrite=True)
+        try:
+            check_can_write(folder, overwrite=False)
+        except OutputError:
+            answer = QMessageBox.question(self, "Replace results?", f"{folder} already holds results. Replace them?")
+            return True if answer == QMessageBox.StandardButton.Yes else None
+        return False
+
+    def _exported(self, folder: Path) -> None:
+        self._show_state()
+        self.state.setText(f"Exported to {folder}.")
+
+    def open_report(self) -> None:
+        """Show the exported report."""
+        QDesktopServices.openUrl(QUrl.fromLocalFile(str(self._report())))
+
+    def _report(self) -> Path:
+        return Path(self.folder.text().strip()).expanduser() / "report.pdf"
+
+    def _ask_folder(self) -> None:
+        path = QFileDialog.getExistingDirectory(self, "Folder for the results", self.folder.text())
+        if path:
+            self.folder.setText(path)
+            self.folder.setModified(True)
+
+    def _ask_reopen(self) -> None:
+        ask_and_reopen(self.viewer, self)
+
+    def _show_state(self, *_: object) -> None:
+        measured: Measured | None = self.model.measured
+        ready = measured is not None and not self.model.stale
+        self.export_button.setEnabled(ready and bool(self.folder.text().strip()) and not self.runner.busy)
+        self.report_button.setEnabled(bool(self.folder.text().strip()) and self._report().is_file())
+        self.copy_button.setEnabled(measured is not None)
+        if measured is None:
+            self.state.setText("Nothing was measured yet: choose a movie in the Recording dock and analyse it.")
+        elif not ready:
+            self.state.setText("Something has changed since the analysis: analyse again before exporting.")
+        else:
+            self.state.setText("")
+
+
+def default_folder(movie: Movie) -> Path | None:
+    """Return `<movie>.release` beside the movie; None for one that is no file."""
+    if not movie.files:
+        return None
+    first = movie.files[0]
+    beside = first.parent if len(movie.files) > 1 and movie.name == first.parent.resolve().name else first
+    return beside.with_name(f"{movie.name}.release")
+
+
+def _select_rows(view: QTableView, rows: list[int]) -> None:
+    selection = view.selectionModel()
+    selection.clearSelection()
+    flags = QItemSelectionModel.SelectionFlag.Select | QItemSelectionModel.SelectionFlag.Rows
+    for row in rows:
+        selection.select(view.model().index(row, 0), flags)
+    if rows:
+        view.scrollTo(view.model().index(rows[0], max(view.columnAt(0), 0)))

@@ -1,0 +1,94 @@
+"""Writing results in a process of its own: a window stays quick meanwhile, and nobody else's plots get in the way.
+
+Matplotlib's settings are global, so figures for the report must not be drawn while a window draws its own.
+"""
+
+from __future__ import annotations
+
+import json
+import pickle
+import subprocess
+import sys
+import tempfile
+from collections.abc import Callable
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from ..errors import InputError, OutputError
+from .export import write_result
+
+if TYPE_CHECKING:
+    from ..analysis.results import AnalysisResult
+
+_CHILD = "from napari_boutonrelease.reports.apart import _write; _write()"
+
+
+def write_result_apart(
+    result: AnalysisResult,
+    folder: Path,
+    *,
+    overwrite: bool,
+    progress: Callable[[int, int], None] | None = None,
+) -> Path:
+    """Do what `write_result` does in another process, and wait for it.
+
+    Parameters
+    ----------
+    result : AnalysisResult
+        What was found.
+    folder : Path
+        Folder to be made, or replaced if it holds results.
+    overwrite : bool
+        Whether results that are there may be replaced.
+    progress : callable, optional
+        Called with (done, total) files. Raising from it ends the writing; what was there stays as it was.
+
+    Returns
+    -------
+    Path
+        The folder.
+
+    Raises
+    ------
+    OutputError
+        As `write_result`, or if the process died.
+    """
+    with tempfile.TemporaryFile() as parcel, tempfile.TemporaryFile("w+", encoding="utf-8") as complaints:
+        pickle.dump((result, Path(folder).absolute(), overwrite), parcel)
+        parcel.seek(0)
+        child = subprocess.Popen(
+            [sys.executable, "-c", _CHILD],
+            stdin=parcel,
+            stdout=subprocess.PIPE,
+            stderr=complaints,
+            encoding="utf-8",
+        )
+        try:
+            for line in child.stdout or ():
+                told = json.loads(line)
+                if "error" in told:
+                    raise OutputError(told["error"])
+                if progress is not None:
+                    progress(told["done"], told["total"])
+            if child.wait():
+                complaints.seek(0)
+                last = (complaints.read().strip().splitlines() or [f"exit status {child.returncode}"])[-1]
+                raise OutputError(f"The results could not be written to {folder}: {last}.")
+            return Path(folder)
+        finally:
+            child.kill()
+            child.communicate()
+
+
+def _write() -> None:
+    """Write what comes in on stdin; say how far on stdout. Runs in the other process."""
+
+    def tell(**what: object) -> None:
+        sys.stdout.write(json.dumps(what) + "\n")
+        sys.stdout.flush()
+
+    result, folder, overwrite = pickle.load(sys.stdin.buffer)
+    try:
+        write_result(result, folder, overwrite=overwrite, progress=lambda done, total: tell(done=done, total=total))
+    except InputError as error:
+        tell(error=str(error))
