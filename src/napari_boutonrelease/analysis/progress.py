@@ -22,6 +22,7 @@ class StepProgress:
 
     def __init__(self, report: Progress | None, *, shares: dict[str, float]) -> None:
         self._report = report
+        self._done = 0  # a step that is done twice must not take the count back
         whole = sum(shares.values())
         self._begin: dict[str, float] = {}
         self._share = {name: share / whole for name, share in shares.items()}
@@ -37,7 +38,8 @@ class StepProgress:
         def advance(done: int, total: int) -> None:
             if self._report is not None:
                 part = done / total if total else 1.0
-                self._report(round(_TOTAL * (begin + share * min(part, 1.0))), _TOTAL)
+                self._done = max(self._done, round(_TOTAL * (begin + share * min(part, 1.0))))
+                self._report(self._done, _TOTAL)
 
         advance(0, 1)
         return advance

@@ -18,7 +18,7 @@ if TYPE_CHECKING:
     from .recording_step import Recording
 
 _MAP_BYTES = 500e6
-_CANDIDATE_RATIO = 2.0
+_CANDIDATE_RATIO = 1.6
 _RISE_OF_DECAY = 0.04
 
 
