@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from napari_boutonrelease.errors import InputError
+from ..errors import InputError
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray

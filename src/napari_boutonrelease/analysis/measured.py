@@ -11,9 +11,8 @@ if TYPE_CHECKING:
     import numpy as np
     from numpy.typing import NDArray
 
-    from napari_boutonrelease.recording import Drift, Protocol, Timing
-    from napari_boutonrelease.responses import AmplitudeFit, Responses, SpontaneousReleases
-
+    from ..recording import Drift, Protocol, Timing
+    from ..responses import AmplitudeFit, Responses, SpontaneousReleases
     from .hand_edits import HandEdits
     from .places import Places
     from .quantal_step import Counts, ReleaseFits

@@ -12,9 +12,8 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from psygnal import Signal
 
-from napari_boutonrelease.boutons import trace_axon
-from napari_boutonrelease.errors import InputError
-
+from ..boutons import trace_axon
+from ..errors import InputError
 from .hand_edits import HandEdits
 from .measured import Measured, Traced
 from .pipeline import Pipeline
@@ -22,6 +21,7 @@ from .progress import StepProgress
 from .quantal_step import count_releases
 from .run import put_together
 from .settings import Settings
+from .summary import summarise
 from .tables import bouton_table, pulse_table, response_table, spontaneous_table
 
 if TYPE_CHECKING:
@@ -30,8 +30,7 @@ if TYPE_CHECKING:
     import pandas as pd
     from numpy.typing import NDArray
 
-    from napari_boutonrelease.recording import Movie, Protocol
-
+    from ..recording import Movie, Protocol
     from .progress import Progress
     from .results import AnalysisResult
     from .sites import Sites
@@ -321,6 +320,18 @@ class AnalysisModel:
         if name not in self._tables:
             self._tables[name] = _TABLES[name](self._measured)
         return self._tables[name]
+
+    def summary(self) -> dict[str, Any]:
+        """Return the results of the whole axon, as the data dictionary describes them.
+
+        Raises
+        ------
+        InputError
+            If nothing was measured yet.
+        """
+        if self._measured is None:
+            raise InputError("Nothing was measured yet: run the analysis first.")
+        return summarise(self._measured)
 
     def result(self) -> AnalysisResult:
         """Put together all tables, arrays and provenance, as the command line writes them.

@@ -16,10 +16,10 @@ from typing import TYPE_CHECKING, Any, TypeVar
 
 import numpy as np
 
-from napari_boutonrelease.boutons import read_axon, read_positions
-from napari_boutonrelease.errors import AnalysisWarning, TooFewResponsesError
-from napari_boutonrelease.recording import resolve_timing
-from napari_boutonrelease.responses import (
+from ..boutons import read_axon, read_positions
+from ..errors import AnalysisWarning, TooFewResponsesError
+from ..recording import resolve_timing
+from ..responses import (
     ASSUMED_SHAPE,
     detect_spontaneous,
     extract_traces,
@@ -28,7 +28,6 @@ from napari_boutonrelease.responses import (
     plan_trial_windows,
     rest_s,
 )
-
 from .hand_edits import HandEdits
 from .measured import Measured, Traced
 from .places import Places, lay_footprints, take_footprints
@@ -44,11 +43,10 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
     from pydantic import BaseModel
 
-    from napari_boutonrelease.boutons import ResponseStack
-    from napari_boutonrelease.recording import Movie, Protocol
-    from napari_boutonrelease.response_shape import ResponseShape
-    from napari_boutonrelease.responses import AmplitudeFit, Responses
-
+    from ..boutons import ResponseStack
+    from ..recording import Movie, Protocol
+    from ..response_shape import ResponseShape
+    from ..responses import AmplitudeFit, Responses
     from .progress import Progress
     from .settings import Settings
 

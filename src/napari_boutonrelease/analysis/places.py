@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from napari_boutonrelease.boutons import Footprints, build_footprints
+from ..boutons import Footprints, build_footprints
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray

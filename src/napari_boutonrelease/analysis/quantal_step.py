@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from napari_boutonrelease.quanta import (
+from ..quanta import (
     AxonRelease,
     Estimate,
     LogPrior,
@@ -23,7 +23,7 @@ from napari_boutonrelease.quanta import (
     measure_pulse_pair,
     rogan_gladen,
 )
-from napari_boutonrelease.responses import AmplitudeFit, ReleaseCalls, call_releases
+from ..responses import AmplitudeFit, ReleaseCalls, call_releases
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray

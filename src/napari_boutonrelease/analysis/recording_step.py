@@ -8,9 +8,9 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from napari_boutonrelease.boutons import Optics
-from napari_boutonrelease.errors import AnalysisWarning
-from napari_boutonrelease.recording import (
+from ..boutons import Optics
+from ..errors import AnalysisWarning
+from ..recording import (
     Drift,
     Light,
     Movie,
@@ -24,8 +24,7 @@ from napari_boutonrelease.recording import (
 )
 
 if TYPE_CHECKING:
-    from napari_boutonrelease.recording import Protocol
-
+    from ..recording import Protocol
     from .progress import StepProgress
     from .settings import RecordingSettings
 

@@ -6,14 +6,12 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from napari_boutonrelease.boutons import ResponseStack, project_responses, scan_shapes
-from napari_boutonrelease.response_shape import ResponseShape
-
+from ..boutons import ResponseStack, project_responses, scan_shapes
+from ..response_shape import ResponseShape
 from .recording_step import BLOCK_FRAMES
 
 if TYPE_CHECKING:
-    from napari_boutonrelease.recording import Timing
-
+    from ..recording import Timing
     from .progress import Progress
     from .recording_step import Recording
 

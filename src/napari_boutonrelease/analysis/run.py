@@ -16,8 +16,7 @@ if TYPE_CHECKING:
     import numpy as np
     from numpy.typing import NDArray
 
-    from napari_boutonrelease.recording import Movie, Protocol
-
+    from ..recording import Movie, Protocol
     from .hand_edits import HandEdits
     from .progress import Progress
     from .settings import Settings

@@ -12,17 +12,15 @@ from typing import TYPE_CHECKING, Any, Literal
 import numpy as np
 from pydantic import ValidationError
 
-from napari_boutonrelease.errors import SavedAnalysisError
-from napari_boutonrelease.recording import Protocol, content_digest, file_digest, protocol_from_dict, protocol_to_dict
-
+from ..errors import SavedAnalysisError
+from ..recording import Protocol, content_digest, file_digest, protocol_from_dict, protocol_to_dict
 from .hand_edits import HandEdits, edits_from_dict
 from .settings import Settings
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
-    from napari_boutonrelease.recording import Movie
-
+    from ..recording import Movie
     from .pipeline import Measured, Pipeline
 
 FORMAT_VERSION = 1

@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from napari_boutonrelease.boutons import (
+from ..boutons import (
     detect_boutons,
     detect_by_shape,
     distance_along,
@@ -22,8 +22,7 @@ if TYPE_CHECKING:
 
     from numpy.typing import NDArray
 
-    from napari_boutonrelease.boutons import Maxima, ResponseStack
-
+    from ..boutons import Maxima, ResponseStack
     from .hand_edits import HandEdits
     from .recording_step import Recording
     from .settings import DetectionSettings

@@ -6,16 +6,14 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from napari_boutonrelease.quanta import binomial_failures, direct_vesicles, poisson_failures, vesicles_from_cv
-
+from ..quanta import binomial_failures, direct_vesicles, poisson_failures, vesicles_from_cv
 from .quantal_step import CONFIDENCE
 
 if TYPE_CHECKING:
     import pandas as pd
     from numpy.typing import NDArray
 
-    from napari_boutonrelease.quanta import AxonRelease
-
+    from ..quanta import AxonRelease
     from .pipeline import Measured
 
 _METHODS_FROM_AXON = "whole axon, this bouton's amplitudes"
@@ -123,7 +121,7 @@ def _selection_in_words(measured: Measured, known: NDArray[np.bool_]) -> str:
 def _mean_with_interval(
     axon: AxonRelease, chosen: NDArray[np.bool_]
 ) -> tuple[float | None, float | None, float | None]:
-    """Mean p_release over boutons and its 95 % interval: Student's t over boutons; if all are silent, of their limits."""
+    """Mean p_release over boutons and its 95 % interval: Student's t; the mean of their limits if all are silent."""
     values = axon.p_release[chosen, 0]
     if values.size == 0:
         return None, None, None
@@ -140,7 +138,7 @@ def _mean_with_interval(
 
 def _population_ratio(measured: Measured, known: NDArray[np.bool_]) -> tuple[float | None, float | None, float | None]:
     """Second over first amplitude, summed over boutons: none need be left out. Interval over trials (Fieller 1954)."""
-    from napari_boutonrelease.quanta import fieller_interval
+    from ..quanta import fieller_interval
 
     amplitude = measured.amplitudes.amplitude
     if amplitude.shape[2] < 2 or not known.any():
@@ -223,7 +221,7 @@ def estimates_table(measured: Measured, *, row: int | None = None) -> pd.DataFra
 
 
 def _wilson(called: int, trials: int) -> tuple[float, float]:
-    from napari_boutonrelease.quanta import wilson_interval
+    from ..quanta import wilson_interval
 
     lo, hi = wilson_interval(called, trials, confidence=CONFIDENCE)
     return float(lo), float(hi)

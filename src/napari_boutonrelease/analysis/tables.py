@@ -6,11 +6,10 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from napari_boutonrelease.boutons import crosstalk_matrix
-from napari_boutonrelease.flags import join_flags
-from napari_boutonrelease.quanta import wilson_interval
-from napari_boutonrelease.responses import measure_rundown
-
+from ..boutons import crosstalk_matrix
+from ..flags import join_flags
+from ..quanta import wilson_interval
+from ..responses import measure_rundown
 from .columns import TABLES
 from .quantal_step import CONFIDENCE
 

@@ -13,17 +13,17 @@ from typing import TYPE_CHECKING
 import numpy as np
 from scipy.special import chdtri
 
-from napari_boutonrelease.errors import InputError
-from napari_boutonrelease.quanta.fit_inputs import (
+from ..errors import InputError
+from .fit_inputs import (
     BoutonData,
     ReleasePriors,
     poisson_terms,
     read_bouton_data,
 )
-from napari_boutonrelease.quanta.goodness import goodness_of_fit
-from napari_boutonrelease.quanta.intervals import Estimate
-from napari_boutonrelease.quanta.likelihoods import component_logpdf, vesicle_posterior
-from napari_boutonrelease.quanta.mixture_fit import (
+from .goodness import goodness_of_fit
+from .intervals import Estimate
+from .likelihoods import component_logpdf, vesicle_posterior
+from .mixture_fit import (
     NOISE,
     RELEASE,
     SIZE,
@@ -32,7 +32,7 @@ from napari_boutonrelease.quanta.mixture_fit import (
     maximise,
     release_log_weights,
 )
-from napari_boutonrelease.quanta.site_search import (
+from .site_search import (
     MAX_STEPS,
     TOLERANCE,
     Family,

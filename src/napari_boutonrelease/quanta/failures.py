@@ -6,9 +6,9 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from napari_boutonrelease.checks import check_not_negative, check_positive
-from napari_boutonrelease.errors import InputError
-from napari_boutonrelease.quanta.intervals import Estimate, _normal_quantile, wilson_interval
+from ..checks import check_not_negative, check_positive
+from ..errors import InputError
+from .intervals import Estimate, _normal_quantile, wilson_interval
 
 if TYPE_CHECKING:
     from numpy.typing import ArrayLike, NDArray

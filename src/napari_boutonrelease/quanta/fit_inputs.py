@@ -7,10 +7,10 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from napari_boutonrelease.checks import check_array
-from napari_boutonrelease.errors import InputError
-from napari_boutonrelease.quanta.likelihoods import component_logpdf
-from napari_boutonrelease.quanta.mixture_fit import (
+from ..checks import check_array
+from ..errors import InputError
+from .likelihoods import component_logpdf
+from .mixture_fit import (
     N_PARAMETERS,
     NOISE,
     RELEASE,

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from scipy.special import ndtr
 
-from napari_boutonrelease.quanta.mixture_fit import (
+from .mixture_fit import (
     NOISE,
     RELEASE,
     SIZE,

@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING, Literal
 import numpy as np
 from scipy.special import bdtr, betaincinv, chdtrc, ndtri
 
-from napari_boutonrelease.errors import InputError
+from ..errors import InputError
 
 if TYPE_CHECKING:
     from numpy.typing import ArrayLike, NDArray

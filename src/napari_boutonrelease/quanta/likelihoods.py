@@ -11,8 +11,8 @@ from typing import TYPE_CHECKING
 import numpy as np
 from scipy.special import gammaln, xlog1py, xlogy
 
-from napari_boutonrelease.checks import check_fraction, check_not_negative, check_positive
-from napari_boutonrelease.errors import InputError
+from ..checks import check_fraction, check_not_negative, check_positive
+from ..errors import InputError
 
 if TYPE_CHECKING:
     from numpy.typing import ArrayLike, NDArray

@@ -8,9 +8,9 @@ from typing import TYPE_CHECKING
 import numpy as np
 from scipy.special import logsumexp, ndtr
 
-from napari_boutonrelease.checks import check_array, check_positive
-from napari_boutonrelease.errors import InputError
-from napari_boutonrelease.quanta.likelihoods import poisson_log_weights
+from ..checks import check_array, check_positive
+from ..errors import InputError
+from .likelihoods import poisson_log_weights
 
 if TYPE_CHECKING:
     from collections.abc import Callable

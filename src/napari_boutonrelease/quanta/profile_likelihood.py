@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from napari_boutonrelease.quanta.mixture_fit import Problems, derivatives, maximise
+from .mixture_fit import Problems, derivatives, maximise
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray

@@ -8,10 +8,10 @@ from typing import TYPE_CHECKING, Literal
 import numpy as np
 from scipy.special import gammaln, stdtr
 
-from napari_boutonrelease.checks import check_positive
-from napari_boutonrelease.errors import InputError
-from napari_boutonrelease.quanta.intervals import Estimate, mcnemar_test, wilson_interval
-from napari_boutonrelease.quanta.ratios import (
+from ..checks import check_positive
+from ..errors import InputError
+from .intervals import Estimate, mcnemar_test, wilson_interval
+from .ratios import (
     bootstrap_ratio_interval,
     complete_pairs,
     fieller_interval,

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from scipy.special import erfcx, ndtr, stdtrit
 
-from napari_boutonrelease.errors import InputError
+from ..errors import InputError
 
 if TYPE_CHECKING:
     from numpy.typing import ArrayLike, NDArray

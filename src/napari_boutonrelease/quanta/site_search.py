@@ -8,8 +8,8 @@ from typing import TYPE_CHECKING
 import numpy as np
 from scipy.special import expit
 
-from napari_boutonrelease.quanta.fit_inputs import BoutonData, ReleasePriors, make_problems, starting_points
-from napari_boutonrelease.quanta.mixture_fit import (
+from .fit_inputs import BoutonData, ReleasePriors, make_problems, starting_points
+from .mixture_fit import (
     NOISE,
     RELEASE,
     SIZE,
@@ -18,7 +18,7 @@ from napari_boutonrelease.quanta.mixture_fit import (
     log_likelihood,
     maximise,
 )
-from napari_boutonrelease.quanta.profile_likelihood import profile_ends
+from .profile_likelihood import profile_ends
 
 if TYPE_CHECKING:
     from collections.abc import Sequence

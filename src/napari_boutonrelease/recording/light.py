@@ -12,8 +12,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from napari_boutonrelease.errors import InputError
-
+from ..errors import InputError
 from .bad_frames import LOOK_AHEAD_FRAMES, FrameLevels
 from .cubic_convolution import shift_frame_block
 

@@ -12,9 +12,8 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from napari_boutonrelease.checks import check_positive
-from napari_boutonrelease.errors import InputError
-
+from ..checks import check_positive
+from ..errors import InputError
 from .cubic_convolution import shift_frame_block
 from .light import photon_transfer_line
 from .random_walk import smooth_random_walk
