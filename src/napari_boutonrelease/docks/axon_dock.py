@@ -1,0 +1,111 @@
+"""The Axon dock: the map coloured by any number, that number along the axon, and the population in words."""
+
+from __future__ import annotations
+
+from types import SimpleNamespace
+from typing import TYPE_CHECKING, Any
+
+from qtpy.QtGui import QResizeEvent
+from qtpy.QtWidgets import QBoxLayout, QCheckBox, QComboBox, QHBoxLayout, QLabel, QSizePolicy, QVBoxLayout
+
+from ..reports.words import headlines
+from .axon_plot import COLUMNS, AxonPlot, choices, title
+from .bouton_layers import bouton_layers_of
+from .panel import Panel, sentence_label
+from .worker import ProgressRow
+
+if TYPE_CHECKING:
+    import napari
+
+_WIDE_PX = 640
+_STALE = "Boutons or settings have changed since these numbers were measured."
+
+
+class AxonDock(Panel):
+    """Fifth step: all boutons of the axon together."""
+
+    def __init__(self, napari_viewer: napari.viewer.Viewer) -> None:
+        super().__init__(napari_viewer)
+        self.layers = bouton_layers_of(self.viewer)
+        self._filling = False
+        self.shown = QComboBox()
+        self.shown.setAccessibleName("Number shown")
+        self.shown.setSizeAdjustPolicy(QComboBox.SizeAdjustPolicy.AdjustToMinimumContentsLengthWithIcon)
+        self.shown.setMinimumContentsLength(18)
+        self.shown.currentIndexChanged.connect(self._choose)
+        self.colour = QCheckBox("Colour the marks")
+        self.colour.setToolTip("Colour the marks in the image by this number, with a colour bar; else by how found.")
+        self.colour.setChecked(self.layers.column is not None)
+        self.colour.toggled.connect(self._colour)
+        self.meaning = QLabel()
+        self.meaning.setSizePolicy(QSizePolicy.Policy.Ignored, QSizePolicy.Policy.Preferred)
+        row = QHBoxLayout()
+        row.addWidget(self.shown)
+        row.addWidget(self.colour)
+        row.addWidget(self.meaning, 1)
+        self.plot = AxonPlot(self)
+        self.words = sentence_label()
+        self.stale = sentence_label(_STALE)
+        self.column.addLayout(row)
+        beside = QVBoxLayout()
+        beside.addWidget(self.stale)
+        beside.addWidget(self.words)
+        beside.addStretch(1)
+        self.parts = QBoxLayout(QBoxLayout.Direction.TopToBottom)
+        self.parts.addWidget(self.plot, 2)
+        self.parts.addLayout(beside, 1)
+        self.column.addLayout(self.parts, 1)
+        self.column.addWidget(ProgressRow(self.runner, self))
+        self.link(self.model.recording_changed, self._show)
+        self.link(self.model.measured_changed, self._show)
+        self.link(self.model.selection_changed, self.plot.refresh)
+        self.link(self.model.settings_changed, self._show_state)
+        self.link(self.model.edits_changed, self._show_state)
+        self._show()
+
+    def resizeEvent(self, event: QResizeEvent) -> None:
+        """Put the words beside the plot where there is room, else below."""
+        super().resizeEvent(event)
+        wide = event.size().width() > _WIDE_PX
+        self.parts.setDirection(QBoxLayout.Direction.LeftToRight if wide else QBoxLayout.Direction.TopToBottom)
+
+    def _show(self) -> None:
+        measured = self.model.measured
+        self._filling = True
+        names = [] if measured is None else choices(self.model.table("boutons"))
+        wanted = self.layers.column or self.plot.column
+        if names != [self.shown.itemData(i) for i in range(self.shown.count())]:
+            self.shown.clear()
+            for name in names:
+                self.shown.addItem(title(COLUMNS[name]), name)
+        if names:
+            self.shown.setCurrentIndex(names.index(wanted) if wanted in names else 0)
+        self._filling = False
+        self.shown.setEnabled(bool(names))
+        self.colour.setEnabled(bool(names))
+        self._choose()
+        self.words.setText("" if measured is None else self._population())
+        self.words.setVisible(measured is not None)
+        self._show_state()
+
+    def _show_state(self) -> None:
+        self.stale.setVisible(self.model.stale)
+
+    def _population(self) -> str:
+        result: Any = SimpleNamespace(boutons=self.model.table("boutons"), summary=self.model.summary())
+        return " ".join(headlines(result))
+
+    def _choose(self, *_: object) -> None:
+        if self._filling:
+            return
+        name = self.shown.currentData()
+        if name is not None:
+            self.plot.column = name
+            self.meaning.setText(COLUMNS[name].meaning)
+            self.meaning.setToolTip(COLUMNS[name].meaning)
+            if self.colour.isChecked():
+                self.layers.colour_by(name)
+        self.plot.refresh()
+
+    def _colour(self, on: bool) -> None:
+        self.layers.colour_by(self.plot.column if on else None)
