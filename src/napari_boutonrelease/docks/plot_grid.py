@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 
+from qtpy.QtCore import QSize
 from qtpy.QtGui import QResizeEvent
 from qtpy.QtWidgets import QGridLayout, QSizePolicy, QWidget
 
@@ -37,6 +38,11 @@ class PlotGrid(QWidget):
             self._left_out ^= {plot}
             self._now = (0, 0)
             self._arrange()
+
+    def minimumSizeHint(self) -> QSize:
+        """Need no more width than one column: in less width there will be fewer of them."""
+        widths = [plot.minimumSizeHint().expandedTo(plot.minimumSize()).width() for plot, _ in self._plots]
+        return QSize(max(widths, default=0), self._grid.minimumSize().height())
 
     def resizeEvent(self, event: QResizeEvent) -> None:
         """Choose as many columns as are wide enough: all plots in one row, or half of them, or one."""

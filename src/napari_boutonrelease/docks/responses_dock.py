@@ -19,7 +19,7 @@ from qtpy.QtWidgets import (
 )
 from superqt import QFlowLayout
 
-from ..reports.words import fixed, short
+from ..reports.words import expected_count, fixed
 from .amplitude_plot import AmplitudePlot
 from .layers import current_frame, show_frame
 from .panel import Panel, sentence_label
@@ -39,6 +39,7 @@ _REASONS = ("failed stimulus", "movement", "out of focus", "artefact")
 _NO_REASON = "by hand"
 _LEAST_SD = 0.1
 _COLUMN_PX = 250
+_WIDEST_COSTS = "000 of 000 called  ·  <0.01 by noise  ·  <0.01 missed"
 _THRESHOLD_TIP = "Amplitude above which a response counts as a release, for all boutons"
 _HELP = (
     "Keys: ↑ ↓ bouton, ← → trial, X leave the trial out or take it back.  "
@@ -55,7 +56,7 @@ class ResponsesDock(Panel):
         self.message = sentence_label(NOTHING_YET)
         self.content = QWidget()
         self.trace = TracePlot(self, on_click=self._go_to_time)
-        self.trials = TrialPlot(self)
+        self.trials = TrialPlot(self, on_click=self._go_to_trial)
         self.amplitudes = AmplitudePlot(self, on_click=self._go_to_trial, on_drag=self._drag_threshold)
         self.raster = RasterPlot(self, on_click=self._go_to_call)
         self._add_controls()
@@ -103,7 +104,8 @@ class ResponsesDock(Panel):
         self.threshold.setToolTip(_THRESHOLD_TIP)
         self.threshold.valueChanged.connect(self._choose_threshold)
         self.costs = QLabel()
-        self.costs.setMinimumWidth(250)  # room for longer numbers, so that nothing jumps while the line is dragged
+        # Room for the longest numbers, so that nothing jumps while the line is dragged.
+        self.costs.setMinimumWidth(self.costs.fontMetrics().horizontalAdvance(_WIDEST_COSTS))
         self.costs.setToolTip(
             "Called: amplitudes above the threshold. By noise: calls to expect if nothing were released. "
             "Missed: releases that the fitted model expects to stay below it."
@@ -113,12 +115,12 @@ class ResponsesDock(Panel):
         self.reason.addItems(_REASONS)
         self.reason.setCurrentText("")
         self.reason.lineEdit().setPlaceholderText("reason")
-        self.reason.setToolTip("Why the trial is left out; it is written into the table of responses")
+        self.reason.setToolTip("Why the trial is left out (choose or type); it is written into the table of responses")
         self.exclude = QPushButton()
         self.exclude.setToolTip("Leave the trial out of every estimate, or take it back (key X). Can be undone.")
         self.exclude.clicked.connect(self.toggle_excluded)
         self.again = QPushButton("Analyse again")
-        self.again.setToolTip("Trials, boutons or settings have changed since: bring all numbers up to date")
+        self.again.setToolTip("Bring all numbers up to date, where trials, boutons or settings have changed since")
         self.again.clicked.connect(self._analyse_again)
         self.bouton.setMaximumWidth(70)
         self.pulse.setMaximumWidth(60)
@@ -132,7 +134,8 @@ class ResponsesDock(Panel):
             (QLabel("Bouton"), self.bouton),
             (QLabel("Trial"), self.trial),
             (self.pulse_label, self.pulse),
-            (QLabel("Threshold"), self.threshold, self.costs),
+            (QLabel("Threshold"), self.threshold),
+            (self.costs,),
             (self.reason, self.exclude),
             (self.again,),
         ):
@@ -187,8 +190,8 @@ class ResponsesDock(Panel):
             self.exclude.setText(
                 f"Take trial {shown.trial + 1} back" if left_out else f"Leave trial {shown.trial + 1} out"
             )
-        if left_out and shown.trial is not None:
-            self.reason.setCurrentText(shown.excluded[shown.trial])
+        reason = shown.excluded[shown.trial] if left_out and shown.trial is not None else "reason"
+        self.reason.lineEdit().setPlaceholderText(reason)
         self._filling = False
 
     def _show_costs(self, shown: ShownBouton) -> None:
@@ -196,15 +199,15 @@ class ResponsesDock(Panel):
         missed = counts.missed_expected[at]
         words = [
             f"{counts.calls.n_called[at]} of {counts.calls.n_trials[at]} called",
-            f"{short(float(counts.calls.false_calls_expected[at]))} by noise",
+            f"{expected_count(float(counts.calls.false_calls_expected[at]))} by noise",
         ]
         if np.isfinite(missed):
-            words.append(f"{short(float(missed))} missed")
+            words.append(f"{expected_count(float(missed))} missed")
         self.threshold.setToolTip(f"{_THRESHOLD_TIP}: {fixed(shown.threshold, decimals=3)} dF/F for this one")
         self.costs.setText("  ·  ".join(words))
 
     def _show_state(self) -> None:
-        self.again.setVisible(self.model.stale)
+        self.again.setEnabled(self.model.stale)
 
     def _follow_frame(self, *_: object) -> None:
         self.trace.show_frame(current_frame(self.viewer))
@@ -267,7 +270,9 @@ class ResponsesDock(Panel):
         if shown.trial in shown.excluded:
             self.model.edit(edits.include(trial))
         else:
-            self.model.edit(edits.exclude(trial, self.reason.currentText().strip() or _NO_REASON))
+            reason = self.reason.currentText().strip() or _NO_REASON
+            self.reason.setCurrentText("")  # it holds for this trial, not for the next
+            self.model.edit(edits.exclude(trial, reason))
 
     def _analyse_again(self) -> None:
         run_analysis_step(self.model)

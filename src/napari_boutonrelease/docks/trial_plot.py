@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+from typing import Any
+
 import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.collections import LineCollection
@@ -16,25 +19,38 @@ from ..reports.aligned_trials import (
     mean_of_trials,
 )
 from ..reports.figures_trials import time_unit
-from .live_plot import LivePlot
+from .live_plot import CLICK_PX, LivePlot
 from .panel import Panel
 from .plots import Palette
 from .shown_bouton import ShownBouton
 
 _MOST_LINES = 200
+_REACH_PX = 14.0
 
 
 class TrialPlot(LivePlot):
-    """Trials of one bouton, aligned on pulse 1."""
+    """Trials of one bouton, aligned on pulse 1.
+
+    Parameters
+    ----------
+    panel : Panel
+        The dock.
+    on_click : callable
+        Called with the index of the trial whose line was clicked.
+    """
 
     margins_px = (54.0, 22.0, 10.0, 34.0)
 
-    def __init__(self, panel: Panel) -> None:
+    def __init__(self, panel: Panel, *, on_click: Callable[[int], None]) -> None:
+        self._on_click = on_click
+        self._pressed: tuple[float, float] | None = None
         self._shown: ShownBouton | None = None
         self._trials: AlignedTrials | None = None
         self._colours = ("", "")
         super().__init__(panel)
-        self.setToolTip("Trials aligned on their first stimulus; those called releases are coloured.")
+        self.setToolTip("Trials aligned on their first stimulus; releases are coloured. Click one to select it.")
+        self.mpl_connect("button_press_event", self._press)
+        self.mpl_connect("button_release_event", self._release)
 
     def show_bouton(self, shown: ShownBouton | None) -> None:
         """Show another bouton, or the same with other results."""
@@ -131,6 +147,24 @@ class TrialPlot(LivePlot):
             hollow = shown.trial in shown.excluded or not shown.kept[shown.trial]
             self._selected.set_linestyle("--" if hollow else "-")
             self._selected.set_fillstyle("none" if hollow else "full")
+
+    def _press(self, event: Any) -> None:
+        if event.button == 1 and event.inaxes is self.axes:
+            self._pressed = (event.x, event.y)
+
+    def _release(self, event: Any) -> None:
+        pressed, self._pressed = self._pressed, None
+        trials, axes = self._trials, self.axes
+        if pressed is None or trials is None or axes is None:
+            return
+        if np.hypot(event.x - pressed[0], event.y - pressed[1]) > CLICK_PX:
+            return
+        points = np.column_stack([self._factor * trials.since_s.ravel(), trials.level.ravel()])
+        known = np.isfinite(points).all(axis=1)
+        distance = np.full(len(points), np.inf)
+        distance[known] = np.hypot(*(axes.transData.transform(points[known]) - (event.x, event.y)).T)
+        if distance.min() <= _REACH_PX * self.device_pixel_ratio:
+            self._on_click(int(trials.trial[np.argmin(distance) // trials.level.shape[1]]))
 
 
 def _cut(shown: ShownBouton) -> AlignedTrials | None:

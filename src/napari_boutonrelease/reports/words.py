@@ -44,6 +44,17 @@ def short(value: float, *, digits: int = 2) -> str:
     return f"{value:.{decimals}f}".replace("-", "−")
 
 
+def expected_count(count: float) -> str:
+    """Write how many to expect; what is practically none is not written out.
+
+    Examples
+    --------
+    >>> expected_count(1.234), expected_count(3e-9), expected_count(float("nan"))
+    ('1.2', '<0.01', '–')
+    """
+    return "<0.01" if 0 < count < 0.01 else short(count)
+
+
 def fixed(value: float, *, decimals: int = 2) -> str:
     """Write a number with so many decimals, or a dash.
 

@@ -1,0 +1,280 @@
+"""The Quantal dock: what it shows is what was measured, and it says in words what cannot be known."""
+
+import numpy as np
+import pytest
+from napari.components import ViewerModel
+from qtpy.QtWidgets import QApplication
+
+from napari_boutonrelease.analysis.hand_edits import HandEdits
+from napari_boutonrelease.analysis.model import AnalysisModel, compute
+from napari_boutonrelease.analysis.settings import Settings
+from napari_boutonrelease.analysis.summary import estimates_table
+from napari_boutonrelease.docks.panel import model_of
+from napari_boutonrelease.docks.quantal_dock import QuantalDock
+from napari_boutonrelease.docks.responses_dock import NOTHING_YET
+from napari_boutonrelease.flags import FLAGS
+from napari_boutonrelease.recording import movie_from_array
+from napari_boutonrelease.simulation import BoutonRecipe, preset_recipe, simulate_recording
+
+QUICK = Settings.model_validate({"quanta": {"n_max": 4, "bootstrap": 0}, "pairs": {"bootstrap": 100}})
+N_TRIALS = 24
+SILENT, BUSY = 1, 2  # ids
+
+
+def record(pulses, folder):
+    """A silent and a busy bouton, at given places."""
+    boutons = tuple(
+        BoutonRecipe(y_px=16.0, x_px=x, n_sites=3, p_site=p, q_dff=0.5, f0_photons=30.0)
+        for x, p in ((14.0, 0.0), (40.0, 0.35))
+    )
+    recipe = preset_recipe(
+        "fast-pair", height_px=32, width_px=56, trials=N_TRIALS, trial_interval_s=0.8, pulses=pulses, boutons=boutons,
+        specks_on_axon=0, specks_off_axon=0, wander_um=0.0, drift_walk_px=0.0, spontaneous_per_s=0.0,
+    )  # fmt: skip
+    simulation = simulate_recording(recipe, rng=np.random.default_rng(5))
+    places = folder / "places.csv"
+    places.write_text("y_px,x_px\n16,14\n16,40\n")
+    movie = movie_from_array(
+        simulation.frames, frame_interval_s=recipe.frame_interval_s, pixel_size_um=recipe.pixel_size_um
+    )
+    model = AnalysisModel()
+    model.open(movie, simulation.protocol, boutons=places)
+    model.settings = QUICK
+    return movie, simulation.protocol, places, compute(model.request())
+
+
+@pytest.fixture(scope="module")
+def train(tmp_path_factory):
+    return record(3, tmp_path_factory.mktemp("train"))
+
+
+@pytest.fixture(scope="module")
+def single(tmp_path_factory):
+    return record(1, tmp_path_factory.mktemp("single"))
+
+
+def fill(model, recording):
+    movie, protocol, places, measured = recording
+    model.open(movie, protocol, boutons=places)
+    model.settings = QUICK
+    model.accept(model.request(), measured)
+
+
+def settle(dock):
+    for _ in range(3):
+        QApplication.processEvents()
+    while dock._calm.isActive():
+        QApplication.processEvents()
+    for _ in range(3):
+        QApplication.processEvents()
+
+
+@pytest.fixture
+def show(qtbot):
+    """Open a dock on a recording, at the size it has at the bottom of a small window."""
+    docks = []
+
+    def open_dock(recording):
+        dock = QuantalDock(ViewerModel())
+        docks.append(dock)
+        qtbot.addWidget(dock)
+        dock.resize(1346, 230)
+        dock.show()
+        if recording is not None:
+            fill(dock.model, recording)
+        settle(dock)
+        return dock
+
+    yield open_dock
+    for dock in docks:
+        dock.unlink()
+
+
+def rows(table):
+    return [
+        tuple(table.item(line, column).text() for column in range(table.columnCount()))
+        for line in range(table.rowCount())
+    ]
+
+
+def test_says_what_to_do_before_anything_is_measured(show):
+    dock = show(None)
+    assert dock.message.isVisible()
+    assert dock.message.text() == NOTHING_YET
+    assert not dock.content.isVisible()
+
+
+def test_silent_bouton_is_called_so_with_its_upper_limit(show, train):
+    dock = show(train)
+    assert dock.bouton.currentText() == str(SILENT)
+    words = dock.words.text()
+    limit = dock.model.measured.release.axon.p_release_hi[SILENT - 1, 0]
+    assert "Silent" in words
+    assert f"{limit:.2f}" in words
+    assert FLAGS["silent"].meaning in words
+    assert FLAGS["silent"].advice in words
+    assert not dock.sites.axes.get_visible()
+    assert "cannot" in dock.sites.figure.texts[0].get_text()
+    assert len(dock.histogram.axes.collections[0].get_segments()) == 0  # no model
+
+
+def test_bouton_with_several_numbers_of_sites_is_called_unresolved(show, train):
+    dock = show(train)
+    dock.bouton.setCurrentIndex(BUSY - 1)
+    settle(dock)
+    members = dock.model.measured.release.axon.n_set[BUSY - 1]
+    assert len(members) > 1
+    words = dock.words.text()
+    assert "unresolved" in words
+    assert FLAGS["n_unresolved"].advice in words
+    full = [bar for bar in dock.sites.axes.patches if bar.get_fill()]
+    assert [round(bar.get_x() + 0.4) for bar in full] == list(members)
+    heights = [bar.get_height() for bar in dock.sites.axes.patches]
+    assert sum(heights) == pytest.approx(1.0, abs=0.01)
+
+
+def test_histogram_holds_every_trial_and_the_model_as_many(show, train):
+    dock = show(train)
+    dock.bouton.setCurrentIndex(BUSY - 1)
+    settle(dock)
+    axes = dock.histogram.axes
+    evoked = axes.patches[0].get_data()
+    assert evoked.values.sum() == N_TRIALS
+    model = next(line for line in axes.lines if len(line.get_xdata()) > 100)
+    x, y = np.asarray(model.get_xdata()), np.asarray(model.get_ydata())
+    assert np.trapezoid(y, x) / np.diff(evoked.edges)[0] == pytest.approx(N_TRIALS, rel=0.05)
+    assert len(axes.collections[0].get_segments()) == dock.model.measured.release.axon.n_sites[BUSY - 1] + 1
+    first = evoked.values.copy()
+    dock.pulse.setCurrentIndex(2)
+    settle(dock)
+    assert dock.model.selection.pulse == 3
+    assert "pulse 3" in axes.get_xlabel()
+    assert not np.array_equal(axes.patches[0].get_data().values, first)
+
+
+def test_every_estimate_stands_in_the_table(show, train):
+    dock = show(train)
+    dock.bouton.setCurrentIndex(BUSY - 1)
+    settle(dock)
+    expected = estimates_table(dock.model.measured)
+    expected = expected[expected["bouton"] == BUSY]
+    shown = rows(dock.estimates)
+    assert len(shown) == len(expected)
+    assert sorted(method for *_, method in shown) == sorted(expected["method"])
+    assert [quantity for quantity, *_ in shown if quantity] == [
+        "p_release",
+        "m (vesicles)",
+        "n_sites",
+        "p_site",
+        "q (dF/F)",
+    ]
+    best = expected.iloc[0]
+    assert shown[0][1] == f"{best['value']:.2f} ({best['lo']:.2f}–{best['hi']:.2f})"
+
+
+def test_pulse_pair_shows_ratio_and_history(show, train):
+    dock = show(train)
+    dock.bouton.setCurrentIndex(BUSY - 1)
+    settle(dock)
+    measured = dock.model.measured
+    pair, history = measured.release.pairs[BUSY - 1], measured.counts.histories[BUSY - 1]
+    assert f"{pair.ppr.value:.2f}" in dock.pair.axes.get_title(loc="right")
+    corners = [text.get_text() for text in dock.pair.axes.texts]
+    assert f"both: {history.both}" in corners
+    assert f"neither: {history.neither}" in corners
+    table = dict(rows(dock.pairs))
+    assert table["P(release 2 | release 1)"].startswith(f"{history.after_release.value:.2f} (")
+    assert table["paired-pulse ratio of amplitudes"].startswith(f"{pair.ppr.value:.2f} (")
+    assert table["verdict, corrected for the number of boutons"] == measured.release.verdicts[BUSY - 1]
+
+
+def test_train_follows_the_pulse_number(show, train):
+    dock = show(train)
+    dock.bouton.setCurrentIndex(BUSY - 1)
+    settle(dock)
+    assert dock.train.isVisible()
+    pulses = dock.model.table("pulses")
+    mine = pulses[pulses["bouton"] == BUSY]
+    for plot, column in ((dock.amplitude_train, "amplitude_mean"), (dock.release_train, "p_release")):
+        drawn = next(line for line in plot.axes.lines if len(line.get_xdata()) == 3)
+        np.testing.assert_array_equal(drawn.get_xdata(), [1, 2, 3])
+        np.testing.assert_allclose(drawn.get_ydata(), mine[column])
+
+
+def test_single_pulses_leave_no_room_for_pairs(show, single):
+    dock = show(single)
+    assert dock.histogram.isVisible()
+    assert not dock.pair.isVisible()
+    assert not dock.train.isVisible()
+    assert not dock.tables.isTabVisible(1)
+    assert not dock.pulse.isVisible()
+    fill(dock.model, single)
+    settle(dock)
+
+
+def test_dock_follows_another_recording(show, single, train):
+    dock = show(single)
+    fill(dock.model, train)
+    settle(dock)
+    assert dock.pair.isVisible()
+    assert dock.train.isVisible()
+    assert dock.tables.isTabVisible(1)
+
+
+def test_threshold_moves_lines_and_counts_but_not_the_histogram(show, train, monkeypatch):
+    dock = show(train)
+    dock.model.select(bouton=BUSY)
+    settle(dock)
+    filled = []
+    for plot in (dock.histogram, dock.sites, dock.pair):
+        monkeypatch.setattr(plot, "fill", filled.append)
+    before = rows(dock.estimates)
+    dock.model.set_threshold(6.0)
+    settle(dock)
+    assert filled == []
+    threshold = dock.model.measured.counts.calls.threshold[BUSY - 1]
+    assert any(np.allclose(line.get_xdata(), threshold) for line in dock.histogram.axes.lines)
+    history = dock.model.measured.counts.histories[BUSY - 1]
+    assert f"both: {history.both}" in [text.get_text() for text in dock.pair.axes.texts]
+    after = rows(dock.estimates)
+    assert after != before
+    assert after[0] == before[0]  # the fit does not know the threshold
+
+
+def test_stale_numbers_are_called_so(show, train):
+    dock = show(train)
+    assert "analyse again" not in dock.words.text()
+    dock.model.edit(HandEdits().exclude(3, "movement"))
+    settle(dock)
+    assert "analyse again" in dock.words.text()
+
+
+def test_two_viewers_stay_apart(show, train):
+    dock, other = show(train), show(train)
+    dock.model.select(bouton=BUSY)
+    settle(dock)
+    settle(other)
+    assert dock.bouton.currentText() == str(BUSY)
+    assert other.bouton.currentText() == str(SILENT)
+
+
+def test_closed_dock_no_longer_listens(make_napari_viewer, train):
+    viewer = make_napari_viewer()
+    dock = QuantalDock(viewer)
+    docked = viewer.window.add_dock_widget(dock, name="Quantal", area="bottom")
+    model = model_of(viewer)
+    fill(model, train)
+    assert len(model.measured_changed) == 1
+    viewer.window.remove_dock_widget(docked)
+    signals = (model.measured_changed, model.selection_changed, model.edits_changed, model.settings_changed)
+    assert [len(signal) for signal in signals] == [0, 0, 0, 0]
+    model.set_threshold(3.0)
+    QApplication.processEvents()
+
+
+@pytest.mark.parametrize("width", [380, 1346])
+def test_nothing_is_cut_at_the_side(show, train, width):
+    dock = show(train)
+    dock.resize(width, 400)
+    settle(dock)
+    assert dock.horizontalScrollBar().maximum() == 0
