@@ -9,10 +9,12 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+from napari._app_model.constants import MenuId
 from npe2 import PluginManifest
 from npe2.manifest.utils import import_python_name
 
 from napari_boutonrelease import movie_from_array
+from napari_boutonrelease.docks.arrange import DOCKS
 from napari_boutonrelease.recording.timing import resolve_timing
 from napari_boutonrelease.simulation import presets
 
@@ -34,8 +36,17 @@ def test_every_reference_in_the_manifest_exists(manifest):
     contributions = manifest.contributions
     commands = {command.id for command in contributions.commands}
     assert {sample.command for sample in contributions.sample_data} <= commands
-    assert {widget.command for widget in contributions.widgets or ()} <= commands
+    assert {widget.command for widget in contributions.widgets} <= commands
+    assert {reader.command for reader in contributions.readers} <= commands
+    for menu, items in contributions.menus.items():
+        assert menu in {str(known) for known in MenuId.contributables()}, "napari drops other menus in silence"
+        assert {item.command for item in items} <= commands
     assert all(command.startswith(f"{NAME}.") for command in commands)
+
+
+def test_every_dock_is_in_the_menu_and_all_of_them_at_once(manifest):
+    titles = {widget.display_name for widget in manifest.contributions.widgets}
+    assert titles == {"Bouton release: all docks", *DOCKS}
 
 
 def test_every_command_can_be_imported(manifest):

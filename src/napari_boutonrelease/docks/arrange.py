@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from importlib import import_module
+from itertools import pairwise
 from typing import TYPE_CHECKING, Any
 
 from napari.settings import get_settings
@@ -23,7 +24,7 @@ DOCKS = {
     "Responses": ("responses_dock", "ResponsesDock", "bottom"),
     "Quantal": ("quantal_dock", "QuantalDock", "bottom"),
 }
-_RIGHT_PX, _BOTTOM_SHARE = 400, 0.36
+_RIGHT_PX, _BOTTOM_SHARE = 400, 0.42
 
 
 def dock_name(title: str) -> str:
@@ -57,8 +58,10 @@ def open_all(viewer: Any) -> None:
         docks[title] = open_dock(viewer, title, tabify=area in areas)
         areas.add(area)
     window = docks["Recording"].window()
-    for before, after in (("Recording", "Boutons"), ("Boutons", "Axon"), ("Axon", "Results"), ("Responses", "Quantal")):
-        window.tabifyDockWidget(docks[before], docks[after])
+    for place in ("right", "bottom"):
+        together = [docks[title] for title, (_, _, area) in DOCKS.items() if area == place]
+        for before, after in pairwise(together):
+            window.tabifyDockWidget(before, after)
     # The steps keep the whole height beside the plots.
     window.setCorner(Qt.Corner.BottomRightCorner, Qt.DockWidgetArea.RightDockWidgetArea)
     for title in ("Responses", "Recording"):
@@ -66,6 +69,11 @@ def open_all(viewer: Any) -> None:
         docks[title].raise_()
     window.resizeDocks([docks["Recording"]], [_RIGHT_PX], Qt.Orientation.Horizontal)
     window.resizeDocks([docks["Responses"]], [round(_BOTTOM_SHARE * window.height())], Qt.Orientation.Vertical)
+
+
+def open_all_docks(viewer: napari.viewer.Viewer) -> None:
+    """Open all docks; napari's menu gives the viewer."""
+    open_all(viewer)
 
 
 class AllDocks(QWidget):

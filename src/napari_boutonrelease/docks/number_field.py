@@ -52,13 +52,14 @@ class NumberField(QLineEdit):
         self._text = ""
         self.editingFinished.connect(self._finish)
 
-    def fill(self, value: float | None, *, origin: str = "", stated: bool = True) -> None:
-        """Show a value, and whether the protocol states it or the movie's own file does."""
+    def fill(self, value: float | None, *, origin: str = "", details: str = "", stated: bool = True) -> None:
+        """Show a value, where it comes from, and whether the protocol states it or the movie's own file does."""
         self._text = "" if value is None else f"{value:.10g}"
         self._stated = stated and value is not None
         self.setText(self._text)
         self.setCursorPosition(0)
         self.origin.setText(origin)
+        self.origin.setToolTip(details)
 
     def stated(self) -> float | None:
         """Return the number that the protocol states; None where the field is empty or shows the movie's own value.
@@ -95,4 +96,5 @@ class NumberField(QLineEdit):
             self._text = self.text()
             self._stated = bool(self._text.strip())
             self.origin.setText(TYPED if self._stated else "")
+            self.origin.setToolTip("")
             self.entered.emit()

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Callable
 from dataclasses import replace
 from pathlib import Path
@@ -53,6 +54,9 @@ _SHAPE = {
     "latency_s": ("Latency", "s", "From the stimulus to the start of the response."),
 }
 _REGULAR, _TABLE = 0, 1
+_NAMES = {key: about[0] for section in (_CALIBRATION, _STIMULI, _SHAPE) for key, about in section.items()}
+# `trials` and `pulses` are everyday words as well
+_KEY = re.compile(r"\b(\w+_(?:s|um)|camera_offset)\b|\b(?:trials|pulses)\b(?= (?:=|must|is missing))")
 
 
 class ProtocolForm(QWidget):
@@ -128,7 +132,7 @@ class ProtocolForm(QWidget):
         for key, field in self.calibration.items():
             value = getattr(protocol, key, None)
             if value is not None:
-                field.fill(value, origin=origin)
+                field.fill(value, origin="protocol", details=origin)
             else:
                 field.fill(getattr(movie, key, None), origin=_origin_in(movie, key), stated=False)
         stimuli = getattr(protocol, "stimuli", None)
@@ -236,14 +240,16 @@ class ProtocolForm(QWidget):
 
 
 def in_words(message: str) -> str:
-    """Call the fields of the form by their names in a message that speaks of the protocol's keys."""
-    for about in (_CALIBRATION, _STIMULI, _SHAPE):
-        for key in sorted(about, key=len, reverse=True):
-            message = message.replace(f"{key} = ", f"{about[key][0]} ").replace(key, about[key][0])
-    for section in ("[stimuli] ", "[recording] ", "[reporter] "):
-        message = message.replace(section, "")
-    message = message.replace(" to [recording] of the protocol", "")
-    return message[:1].upper() + message[1:]
+    """Call the fields of the form by their names in a message that speaks of the protocol's keys.
+
+    Examples
+    --------
+    >>> in_words("[stimuli] trial_interval_s must be greater than 0 (given -1).")
+    '“Between trials” must be greater than 0 (given -1).'
+    """
+    message = re.sub(r"\[(stimuli|recording|reporter)\] ", "", message)
+    message = message.replace(" to [recording] of the protocol", "").replace(" = ...", "")
+    return _KEY.sub(lambda found: f"“{_NAMES.get(found[0], found[0])}”", message)
 
 
 def _named(make: Callable[[], Protocol]) -> Protocol:

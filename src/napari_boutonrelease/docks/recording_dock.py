@@ -72,6 +72,7 @@ class RecordingDock(Panel):
         super().__init__(napari_viewer)
         self.timing: Timing | None = None
         self._movie: Movie | None = None
+        self._origin = ""
         self._overlay: tuple[bool, str] | None = None
         self._build()
         layers = self.viewer.layers.events
@@ -265,6 +266,7 @@ class RecordingDock(Panel):
         return str(self._movie.files[0].parent) if self._movie is not None and self._movie.files else ""
 
     def _take_protocol(self, protocol: Protocol | None, *, origin: str) -> None:
+        self._origin = origin
         self.form.show_protocol(protocol, self._movie, origin=origin)
         self._apply()
 
@@ -352,7 +354,8 @@ class RecordingDock(Panel):
             size = f"{n_frames} frames of {height} × {width} px, {movie.dtype}"
             files = f", {len(movie.file_frames)} files" if len(movie.file_frames) > 1 else ""
             length = "" if self.timing is None else f", {n_frames * self.timing.frame_interval_s:.4g} s"
-            self.about.setText(size + files + length)
+            protocol = f"; protocol {self._origin}" if self._origin else ""
+            self.about.setText(size + files + length + protocol)
         if measured is None:
             self.quality.setText("")
             self.plot.show_recording(self.timing)

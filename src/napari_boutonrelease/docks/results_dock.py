@@ -43,6 +43,13 @@ if TYPE_CHECKING:
     from ..recording import Movie
 
 _TITLES = {"boutons": "Boutons", "pulses": "Pulses", "responses": "Responses", "spontaneous": "Spontaneous"}
+_FIRST = {
+    # what a reader looks for first; copies and files keep the data dictionary's order
+    "boutons": (
+        *("bouton", "p_release", "p_release_lo", "p_release_hi", "n_sites", "n_set", "p_site", "q", "snr"),
+        *("ppr", "ppr_lo", "ppr_hi", "paired_pulse", "found_by", "flags"),
+    ),
+}
 _KEYS = ("bouton", "trial", "pulse")
 
 
@@ -125,7 +132,7 @@ class ResultsDock(Panel):
         self.column.addWidget(self.cautions)
         self.folder.textChanged.connect(self._show_state)
         self.runner.changed.connect(self._show_state)
-        self.runner.failed.connect(self.state.setText)
+        self.runner.failed.connect(self._say)
 
     def _make_table(self, name: str) -> TableTab:
         rows = TableModel(TABLES[name])
@@ -134,11 +141,13 @@ class ResultsDock(Panel):
         view.setSelectionBehavior(QAbstractItemView.SelectionBehavior.SelectRows)
         view.setEditTriggers(QAbstractItemView.EditTrigger.NoEditTriggers)
         view.setHorizontalScrollMode(QAbstractItemView.ScrollMode.ScrollPerPixel)
-        view.setAlternatingRowColors(True)
         view.setTabKeyNavigation(False)  # Tab leads on to the buttons
         view.verticalHeader().setVisible(False)
         view.verticalHeader().setDefaultSectionSize(22)
         header = view.horizontalHeader()
+        header.setSectionsMovable(True)
+        for place, column in enumerate(_FIRST.get(name, ())):
+            header.moveSection(header.visualIndex(TABLES[name].names.index(column)), place)
         header.setSortIndicatorShown(True)
         header.setSortIndicator(-1, Qt.SortOrder.AscendingOrder)
         view.setSortingEnabled(True)
@@ -235,7 +244,7 @@ class ResultsDock(Panel):
         try:
             overwrite = self._may_replace(folder)
         except InputError as error:
-            self.state.setText(str(error))
+            self._say(str(error))
             return
         if overwrite is None:
             return
@@ -259,7 +268,7 @@ class ResultsDock(Panel):
 
     def _exported(self, folder: Path) -> None:
         self._show_state()
-        self.state.setText(f"Exported to {folder}.")
+        self._say(f"Exported to {folder}.")
 
     def open_report(self) -> None:
         """Show the exported report."""
@@ -284,11 +293,15 @@ class ResultsDock(Panel):
         self.report_button.setEnabled(bool(self.folder.text().strip()) and self._report().is_file())
         self.copy_button.setEnabled(measured is not None)
         if measured is None:
-            self.state.setText("Nothing was measured yet: choose a movie in the Recording dock and analyse it.")
+            self._say("Nothing was measured yet: choose a movie in the Recording dock and analyse it.")
         elif not ready:
-            self.state.setText("Something has changed since the analysis: analyse again before exporting.")
+            self._say("Something has changed since the analysis: analyse again before exporting.")
         else:
-            self.state.setText("")
+            self._say("")
+
+    def _say(self, sentence: str) -> None:
+        self.state.setText(sentence)
+        self.state.setVisible(bool(sentence))
 
 
 def default_folder(movie: Movie) -> Path | None:
