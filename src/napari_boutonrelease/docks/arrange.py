@@ -62,8 +62,9 @@ def open_all(viewer: Any) -> None:
         together = [docks[title] for title, (_, _, area) in DOCKS.items() if area == place]
         for before, after in pairwise(together):
             window.tabifyDockWidget(before, after)
-    # The steps keep the whole height beside the plots.
+    # The plots lie below the movie alone: the columns beside it are too high for small screens to be shortened.
     window.setCorner(Qt.Corner.BottomRightCorner, Qt.DockWidgetArea.RightDockWidgetArea)
+    window.setCorner(Qt.Corner.BottomLeftCorner, Qt.DockWidgetArea.LeftDockWidgetArea)
     for title in ("Responses", "Recording"):
         docks[title].show()
         docks[title].raise_()
