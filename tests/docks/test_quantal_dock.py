@@ -1,8 +1,12 @@
 """The Quantal dock: what it shows is what was measured, and it says in words what cannot be known."""
 
+import gc
+from weakref import ref
+
 import numpy as np
 import pytest
 from napari.components import ViewerModel
+from qtpy.QtCore import QEvent
 from qtpy.QtWidgets import QApplication
 
 from napari_boutonrelease.analysis.hand_edits import HandEdits
@@ -268,6 +272,11 @@ def test_closed_dock_no_longer_listens(make_napari_viewer, train):
     viewer.window.remove_dock_widget(docked)
     signals = (model.measured_changed, model.selection_changed, model.edits_changed, model.settings_changed)
     assert [len(signal) for signal in signals] == [0, 0, 0, 0]
+    there = ref(dock)
+    del dock, docked
+    QApplication.sendPostedEvents(None, QEvent.Type.DeferredDelete)
+    gc.collect()
+    assert there() is None
     model.set_threshold(3.0)
     QApplication.processEvents()
 

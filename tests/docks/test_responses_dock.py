@@ -1,6 +1,8 @@
 """The Responses dock, driven with mouse and keys."""
 
+import gc
 from itertools import pairwise
+from weakref import ref
 
 import numpy as np
 import pytest
@@ -401,9 +403,13 @@ def test_closed_dock_no_longer_listens(make_napari_viewer, qtbot, recording):
     fill(model, recording)
     assert len(model.measured_changed) == 1
     viewer.window.remove_dock_widget(docked)
-    assert [len(getattr(model, f"{name}_changed")) for name in ("measured", "selection", "edits", "settings")] == [
-        0
-    ] * 4
+    signals = (model.measured_changed, model.selection_changed, model.edits_changed, model.settings_changed)
+    assert [len(signal) for signal in signals] == [0, 0, 0, 0]
+    there = ref(dock)
+    del dock, docked
+    QApplication.sendPostedEvents(None, QEvent.Type.DeferredDelete)
+    gc.collect()
+    assert there() is None
     model.set_threshold(3.0)
     viewer.dims.set_current_step(0, 30)
     settle()

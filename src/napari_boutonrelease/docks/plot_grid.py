@@ -44,6 +44,10 @@ class PlotGrid(QWidget):
         widths = [plot.minimumSizeHint().expandedTo(plot.minimumSize()).width() for plot, _ in self._plots]
         return QSize(max(widths, default=0), self._grid.minimumSize().height())
 
+    def sizeHint(self) -> QSize:
+        """Ask for no more than needed: plots grow into whatever there is."""
+        return self.minimumSizeHint()
+
     def resizeEvent(self, event: QResizeEvent) -> None:
         """Choose as many columns as are wide enough: all plots in one row, or half of them, or one."""
         super().resizeEvent(event)
@@ -67,3 +71,4 @@ class PlotGrid(QWidget):
             self._grid.addWidget(plot, row, column)
             self._grid.setColumnStretch(column, share if columns == n else 1)
             plot.show()
+        self.updateGeometry()  # fewer rows need less height

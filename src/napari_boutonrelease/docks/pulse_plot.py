@@ -105,8 +105,8 @@ class PulsePairPlot(LivePlot):
             if history is None
             else (
                 f"both: {history.both}",
-                f"first only: {history.only_first}",
-                f"second only: {history.only_second}",
+                f"1st only: {history.only_first}",
+                f"2nd only: {history.only_second}",
                 f"neither: {history.neither}",
             )
         )

@@ -167,7 +167,8 @@ class QuantalDock(Panel):
         parts = [headline(shown.measured, shown.row)]
         if self.model.stale:
             parts.insert(0, "<i>Settings, boutons or trials have changed since: analyse again.</i>")
-        parts += [f"<b>{code}</b>: {meaning} {advice}" for code, meaning, advice in doubts(shown.measured, shown.row)]
+        flags = str(self.model.table("boutons")["flags"].iloc[shown.row])
+        parts += [f"<b>{code}</b>: {meaning} {advice}" for code, meaning, advice in doubts(flags)]
         return "".join(f'<p style="margin:0 0 4px 0">{part}</p>' for part in parts)
 
     # what the person does
@@ -191,7 +192,7 @@ def _table(*heads: str) -> QTableWidget:
     table.setSizePolicy(QSizePolicy.Policy.Expanding, QSizePolicy.Policy.Expanding)
     header = table.horizontalHeader()
     header.setSectionResizeMode(QHeaderView.ResizeMode.ResizeToContents)
-    header.setStretchLastSection(True)
+    header.setSectionResizeMode(len(heads) - 1, QHeaderView.ResizeMode.Stretch)
     return table
 
 

@@ -6,7 +6,6 @@ import numpy as np
 import pandas as pd
 
 from ..analysis.measured import Measured
-from ..analysis.tables import bouton_flags
 from ..flags import FLAGS
 from ..reports.words import MISSING, fixed, p_words, ranges, short, with_limits
 
@@ -42,10 +41,9 @@ def headline(measured: Measured, row: int) -> str:
     return f"p_release {p}. One vesicle gives {q} dF/F. {sites}"
 
 
-def doubts(measured: Measured, row: int) -> list[tuple[str, str, str]]:
-    """Return code, meaning and advice of each flag of a bouton."""
-    codes = [code for code in bouton_flags(measured)[row].split(";") if code]
-    return [(code, FLAGS[code].meaning, FLAGS[code].advice) for code in codes]
+def doubts(flags: str) -> list[tuple[str, str, str]]:
+    """Return code, meaning and advice of each flag in a cell of the table of boutons."""
+    return [(code, FLAGS[code].meaning, FLAGS[code].advice) for code in flags.split(";") if code]
 
 
 def estimate_rows(estimates: pd.DataFrame) -> list[tuple[str, str, str]]:

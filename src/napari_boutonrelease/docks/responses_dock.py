@@ -143,10 +143,10 @@ class ResponsesDock(Panel):
 
     def _add_shortcuts(self) -> None:
         for key, slot in (
-            ("Down", lambda: self.model.step_bouton(1)),
-            ("Up", lambda: self.model.step_bouton(-1)),
-            ("Right", lambda: self._step_trial(1)),
-            ("Left", lambda: self._step_trial(-1)),
+            ("Down", self.next_bouton),
+            ("Up", self.previous_bouton),
+            ("Right", self.next_trial),
+            ("Left", self.previous_trial),
             ("X", self.toggle_excluded),
         ):
             shortcut = QShortcut(QKeySequence(key), self)
@@ -257,8 +257,22 @@ class ResponsesDock(Panel):
             self.model.select(bouton=int(self.model.measured.places.bouton[row]), trial=trial + 1)
             self._show_stimulus()
 
-    def _step_trial(self, by: int) -> None:
-        self.model.step_trial(by)
+    def next_bouton(self) -> None:
+        """Select the next bouton."""
+        self.model.step_bouton(1)
+
+    def previous_bouton(self) -> None:
+        """Select the bouton before."""
+        self.model.step_bouton(-1)
+
+    def next_trial(self) -> None:
+        """Select the next trial and go to its stimulus."""
+        self.model.step_trial(1)
+        self._show_stimulus()
+
+    def previous_trial(self) -> None:
+        """Select the trial before and go to its stimulus."""
+        self.model.step_trial(-1)
         self._show_stimulus()
 
     def toggle_excluded(self) -> None:
