@@ -388,9 +388,12 @@ def crosstalk_matrix(footprints: Footprints) -> NDArray[np.float64]:
         Patch(y0=int(y0), x0=int(x0), values=values)
         for y0, x0, values in zip(footprints.y0, footprints.x0, footprints.profiles, strict=True)
     ]
-    for i in range(n):
-        frame = Patch(y0=patches[i].y0, x0=patches[i].x0, values=footprints.naive_weights[i])
-        for j in range(n):
-            if i != j:
-                matrix[i, j] = float(np.sum(frame.values * patches[j].onto(frame)))
+    corner = np.stack([footprints.y0, footprints.x0], axis=1) if n else np.empty((0, 2))
+    size = np.array([patch.values.shape for patch in patches]).reshape(n, 2)
+    apart = corner[:, None] - corner[None]
+    meet = np.all((apart < size[None]) & (-apart < size[:, None]), axis=2)  # most boutons are far from each other
+    for i, j in np.argwhere(meet):
+        if i != j:
+            frame = Patch(y0=patches[i].y0, x0=patches[i].x0, values=footprints.naive_weights[i])
+            matrix[i, j] = float(np.sum(frame.values * patches[j].onto(frame)))
     return matrix
