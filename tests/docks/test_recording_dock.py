@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import gc
 import threading
+import warnings
 import weakref
 
 import numpy as np
@@ -19,6 +20,7 @@ from napari_boutonrelease.docks import worker
 from napari_boutonrelease.docks.layers import current_frame, movie_layer, movie_of_layer, show_frame, text_overlay
 from napari_boutonrelease.docks.panel import model_of
 from napari_boutonrelease.docks.recording_dock import RecordingDock
+from napari_boutonrelease.errors import AnalysisWarning, InputError
 from napari_boutonrelease.recording import Protocol, RegularStimuli, read_protocol
 from napari_boutonrelease.sample_data import fast_pair
 from napari_boutonrelease.simulation import presets
@@ -328,8 +330,6 @@ def test_a_newer_request_replaces_the_running_one(opened, files, quick, when_idl
 
 
 def test_a_fault_in_the_work_is_one_sentence(dock, when_idle, monkeypatch):
-    from napari_boutonrelease.errors import InputError
-
     told = []
     monkeypatch.setattr(worker.notifications, "show_error", told.append)
 
@@ -410,3 +410,41 @@ def test_a_protocol_may_state_everything(opened):
     )
     opened.form.show_protocol(protocol, opened.model.movie, origin="from elsewhere")
     assert opened.form.protocol() == protocol
+
+
+def test_a_folder_of_trials_is_one_recording(dock, tmp_path, when_idle, monkeypatch):
+    frames = np.random.default_rng(0).integers(90, 110, (3, 40, 8, 9), dtype=np.uint16)
+    for k, trial in enumerate(frames):
+        tifffile.imwrite(tmp_path / f"trial_{k}.tif", trial, imagej=True, metadata={"axes": "TYX", "finterval": 0.02})
+    monkeypatch.setattr(QFileDialog, "getExistingDirectory", lambda *_: str(tmp_path))
+    choose_menu(dock, "A folder, one file a trial...")
+    when_idle(dock)
+    enter_stimuli(dock, first_s=0.1, trials=3)
+    assert movie_layer(dock.viewer).data.shape == (120, 8, 9)
+    assert "3 files" in dock.about.text()
+    np.testing.assert_allclose(dock.timing.stimulus_s[:, 0], [0.1, 0.9, 1.7])
+    show_frame(dock.viewer, 40)
+    assert dock.frame_words.text().endswith("before trial 2"), "a trial does not reach into the next file"
+
+
+def test_doubts_about_a_recording_are_told_and_other_warnings_are_not(dock, when_idle, monkeypatch):
+    told = []
+    monkeypatch.setattr(worker.notifications, "show_warning", told.append)
+
+    def work(progress):
+        warnings.warn("The image is dim: check the lamp.", AnalysisWarning, stacklevel=1)
+        warnings.warn("a library's own affair", RuntimeWarning, stacklevel=1)
+
+    dock.runner.run(work, lambda _: None, words="Looking", kind="look")
+    when_idle(dock)
+    assert told == ["The image is dim: check the lamp."]
+
+
+def test_an_analysis_goes_with_its_viewer(files, qtbot):
+    viewer = ViewerModel()
+    dock = RecordingDock(viewer)
+    model, runner = weakref.ref(dock.model), weakref.ref(dock.runner)
+    dock.unlink()
+    dock.deleteLater()
+    del viewer, dock
+    qtbot.waitUntil(lambda: gc.collect() >= 0 and model() is None and runner() is None, timeout=5000)

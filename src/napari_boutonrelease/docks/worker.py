@@ -6,7 +6,7 @@ import time
 from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Any
-from weakref import WeakKeyDictionary, WeakMethod
+from weakref import WeakKeyDictionary, WeakMethod, ref
 
 from napari.qt.threading import create_worker
 from napari.utils import notifications
@@ -70,7 +70,7 @@ class Runner(QObject):
 
     def __init__(self, model: AnalysisModel) -> None:
         super().__init__()
-        self.model = model
+        self._model = ref(model)  # kept for as long as the model lives, so it must not keep the model
         self._running: _Job | None = None
         self._waiting: dict[str, _Job] = {}
 
@@ -117,7 +117,8 @@ class Runner(QObject):
         after = None if on_done is None else _if_alive(on_done)
 
         def take(measured: Measured) -> None:
-            if self.model.accept(request, measured) and after is not None:
+            model = self._model()
+            if model is not None and model.accept(request, measured) and after is not None:
                 after(measured)
 
         self.run(lambda progress: compute(request, progress=progress), take, words="Analysing", kind=ANALYSIS)
