@@ -6,7 +6,17 @@ from types import SimpleNamespace
 from typing import TYPE_CHECKING, Any
 
 from qtpy.QtGui import QResizeEvent
-from qtpy.QtWidgets import QBoxLayout, QCheckBox, QComboBox, QHBoxLayout, QLabel, QSizePolicy, QVBoxLayout
+from qtpy.QtWidgets import (
+    QBoxLayout,
+    QCheckBox,
+    QComboBox,
+    QHBoxLayout,
+    QLabel,
+    QScrollArea,
+    QSizePolicy,
+    QVBoxLayout,
+    QWidget,
+)
 
 from ..reports.words import headlines
 from .axon_plot import COLUMNS, AxonPlot, choices, title
@@ -17,7 +27,7 @@ from .worker import ProgressRow
 if TYPE_CHECKING:
     import napari
 
-_WIDE_PX = 640
+_WIDE_PX, _TEXT_PX = 640, 90
 _STALE = "Boutons or settings have changed since these numbers were measured."
 
 
@@ -47,13 +57,20 @@ class AxonDock(Panel):
         self.words = sentence_label()
         self.stale = sentence_label(_STALE)
         self.column.addLayout(row)
-        beside = QVBoxLayout()
+        text = QWidget()
+        beside = QVBoxLayout(text)
+        beside.setContentsMargins(0, 0, 0, 0)
         beside.addWidget(self.stale)
         beside.addWidget(self.words)
         beside.addStretch(1)
+        self.text = QScrollArea()  # of its own: sentences must not make the plot higher than the dock
+        self.text.setWidget(text)
+        self.text.setWidgetResizable(True)
+        self.text.setFrameShape(QScrollArea.Shape.NoFrame)
+        self.text.setMinimumHeight(_TEXT_PX)
         self.parts = QBoxLayout(QBoxLayout.Direction.TopToBottom)
         self.parts.addWidget(self.plot, 2)
-        self.parts.addLayout(beside, 1)
+        self.parts.addWidget(self.text, 1)
         self.column.addLayout(self.parts, 1)
         self.column.addWidget(ProgressRow(self.runner, self))
         self.link(self.model.recording_changed, self._show)
@@ -85,7 +102,7 @@ class AxonDock(Panel):
         self.colour.setEnabled(bool(names))
         self._choose()
         self.words.setText("" if measured is None else self._population())
-        self.words.setVisible(measured is not None)
+        self.text.setVisible(measured is not None)
         self._show_state()
 
     def _show_state(self) -> None:

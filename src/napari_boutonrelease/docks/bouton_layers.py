@@ -146,7 +146,7 @@ class BoutonLayers:
             points.visible = False  # marks would hide what is painted
         self._shown_before = labels.visible
         viewer.layers.selection.active = labels
-        labels.visible, labels.editable, labels.contour = True, True, 0
+        labels.visible, labels.contour = True, 0
         labels.preserve_labels = True
         labels.selected_label = bouton
         labels.brush_size = _BRUSH_PX
@@ -175,7 +175,7 @@ class BoutonLayers:
         labels, points, viewer = self.footprints, self.points, self._viewer()
         if labels is not None:
             labels.mode = "pan_zoom"
-            labels.editable, labels.contour, labels.visible = False, 1, self._shown_before
+            labels.contour, labels.visible = 1, self._shown_before
         if points is not None and viewer is not None:
             points.visible = True
             viewer.layers.selection.active = points
@@ -229,11 +229,12 @@ class BoutonLayers:
         labels = self.footprints
         if labels is None:
             labels = Labels(label.copy(), name="footprints", opacity=0.6, **on_plane(movie))
-            labels.contour, labels.editable, labels.visible = 1, False, False
+            labels.contour, labels.visible = 1, False
             labels.bind_key("Enter", _on_key(self.finish_redrawing), overwrite=True)
             labels.bind_key("Escape", _on_key(self.cancel_redrawing), overwrite=True)
             add_quietly(viewer, labels, above=movie)
             self._footprints = ref(labels)
+            labels.events.paint.connect(self._painted)
         elif not np.array_equal(labels.data, label):
             labels.data = label.copy()
 
@@ -324,6 +325,13 @@ class BoutonLayers:
         if selected and self.model.selection.bouton not in selected:
             self.model.select(bouton=selected[0])
         self.changed.emit()
+
+    def _painted(self, event: Any) -> None:
+        """Take back what was painted outside of redrawing: it would belong to no bouton in particular."""
+        traced = self.model.traced
+        if self._redrawing is None and traced is not None:
+            event.source.data = traced.places.footprints.label.copy()
+            notifications.show_info("To paint a footprint, select its bouton and press Redraw in the Boutons dock.")
 
     def _in_step(self) -> bool:
         points = self.points

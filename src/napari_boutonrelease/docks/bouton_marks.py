@@ -27,8 +27,11 @@ FOUND_BY = {
 }
 """Colour and symbol of each way in which a bouton is found; both differ, and stand out on a dark image."""
 
-NO_NUMBER = ("#9aa3ab", "cross")
-SILENT = ("#9aa3ab", "x")
+SILENT, NO_NUMBER = "x", "cross"
+"""Symbols of boutons that show no release, and of those without the number that gives the colours."""
+COLOURING = "shown"
+"""Feature that gives the colours: of one name whatever it holds, because napari warns of one that is left out."""
+_NO_COLOUR = "#9aa3ab"
 _SHOWN = ("p_release", "ppr", "q")
 _SIZE_FWHM = 2.4
 _FWHM_PER_SIGMA = 2.354820
@@ -47,7 +50,7 @@ class Marks:
     size_px : float
         Of a mark.
     column : str or None
-        Feature that gives the colours.
+        Column of the table of boutons that gives the colours.
     limits : (float, float)
         Of the colour bar.
     """
@@ -82,17 +85,18 @@ def marks_of(model: AnalysisModel, sites: Sites, *, column: str | None) -> Marks
     import pandas as pd
 
     features = pd.DataFrame({"bouton": sites.bouton, "found_by": list(sites.found_by)})
-    wanted = list(dict.fromkeys((*_SHOWN, column or _SHOWN[0])))
+    wanted = list(_SHOWN)
     measured = model.measured
     table = model.table("boutons") if measured is not None else pd.DataFrame({"bouton": []})
     at = table.set_index("bouton").reindex(sites.bouton)
     for name in wanted:
         features[name] = at[name].to_numpy(dtype=np.float64, na_value=np.nan) if name in at else np.nan
+    features[COLOURING] = at[column].to_numpy(dtype=np.float64, na_value=np.nan) if column in at else np.nan
     flags: list[Any] = list(at["flags"]) if "flags" in at else [""] * len(sites.bouton)
     features["silent"] = [isinstance(codes, str) and "silent" in codes.split(";") for codes in flags]
     # What was edited since has no numbers yet: those of its id are of another place.
     if measured is not None and measured.edits != model.edits:
-        features.loc[~_same_place(sites, measured.places), wanted] = np.nan
+        features.loc[~_same_place(sites, measured.places), [*wanted, COLOURING]] = np.nan
     return Marks(
         bouton=sites.bouton,
         y_px=sites.y_px,
@@ -100,7 +104,7 @@ def marks_of(model: AnalysisModel, sites: Sites, *, column: str | None) -> Marks
         features=features,
         size_px=_SIZE_FWHM * _FWHM_PER_SIGMA * sites.spot_sigma_px,
         column=column,
-        limits=colour_range(column, features[column].to_numpy()) if column else (0.0, 1.0),
+        limits=colour_range(column, features[COLOURING].to_numpy()) if column else (0.0, 1.0),
     )
 
 
@@ -109,32 +113,32 @@ def show_marks(points: Points, marks: Marks) -> None:
     points.selected_data = set()
     points.data = np.column_stack([marks.y_px, marks.x_px])
     points.features = marks.features
-    points.size = marks.size_px
     points.text.translation = np.array([-0.3, 0.4]) * marks.size_px  # beside the ring
-    points.face_color = "transparent"
-    points.border_width = 0.1
-    found_by = list(marks.features["found_by"])
-    if marks.column is None:
-        symbols = [FOUND_BY[way][1] for way in found_by]
-        points.border_color = np.array([_rgba(FOUND_BY[way][0]) for way in found_by]).reshape(-1, 4)
-    else:
-        known = np.isfinite(marks.features[marks.column].to_numpy(dtype=np.float64))
-        silent = marks.features["silent"].to_numpy(dtype=bool)
-        symbols = list(np.where(silent, SILENT[1], np.where(known, "disc", NO_NUMBER[1])))
-        _colour_by(points, marks)
-    if symbols:
-        points.symbol = symbols
+    if len(marks.bouton):
+        points.size = marks.size_px
+        points.face_color = "transparent"
+        points.border_width = 0.1
+        points.symbol = _symbols(marks)
+        if marks.column is None:
+            ways = marks.features["found_by"]
+            points.border_color = np.array([_rgba(FOUND_BY[way][0]) for way in ways])
+        else:
+            points.border_colormap = sequential()
+            points.border_color = COLOURING
+            points.border_color_mode = "colormap"
+            points.border_contrast_limits = marks.limits
     bar = getattr(points, "border_colorbar", None)
     if bar is not None:
         bar.visible = marks.column is not None
 
 
-def _colour_by(points: Points, marks: Marks) -> None:
-    points.border_colormap = sequential()
-    if len(marks.bouton):
-        points.border_color = marks.column
-        points.border_color_mode = "colormap"
-        points.border_contrast_limits = marks.limits
+def _symbols(marks: Marks) -> list[str]:
+    """Symbols say how a bouton was found, or, where colours are a number, whether there is one."""
+    if marks.column is None:
+        return [FOUND_BY[way][1] for way in marks.features["found_by"]]
+    known = np.isfinite(marks.features[COLOURING].to_numpy(dtype=np.float64))
+    silent = marks.features["silent"].to_numpy(dtype=bool)
+    return [str(one) for one in np.where(silent, SILENT, np.where(known, "disc", NO_NUMBER))]
 
 
 @lru_cache(maxsize=1)
@@ -145,7 +149,7 @@ def sequential() -> Colormap:
 
     viridis = ensure_colormap("viridis")
     return Colormap(
-        viridis.map(np.linspace(0.25, 1.0, 64)), name="boutons", display_name="boutons", nan_color=NO_NUMBER[0]
+        viridis.map(np.linspace(0.33, 1.0, 64)), name="boutons", display_name="boutons", nan_color=_NO_COLOUR
     )
 
 

@@ -1,0 +1,188 @@
+"""The Axon dock: the map and the plot of any number, and what is selected."""
+
+import numpy as np
+import pytest
+from qtpy.QtCore import QPoint, Qt
+from qtpy.QtTest import QTest
+
+from napari_boutonrelease.analysis.settings import Settings
+from napari_boutonrelease.docks.axon_dock import AxonDock
+from napari_boutonrelease.docks.axon_plot import choices
+from napari_boutonrelease.docks.bouton_marks import NO_NUMBER, SILENT, sequential
+from napari_boutonrelease.docks.layers import add_movie, set_movie_layer
+from napari_boutonrelease.docks.panel import model_of
+from napari_boutonrelease.recording import movie_from_array
+from napari_boutonrelease.simulation import BoutonRecipe, preset_recipe, simulate_recording
+
+QUICK = Settings.model_validate({"quanta": {"n_max": 3, "bootstrap": 0}, "pairs": {"bootstrap": 100}})
+LONG_MS = 60_000
+
+
+@pytest.fixture(scope="module")
+def recording():
+    """Two boutons that release, and one that never does."""
+    boutons = tuple(
+        BoutonRecipe(y_px=y, x_px=x, n_sites=1, p_site=p, q_dff=0.6, f0_photons=40.0)
+        for y, x, p in ((15.0, 12.0, 0.4), (18.0, 32.0, 0.0), (21.0, 52.0, 0.8))
+    )
+    recipe = preset_recipe(
+        "fast-pair", height_px=36, width_px=64, trials=20, trial_interval_s=0.5, boutons=boutons,
+        specks_on_axon=0, specks_off_axon=0, wander_um=0.0, drift_walk_px=0.0, spontaneous_per_s=0.0,
+    )  # fmt: skip
+    simulation = simulate_recording(recipe, rng=np.random.default_rng(3))
+    movie = movie_from_array(
+        simulation.frames, frame_interval_s=recipe.frame_interval_s, pixel_size_um=recipe.pixel_size_um
+    )
+    return movie, simulation.protocol
+
+
+@pytest.fixture
+def empty(make_napari_viewer, recording):
+    viewer = make_napari_viewer(show=True)
+    movie, protocol = recording
+    set_movie_layer(viewer, add_movie(viewer, movie))
+    model = model_of(viewer)
+    model.settings = QUICK
+    model.open(movie, protocol)
+    dock = AxonDock(viewer)
+    viewer.window.add_dock_widget(dock, name="Axon", area="bottom")
+    return viewer, dock
+
+
+@pytest.fixture
+def shown(empty, qtbot):
+    viewer, dock = empty
+    dock.layers.measure()
+    qtbot.waitUntil(lambda: dock.model.measured is not None and not dock.runner.busy, timeout=LONG_MS)
+    drawn(qtbot, dock)
+    return viewer, dock
+
+
+def drawn(qtbot, dock):
+    """Wait until the plot shows the latest."""
+    qtbot.waitUntil(lambda: not dock.plot._outdated, timeout=LONG_MS)
+
+
+def click(dock, bouton, *, beside_px=0):
+    x, y = dock.plot.screen_px(bouton)
+    ratio = dock.plot.device_pixel_ratio
+    at = QPoint(round(x / ratio) + beside_px, round(dock.plot.height() - y / ratio))
+    QTest.mouseClick(dock.plot, Qt.MouseButton.LeftButton, pos=at)
+
+
+def test_says_that_nothing_was_measured(empty):
+    _, dock = empty
+    assert dock.shown.count() == 0
+    assert not dock.colour.isEnabled()
+    assert not dock.text.isVisible()
+
+
+def test_population_in_words(shown):
+    _, dock = shown
+    assert dock.words.text().startswith("Mean p_release is ")
+    assert "no release" in dock.words.text()
+
+
+def test_every_number_with_its_unit_can_be_chosen(shown, qtbot):
+    _, dock = shown
+    names = [dock.shown.itemData(i) for i in range(dock.shown.count())]
+    assert names[0] == "p_release"
+    assert {"ppr", "q", "snr", "f0", "spontaneous_per_min"} <= set(names)
+    assert not {"bouton", "y_px", "found_by", "flags", "p_release_lo"} & set(names)
+    dock.shown.setCurrentIndex(names.index("q"))
+    drawn(qtbot, dock)
+    assert dock.shown.currentText() == "q (dF/F)"
+    assert dock.plot.figure.axes[0].get_ylabel() == "q (dF/F)"
+    assert "one vesicle" in dock.meaning.text()
+
+
+def test_a_click_on_a_point_selects_the_bouton_everywhere(shown, qtbot):
+    viewer, dock = shown
+    click(dock, 3)
+    assert dock.model.selection.bouton == 3
+    assert viewer.layers["boutons"].selected_data == {2}
+    drawn(qtbot, dock)
+    click(dock, 1)
+    assert dock.model.selection.bouton == 1
+    drawn(qtbot, dock)
+    click(dock, 3, beside_px=60)
+    assert dock.model.selection.bouton == 1
+
+
+def test_marks_take_the_colours_of_the_chosen_number(shown, qtbot):
+    viewer, dock = shown
+    points = viewer.layers["boutons"]
+    by_found = points.border_color.copy()
+    dock.colour.setChecked(True)
+    assert points.border_contrast_limits == (0.0, 1.0)
+    assert points.border_colorbar.visible
+    p_release = dock.model.table("boutons").p_release.to_numpy()
+    assert points.border_color == pytest.approx(sequential().map(p_release), abs=1e-3)
+    names = [dock.shown.itemData(i) for i in range(dock.shown.count())]
+    dock.shown.setCurrentIndex(names.index("f0"))
+    assert points.border_contrast_limits[1] == pytest.approx(dock.model.table("boutons").f0.max())
+    dock.colour.setChecked(False)
+    assert points.border_color == pytest.approx(by_found)
+    assert not points.border_colorbar.visible
+
+
+def test_silent_boutons_and_those_without_a_number_differ_by_symbol_and_stay_visible(shown, qtbot):
+    viewer, dock = shown
+    points = viewer.layers["boutons"]
+    dock.colour.setChecked(True)
+    symbols = [str(one) for one in points.symbol]
+    assert symbols == ["disc", SILENT, "disc"]
+    names = [dock.shown.itemData(i) for i in range(dock.shown.count())]
+    dock.shown.setCurrentIndex(names.index("n_sites"))
+    assert np.all(points.border_color[:, 3] == 1.0)
+    points.add((30.0, 32.0))
+    assert str(points.symbol[-1]) == NO_NUMBER
+    assert np.all(points.border_color[:, 3] == 1.0)
+    drawn(qtbot, dock)
+    assert len(dock.plot.figure.axes) == 1
+
+
+def test_numbers_stand_along_a_drawn_axon(shown, qtbot):
+    _, dock = shown
+    assert dock.plot.figure.axes[0].get_xlabel() == "bouton"
+    dock.model.draw_axon(np.array([[22.0, 60.0], [14.0, 4.0]]))
+    assert dock.stale.isVisibleTo(dock)
+    qtbot.waitUntil(lambda: not dock.model.stale and not dock.runner.busy, timeout=LONG_MS)
+    drawn(qtbot, dock)
+    assert dock.plot.figure.axes[0].get_xlabel() == "distance along the axon (µm)"
+    assert not dock.stale.isVisibleTo(dock)
+    assert np.all(np.diff(dock.plot._at[:, 0]) > 0)
+
+
+def test_nothing_found_leaves_no_choice(shown, qtbot):
+    _, dock = shown
+    boutons = dock.model.sites()
+    edits = dock.model.edits
+    for y, x in zip(boutons.y_px, boutons.x_px, strict=True):
+        edits = edits.delete((float(y), float(x)))
+    dock.model.edit(edits)
+    qtbot.waitUntil(lambda: not dock.model.stale and not dock.runner.busy, timeout=LONG_MS)
+    drawn(qtbot, dock)
+    assert choices(dock.model.table("boutons")) == []
+    assert dock.shown.count() == 0
+    assert dock.words.text().startswith("No bouton was found")
+
+
+def test_follows_the_theme(shown, qtbot):
+    viewer, dock = shown
+    before = dock.plot.figure.get_facecolor()
+    viewer.theme = "light"
+    drawn(qtbot, dock)
+    assert dock.plot.figure.get_facecolor() != before
+
+
+def test_words_stand_beside_the_plot_where_there_is_room(shown, qtbot):
+    _, dock = shown
+    dock.resize(1000, 220)
+    qtbot.waitUntil(lambda: dock.text.x() > dock.plot.x(), timeout=5000)
+    narrow = AxonDock(dock.viewer)
+    qtbot.addWidget(narrow)
+    narrow.resize(340, 600)
+    narrow.show()
+    qtbot.waitUntil(lambda: narrow.text.y() > narrow.plot.y(), timeout=5000)
+    narrow.unlink()
