@@ -1,10 +1,14 @@
 """The Axon dock: the map and the plot of any number, and what is selected."""
 
+import copy
+
 import numpy as np
 import pytest
+from napari.components import ViewerModel
 from qtpy.QtCore import QPoint, Qt
 from qtpy.QtTest import QTest
 
+from napari_boutonrelease.analysis.pipeline import Pipeline
 from napari_boutonrelease.analysis.settings import Settings
 from napari_boutonrelease.docks.axon_dock import AxonDock
 from napari_boutonrelease.docks.axon_plot import choices
@@ -36,22 +40,40 @@ def recording():
     return movie, simulation.protocol
 
 
+@pytest.fixture(scope="module")
+def measured_before(recording):
+    """A pipeline that has measured this recording."""
+    pipeline = Pipeline(*recording)
+    pipeline.measure(QUICK)
+    return pipeline
+
+
+def recall(dock, pipeline):
+    """Let a dock's analysis know what another one has measured: each test need not wait for it."""
+    vars(dock.model.pipeline).update({name: copy.copy(value) for name, value in vars(pipeline).items()})
+
+
 @pytest.fixture
-def empty(make_napari_viewer, recording):
-    viewer = make_napari_viewer(show=True)
+def empty(recording, qtbot):
+    viewer = ViewerModel()
     movie, protocol = recording
     set_movie_layer(viewer, add_movie(viewer, movie))
     model = model_of(viewer)
     model.settings = QUICK
     model.open(movie, protocol)
     dock = AxonDock(viewer)
-    viewer.window.add_dock_widget(dock, name="Axon", area="bottom")
-    return viewer, dock
+    dock.resize(1000, 240)
+    dock.show()
+    yield viewer, dock
+    dock.unlink()
+    qtbot.waitUntil(lambda: not dock.runner.busy, timeout=LONG_MS)
+    dock.deleteLater()
 
 
 @pytest.fixture
-def shown(empty, qtbot):
+def shown(empty, measured_before, qtbot):
     viewer, dock = empty
+    recall(dock, measured_before)
     dock.layers.measure()
     qtbot.waitUntil(lambda: dock.model.measured is not None and not dock.runner.busy, timeout=LONG_MS)
     drawn(qtbot, dock)
