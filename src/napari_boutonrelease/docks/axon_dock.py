@@ -11,9 +11,7 @@ from qtpy.QtWidgets import (
     QCheckBox,
     QComboBox,
     QHBoxLayout,
-    QLabel,
     QScrollArea,
-    QSizePolicy,
     QVBoxLayout,
     QWidget,
 )
@@ -47,16 +45,16 @@ class AxonDock(Panel):
         self.colour.setToolTip("Colour the marks in the image by this number, with a colour bar; else by how found.")
         self.colour.setChecked(self.layers.column is not None)
         self.colour.toggled.connect(self._colour)
-        self.meaning = QLabel()
-        self.meaning.setSizePolicy(QSizePolicy.Policy.Ignored, QSizePolicy.Policy.Preferred)
+        self.meaning = sentence_label()
         row = QHBoxLayout()
         row.addWidget(self.shown)
         row.addWidget(self.colour)
-        row.addWidget(self.meaning, 1)
+        row.addStretch(1)
         self.plot = AxonPlot(self)
         self.words = sentence_label()
         self.stale = sentence_label(_STALE)
         self.column.addLayout(row)
+        self.column.addWidget(self.meaning)
         text = QWidget()
         beside = QVBoxLayout(text)
         beside.setContentsMargins(0, 0, 0, 0)

@@ -25,6 +25,7 @@ _NOT_NUMBERS_OF_BOUTONS = frozenset({"bouton", "y_px", "x_px", "y_um", "x_um", "
 _MARKERS = {"disc": "o", "diamond": "D", "square": "s", "triangle_up": "^", "star": "*"}
 _WORDS = {"both": "responses and shape", "shape": "shape alone"}
 _CLICK_PX = 12.0
+_ENTRY_PX = 115  # width of one entry of the legend
 _UNMEASURED = 0.03  # of the axes' height: where boutons without a number stand
 
 
@@ -152,7 +153,13 @@ class AxonPlot(Plot):
             if there.any():
                 handles.append(Line2D([], [], ls="none", marker=marker, color=palette.muted, mew=1.4))
                 labels.append(words)
-        figure.legend(handles, labels, loc="outside upper center", ncols=min(len(labels), 5), handletextpad=0.2)
+        figure.legend(
+            handles,
+            labels,
+            loc="outside upper center",
+            ncols=max(min(len(labels), round(self.width() / _ENTRY_PX)), 1),
+            handletextpad=0.2,
+        )
 
     def _pick(self, event: Any) -> None:
         """Select the bouton whose point was clicked."""

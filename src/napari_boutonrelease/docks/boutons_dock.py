@@ -6,21 +6,16 @@ import math
 from typing import TYPE_CHECKING
 
 import numpy as np
-from matplotlib.figure import Figure
 from qtpy.QtCore import Qt
-from qtpy.QtGui import QKeyEvent, QKeySequence, QShortcut
+from qtpy.QtGui import QKeySequence, QShortcut
 from qtpy.QtWidgets import (
-    QAbstractItemView,
     QCheckBox,
     QGroupBox,
     QHBoxLayout,
-    QHeaderView,
     QLabel,
     QPushButton,
     QSlider,
     QSpinBox,
-    QTableWidget,
-    QTableWidgetItem,
     QVBoxLayout,
     QWidget,
 )
@@ -28,13 +23,13 @@ from superqt import QFlowLayout
 
 from ..analysis.bouton_edits import merge_boutons
 from ..errors import InputError
-from ..reports.words import counted, fixed, short
+from ..reports.words import counted, short
 from .axon_layer import axon_layer_of
 from .bouton_layers import bouton_layers_of
+from .bouton_list import WAYS, BoutonList, BoutonTrace
 from .layers import movie_layer
 from .panel import Panel, sentence_label
 from .picture_layers import EVIDENCE, MEAN, PASSING, PictureLayers
-from .plots import Palette, Plot, envelope, say
 from .settings_form import Row, SettingsForm
 from .worker import ProgressRow
 
@@ -49,13 +44,6 @@ _ROWS = (
     Row(step="detection", name="footprint", words="Footprint"),
     Row(step="detection", name="shape_candidates", words="Also spots that do not respond"),
 )
-_WAYS = {
-    "responses": "responses",
-    "shape": "shape alone",
-    "both": "responses and shape",
-    "hand": "hand",
-    "file": "file",
-}
 _LEAST, _MOST, _STEPS = 0.001, 0.5, 100
 _HINTS = {
     "select": "Click a mark to select it, with Shift to select more; drag it to move it.",
@@ -185,10 +173,9 @@ class BoutonsDock(Panel):
             shortcut.activated.connect(act)
 
     def _add_list(self) -> None:
-        self.table = _Table(self.layers.delete_selected)
+        self.table = BoutonList(self.layers.delete_selected)
         self.table.itemSelectionChanged.connect(self._select_rows)
-        self.trace = Plot(self, self._draw_trace, height_px=96)
-        self.trace.setMaximumHeight(130)
+        self.trace = BoutonTrace(self)
         self.column.addWidget(self.table)
         self.column.addWidget(self.trace)
 
@@ -269,7 +256,7 @@ class BoutonsDock(Panel):
             else _HINTS.get(mode, "")
         )
         self.hint.setVisible(bool(self.hint.text()))
-        self._fill_table()
+        self._fill_list()
         self.table.setVisible(found > 0)
         self.trace.setVisible(found > 0)
         self._show_axon()
@@ -280,43 +267,23 @@ class BoutonsDock(Panel):
             return ""
         if not len(marks.bouton):
             return "No bouton was found: accept more false ones and find again, or add boutons by hand."
-        ways = [(way, sites.found_by.count(way)) for way in _WAYS]
-        parts = ", ".join(f"{count} by {_WAYS[way]}" for way, count in ways if count)
+        ways = [(way, sites.found_by.count(way)) for way in WAYS]
+        parts = ", ".join(f"{count} by {WAYS[way]}" for way, count in ways if count)
         words = f"{counted(len(marks.bouton), 'bouton')}: {parts}."
         if np.isfinite(sites.expected_false):
             words += f" Of those that respond, {short(sites.expected_false)} are expected to be false."
         return words
 
-    def _fill_table(self) -> None:
-        features = self.layers.marks.features
+    def _fill_list(self) -> None:
         self._filling = True
-        self.table.setRowCount(len(features))
-        p_release = features["p_release"] if "p_release" in features else [np.nan] * len(features)
-        for row, (bouton, way, p) in enumerate(zip(features["bouton"], features["found_by"], p_release, strict=True)):
-            for column, text in enumerate((str(bouton), _WAYS.get(way, way), fixed(p))):
-                item = self.table.item(row, column)
-                if item is None:
-                    item = QTableWidgetItem()
-                    item.setFlags(Qt.ItemFlag.ItemIsSelectable | Qt.ItemFlag.ItemIsEnabled)
-                    self.table.setItem(row, column, item)
-                item.setText(text)
+        self.table.fill(self.layers.marks.features)
         self._filling = False
         self._show_selection()
 
     def _show_selection(self) -> None:
-        ids, selected = self.layers.marks.bouton, self.layers.selected
-        wanted = set(np.flatnonzero(np.isin(ids, selected)).tolist())
-        if wanted != self._rows():
-            self._filling = True
-            self.table.clearSelection()
-            for row in wanted:
-                for column in range(self.table.columnCount()):
-                    item = self.table.item(row, column)
-                    if item is not None:
-                        item.setSelected(True)
-            if wanted:
-                self.table.scrollToItem(self.table.item(min(wanted), 0))
-            self._filling = False
+        self._filling = True
+        self.table.select_rows(np.flatnonzero(np.isin(self.layers.marks.bouton, self.layers.selected)).tolist())
+        self._filling = False
         self.trace.refresh()
 
     def _show_axon(self) -> None:
@@ -328,18 +295,6 @@ class BoutonsDock(Panel):
             self.axon_words.setText("Click along the axon; a double click ends it.")
         else:
             self.axon_words.setText("Boutons are numbered along it." if has_path else "Boutons run top to bottom.")
-
-    def _draw_trace(self, figure: Figure, palette: Palette) -> None:
-        axes = figure.add_subplot()
-        traced, bouton = self.model.traced, self.model.selection.bouton
-        at = np.flatnonzero(traced.places.bouton == bouton) if traced is not None else np.empty(0)
-        if traced is None or not at.size:
-            say(axes, "Being read" if self.runner.busy and bouton is not None else "Select a bouton", palette)
-            return
-        axes.plot(*envelope(traced.recording.timing.frame_start_s, traced.f[at[0]]), color=palette.evoked, lw=0.6)
-        axes.set_xlabel("time (s)")
-        axes.set_ylabel(f"bouton {bouton}\nF (counts)")
-        axes.margins(x=0.0)
 
     # what the person does
 
@@ -413,10 +368,7 @@ class BoutonsDock(Panel):
     def _select_rows(self) -> None:
         if not self._filling:
             ids = self.layers.marks.bouton
-            self.layers.select(tuple(int(ids[row]) for row in sorted(self._rows()) if row < len(ids)))
-
-    def _rows(self) -> set[int]:
-        return {index.row() for index in self.table.selectedIndexes()}
+            self.layers.select(tuple(int(ids[row]) for row in sorted(self.table.rows()) if row < len(ids)))
 
     def _draw_axon(self, on: bool) -> None:
         if on:
@@ -433,30 +385,6 @@ class BoutonsDock(Panel):
         if self.layers.redrawing is not None:
             self.layers.cancel_redrawing()
         self.pictures.remove()
-
-
-class _Table(QTableWidget):
-    """List of boutons; Delete takes the selected ones away."""
-
-    def __init__(self, delete: object) -> None:
-        super().__init__(0, 3)
-        self._delete = delete
-        self.setHorizontalHeaderLabels(["Bouton", "Found by", "p_release"])
-        self.verticalHeader().setVisible(False)
-        self.setSelectionBehavior(QAbstractItemView.SelectionBehavior.SelectRows)
-        self.setSelectionMode(QAbstractItemView.SelectionMode.ExtendedSelection)
-        self.setEditTriggers(QAbstractItemView.EditTrigger.NoEditTriggers)
-        self.horizontalHeader().setSectionResizeMode(QHeaderView.ResizeMode.ResizeToContents)
-        self.horizontalHeader().setSectionResizeMode(1, QHeaderView.ResizeMode.Stretch)
-        self.setMinimumHeight(120)
-        self.setMaximumHeight(260)
-        self.setToolTip("Select boutons here or in the image; Delete takes them away, Ctrl+Z brings them back.")
-
-    def keyPressEvent(self, event: QKeyEvent) -> None:
-        if event.key() in (Qt.Key.Key_Delete, Qt.Key.Key_Backspace) and callable(self._delete):
-            self._delete()
-        else:
-            super().keyPressEvent(event)
 
 
 def _button(text: str, meaning: str, *, checkable: bool = False) -> QPushButton:
