@@ -176,6 +176,7 @@ def make_result(*, seed: int = 1, boutons: int = 9, trials: int = 60, pulses: in
             "p_corrected_hi": high,
             "noise_photon_limit_sd": NOISE_SD * 0.8,
             "noise_excess": 1.25,
+            "noise_n": 200.0,
             "n_set": None if silent else ";".join(str(n) for n in range(max(1, n_sites[b] - 1), n_sites[b] + 2)),
             "q_own": np.nan if silent else q[b] * 1.04,
             "p_release_own": rate,

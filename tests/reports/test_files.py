@@ -17,11 +17,15 @@ from napari_boutonrelease.reports.strict_json import json_ready, write_json
 
 def test_traces_open_without_pickle(written, small_result):
     with np.load(written / "traces.npz", allow_pickle=False) as traces:
-        assert set(traces) == {"time_s", "bouton", "f", "f0", "dff"}
+        assert set(traces) == {"time_s", "bouton", "f", "f0", "dff", "null_amplitude"}
         np.testing.assert_array_equal(traces["bouton"], [1, 2])
         np.testing.assert_array_equal(traces["time_s"], small_result.time_s)
-        for name in ("f", "f0", "dff"):
+        for name in ("f", "f0", "dff", "null_amplitude"):
             np.testing.assert_allclose(traces[name], getattr(small_result, name), rtol=1e-6)
+
+
+def test_the_mean_image_is_there_as_it_was(written, small_result):
+    np.testing.assert_allclose(tifffile.imread(written / "mean_image.tif"), small_result.mean_image, rtol=1e-6)
 
 
 def test_footprints_carry_ids_weights_and_pixel_size(written, small_result):

@@ -34,6 +34,7 @@ def test_everything_promised_is_there(written):
         "spontaneous.csv",
         "drift.csv",
         "traces.npz",
+        "mean_image.tif",
         "footprints.tif",
         "footprint_weights.tif",
         "summary.json",

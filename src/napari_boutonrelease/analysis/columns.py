@@ -189,6 +189,7 @@ BOUTONS = TableDefinition(
         ),
         _number("noise_photon_limit_sd", _DFF, "noise_sd that photon and read noise alone would give", minimum=0),
         _number("noise_excess", "", "noise_sd over noise_photon_limit_sd", minimum=0),
+        _number("noise_n", "", "independent null amplitudes that noise_sd is worth: its SE is noise_sd / √(2 noise_n)"),
         _column("n_set", "string", "", "numbers of release sites that the data cannot exclude", pattern=r"\d+(;\d+)*"),
         _number("q_own", _DFF, "q of the bouton fitted alone", minimum=0),
         _probability("p_release_own", "p_release of the bouton fitted alone"),

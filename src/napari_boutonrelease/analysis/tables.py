@@ -70,6 +70,7 @@ def bouton_table(measured: Measured) -> pd.DataFrame:
             "f0": _finite_mean(measured.responses.baseline.f0),
             "noise_sd": fit.noise_sd,
             "noise_from": list(fit.noise_from),
+            "noise_n": fit.n_null_effective,
             "snr": snr,
             "threshold": calls.threshold,
             "trials": calls.n_trials[:, 0],

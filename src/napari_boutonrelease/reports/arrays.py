@@ -18,9 +18,9 @@ if TYPE_CHECKING:
 
 
 def write_traces(result: AnalysisResult, path: Path) -> None:
-    """Write `time_s` (frame), `bouton` (ids), and `f`, `f0`, `dff` (bouton, frame), without pickle.
+    """Write `time_s` (frame), `bouton` (ids), `f`, `f0`, `dff` (bouton, frame), `null_amplitude` (bouton, null).
 
-    The traces are stored as float32, whose rounding (6e-8 of the value) is far below photon noise.
+    No pickle. The values are stored as float32, whose rounding (6e-8 of the value) is far below photon noise.
     """
     np.savez(
         path,
@@ -29,7 +29,16 @@ def write_traces(result: AnalysisResult, path: Path) -> None:
         f=np.asarray(result.f, dtype=np.float32),
         f0=np.asarray(result.f0, dtype=np.float32),
         dff=np.asarray(result.dff, dtype=np.float32),
+        null_amplitude=np.asarray(result.null_amplitude, dtype=np.float32),
     )
+
+
+def write_mean_image(result: AnalysisResult, path: Path) -> None:
+    """Write the mean of the frames, movement taken out (counts, float32)."""
+    import tifffile
+
+    image = np.asarray(result.mean_image, dtype=np.float32)
+    tifffile.imwrite(path, image, compression="zlib", photometric="minisblack", **_pixel_size(result))
 
 
 def write_label_image(result: AnalysisResult, path: Path) -> None:

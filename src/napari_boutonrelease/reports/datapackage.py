@@ -25,7 +25,9 @@ _MEDIA_TYPES = {
     "tif": "image/tiff",
 }
 _MEANINGS = {
-    "traces.npz": "time_s (frame), bouton (ids), and f (counts), f0 (counts), dff (dF/F) as (bouton, frame)",
+    "traces.npz": "time_s (frame), bouton (ids), f (counts), f0 (counts), dff (dF/F) as (bouton, frame), and "
+    "null_amplitude (dF/F) as (bouton, null)",
+    "mean_image.tif": "mean of the frames, movement taken out (counts)",
     "footprints.tif": "label image: 0 outside, the bouton id in its footprint's core",
     "footprint_weights.tif": "extraction weights, a page a bouton in the order of the ids",
     "summary.json": "results of the whole axon and the recording's quality",

@@ -7,7 +7,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from ..analysis.columns import TABLES
-from .arrays import write_label_image, write_traces, write_weights
+from .arrays import write_label_image, write_mean_image, write_traces, write_weights
 from .datapackage import describe_package
 from .folder import MARK, PACKAGE, replaced_whole
 from .strict_json import write_json
@@ -81,6 +81,7 @@ def _writers(result: AnalysisResult, *, figures: bool) -> dict[str, Writer]:
     """Every file by name and what writes it."""
     writers: dict[str, Writer] = {f"{name}.csv": _table_writer(result, name) for name in TABLES}
     writers["traces.npz"] = lambda path: write_traces(result, path)
+    writers["mean_image.tif"] = lambda path: write_mean_image(result, path)
     writers["footprints.tif"] = lambda path: write_label_image(result, path)
     if len(result.footprints.weights):
         writers["footprint_weights.tif"] = lambda path: write_weights(result, path)
