@@ -12,6 +12,7 @@ from qtpy.QtGui import QKeyEvent
 from qtpy.QtWidgets import QFrame, QLabel, QScrollArea, QSizePolicy, QVBoxLayout, QWidget
 
 from ..analysis.model import AnalysisModel
+from .binding import warn_of_binding
 from .worker import runner_of
 
 if TYPE_CHECKING:
@@ -54,6 +55,7 @@ class Panel(QScrollArea):
 
     def __init__(self, napari_viewer: napari.viewer.Viewer) -> None:
         super().__init__()
+        warn_of_binding()
         self.viewer = bare_viewer(napari_viewer)
         self.model = model_of(self.viewer)
         self.runner = runner_of(self.model)
