@@ -2,17 +2,18 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING
 
 import numpy as np
 
 from ..errors import InputError
+from .hand_edits import mean_place
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
-    from .hand_edits import Place
+    from .hand_edits import HandEdits, Place
     from .model import AnalysisModel
     from .sites import Sites
 
@@ -27,13 +28,16 @@ def add_bouton(model: AnalysisModel, place: Place) -> int:
     InputError
         If boutons were not looked for yet, or the place is outside the image or on another bouton.
     """
-    sites = _sites(model)
-    _check_free(model, sites, place)
-    model.edit(model.edits.add(*place))
-    return _id_at(model, place)
+    sites, edits = _now(model)
+    _check_inside(sites, place)
+    other = _bouton_at(model, sites, place, besides=())
+    if other is not None:
+        raise InputError(f"Bouton {other} is here already: move, redraw or delete it instead.")
+    model.edit(edits.add(*place, bouton=sites.next_bouton))
+    return sites.next_bouton
 
 
-def move_boutons(model: AnalysisModel, places: dict[int, Place]) -> None:
+def move_boutons(model: AnalysisModel, places: Mapping[int, Place]) -> None:
     """Move boutons, id to new (y, x), as one change.
 
     Raises
@@ -41,11 +45,13 @@ def move_boutons(model: AnalysisModel, places: dict[int, Place]) -> None:
     InputError
         If a new place is outside the image or on another bouton, or there is no such bouton.
     """
-    sites = _sites(model)
-    edits = model.edits
+    sites, edits = _now(model)
     for bouton, place in places.items():
-        _check_free(model, sites, place, moving=set(places))
-        edits = edits.move(_place(sites, bouton), place)
+        _check_inside(sites, place)
+        other = _bouton_at(model, sites, place, besides=tuple(places))
+        if other is not None:
+            raise InputError(f"Bouton {other} is here already: to make one of the two, merge them.")
+        edits = edits.move(_place(sites, bouton), place, bouton=bouton)
     model.edit(edits)
 
 
@@ -57,8 +63,7 @@ def delete_boutons(model: AnalysisModel, boutons: Sequence[int]) -> None:
     InputError
         If there is no such bouton.
     """
-    sites = _sites(model)
-    edits = model.edits
+    sites, edits = _now(model)
     for bouton in boutons:
         edits = edits.delete(_place(sites, bouton))
     model.edit(edits)
@@ -70,14 +75,21 @@ def merge_boutons(model: AnalysisModel, boutons: Sequence[int]) -> int:
     Raises
     ------
     InputError
-        If fewer than two are given, or there is no such bouton.
+        If fewer than two are given, there is no such bouton, or another one lies where the merged one would be.
     """
-    if len(boutons) < 2:
+    first, *others = sorted(set(boutons)) or [0]
+    if not others:
         raise InputError(f"Merging takes at least two boutons (given {len(boutons)}): select those that are one.")
-    sites = _sites(model)
-    edits = model.edits.merge(tuple(_place(sites, bouton) for bouton in sorted(boutons)))
-    model.edit(edits)
-    return _id_at(model, edits.placed[-1].place)
+    sites, edits = _now(model)
+    places = tuple(_place(sites, bouton) for bouton in (first, *others))
+    other = _bouton_at(model, sites, mean_place(places), besides=(first, *others))
+    if other is not None:
+        listed = f"{', '.join(map(str, (first, *others[:-1])))} and {others[-1]}"
+        raise InputError(
+            f"Boutons {listed} would merge on top of bouton {other}: select it too, or move it away first."
+        )
+    model.edit(edits.merge(places, bouton=first))
+    return first
 
 
 def redraw_bouton(model: AnalysisModel, bouton: int, pixels: NDArray[np.integer]) -> int:
@@ -86,20 +98,29 @@ def redraw_bouton(model: AnalysisModel, bouton: int, pixels: NDArray[np.integer]
     Raises
     ------
     InputError
-        If no pixel is given, or there is no such bouton.
+        If no pixel is given, there is no such bouton, or another one lies at the footprint's centre.
     """
     if not len(pixels):
         raise InputError(f"Bouton {bouton} has no pixel left: paint at least one, or delete the bouton.")
-    edits = model.edits.redraw(_place(_sites(model), bouton), tuple((int(y), int(x)) for y, x in pixels))
-    model.edit(edits)
-    return _id_at(model, edits.placed[-1].place)
+    sites, edits = _now(model)
+    drawn = tuple((int(y), int(x)) for y, x in pixels)
+    place = _place(sites, bouton)
+    other = _bouton_at(model, sites, mean_place(drawn), besides=(bouton,))
+    if other is not None:
+        raise InputError(
+            f"The footprint of bouton {bouton} would be centred on bouton {other}: paint it beside that one."
+        )
+    model.edit(edits.redraw(place, drawn, bouton=bouton))
+    return bouton
 
 
-def _sites(model: AnalysisModel) -> Sites:
+def _now(model: AnalysisModel) -> tuple[Sites, HandEdits]:
+    """Where boutons are now, and the edits that led there, with the ids of all that were placed."""
     sites = model.sites()
     if sites is None:
         raise InputError("Boutons were not looked for yet: find them first, then change them by hand.")
-    return sites
+    places = zip(sites.y_px.tolist(), sites.x_px.tolist(), strict=True)
+    return sites, model.edits.numbered(dict(zip(places, sites.bouton.tolist(), strict=True)))
 
 
 def _place(sites: Sites, bouton: int) -> Place:
@@ -109,24 +130,22 @@ def _place(sites: Sites, bouton: int) -> Place:
     return float(sites.y_px[at[0]]), float(sites.x_px[at[0]])
 
 
-def _check_free(model: AnalysisModel, sites: Sites, place: Place, *, moving: set[int] | None = None) -> None:
+def _check_inside(sites: Sites, place: Place) -> None:
     height, width = sites.evidence.shape
     y, x = place
     if not (-0.5 <= y <= height - 0.5 and -0.5 <= x <= width - 0.5):
         raise InputError(f"The place y = {y:.1f}, x = {x:.1f} px lies outside the image of {height} x {width} pixels.")
+
+
+def _bouton_at(model: AnalysisModel, sites: Sites, place: Place, *, besides: Sequence[int]) -> int | None:
+    """Id of the bouton that lies too near a place for another one, besides some; None where there is room."""
+    others = ~np.isin(sites.bouton, besides)
+    distance = np.where(others, np.hypot(sites.y_px - place[0], sites.x_px - place[1]), np.inf)
     spacing_px = model.settings.detection.spacing_um / _pixel_um(model)
-    others = ~np.isin(sites.bouton, list(moving or ()))
-    distance = np.where(others, np.hypot(sites.y_px - y, sites.x_px - x), np.inf)
-    if distance.size and distance.min() < _APART * spacing_px:
-        other = int(sites.bouton[np.argmin(distance)])
-        raise InputError(f"Bouton {other} is here already: move, redraw or delete it instead.")
+    near = distance.size > 0 and distance.min() < _APART * spacing_px
+    return int(sites.bouton[np.argmin(distance)]) if near else None
 
 
 def _pixel_um(model: AnalysisModel) -> float:
     recording = None if model.pipeline is None else model.pipeline.recording
     return 1.0 if recording is None else recording.pixel_um
-
-
-def _id_at(model: AnalysisModel, place: Place) -> int:
-    sites: Sites = _sites(model)
-    return int(sites.bouton[np.argmin(np.hypot(sites.y_px - place[0], sites.x_px - place[1]))])

@@ -209,7 +209,7 @@ class AnalysisModel:
         if edits != self._edits:
             self._done.append(self._edits)
             self._undone = []
-            self._edits = edits
+            self._edits = edits.following(self._edits)
             self.edits_changed.emit()
 
     @property
@@ -226,14 +226,14 @@ class AnalysisModel:
         """Take the last change by hand back."""
         if self._done:
             self._undone.append(self._edits)
-            self._edits = self._done.pop()
+            self._edits = self._done.pop().following(self._edits)
             self.edits_changed.emit()
 
     def redo(self) -> None:
         """Make the last change that was taken back again."""
         if self._undone:
             self._done.append(self._edits)
-            self._edits = self._undone.pop()
+            self._edits = self._undone.pop().following(self._edits)
             self.edits_changed.emit()
 
     # results

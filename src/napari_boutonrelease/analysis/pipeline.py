@@ -315,6 +315,7 @@ class Pipeline:
                 self._key("sites"),
                 edits.placed,
                 edits.cleared,
+                tuple(corrected.bouton.tolist()),
                 settings.responses.background_um,
                 settings.detection.footprint,
             ),

@@ -23,7 +23,7 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from ..boutons import Maxima, ResponseStack
-    from .hand_edits import HandEdits
+    from .hand_edits import HandEdits, Place
     from .recording_step import Recording
     from .settings import DetectionSettings
 
@@ -38,7 +38,7 @@ class Sites:
     Attributes
     ----------
     bouton : (n,) ndarray of int
-        Ids: as in a given file, else from 1 along the axon, or top to bottom; those placed by hand follow.
+        Ids: as in a given file, else from 1 along the axon, or top to bottom; those added by hand follow.
     y_px, x_px : (n,) ndarray
         Centres in reference coordinates (px).
     found_by : tuple of str
@@ -47,6 +47,8 @@ class Sites:
         Distance along the axon's path and from it (px); NaN without a path.
     drawn : tuple of ((k, 2) ndarray of int or None)
         Pixels of drawn footprints.
+    next_bouton : int
+        Id for the next one that is added by hand: no bouton has or had it.
     spot_sigma_px : float
         Gaussian sigma of a bouton's image (px).
     evidence : (y, x) ndarray
@@ -64,6 +66,7 @@ class Sites:
     axon_px: NDArray[np.float64]
     axon_offset_px: NDArray[np.float64]
     drawn: tuple[NDArray[np.intp] | None, ...]
+    next_bouton: int
     spot_sigma_px: float
     evidence: NDArray[np.float64]
     evidence_cut: float
@@ -127,6 +130,7 @@ def find_sites(
         axon_px=np.full(n, np.nan),
         axon_offset_px=np.full(n, np.nan),
         drawn=(None,) * n,
+        next_bouton=n + 1,
         spot_sigma_px=sigma,
         evidence=found.evidence.astype(np.float64),
         evidence_cut=found.cut,
@@ -158,6 +162,7 @@ def given_sites(path: str | Path, recording: Recording, *, settings: DetectionSe
         axon_px=np.full(n, np.nan),
         axon_offset_px=np.full(n, np.nan),
         drawn=drawn,
+        next_bouton=int(given.bouton.max(initial=0)) + 1,
         spot_sigma_px=sigma,
         evidence=np.zeros((height, width)),
         evidence_cut=float("nan"),
@@ -184,10 +189,19 @@ def read_axon_px(path: str | Path | None, *, recording: Recording) -> NDArray[np
 
 
 def correct_by_hand(sites: Sites, edits: HandEdits, *, axon: NDArray[np.float64] | None, spacing_px: float) -> Sites:
-    """Apply edits by hand. Ids stay, also of what was moved or redrawn; boutons added take the next ones."""
-    if not (edits.placed or edits.cleared):
+    """Apply edits by hand. Ids stay, whatever else is added, moved, redrawn or deleted.
+
+    A bouton that was moved or redrawn has the id of the found one that it was. One that was added has its own, which
+    those found pass over: they are numbered in order with what is left.
+    """
+    if not (edits.placed or edits.cleared or edits.given):
         return sites
-    kept = sites.take(edits.spared(sites.y_px, sites.x_px, reach_px=_EDIT_REACH * spacing_px))
+    reach_px = _EDIT_REACH * spacing_px
+    came_from = [_nearest(sites, one.origin, reach_px=reach_px) for one in edits.placed]
+    own = {one.bouton or 0 for one, found in zip(edits.placed, came_from, strict=True) if found is None}
+    sites = _number_without(sites, own | set(edits.given))
+    kept = sites.take(edits.spared(sites.y_px, sites.x_px, reach_px=reach_px))
+    ids = _ids_by_hand(sites, edits, came_from, taken=set(kept.bouton.tolist()))
     ys = np.array([one.y_px for one in edits.placed])
     xs = np.array([one.x_px for one in edits.placed])
     along, aside = np.full(len(ys), np.nan), np.full(len(ys), np.nan)
@@ -195,33 +209,49 @@ def correct_by_hand(sites: Sites, edits: HandEdits, *, axon: NDArray[np.float64]
         along, aside = distance_along(axon, y_px=ys, x_px=xs)
     corrected = replace(
         kept,
-        bouton=np.concatenate([kept.bouton, _ids(sites, edits, kept.bouton, reach_px=_EDIT_REACH * spacing_px)]),
+        bouton=np.concatenate([kept.bouton, np.array(ids, dtype=np.int64)]),
         y_px=np.concatenate([kept.y_px, ys]),
         x_px=np.concatenate([kept.x_px, xs]),
         found_by=(*kept.found_by, *("hand",) * len(ys)),
         axon_px=np.concatenate([kept.axon_px, along]),
         axon_offset_px=np.concatenate([kept.axon_offset_px, aside]),
         drawn=(*kept.drawn, *(_inside(one.pixels, sites.evidence.shape) for one in edits.placed)),
+        next_bouton=max([*sites.bouton.tolist(), *ids, *edits.given], default=0) + 1,
     )
     return corrected.take(np.argsort(corrected.bouton, kind="stable"))
 
 
-def _ids(sites: Sites, edits: HandEdits, taken: NDArray[np.int64], *, reach_px: float) -> NDArray[np.int64]:
-    """Return the id of each bouton placed by hand: that of the found one it comes from, else the next free one."""
-    used = set(taken.tolist())
+def _nearest(sites: Sites, place: Place | None, *, reach_px: float) -> int | None:
+    """Index of the found bouton at a place; None where there is none."""
+    if place is None or not len(sites.bouton):
+        return None
+    distance = np.hypot(sites.y_px - place[0], sites.x_px - place[1])
+    nearest = int(np.argmin(distance))
+    return nearest if distance[nearest] <= reach_px else None
+
+
+def _number_without(sites: Sites, ids: set[int]) -> Sites:
+    """Give found boutons ids in order, but none of these; those of a file keep theirs."""
+    if "file" in sites.found_by:
+        return sites
+    free = np.setdiff1d(np.arange(1, len(sites.bouton) + len(ids) + 1), list(ids))
+    return replace(sites, bouton=free[: len(sites.bouton)])
+
+
+def _ids_by_hand(sites: Sites, edits: HandEdits, came_from: list[int | None], *, taken: set[int]) -> list[int]:
+    """Id of each bouton placed by hand: of the found one that it was, else its own, else the next free one."""
+    own = {one.bouton for one in edits.placed}
     following = int(sites.bouton.max(initial=0)) + 1
-    ids = []
-    for one in edits.placed:
-        name = following
-        if one.origin is not None and len(sites.bouton):
-            distance = np.hypot(sites.y_px - one.origin[0], sites.x_px - one.origin[1])
-            nearest = int(np.argmin(distance))
-            if distance[nearest] <= reach_px and int(sites.bouton[nearest]) not in used:
-                name = int(sites.bouton[nearest])
-        following += name == following
-        used.add(name)
+    ids: list[int] = []
+    for one, found in zip(edits.placed, came_from, strict=True):
+        name = one.bouton if found is None else int(sites.bouton[found])
+        if name is None or name in taken:
+            while following in taken | own:
+                following += 1
+            name = following
+        taken = taken | {name}
         ids.append(name)
-    return np.array(ids, dtype=np.int64)
+    return ids
 
 
 def _inside(pixels: tuple[tuple[int, int], ...], shape: tuple[int, ...]) -> NDArray[np.intp] | None:
