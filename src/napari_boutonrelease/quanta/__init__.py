@@ -1,6 +1,7 @@
 """Release amplitudes in, parameters out: binomial release, intervals, failures, pulse pairs."""
 
 from .binomial import SitesFit, fit_binomial, fit_sites
+from .differences import difference_of_estimates, ratio_of_estimates
 from .failures import (
     binomial_failures,
     binomial_moments,
@@ -70,6 +71,7 @@ __all__ = [
     "clopper_pearson_interval",
     "component_logpdf",
     "detection_power",
+    "difference_of_estimates",
     "direct_vesicles",
     "expected_false_calls",
     "false_call_rate",
@@ -93,6 +95,7 @@ __all__ = [
     "poisson_log_weights",
     "poisson_m_max",
     "ratio_interval",
+    "ratio_of_estimates",
     "rogan_gladen",
     "unbiased_ratio",
     "variance_of_variance",

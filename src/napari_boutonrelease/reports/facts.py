@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from ..analysis.columns import SUMMARY
+from ..analysis.grids import response_grid
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -67,16 +68,7 @@ def texts(frame: pd.DataFrame, column: str) -> list[str]:
 
 def amplitude_grid(result: AnalysisResult, column: str) -> NDArray[np.float64]:
     """Return a column of the responses as (bouton, trial, pulse), NaN where unused or missing."""
-    responses, trials_pulses = result.responses, result.stimulus_s.shape
-    grid = np.full((len(result.boutons), *trials_pulses), np.nan)
-    if not len(responses):
-        return grid
-    ids = {bouton: row for row, bouton in enumerate(values(result.boutons, "bouton"))}
-    rows = np.array([ids.get(bouton, -1) for bouton in values(responses, "bouton")])
-    trial, pulse = (values(responses, name).astype(int) - 1 for name in ("trial", "pulse"))
-    kept = (values(responses, "used") == 1) & (rows >= 0) & (trial < grid.shape[1]) & (pulse < grid.shape[2])
-    grid[rows[kept], trial[kept], pulse[kept]] = values(responses, column)[kept]
-    return grid
+    return response_grid(result.responses, column, bouton=result.boutons["bouton"], shape=result.stimulus_s.shape)
 
 
 def silent(result: AnalysisResult) -> NDArray[np.bool_]:
