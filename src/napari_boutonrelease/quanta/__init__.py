@@ -35,11 +35,23 @@ from .likelihoods import (
     vesicle_posterior,
 )
 from .mixture_fit import LogPrior
+from .planned_bouton import Doubts, PlannedBouton
+from .planned_power import change_power, paired_change_power, ppr_power, simulated_ppr_power
+from .planning import (
+    TrialsNeeded,
+    trials_for_change,
+    trials_for_paired_change,
+    trials_for_ppr,
+    trials_for_sites,
+    trials_for_width,
+)
 from .poisson import PoissonHistogramFit, fit_poisson_histogram
 from .pooled import AxonRelease, fit_axon_release
 from .pulse_pairs import PulsePair, ReleaseHistory, fisher_exact_p, measure_history, measure_pulse_pair
 from .ratios import FiellerInterval, bootstrap_ratio_interval, fieller_interval, unbiased_ratio
+from .release_information import effective_trials, expected_width
 from .site_search import ReleaseModel
+from .sites_evidence import SitesEvidence, sites_evidence
 from .threshold import (
     balanced_threshold,
     detection_power,
@@ -52,15 +64,19 @@ from .vesicle_sizes import gamma_vesicles_logpdf
 
 __all__ = [
     "AxonRelease",
+    "Doubts",
     "Estimate",
     "FiellerInterval",
     "LogPrior",
+    "PlannedBouton",
     "PoissonHistogramFit",
     "PulsePair",
     "ReleaseHistory",
     "ReleaseModel",
     "ReleasePriors",
+    "SitesEvidence",
     "SitesFit",
+    "TrialsNeeded",
     "balanced_threshold",
     "benjamini_hochberg",
     "binomial_failures",
@@ -68,12 +84,15 @@ __all__ = [
     "binomial_log_weights",
     "binomial_moments",
     "bootstrap_ratio_interval",
+    "change_power",
     "clopper_pearson_interval",
     "component_logpdf",
     "detection_power",
     "difference_of_estimates",
     "direct_vesicles",
+    "effective_trials",
     "expected_false_calls",
+    "expected_width",
     "false_call_rate",
     "fieller_interval",
     "fisher_exact_p",
@@ -89,14 +108,23 @@ __all__ = [
     "mixture_loglikelihood",
     "newcombe_difference_interval",
     "null_loglikelihood",
+    "paired_change_power",
     "peak_false_call_rate",
     "poisson_failures",
     "poisson_gaussian_loglikelihood",
     "poisson_log_weights",
     "poisson_m_max",
+    "ppr_power",
     "ratio_interval",
     "ratio_of_estimates",
     "rogan_gladen",
+    "simulated_ppr_power",
+    "sites_evidence",
+    "trials_for_change",
+    "trials_for_paired_change",
+    "trials_for_ppr",
+    "trials_for_sites",
+    "trials_for_width",
     "unbiased_ratio",
     "variance_of_variance",
     "variance_of_variance_from_kurtosis",
