@@ -9,7 +9,8 @@ import numpy as np
 import pandas as pd
 import pytest
 
-from napari_boutonrelease.analysis.columns import TABLES, empty_table
+from napari_boutonrelease.analysis.column_types import empty_table
+from napari_boutonrelease.analysis.columns import TABLES
 from napari_boutonrelease.analysis.results import AnalysisResult
 from napari_boutonrelease.analysis.settings import Settings
 from napari_boutonrelease.flags import join_flags

@@ -3,7 +3,8 @@
 import numpy as np
 import pytest
 
-from napari_boutonrelease.analysis.columns import SUMMARY, TABLES, check_columns, empty_table
+from napari_boutonrelease.analysis.column_types import check_columns, empty_table
+from napari_boutonrelease.analysis.columns import SUMMARY, TABLES
 from napari_boutonrelease.errors import OutputError
 from napari_boutonrelease.flags import FLAGS
 

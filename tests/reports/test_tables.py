@@ -4,7 +4,8 @@ import numpy as np
 import pandas as pd
 import pytest
 
-from napari_boutonrelease.analysis.columns import TABLES, empty_table
+from napari_boutonrelease.analysis.column_types import empty_table
+from napari_boutonrelease.analysis.columns import TABLES
 from napari_boutonrelease.errors import OutputError, SavedAnalysisError
 from napari_boutonrelease.reports import read_table, write_table
 

@@ -5,129 +5,16 @@ This is the one home of the names. Analyses build their tables from it, reports 
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping
-from dataclasses import dataclass, field
-from typing import TYPE_CHECKING, Any, Literal
-
-from ..errors import OutputError
 from ..flags import FLAGS
-
-if TYPE_CHECKING:
-    import pandas as pd
-
-ColumnType = Literal["integer", "number", "string"]
-
-_DFF = "dF/F"
-_INTERVAL = "95 % interval"
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Column:
-    """One column of a table.
-
-    Attributes
-    ----------
-    name : str
-        Header in the CSV file and name in the DataFrame.
-    type : {"integer", "number", "string"}
-        Type of a cell that is not empty.
-    unit : str
-        Unit of the values, empty where they have none.
-    meaning : str
-        What a cell says, in one line.
-    constraints : mapping
-        Frictionless constraints (`required`, `unique`, `minimum`, `maximum`, `enum`, `pattern`).
-    decimals : int or None
-        Digits after the point that are written; None writes six significant digits.
-    """
-
-    name: str
-    type: ColumnType
-    unit: str
-    meaning: str
-    constraints: Mapping[str, Any] = field(default_factory=dict)
-    decimals: int | None = None
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class TableDefinition:
-    """One table.
-
-    Attributes
-    ----------
-    name : str
-        Attribute of the result and stem of the CSV file.
-    meaning : str
-        What a row is.
-    key : tuple of str
-        Columns that together name a row; empty where rows have no name.
-    columns : tuple of Column
-        In the order of the file.
-    """
-
-    name: str
-    meaning: str
-    key: tuple[str, ...]
-    columns: tuple[Column, ...]
-
-    @property
-    def names(self) -> tuple[str, ...]:
-        """Names of the columns, in order."""
-        return tuple(column.name for column in self.columns)
-
-
-def _column(
-    name: str,
-    type_: ColumnType,
-    unit: str,
-    meaning: str,
-    decimals: int | None = None,
-    **constraints: Any,
-) -> Column:
-    return Column(name=name, type=type_, unit=unit, meaning=meaning, constraints=constraints, decimals=decimals)
-
-
-def _number(name: str, unit: str, meaning: str, **constraints: Any) -> Column:
-    return _column(name, "number", unit, meaning, **constraints)
-
-
-def _count(name: str, meaning: str, **constraints: Any) -> Column:
-    return _column(name, "integer", "", meaning, **{"minimum": 0, **constraints})
-
-
-def _probability(name: str, meaning: str) -> Column:
-    return _column(name, "number", "", meaning, minimum=0, maximum=1)
-
-
-def _time(name: str, meaning: str) -> Column:
-    # Microseconds whatever the length of the recording: six significant digits would lose them after a second.
-    return _column(name, "number", "s", meaning, decimals=6, required=True)
-
-
-def _choice(name: str, meaning: str, *choices: str | int) -> Column:
-    kind: ColumnType = "integer" if isinstance(choices[0], int) else "string"
-    return _column(name, kind, "", meaning, enum=list(choices))
-
-
-def _limits(column: Column) -> tuple[Column, Column, Column]:
-    """Return the column and the two limits of its interval."""
-    lower, upper = (
-        Column(
-            name=f"{column.name}_{side}",
-            type=column.type,
-            unit=column.unit,
-            meaning=f"{end} end of the {_INTERVAL} of {column.name}",
-            constraints=column.constraints,
-        )
-        for side, end in (("lo", "lower"), ("hi", "upper"))
-    )
-    return column, lower, upper
-
-
-def _codes_pattern(codes: Iterable[str]) -> str:
-    one = "(" + "|".join(codes) + ")"
-    return f"{one}(;{one})*"
-
+from .column_types import DFF, TableDefinition
+from .column_types import choice as _choice
+from .column_types import codes_pattern as _codes_pattern
+from .column_types import column as _column
+from .column_types import count as _count
+from .column_types import number as _number
+from .column_types import probability as _probability
+from .column_types import time_column as _time
+from .column_types import with_limits as _limits
 
 _BOUTON = _count("bouton", "bouton id, from 1", minimum=1, required=True)
 _TRIAL = _count("trial", "trial number, from 1", minimum=1, required=True)
@@ -148,17 +35,17 @@ BOUTONS = TableDefinition(
         _count("footprint_px", "pixels of the footprint"),
         _choice("found_by", "how the bouton was found", "responses", "shape", "both", "hand", "file"),
         _number("f0", "counts", "baseline fluorescence above background, mean over the recording"),
-        _number("noise_sd", _DFF, "SD of the amplitude estimator where nothing was stimulated", minimum=0),
+        _number("noise_sd", DFF, "SD of the amplitude estimator where nothing was stimulated", minimum=0),
         _choice("noise_from", "where noise_sd was measured", "gaps", "residuals"),
         _number("snr", "", "q divided by noise_sd: one vesicle in units of the noise", minimum=0),
-        _number("threshold", _DFF, "amplitude above which a response is called a release"),
+        _number("threshold", DFF, "amplitude above which a response is called a release"),
         _count("trials", "usable trials for pulse 1"),
         *_limits(_probability("p_called", "called fraction of pulse 1")),
         _number("false_calls_expected", "", "calls of pulse 1 expected from noise alone", minimum=0),
         *_limits(_probability("p_release", "probability that pulse 1 releases at least one vesicle")),
-        _number("amplitude_mean", _DFF, "mean amplitude of pulse 1, failures included"),
-        _number("amplitude_se", _DFF, "standard error of amplitude_mean", minimum=0),
-        _number("potency", _DFF, "mean amplitude of the first pulses that released"),
+        _number("amplitude_mean", DFF, "mean amplitude of pulse 1, failures included"),
+        _number("amplitude_se", DFF, "standard error of amplitude_mean", minimum=0),
+        _number("potency", DFF, "mean amplitude of the first pulses that released"),
         _probability("p2_release", "probability that pulse 2 releases at least one vesicle"),
         *_limits(_number("ppr", "", "paired-pulse ratio: mean amplitude of pulse 2 over that of pulse 1")),
         _number("ppf", "", "paired-pulse facilitation: ppr - 1"),
@@ -176,7 +63,7 @@ BOUTONS = TableDefinition(
         *_limits(_count("n_sites", "most likely number of release sites", minimum=1)),
         *_limits(_probability("p_site", "release probability of one site at pulse 1")),
         *_limits(
-            _number("q", _DFF, "response to one vesicle; of a silent bouton, as the axon's others have it", minimum=0)
+            _number("q", DFF, "response to one vesicle; of a silent bouton, as the axon's others have it", minimum=0)
         ),
         _choice("q_from", "whether q rests on the bouton's own amplitudes or on the axon's", "own", "axon"),
         _number("q_cv", "", "coefficient of variation of one vesicle's response", minimum=0),
@@ -187,11 +74,11 @@ BOUTONS = TableDefinition(
         *_limits(
             _probability("p_corrected", "called fraction freed of false calls and misses (Rogan and Gladen 1978)")
         ),
-        _number("noise_photon_limit_sd", _DFF, "noise_sd that photon and read noise alone would give", minimum=0),
+        _number("noise_photon_limit_sd", DFF, "noise_sd that photon and read noise alone would give", minimum=0),
         _number("noise_excess", "", "noise_sd over noise_photon_limit_sd", minimum=0),
         _number("noise_n", "", "independent null amplitudes that noise_sd is worth: its SE is noise_sd / √(2 noise_n)"),
         _column("n_set", "string", "", "numbers of release sites that the data cannot exclude", pattern=r"\d+(;\d+)*"),
-        _number("q_own", _DFF, "q of the bouton fitted alone", minimum=0),
+        _number("q_own", DFF, "q of the bouton fitted alone", minimum=0),
         _probability("p_release_own", "p_release of the bouton fitted alone"),
         _column("flags", "string", "", "reasons for doubt, codes joined by ;", pattern=_codes_pattern(FLAGS)),
     ),
@@ -208,10 +95,10 @@ PULSES = TableDefinition(
         _count("called", "trials in which this pulse was called a release"),
         *_limits(_probability("p_called", "called fraction")),
         *_limits(_probability("p_release", "probability that this pulse releases at least one vesicle")),
-        _number("amplitude_mean", _DFF, "mean amplitude, failures included"),
-        _number("amplitude_se", _DFF, "standard error of amplitude_mean", minimum=0),
-        _number("amplitude_sd", _DFF, "SD of the amplitudes over the trials", minimum=0),
-        _number("potency", _DFF, "mean amplitude of the pulses that released"),
+        _number("amplitude_mean", DFF, "mean amplitude, failures included"),
+        _number("amplitude_se", DFF, "standard error of amplitude_mean", minimum=0),
+        _number("amplitude_sd", DFF, "SD of the amplitudes over the trials", minimum=0),
+        _number("potency", DFF, "mean amplitude of the pulses that released"),
     ),
 )
 
@@ -224,8 +111,8 @@ RESPONSES = TableDefinition(
         _TRIAL,
         _PULSE,
         _time("stimulus_s", "time of the stimulus on the recording's clock"),
-        _number("amplitude", _DFF, "fitted height of the response"),
-        _number("amplitude_se", _DFF, "standard error of the amplitude", minimum=0),
+        _number("amplitude", DFF, "fitted height of the response"),
+        _number("amplitude_se", DFF, "standard error of the amplitude", minimum=0),
         _choice("called", "1 where the amplitude exceeds the threshold, else 0", 0, 1),
         _probability("p_released", "posterior probability that the pulse released"),
         _choice("used", "1 where the response counts in every estimate, else 0", 0, 1),
@@ -240,8 +127,8 @@ SPONTANEOUS = TableDefinition(
     columns=(
         _BOUTON,
         _time("time_s", "time of the release on the recording's clock"),
-        _number("amplitude", _DFF, "fitted height"),
-        _number("amplitude_se", _DFF, "standard error of the amplitude", minimum=0),
+        _number("amplitude", DFF, "fitted height"),
+        _number("amplitude_se", DFF, "standard error of the amplitude", minimum=0),
         _number("score", "", "amplitude over its standard error under noise alone"),
     ),
 )
@@ -331,37 +218,3 @@ SUMMARY: dict[str, str] = {
     "quality.dead_px": "pixels that do not change at all",
 }
 """Keys of the summary that reports put into words, as dotted paths; each may be missing or null."""
-
-
-def check_columns(table: TableDefinition, names: Iterable[str]) -> None:
-    """Raise unless `names` are the columns of the table, in order.
-
-    Parameters
-    ----------
-    table : TableDefinition
-        What the columns should be.
-    names : iterable of str
-        Names found.
-
-    Raises
-    ------
-    OutputError
-        If a column is missing, unknown, or out of order.
-    """
-    found, wanted = tuple(names), table.names
-    if found == wanted:
-        return
-    missing = [name for name in wanted if name not in found]
-    unknown = [name for name in found if name not in wanted]
-    problems = [f"missing: {', '.join(missing)}"] if missing else []
-    problems += [f"unknown: {', '.join(unknown)}"] if unknown else []
-    problem = "; ".join(problems) or "the order differs or a name comes twice"
-    raise OutputError(f"Table {table.name} does not have the columns of the data dictionary ({problem}).")
-
-
-def empty_table(table: TableDefinition) -> pd.DataFrame:
-    """Return the table with its columns and no row; numbers are float64, integers `Int64`, text `string`."""
-    import pandas as pd
-
-    types = {"integer": "Int64", "number": "float64", "string": "string"}
-    return pd.DataFrame({column.name: pd.Series(dtype=types[column.type]) for column in table.columns})

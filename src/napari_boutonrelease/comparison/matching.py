@@ -85,8 +85,8 @@ def match_boutons(recordings: Sequence[ComparedRecording], *, match_um: float) -
         shift[k], likeness[k] = measure_shift(first.mean_image, other.mean_image)
         if not likeness[k] >= _ALIKE:
             raise InputError(
-                f"The mean images of {first.name} and {other.name} do not match (correlation {likeness[k]:.2f}, at least "
-                f"{_ALIKE} is needed): compare recordings of one field, or give the pairs of boutons in a table."
+                f"The mean images of {first.name} and {other.name} do not match (correlation {likeness[k]:.2f}, but "
+                f"at least {_ALIKE} is needed): compare recordings of one field, or give the pairs of boutons in a table."
             )
         row[:, k], distance[:, k] = _pair(first.position_px + shift[k], other.position_px, reach_px=reach_px)
     return Matches(row=row, distance_px=distance, shift_px=shift, likeness=likeness)
@@ -178,7 +178,7 @@ def _check_pixels(first: ComparedRecording, other: ComparedRecording) -> None:
 
 
 def _structure(picture: Floats, size: tuple[int, ...]) -> tuple[Floats, NDArray[np.bool_]]:
-    """What is as large as boutons and axons, and which part of the common frame the picture covers."""
+    """Keep what is as large as boutons and axons; tell which part of the common frame the picture covers."""
     from scipy.ndimage import gaussian_filter
 
     known = np.isfinite(picture)

@@ -11,7 +11,8 @@ from matplotlib.figure import Figure
 from matplotlib.lines import Line2D
 from numpy.typing import NDArray
 
-from ..analysis.columns import BOUTONS, Column
+from ..analysis.column_types import Column
+from ..analysis.columns import BOUTONS
 from ..reports.facts import texts, values
 from .bouton_marks import FOUND_BY, colour_range, is_probability, sequential
 from .panel import Panel

@@ -12,7 +12,7 @@ from ..flags import FLAGS
 if TYPE_CHECKING:
     import pandas as pd
 
-    from ..analysis.columns import TableDefinition
+    from ..analysis.column_types import TableDefinition
 
 _ROLE = Qt.ItemDataRole
 _RIGHT = int(Qt.AlignmentFlag.AlignRight | Qt.AlignmentFlag.AlignVCenter)

@@ -7,7 +7,8 @@ import re
 from collections.abc import Mapping
 from typing import TYPE_CHECKING, Any
 
-from ..analysis.columns import BOUTONS, Column, TableDefinition
+from ..analysis.column_types import Column, TableDefinition
+from ..analysis.columns import BOUTONS
 from .folder import PACKAGE
 
 if TYPE_CHECKING:

@@ -7,7 +7,7 @@ import math
 from collections.abc import Callable
 from typing import TYPE_CHECKING, Any
 
-from ..analysis.columns import Column, TableDefinition, check_columns
+from ..analysis.column_types import Column, TableDefinition, check_columns
 from ..errors import OutputError, SavedAnalysisError
 
 if TYPE_CHECKING:
