@@ -86,7 +86,7 @@ def match_boutons(recordings: Sequence[ComparedRecording], *, match_um: float) -
         if not likeness[k] >= _ALIKE:
             raise InputError(
                 f"The mean images of {first.name} and {other.name} do not match (correlation {likeness[k]:.2f}, but "
-                f"at least {_ALIKE} is needed): compare recordings of one field, or give the pairs of boutons in a table."
+                f"{_ALIKE} is needed): compare recordings of one field, or give the pairs of boutons in a table."
             )
         row[:, k], distance[:, k] = _pair(first.position_px + shift[k], other.position_px, reach_px=reach_px)
     return Matches(row=row, distance_px=distance, shift_px=shift, likeness=likeness)

@@ -45,6 +45,7 @@ from .planning import (
     trials_for_sites,
     trials_for_width,
 )
+from .paired_change import PairedChange, measure_paired_change
 from .poisson import PoissonHistogramFit, fit_poisson_histogram
 from .pooled import AxonRelease, fit_axon_release
 from .pulse_pairs import PulsePair, ReleaseHistory, fisher_exact_p, measure_history, measure_pulse_pair
@@ -69,6 +70,7 @@ __all__ = [
     "FiellerInterval",
     "LogPrior",
     "PlannedBouton",
+    "PairedChange",
     "PoissonHistogramFit",
     "PulsePair",
     "ReleaseHistory",
@@ -104,6 +106,7 @@ __all__ = [
     "jeffreys_interval",
     "mcnemar_test",
     "measure_history",
+    "measure_paired_change",
     "measure_pulse_pair",
     "mixture_loglikelihood",
     "newcombe_difference_interval",
