@@ -1,65 +1,37 @@
 """The Axon dock: the map and the plot of any number, and what is selected."""
 
-import copy
-
 import numpy as np
 import pytest
 from napari.components import ViewerModel
 from qtpy.QtCore import QPoint, Qt
 from qtpy.QtTest import QTest
 
-from napari_boutonrelease.analysis.pipeline import Pipeline
-from napari_boutonrelease.analysis.settings import Settings
 from napari_boutonrelease.docks.axon_dock import AxonDock
 from napari_boutonrelease.docks.axon_plot import choices
 from napari_boutonrelease.docks.bouton_marks import NO_NUMBER, SILENT, sequential
 from napari_boutonrelease.docks.layers import add_movie, set_movie_layer
 from napari_boutonrelease.docks.panel import model_of
-from napari_boutonrelease.recording import movie_from_array
-from napari_boutonrelease.simulation import BoutonRecipe, preset_recipe, simulate_recording
 
-QUICK = Settings.model_validate({"quanta": {"n_max": 3, "bootstrap": 0}, "pairs": {"bootstrap": 100}})
 LONG_MS = 60_000
 
 
 @pytest.fixture(scope="module")
-def recording():
+def recording(simulate):
     """Two boutons that release, and one that never does."""
-    boutons = tuple(
-        BoutonRecipe(y_px=y, x_px=x, n_sites=1, p_site=p, q_dff=0.6, f0_photons=40.0)
+    boutons = (
+        {"y_px": y, "x_px": x, "n_sites": 1, "p_site": p, "q_dff": 0.6, "f0_photons": 40.0}
         for y, x, p in ((15.0, 12.0, 0.4), (18.0, 32.0, 0.0), (21.0, 52.0, 0.8))
     )
-    recipe = preset_recipe(
-        "fast-pair", height_px=36, width_px=64, trials=20, trial_interval_s=0.5, boutons=boutons,
-        specks_on_axon=0, specks_off_axon=0, wander_um=0.0, drift_walk_px=0.0, spontaneous_per_s=0.0,
-    )  # fmt: skip
-    simulation = simulate_recording(recipe, rng=np.random.default_rng(3))
-    movie = movie_from_array(
-        simulation.frames, frame_interval_s=recipe.frame_interval_s, pixel_size_um=recipe.pixel_size_um
-    )
-    return movie, simulation.protocol
-
-
-@pytest.fixture(scope="module")
-def measured_before(recording):
-    """A pipeline that has measured this recording."""
-    pipeline = Pipeline(*recording)
-    pipeline.measure(QUICK)
-    return pipeline
-
-
-def recall(dock, pipeline):
-    """Let a dock's analysis know what another one has measured: each test need not wait for it."""
-    vars(dock.model.pipeline).update({name: copy.copy(value) for name, value in vars(pipeline).items()})
+    return simulate(*boutons, seed=3, height_px=36, width_px=64, trials=20, trial_interval_s=0.5)
 
 
 @pytest.fixture
-def empty(recording, qtbot):
+def empty(recording, quick, qtbot):
     viewer = ViewerModel()
     movie, protocol = recording
     set_movie_layer(viewer, add_movie(viewer, movie))
     model = model_of(viewer)
-    model.settings = QUICK
+    model.settings = quick
     model.open(movie, protocol)
     dock = AxonDock(viewer)
     dock.resize(1000, 240)
@@ -71,9 +43,9 @@ def empty(recording, qtbot):
 
 
 @pytest.fixture
-def shown(empty, measured_before, qtbot):
+def shown(empty, recall, qtbot):
     viewer, dock = empty
-    recall(dock, measured_before)
+    recall(dock)
     dock.layers.measure()
     qtbot.waitUntil(lambda: dock.model.measured is not None and not dock.runner.busy, timeout=LONG_MS)
     drawn(qtbot, dock)

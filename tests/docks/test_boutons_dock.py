@@ -1,6 +1,5 @@
 """The Boutons dock, driven with mouse and keys on real layers."""
 
-import copy
 import gc
 import weakref
 
@@ -12,57 +11,37 @@ from napari.utils._test_utils import read_only_mouse_event
 from qtpy.QtCore import Qt
 from qtpy.QtTest import QTest
 
-from napari_boutonrelease.analysis.pipeline import Pipeline
-from napari_boutonrelease.analysis.settings import Settings
 from napari_boutonrelease.docks.boutons_dock import NO_RECORDING, BoutonsDock
 from napari_boutonrelease.docks.layers import add_movie, set_movie_layer
 from napari_boutonrelease.docks.panel import model_of
 from napari_boutonrelease.recording import movie_from_array
-from napari_boutonrelease.simulation import BoutonRecipe, preset_recipe, simulate_recording
 
-QUICK = Settings.model_validate({"quanta": {"n_max": 3, "bootstrap": 0}, "pairs": {"bootstrap": 100}})
 PLACES = ((16.0, 12.0), (18.0, 32.0), (16.0, 52.0))
 LONG_MS = 60_000
 
 
 @pytest.fixture(scope="module")
-def recording():
-    boutons = tuple(
-        BoutonRecipe(y_px=y, x_px=x, n_sites=1, p_site=p, q_dff=0.6, f0_photons=30.0)
+def recording(simulate):
+    boutons = (
+        {"y_px": y, "x_px": x, "n_sites": 1, "p_site": p, "q_dff": 0.6, "f0_photons": 30.0}
         for (y, x), p in zip(PLACES, (0.4, 0.5, 0.8), strict=True)
     )
-    recipe = preset_recipe(
-        "fast-pair", height_px=36, width_px=64, trials=20, trial_interval_s=0.5, boutons=boutons,
-        specks_on_axon=0, specks_off_axon=0, wander_um=0.0, drift_walk_px=0.0, spontaneous_per_s=0.0,
-    )  # fmt: skip
-    simulation = simulate_recording(recipe, rng=np.random.default_rng(2))
-    movie = movie_from_array(
-        simulation.frames, frame_interval_s=recipe.frame_interval_s, pixel_size_um=recipe.pixel_size_um
-    )
-    return movie, simulation.protocol
+    return simulate(*boutons, seed=2, height_px=36, width_px=64, trials=20, trial_interval_s=0.5)
 
 
-@pytest.fixture(scope="module")
-def measured_before(recording):
-    """A pipeline that has measured this recording."""
-    pipeline = Pipeline(*recording)
-    pipeline.measure(QUICK)
-    return pipeline
-
-
-def recall(dock, pipeline):
-    """Let a dock's analysis know what another one has measured: each test need not wait for it."""
-    vars(dock.model.pipeline).update({name: copy.copy(value) for name, value in vars(pipeline).items()})
-
-
-def open_dock(viewer, recording):
+@pytest.fixture
+def open_dock(recording, quick):
     """Put a movie that is ready to be searched into a viewer, and make the dock."""
-    movie, protocol = recording
-    set_movie_layer(viewer, add_movie(viewer, movie))
-    model = model_of(viewer)
-    model.settings = QUICK
-    model.open(movie, protocol)
-    return BoutonsDock(viewer)
+
+    def make(viewer):
+        movie, protocol = recording
+        set_movie_layer(viewer, add_movie(viewer, movie))
+        model = model_of(viewer)
+        model.settings = quick
+        model.open(movie, protocol)
+        return BoutonsDock(viewer)
+
+    return make
 
 
 def close(qtbot, dock):
@@ -72,13 +51,13 @@ def close(qtbot, dock):
 
 
 @pytest.fixture
-def opened(recording, qtbot):
+def opened(open_dock, qtbot):
     """Open docks, and close them in the end."""
     docks = []
 
     def make(viewer=None):
         viewer = viewer or ViewerModel()
-        docks.append(open_dock(viewer, recording))
+        docks.append(open_dock(viewer))
         return viewer, docks[-1]
 
     yield make
@@ -87,10 +66,10 @@ def opened(recording, qtbot):
 
 
 @pytest.fixture
-def found(opened, measured_before, qtbot):
+def found(opened, recall, qtbot):
     """A viewer and its dock after Find."""
     viewer, dock = opened()
-    recall(dock, measured_before)
+    recall(dock)
     find(qtbot, dock)
     return viewer, dock
 
@@ -474,9 +453,9 @@ def test_a_dock_closed_and_opened_again(make_napari_viewer, opened, qtbot):
     assert again.undo.isEnabled()
 
 
-def test_nothing_of_a_closed_viewer_stays(recording, qtbot):
+def test_nothing_of_a_closed_viewer_stays(open_dock, qtbot):
     viewer = ViewerModel()
-    dock = open_dock(viewer, recording)
+    dock = open_dock(viewer)
     find(qtbot, dock)
     dock.preview.setChecked(True)
     gone = [weakref.ref(one) for one in (viewer, dock.layers, dock.axon, dock.pictures, dock.model)]

@@ -1,75 +1,63 @@
 """The Quantal dock: what it shows is what was measured, and it says in words what cannot be known."""
 
-import gc
-from weakref import ref
-
 import numpy as np
 import pytest
 from napari.components import ViewerModel
-from qtpy.QtCore import QEvent
 from qtpy.QtWidgets import QApplication
 
 from napari_boutonrelease.analysis.hand_edits import HandEdits
 from napari_boutonrelease.analysis.model import AnalysisModel, compute
-from napari_boutonrelease.analysis.settings import Settings
 from napari_boutonrelease.analysis.summary import estimates_table
 from napari_boutonrelease.docks.panel import model_of
 from napari_boutonrelease.docks.quantal_dock import QuantalDock
 from napari_boutonrelease.docks.responses_dock import NOTHING_YET
 from napari_boutonrelease.flags import FLAGS
-from napari_boutonrelease.recording import movie_from_array
-from napari_boutonrelease.simulation import BoutonRecipe, preset_recipe, simulate_recording
 
-QUICK = Settings.model_validate({"quanta": {"n_max": 4, "bootstrap": 0}, "pairs": {"bootstrap": 100}})
 N_TRIALS = 24
 SILENT, BUSY = 1, 2  # ids
 
 
-def record(pulses, folder):
+def record(simulate, quick, pulses, folder):
     """A silent and a busy bouton, at given places."""
-    boutons = tuple(
-        BoutonRecipe(y_px=16.0, x_px=x, n_sites=3, p_site=p, q_dff=0.5, f0_photons=30.0)
+    boutons = (
+        {"y_px": 16.0, "x_px": x, "n_sites": 3, "p_site": p, "q_dff": 0.5, "f0_photons": 30.0}
         for x, p in ((14.0, 0.0), (40.0, 0.35))
     )
-    recipe = preset_recipe(
-        "fast-pair", height_px=32, width_px=56, trials=N_TRIALS, trial_interval_s=0.8, pulses=pulses, boutons=boutons,
-        specks_on_axon=0, specks_off_axon=0, wander_um=0.0, drift_walk_px=0.0, spontaneous_per_s=0.0,
-    )  # fmt: skip
-    simulation = simulate_recording(recipe, rng=np.random.default_rng(5))
+    movie, protocol = simulate(
+        *boutons, seed=5, height_px=32, width_px=56, trials=N_TRIALS, trial_interval_s=0.8, pulses=pulses
+    )
     places = folder / "places.csv"
     places.write_text("y_px,x_px\n16,14\n16,40\n")
-    movie = movie_from_array(
-        simulation.frames, frame_interval_s=recipe.frame_interval_s, pixel_size_um=recipe.pixel_size_um
-    )
     model = AnalysisModel()
-    model.open(movie, simulation.protocol, boutons=places)
-    model.settings = QUICK
-    return movie, simulation.protocol, places, compute(model.request())
+    model.open(movie, protocol, boutons=places)
+    model.settings = quick
+    model.choose("quanta", n_max=4)
+    return movie, protocol, places, compute(model.request())
 
 
 @pytest.fixture(scope="module")
-def train(tmp_path_factory):
-    return record(3, tmp_path_factory.mktemp("train"))
+def train(simulate, quick, tmp_path_factory):
+    return record(simulate, quick, 3, tmp_path_factory.mktemp("train"))
 
 
 @pytest.fixture(scope="module")
-def single(tmp_path_factory):
-    return record(1, tmp_path_factory.mktemp("single"))
+def single(simulate, quick, tmp_path_factory):
+    return record(simulate, quick, 1, tmp_path_factory.mktemp("single"))
 
 
 def fill(model, recording):
     movie, protocol, places, measured = recording
     model.open(movie, protocol, boutons=places)
-    model.settings = QUICK
+    model.settings = measured.settings
     model.accept(model.request(), measured)
 
 
 def settle(dock):
-    for _ in range(3):
+    for _ in range(12):  # plots take turns
         QApplication.processEvents()
     while dock._calm.isActive():
         QApplication.processEvents()
-    for _ in range(3):
+    for _ in range(12):  # plots take turns
         QApplication.processEvents()
 
 
@@ -262,22 +250,9 @@ def test_two_viewers_stay_apart(show, train):
     assert other.bouton.currentText() == str(SILENT)
 
 
-def test_closed_dock_no_longer_listens(make_napari_viewer, train):
-    viewer = make_napari_viewer()
-    dock = QuantalDock(viewer)
-    docked = viewer.window.add_dock_widget(dock, name="Quantal", area="bottom")
-    model = model_of(viewer)
-    fill(model, train)
-    assert len(model.measured_changed) == 1
-    viewer.window.remove_dock_widget(docked)
-    signals = (model.measured_changed, model.selection_changed, model.edits_changed, model.settings_changed)
-    assert [len(signal) for signal in signals] == [0, 0, 0, 0]
-    there = ref(dock)
-    del dock, docked
-    QApplication.sendPostedEvents(None, QEvent.Type.DeferredDelete)
-    gc.collect()
-    assert there() is None
-    model.set_threshold(3.0)
+def test_closed_dock_no_longer_listens(closed_for_good, train):
+    viewer = closed_for_good(QuantalDock, lambda model: fill(model, train))
+    model_of(viewer).set_threshold(3.0)
     QApplication.processEvents()
 
 

@@ -1,8 +1,6 @@
 """The Responses dock, driven with mouse and keys."""
 
-import gc
 from itertools import pairwise
-from weakref import ref
 
 import numpy as np
 import pytest
@@ -13,44 +11,33 @@ from qtpy.QtTest import QTest
 from qtpy.QtWidgets import QApplication
 
 from napari_boutonrelease.analysis.model import AnalysisModel, compute
-from napari_boutonrelease.analysis.settings import Settings
 from napari_boutonrelease.docks.layers import add_movie, set_movie_layer
 from napari_boutonrelease.docks.panel import model_of
 from napari_boutonrelease.docks.responses_dock import NOTHING_YET, ResponsesDock
-from napari_boutonrelease.recording import movie_from_array
-from napari_boutonrelease.simulation import BoutonRecipe, preset_recipe, simulate_recording
 
-QUICK = Settings.model_validate({"quanta": {"n_max": 3, "bootstrap": 0}, "pairs": {"bootstrap": 100}})
 N_TRIALS = 24
 
 
 @pytest.fixture(scope="module")
-def recording():
+def recording(simulate, quick):
     """A movie of three boutons, its protocol, and what was measured."""
-    boutons = tuple(
-        BoutonRecipe(y_px=16.0, x_px=x, n_sites=n, p_site=p, q_dff=0.6, f0_photons=30.0)
+    boutons = (
+        {"y_px": 16.0, "x_px": x, "n_sites": n, "p_site": p, "q_dff": 0.6, "f0_photons": 30.0}
         for x, n, p in ((12.0, 1, 0.4), (32.0, 2, 0.5), (52.0, 1, 0.8))
     )
-    recipe = preset_recipe(
-        "fast-pair", height_px=32, width_px=64, trials=N_TRIALS, trial_interval_s=0.6, boutons=boutons,
-        specks_on_axon=0, specks_off_axon=0, wander_um=0.0, drift_walk_px=0.0, spontaneous_per_s=0.0,
-    )  # fmt: skip
-    simulation = simulate_recording(recipe, rng=np.random.default_rng(2))
-    movie = movie_from_array(
-        simulation.frames, frame_interval_s=recipe.frame_interval_s, pixel_size_um=recipe.pixel_size_um
-    )
+    movie, protocol = simulate(*boutons, seed=2, height_px=32, width_px=64, trials=N_TRIALS, trial_interval_s=0.6)
     model = AnalysisModel()
-    model.open(movie, simulation.protocol)
-    model.settings = QUICK
+    model.open(movie, protocol)
+    model.settings = quick
     measured = compute(model.request())
     assert len(measured.places.bouton) == 3
-    return movie, simulation.protocol, measured
+    return movie, protocol, measured
 
 
 def fill(model, recording):
     movie, protocol, measured = recording
     model.open(movie, protocol)
-    model.settings = QUICK
+    model.settings = measured.settings
     model.accept(model.request(), measured)
 
 
@@ -77,7 +64,7 @@ def dock(qtbot, viewer, recording):
 
 
 def settle():
-    for _ in range(3):
+    for _ in range(12):  # plots take turns
         QApplication.processEvents()
 
 
@@ -394,23 +381,10 @@ def test_two_viewers_stay_apart(dock, qtbot, recording):
     other.unlink()
 
 
-def test_closed_dock_no_longer_listens(make_napari_viewer, qtbot, recording):
-    viewer = make_napari_viewer()
+def test_closed_dock_no_longer_listens(closed_for_good, recording):
+    viewer = closed_for_good(ResponsesDock, lambda model: fill(model, recording))
+    model_of(viewer).set_threshold(3.0)
     set_movie_layer(viewer, add_movie(viewer, recording[0]))
-    dock = ResponsesDock(viewer)
-    docked = viewer.window.add_dock_widget(dock, name="Responses", area="bottom")
-    model = model_of(viewer)
-    fill(model, recording)
-    assert len(model.measured_changed) == 1
-    viewer.window.remove_dock_widget(docked)
-    signals = (model.measured_changed, model.selection_changed, model.edits_changed, model.settings_changed)
-    assert [len(signal) for signal in signals] == [0, 0, 0, 0]
-    there = ref(dock)
-    del dock, docked
-    QApplication.sendPostedEvents(None, QEvent.Type.DeferredDelete)
-    gc.collect()
-    assert there() is None
-    model.set_threshold(3.0)
     viewer.dims.set_current_step(0, 30)
     settle()
 
