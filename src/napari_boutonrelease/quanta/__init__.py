@@ -23,6 +23,8 @@ from .intervals import (
     wilson_interval,
     zero_success_upper_limit,
 )
+from .joint import JointFit, fit_joint
+from .joint_data import JointData
 from .likelihoods import (
     binomial_gaussian_loglikelihood,
     binomial_log_weights,
@@ -35,6 +37,7 @@ from .likelihoods import (
     vesicle_posterior,
 )
 from .mixture_fit import LogPrior
+from .paired_change import PairedChange, measure_paired_change
 from .planned_bouton import Doubts, PlannedBouton
 from .planned_power import change_power, paired_change_power, ppr_power, simulated_ppr_power
 from .planning import (
@@ -45,12 +48,14 @@ from .planning import (
     trials_for_sites,
     trials_for_width,
 )
-from .paired_change import PairedChange, measure_paired_change
 from .poisson import PoissonHistogramFit, fit_poisson_histogram
 from .pooled import AxonRelease, fit_axon_release
 from .pulse_pairs import PulsePair, ReleaseHistory, fisher_exact_p, measure_history, measure_pulse_pair
+from .pulse_patterns import PulsePattern, pulse_interval_groups, pulse_patterns
 from .ratios import FiellerInterval, bootstrap_ratio_interval, fieller_interval, unbiased_ratio
+from .recovery import PairedMeans, PulseIntervalFit, fit_pulse_intervals, paired_means, ratio_as_means
 from .release_information import effective_trials, expected_width
+from .release_moments import ReleaseVariation, release_cumulants, release_variance
 from .site_search import ReleaseModel
 from .sites_evidence import SitesEvidence, sites_evidence
 from .threshold import (
@@ -61,6 +66,9 @@ from .threshold import (
     peak_false_call_rate,
     rogan_gladen,
 )
+from .trains import PulseTrain, measure_train, pool_in_vesicles
+from .tsodyks_markram import TrainModel, fit_tsodyks_markram, release_shares
+from .variance_mean import VarianceMeanFit, fit_parabola, fit_variance_mean
 from .vesicle_sizes import gamma_vesicles_logpdf
 
 __all__ = [
@@ -68,17 +76,26 @@ __all__ = [
     "Doubts",
     "Estimate",
     "FiellerInterval",
+    "JointData",
+    "JointFit",
     "LogPrior",
-    "PlannedBouton",
     "PairedChange",
+    "PairedMeans",
+    "PlannedBouton",
     "PoissonHistogramFit",
+    "PulseIntervalFit",
     "PulsePair",
+    "PulsePattern",
+    "PulseTrain",
     "ReleaseHistory",
     "ReleaseModel",
     "ReleasePriors",
+    "ReleaseVariation",
     "SitesEvidence",
     "SitesFit",
+    "TrainModel",
     "TrialsNeeded",
+    "VarianceMeanFit",
     "balanced_threshold",
     "benjamini_hochberg",
     "binomial_failures",
@@ -100,26 +117,40 @@ __all__ = [
     "fisher_exact_p",
     "fit_axon_release",
     "fit_binomial",
+    "fit_parabola",
+    "fit_joint",
     "fit_poisson_histogram",
+    "fit_pulse_intervals",
     "fit_sites",
+    "fit_tsodyks_markram",
+    "fit_variance_mean",
     "gamma_vesicles_logpdf",
     "jeffreys_interval",
     "mcnemar_test",
     "measure_history",
     "measure_paired_change",
     "measure_pulse_pair",
+    "measure_train",
     "mixture_loglikelihood",
     "newcombe_difference_interval",
     "null_loglikelihood",
     "paired_change_power",
+    "paired_means",
     "peak_false_call_rate",
     "poisson_failures",
     "poisson_gaussian_loglikelihood",
     "poisson_log_weights",
     "poisson_m_max",
+    "pool_in_vesicles",
     "ppr_power",
+    "pulse_interval_groups",
+    "pulse_patterns",
+    "ratio_as_means",
     "ratio_interval",
     "ratio_of_estimates",
+    "release_cumulants",
+    "release_shares",
+    "release_variance",
     "rogan_gladen",
     "simulated_ppr_power",
     "sites_evidence",
