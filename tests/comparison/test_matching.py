@@ -26,13 +26,13 @@ def test_a_shift_is_found_to_a_tenth_of_a_pixel(shift):
 
 
 def test_images_of_other_sizes_are_laid_on_one_another():
-    small = picture(SPOTS + (-3.0, -2.0), seed=2, shape=(40, 90))
+    small = picture(SPOTS - [3.0, 2.0], seed=2, shape=(40, 90))
     found, _ = measure_shift(picture(SPOTS, seed=1), small)
     assert found == pytest.approx((-3.0, -2.0), abs=0.15)
 
 
 def test_boutons_are_matched_through_movement_with_gaps_on_either_side(make_recording):
-    moved = SPOTS + (2.0, -3.0)
+    moved = SPOTS + [2.0, -3.0]
     there = moved[[4, 2, 1, 0]]  # another order, and bouton 4 is missing
     extra = np.array([[5.0, 50.0]])
     first = make_recording(position_px=SPOTS, mean_image=picture(SPOTS, seed=1))
