@@ -10,6 +10,7 @@ from scipy.special import nctdtr, ndtr, ndtri, stdtrit
 
 from .intervals import Estimate, wilson_interval
 from .planned_bouton import Doubts, PlannedBouton
+from .pulse_pairs import DETECTED_SE
 from .release_information import change_covariance
 
 if TYPE_CHECKING:
@@ -17,16 +18,29 @@ if TYPE_CHECKING:
 
 _LARGE_DF = 5000  # from here on Student's t is normal, as far as planning goes
 _DRAWS_AT_ONCE = 2_000_000
+_FAR = 8.0  # SDs beyond which nothing happens
 _MOST_DRAWS = 100_000_000
 NOT_SIMULATED = Estimate(value=np.nan, lo=np.nan, hi=np.nan, method="not simulated")
 """Stands where no recordings were simulated."""
 
 
 def ppr_power(bouton: PlannedBouton, *, ratio: float, n_trials: int, confidence: float) -> float:
-    """Chance that a paired t-test tells the second amplitude from the first.
+    """Chance that the interval of a paired-pulse ratio is there and excludes 1, on the true side.
 
-    The interval of the ratio of means excludes 1 where that of their difference excludes 0. Both pulses of a trial are
-    taken as independent, given their release probabilities.
+    The interval of the ratio of means excludes 1 where that of their difference excludes 0, a paired t-test. There is
+    none where the first mean is within noise of zero, as `measure_pulse_pair` has it. Both pulses of a trial are taken
+    as independent, given their release probabilities.
+
+    Parameters
+    ----------
+    bouton : PlannedBouton
+        The bouton at the first pulse.
+    ratio : float
+        True ratio; p_site of the second pulse is so many times that of the first.
+    n_trials : int
+        Trials.
+    confidence : float
+        Coverage of the interval.
 
     Examples
     --------
@@ -34,8 +48,22 @@ def ppr_power(bouton: PlannedBouton, *, ratio: float, n_trials: int, confidence:
     >>> round(ppr_power(bouton, ratio=1.5, n_trials=100, confidence=0.95), 2)
     0.78
     """
+    if n_trials < 2:
+        return 0.0
     second = replace(bouton, p_site=ratio * bouton.p_site)
-    return paired_power(second.mean - bouton.mean, bouton.variance + second.variance, n=n_trials, confidence=confidence)
+    step, variance = second.mean - bouton.mean, bouton.variance + second.variance
+    told = paired_power(step, variance, n=n_trials, confidence=confidence)
+    # what is told although the first mean is not seen: normal means, over the first one up to its limit
+    sd = np.sqrt(bouton.variance / n_trials)
+    limit = (DETECTED_SE / np.sqrt(n_trials) - bouton.mean) / sd
+    if limit < -_FAR:
+        return told
+    first = limit - (np.arange(400) + 0.5) * (_FAR / 400)
+    expected = step - first * sd
+    needed = _critical_t(n_trials - 1, confidence) * np.sqrt(variance / n_trials)
+    passing = ndtr((np.sign(step) * expected - needed) / np.sqrt(second.variance / n_trials))
+    unseen = float(np.sum(passing * np.exp(-0.5 * first**2)) * (_FAR / 400) / np.sqrt(2.0 * np.pi))
+    return max(told - unseen, 0.0)
 
 
 def simulated_ppr_power(
@@ -47,7 +75,9 @@ def simulated_ppr_power(
     n_simulations: int,
     rng: np.random.Generator,
 ) -> Estimate:
-    """Chance that a paired t-test tells both amplitudes apart, in recordings drawn vesicle by vesicle.
+    """Count how often a paired t-test tells both amplitudes apart, in recordings drawn vesicle by vesicle.
+
+    Parameters are those of `ppr_power`, the number of recordings, and their source.
 
     Returns
     -------
@@ -62,9 +92,11 @@ def simulated_ppr_power(
     told = 0
     for first in range(0, n_simulations, at_once):
         shape = (min(at_once, n_simulations - first), n_trials)
-        difference = second.draw(shape, rng=rng) - bouton.draw(shape, rng=rng)
+        one = bouton.draw(shape, rng=rng)
+        difference = second.draw(shape, rng=rng) - one
+        seen = one.mean(axis=1) >= DETECTED_SE / np.sqrt(n_trials)
         t = np.sqrt(n_trials) * difference.mean(axis=1) / difference.std(axis=1, ddof=1)
-        told += int(np.sum(np.sign(ratio - 1.0) * t > critical))
+        told += int(np.sum(seen & (np.sign(ratio - 1.0) * t > critical)))
     lo, hi = wilson_interval(told, n_simulations, confidence=0.95)
     return Estimate(
         value=told / n_simulations,

@@ -301,7 +301,9 @@ def _search(
     if trials is None:
         reason = f"more than {max_trials:,} trials"
         bright = replace(bouton, q_over_noise=max(_BRIGHT, bouton.q_over_noise))
-        if found(bright, max_trials) >= target:
+        if found(bright, max_trials) < target:
+            reason += ", at any q/noise"
+        else:
             reason += f": q/noise {bouton.q_over_noise:.2g} is too small, more light or a brighter reporter would help"
     return TrialsNeeded(
         goal=goal,

@@ -23,7 +23,7 @@ if TYPE_CHECKING:
 
     Verdict = Literal["facilitation", "depression", "unresolved"]
 
-_DETECTED_SE = 2.0  # the first mean must rise this many SE of the noise above zero
+DETECTED_SE = 2.0  # the first mean must rise this many SE of the noise above zero
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -138,7 +138,7 @@ def measure_pulse_pair(
     one, two = complete_pairs(first, second)
     n = one.size
     first_mean, second_mean = (float(values.mean()) if n else np.nan for values in (one, two))
-    if n < 2 or first_mean < _DETECTED_SE * noise_sd / np.sqrt(n):
+    if n < 2 or first_mean < DETECTED_SE * noise_sd / np.sqrt(n):
         why = "fewer than two complete pairs" if n < 2 else "first mean within noise of zero"
         return PulsePair(
             ppr=Estimate(value=np.nan, lo=np.nan, hi=np.nan, method=f"none: {why}"),

@@ -34,12 +34,18 @@ _MEANINGS = {
     "summary.json": "results of the whole axon and the recording's quality",
     "analysis.json": "all that is needed to reopen and to repeat the analysis",
     "report.pdf": "what a person reads first",
+    "plan.json": "what the plan was asked for",
     "recording.nwb": "the results as Neurodata Without Borders",
 }
 
 
 def describe_package(
-    folder: Path, *, name: str, tables: Mapping[str, TableDefinition], created: str | None = None
+    folder: Path,
+    *,
+    name: str,
+    tables: Mapping[str, TableDefinition],
+    created: str | None = None,
+    title: str | None = None,
 ) -> dict[str, Any]:
     """Describe every file of an output folder.
 
@@ -53,6 +59,8 @@ def describe_package(
         The data dictionary, by stem of the CSV file.
     created : str, optional
         UTC time of the analysis, ISO 8601.
+    title : str, optional
+        What the folder is, in words; results of one recording, where left out.
 
     Returns
     -------
@@ -66,7 +74,7 @@ def describe_package(
     package: dict[str, Any] = {
         "$schema": _SCHEMA,
         "name": _slug(name),
-        "title": f"Vesicle release of the boutons in {name}",
+        "title": title or f"Vesicle release of the boutons in {name}",
     }
     if created:
         package["created"] = created
