@@ -4,7 +4,7 @@ import numpy as np
 from numpy.testing import assert_allclose
 from scipy.stats import gamma, kstest, norm, pearson3
 
-from napari_boutonrelease.quanta import gamma_vesicles_logpdf
+from napari_boutonrelease.quanta import gamma_vesicles_logpdf, gamma_vesicles_slopes
 
 Q, Q_CV, NOISE = 0.4, 0.3, 0.1
 GRID = np.linspace(-1.0, 4.0, 50_001)
@@ -51,3 +51,19 @@ def test_numbers_of_vesicles_and_amplitudes_broadcast():
     )
     assert both.shape == (4, 3, 7)
     assert_allclose(both[2, 1], gamma_vesicles_logpdf(GRID[:7], vesicles=1, q=Q, q_cv=Q_CV, noise_sd=NOISE))
+
+
+def test_slopes_are_those_of_the_density():
+    amplitude, m = np.linspace(-0.3, 2.5, 80), np.arange(1, 6)[:, None]
+    for at in ((0.4, 0.3, 0.1), (0.4, 0.5, 0.03), (0.15, 0.02, 0.1)):  # the last one has the least skewness
+        at = np.array(at)
+
+        def density(values, amplitude=amplitude, m=m):
+            return gamma_vesicles_logpdf(amplitude, vesicles=m, q=values[0], q_cv=values[1], noise_sd=values[2])
+
+        value, *slopes = gamma_vesicles_slopes(amplitude, vesicles=m.astype(float), q=at[0], q_cv=at[1], noise_sd=at[2])
+        assert_allclose(value, density(at), rtol=1e-5, atol=2e-6)
+        for k, slope in enumerate(slopes):
+            step = np.ones(3)
+            step[k] = np.exp(1e-6)
+            assert_allclose(slope, (density(at * step) - density(at / step)) / 2e-6, rtol=1e-4, atol=1e-4)

@@ -1,6 +1,7 @@
 """Release amplitudes in, parameters out: binomial release, intervals, failures, pulse pairs."""
 
 from .binomial import SitesFit, fit_binomial, fit_sites
+from .co_release import CoRelease, measure_co_release
 from .differences import difference_of_estimates, ratio_of_estimates
 from .failures import (
     binomial_failures,
@@ -13,6 +14,15 @@ from .failures import (
 )
 from .false_discovery import benjamini_hochberg
 from .fit_inputs import ReleasePriors
+from .gradient import Gradient, measure_gradient
+from .heterogeneity import (
+    BetaBinomialFit,
+    Heterogeneity,
+    dispersion,
+    effective_counts,
+    fit_beta_binomial,
+    measure_heterogeneity,
+)
 from .intervals import (
     Estimate,
     clopper_pearson_interval,
@@ -23,6 +33,7 @@ from .intervals import (
     wilson_interval,
     zero_success_upper_limit,
 )
+from .inverse_cv2 import InverseCv2Change, inverse_cv2_change
 from .joint import JointFit, fit_joint
 from .joint_data import JointData
 from .likelihoods import (
@@ -37,6 +48,7 @@ from .likelihoods import (
     vesicle_posterior,
 )
 from .mixture_fit import LogPrior
+from .morans_i import MoransI, measure_morans_i
 from .paired_change import PairedChange, measure_paired_change
 from .planned_bouton import Doubts, PlannedBouton
 from .planned_power import change_power, paired_change_power, ppr_power, simulated_ppr_power
@@ -58,6 +70,8 @@ from .release_information import effective_trials, expected_width
 from .release_moments import ReleaseVariation, release_cumulants, release_variance
 from .site_search import ReleaseModel
 from .sites_evidence import SitesEvidence, sites_evidence
+from .split_half import SplitHalf, correlate_release_with_ratio
+from .stimulus_failures import StimulusFailures, find_stimulus_failures, release_log_ratio
 from .threshold import (
     balanced_threshold,
     detection_power,
@@ -69,16 +83,22 @@ from .threshold import (
 from .trains import PulseTrain, measure_train, pool_in_vesicles
 from .tsodyks_markram import TrainModel, fit_tsodyks_markram, release_shares
 from .variance_mean import VarianceMeanFit, fit_parabola, fit_variance_mean
-from .vesicle_sizes import gamma_vesicles_logpdf
+from .vesicle_sizes import gamma_vesicles_logpdf, gamma_vesicles_slopes
 
 __all__ = [
     "AxonRelease",
+    "BetaBinomialFit",
+    "CoRelease",
     "Doubts",
     "Estimate",
     "FiellerInterval",
+    "Gradient",
+    "Heterogeneity",
+    "InverseCv2Change",
     "JointData",
     "JointFit",
     "LogPrior",
+    "MoransI",
     "PairedChange",
     "PairedMeans",
     "PlannedBouton",
@@ -93,6 +113,8 @@ __all__ = [
     "ReleaseVariation",
     "SitesEvidence",
     "SitesFit",
+    "SplitHalf",
+    "StimulusFailures",
     "TrainModel",
     "TrialsNeeded",
     "VarianceMeanFit",
@@ -106,28 +128,39 @@ __all__ = [
     "change_power",
     "clopper_pearson_interval",
     "component_logpdf",
+    "correlate_release_with_ratio",
     "detection_power",
     "difference_of_estimates",
     "direct_vesicles",
+    "dispersion",
+    "effective_counts",
     "effective_trials",
     "expected_false_calls",
     "expected_width",
     "false_call_rate",
     "fieller_interval",
+    "find_stimulus_failures",
     "fisher_exact_p",
     "fit_axon_release",
+    "fit_beta_binomial",
     "fit_binomial",
-    "fit_parabola",
     "fit_joint",
+    "fit_parabola",
     "fit_poisson_histogram",
     "fit_pulse_intervals",
     "fit_sites",
     "fit_tsodyks_markram",
     "fit_variance_mean",
     "gamma_vesicles_logpdf",
+    "gamma_vesicles_slopes",
+    "inverse_cv2_change",
     "jeffreys_interval",
     "mcnemar_test",
+    "measure_co_release",
+    "measure_gradient",
+    "measure_heterogeneity",
     "measure_history",
+    "measure_morans_i",
     "measure_paired_change",
     "measure_pulse_pair",
     "measure_train",
@@ -149,6 +182,7 @@ __all__ = [
     "ratio_interval",
     "ratio_of_estimates",
     "release_cumulants",
+    "release_log_ratio",
     "release_shares",
     "release_variance",
     "rogan_gladen",
