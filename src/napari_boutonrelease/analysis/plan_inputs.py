@@ -7,7 +7,7 @@ import math
 from dataclasses import dataclass
 from pathlib import Path
 
-from ..errors import SavedAnalysisError
+from ..errors import InputError, SavedAnalysisError
 from ..quanta import PlannedBouton
 
 _TABLE = "boutons.csv"
@@ -74,22 +74,27 @@ def read_measured_boutons(
 
 def _measured(row: dict[str, str], *, where: str, q_over_noise: float | None, q_cv: float | None) -> MeasuredBouton:
     numbers = {name: _number(row, name, where=where) for name in _COLUMNS[:-1]}
+    bouton, p_release, n_sites = numbers["bouton"], numbers["p_release"], numbers["n_sites"]
+    if not (bouton >= 1 and bouton.is_integer()):
+        raise SavedAnalysisError(f"{where}, column bouton: expected a whole number from 1 (given {row['bouton']!r}).")
+    if p_release < 0.0 or p_release > 1.0:
+        raise SavedAnalysisError(f"{where}, column p_release: must lie between 0 and 1 (given {p_release:g}).")
     q_over_noise = numbers["snr"] if q_over_noise is None else q_over_noise
     q_cv = numbers["q_cv"] if q_cv is None else q_cv
     planned, reason = None, ""
-    if "silent" in (row["flags"] or "").split(";") or numbers["p_release"] == 0.0:
+    if "silent" in (row["flags"] or "").split(";") or p_release == 0.0:
         reason = "no release seen"
-    elif not all(map(math.isfinite, (numbers["p_release"], numbers["n_sites"], q_over_noise, q_cv))):
+    elif not all(map(math.isfinite, (p_release, n_sites, q_over_noise, q_cv))):
         reason = "no quantal fit"
     else:
-        one_site = PlannedBouton(n_sites=int(numbers["n_sites"]), p_site=0.5, q_over_noise=q_over_noise, q_cv=q_cv)
-        planned = one_site.releasing(min(numbers["p_release"], _CERTAIN))
+        try:
+            one = PlannedBouton(n_sites=int(n_sites), p_site=0.5, q_over_noise=q_over_noise, q_cv=q_cv)
+        except InputError as error:
+            raise SavedAnalysisError(f"{where}: {error}") from error
+        planned = one.releasing(min(p_release, _CERTAIN))
     trials = numbers["trials"]
     return MeasuredBouton(
-        bouton=int(numbers["bouton"]),
-        trials=int(trials) if math.isfinite(trials) else None,
-        planned=planned,
-        reason=reason,
+        bouton=int(bouton), trials=int(trials) if math.isfinite(trials) else None, planned=planned, reason=reason
     )
 
 

@@ -18,7 +18,7 @@ if TYPE_CHECKING:
     Floats = NDArray[np.float64]
 
 _REACH_SD = 8.0
-_STEP_SD = 0.1  # sums over so fine a grid are integrals, for densities no narrower than the noise
+_STEP_SD = 0.2  # sums over so fine a grid are integrals, for densities no narrower than the noise
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -98,7 +98,7 @@ def sites_evidence(bouton: PlannedBouton, *, n_trials: int, doubts: Doubts, nats
 
     start = np.array([logit(site_probability(bouton.p_release, n_sites=n + 1)), 0.0, 0.0, 0.0])
     bounds = [(-20.0, 20.0), *[(-_RANGE, _RANGE)] * 3]
-    closest = minimize(evidence, start, method="L-BFGS-B", bounds=bounds, options={"ftol": 1e-12, "gtol": 1e-8}).x
+    closest = minimize(evidence, start, method="L-BFGS-B", bounds=bounds, options={"ftol": 1e-12, "gtol": 1e-6}).x
     terms = log_true - log_other(closest)
     mean = float(true @ terms)
     sd = float(np.sqrt(true @ (terms - mean) ** 2))
