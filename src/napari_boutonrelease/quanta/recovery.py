@@ -12,6 +12,7 @@ from ..checks import check_array, check_not_negative, check_positive
 from ..errors import InputError
 from .intervals import Estimate, _normal_quantile
 from .ratios import complete_pairs
+from .row_fits import best_of_rows, profile_rows
 
 if TYPE_CHECKING:
     from collections.abc import Callable
@@ -26,7 +27,6 @@ _LEAST_INTERVALS: dict[IntervalModel, int] = {"constant": 3, "facilitation": 3, 
 _PARAMETERS: dict[IntervalModel, int] = {"constant": 0, "facilitation": 2, "depression": 2, "both": 4}
 _SHORTEST, _LONGEST = 0.2, 10.0  # time constants looked for, in units of the shortest and the longest interval
 _MOST_FACILITATION = 50.0
-_ROOT_TOLERANCE = 0.01  # of the profile, in standard normal units
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -61,11 +61,13 @@ class PulseIntervalFit:
         What was chosen: ratio 1 throughout, 1 + a exp(-interval / tau), 1 - d exp(-interval / tau), or the sum of both;
         "none" where nothing could be fitted.
     facilitation, facilitation_s : Estimate
-        a, and its time constant in s; NaN where the model has none. An end is 0 or infinite where the data set none.
+        a, and its time constant in s; NaN where the model has none, and where the ratio changes too little over the
+        intervals to tell. An end is 0 or infinite where the data set none.
     depression, depression_s : Estimate
         d, and its time constant in s.
-    aicc : mapping of str to float
-        Akaike's corrected criterion of each model that was tried.
+    aicc : dict of str to float
+        Akaike's corrected criterion of each model that was tried: both terms only with five intervals, and where a
+        perfect fit would pay for them.
     p_constant : float
         Chi-square p of the ratio being 1 at every interval.
     p_fit : float
@@ -74,6 +76,8 @@ class PulseIntervalFit:
         Different intervals, and trials in all.
     reason : str
         Why there is no time course, or what of it is open; empty where all is well.
+    parameters : (2 k,) ndarray
+        Size and time constant (s) of each exponential as fitted, also where they lie at the end of what was searched.
     """
 
     model: IntervalModel
@@ -87,6 +91,7 @@ class PulseIntervalFit:
     n_intervals: int
     n_trials: int
     reason: str
+    parameters: Floats
 
     def ratio(self, interval_s: ArrayLike) -> Floats:
         """Return the fitted ratio at any intervals, in s; NaN where nothing was fitted.
@@ -102,10 +107,8 @@ class PulseIntervalFit:
         if self.model == "none":
             return np.full(gap.shape, np.nan)
         curve = np.ones(gap.shape)
-        if self.model in ("facilitation", "both"):
-            curve += self.facilitation.value * np.exp(-gap / self.facilitation_s.value)
-        if self.model in ("depression", "both"):
-            curve -= self.depression.value * np.exp(-gap / self.depression_s.value)
+        for sign, size, time_s in zip(_terms(self.model), self.parameters[::2], self.parameters[1::2], strict=True):
+            curve += sign * size * np.exp(-gap / time_s)
         return curve
 
 
@@ -196,16 +199,18 @@ def fit_pulse_intervals(interval_s: ArrayLike, means: Sequence[PairedMeans], *, 
     if any(one.second_var <= 0 for one in means):
         return _nothing(n_intervals, n_trials, "the responses at one interval do not vary: their spread is unknown")
     distance = _distance_to(means)
-    fits = {model: _best_fit(model, gap, distance) for model, least in _LEAST_INTERVALS.items() if n_intervals >= least}
-    aicc: dict[str, float] = {
-        model: deviance + 2.0 * k * (1.0 + (k + 1.0) / max(n_trials - k - 1.0, 1.0))
-        for model, (_, deviance) in fits.items()
-        for k in (_PARAMETERS[model],)
-    }
+    fits: dict[IntervalModel, tuple[Floats, float]] = {}
+    aicc: dict[str, float] = {}
+    for model, least in _LEAST_INTERVALS.items():
+        k = _PARAMETERS[model]
+        price = 2.0 * k * (1.0 + (k + 1.0) / max(n_trials - k - 1.0, 1.0))
+        if n_intervals >= least and not (k > 2 and price >= min(aicc.values())):
+            fits[model] = _best_fit(model, gap, distance)
+            aicc[model] = fits[model][1] + price
     chosen = min(fits, key=lambda model: aicc[model])
     best, deviance = fits[chosen]
     p_constant = _chi_square_p(fits["constant"][1], gap.size)
-    named, reason = _estimates(chosen, gap, distance, best, deviance, confidence=confidence)
+    named, reason = _estimates(chosen, gap, distance, best, confidence=confidence)
     if chosen == "constant":
         reason = f"no time course: the ratios do not differ from 1 (chi-square p = {p_constant:.2g})"
     return PulseIntervalFit(
@@ -217,6 +222,7 @@ def fit_pulse_intervals(interval_s: ArrayLike, means: Sequence[PairedMeans], *, 
         n_intervals=n_intervals,
         n_trials=n_trials,
         reason=reason,
+        parameters=np.where(np.arange(best.size) % 2 == 1, np.exp(best), best),
     )
 
 
@@ -237,17 +243,27 @@ def _distance_to(means: Sequence[PairedMeans]) -> Callable[[Floats], Floats]:
     return distance
 
 
-def _curve(model: IntervalModel, gap: Floats, parameters: Floats) -> Floats:
-    """Ratio at each interval; parameters are size and log time constant of facilitation, then of depression."""
-    if model == "constant":
-        return np.ones_like(gap)
-    sizes = parameters[::2] * ({"facilitation": [1.0], "depression": [-1.0]}.get(model, [1.0, -1.0]))
-    return np.asarray(1.0 + sizes @ np.exp(-gap / np.exp(parameters[1::2])[:, None]))
+def _terms(model: IntervalModel) -> tuple[float, ...]:
+    """Signs of the exponentials."""
+    return {"facilitation": (1.0,), "depression": (-1.0,), "both": (1.0, -1.0)}.get(model, ())
+
+
+def _residuals(model: IntervalModel, gap: Floats, distance: Callable[[Floats], Floats]) -> Callable[[Floats], Floats]:
+    """Distances from the curves of many parameters: size and log time constant of each exponential."""
+
+    def residuals(theta: Floats) -> Floats:
+        ratio = np.ones((len(theta), gap.size))
+        for term, sign in enumerate(_terms(model)):
+            size, log_time = theta[:, 2 * term, None], theta[:, 2 * term + 1, None]
+            ratio += sign * size * np.exp(-gap / np.exp(log_time))
+        return distance(ratio)
+
+    return residuals
 
 
 def _bounds(model: IntervalModel, gap: Floats) -> tuple[Floats, Floats]:
     shortest, longest = np.log(_SHORTEST * gap.min()), np.log(_LONGEST * gap.max())
-    most = {"facilitation": [_MOST_FACILITATION], "depression": [1.0]}.get(model, [_MOST_FACILITATION, 1.0])
+    most = [_MOST_FACILITATION if sign > 0 else 1.0 for sign in _terms(model)]
     lower = np.array([[0.0, shortest] for _ in most]).ravel()
     return lower, np.array([[size, longest] for size in most]).ravel()
 
@@ -257,114 +273,50 @@ def _best_fit(model: IntervalModel, gap: Floats, distance: Callable[[Floats], Fl
     if model == "constant":
         return np.empty(0), float(np.sum(distance(np.ones_like(gap)) ** 2))
     lower, upper = _bounds(model, gap)
-    times = np.log(gap.min()) + (np.log(gap.max()) - np.log(gap.min())) * np.array([0.1, 0.5, 0.9])
+    times = np.log(gap.min()) + (np.log(gap.max()) - np.log(gap.min())) * np.array([0.0, 0.25, 0.5, 0.75, 1.0])
     starts = (
-        [[0.5, time] for time in times]
+        [[size, time] for size in (0.3, 0.9) for time in times]
         if model != "both"
         else [[0.8, one, 0.5, other] for one in times for other in times if one != other]
     )
-    return _search(model, gap, distance, [np.array(start) for start in starts], lower, upper, held=None)
-
-
-def _search(
-    model: IntervalModel,
-    gap: Floats,
-    distance: Callable[[Floats], Floats],
-    starts: Sequence[Floats],
-    lower: Floats,
-    upper: Floats,
-    *,
-    held: int | None,
-) -> tuple[Floats, float]:
-    """Least squares from each start, one parameter held where asked."""
-    from scipy.optimize import least_squares
-
-    free = np.arange(lower.size) != held
-    best, least = starts[0], np.inf
-    for start in starts:
-        full = np.clip(start, lower, upper)
-        if held is not None:
-            full[held] = start[held]
-
-        def residuals(some: Floats, full: Floats = full) -> Floats:
-            every = full.copy()
-            every[free] = some
-            return distance(_curve(model, gap, every))
-
-        inside = np.clip(full[free], lower[free] + 1e-9, upper[free] - 1e-9)
-        found = least_squares(residuals, inside, bounds=(lower[free], upper[free]), x_scale="jac", max_nfev=200)
-        if 2.0 * found.cost < least:
-            best, least = full.copy(), 2.0 * float(found.cost)
-            best[free] = found.x
-    return best, least
+    return best_of_rows(_residuals(model, gap, distance), np.array(starts), lower=lower, upper=upper)
 
 
 def _estimates(
-    model: IntervalModel,
-    gap: Floats,
-    distance: Callable[[Floats], Floats],
-    best: Floats,
-    deviance: float,
-    *,
-    confidence: float,
+    model: IntervalModel, gap: Floats, distance: Callable[[Floats], Floats], best: Floats, *, confidence: float
 ) -> tuple[dict[str, Estimate], str]:
     """Put names and profile intervals to the parameters, and say in words what stays open."""
-    names = {
-        "facilitation": ("facilitation", "facilitation_s"),
-        "depression": ("depression", "depression_s"),
-        "both": ("facilitation", "facilitation_s", "depression", "depression_s"),
-    }.get(model, ())
     unknown = Estimate(value=np.nan, lo=np.nan, hi=np.nan, method="none: not in the model")
     named = dict.fromkeys(("facilitation", "facilitation_s", "depression", "depression_s"), unknown)
-    open_ends = []
-    for index, name in enumerate(names):
-        is_time = index % 2 == 1
-        ends = [
-            _profile_end(model, gap, distance, best, deviance, parameter=index, side=side, confidence=confidence)
-            for side in (-1, 1)
-        ]
-        values = [np.exp(value) if is_time else value for value in (best[index], *ends)]
-        if np.isinf(values[2]):
-            open_ends.append(f"{name} has no upper limit")
-        named[name] = Estimate(
-            value=float(values[0]), lo=float(values[1]), hi=float(values[2]), method="profile likelihood"
-        )
-    return named, "; ".join(open_ends)
-
-
-def _profile_end(
-    model: IntervalModel,
-    gap: Floats,
-    distance: Callable[[Floats], Floats],
-    best: Floats,
-    deviance: float,
-    *,
-    parameter: int,
-    side: int,
-    confidence: float,
-) -> float:
-    """Where the root of the profile's deviance reaches the normal quantile; the end of the scale where it does not."""
-    from scipy.optimize import brentq
-
+    if model == "constant":
+        return named, ""
     lower, upper = _bounds(model, gap)
-    wanted = _normal_quantile(confidence)
-    near = [best]
-
-    def above(value: float) -> float:
-        starts = [one.copy() for one in (best, near[0])]
-        for one in starts:
-            one[parameter] = value
-        found, least = _search(model, gap, distance, starts, lower, upper, held=parameter)
-        near[0] = found
-        return float(np.sqrt(max(least - deviance, 0.0))) - wanted
-
-    bound = (lower, upper)[side > 0][parameter]
-    if abs(best[parameter] - bound) < 1e-6 or above(bound) < 0:
-        no_limit = np.inf if side > 0 else -np.inf
-        is_time = parameter % 2 == 1
-        most = 1.0 if bound == 1.0 and not is_time else no_limit  # a site cannot lose more than its vesicle
-        return most if side > 0 else (no_limit if is_time else 0.0)
-    return float(brentq(above, best[parameter], bound, xtol=1e-4, rtol=1e-4, maxiter=40))
+    shift = np.tile([0.2, 1.0], len(_terms(model)))
+    ends = profile_rows(
+        _residuals(model, gap, distance),
+        best,
+        rise=_normal_quantile(confidence) ** 2,
+        lower=lower,
+        upper=upper,
+        shifts=np.array([shift, -shift]),
+    )
+    open_ends = []
+    for term, sign in enumerate(_terms(model)):
+        name = "facilitation" if sign > 0 else "depression"
+        size, time = 2 * term, 2 * term + 1
+        # no less than nothing wears off, and no more than every vesicle is lost
+        most = np.inf if sign > 0 else 1.0
+        for row, what, value, lo, hi in (
+            (size, name, best[size], max(ends[size, 0], 0.0), min(ends[size, 1], most)),
+            (time, f"{name}_s", np.exp(best[time]), np.exp(ends[time, 0]), np.exp(ends[time, 1])),
+        ):
+            if np.isinf(hi):
+                open_ends.append(f"{what} has no upper limit")
+            at_end = best[row] >= upper[row] - 1e-6 and row == time
+            named[what] = Estimate(
+                value=np.nan if at_end else float(value), lo=float(lo), hi=float(hi), method="profile likelihood"
+            )
+    return named, "; ".join(open_ends)
 
 
 def _chi_square_p(deviance: float, freedom: int) -> float:
@@ -387,4 +339,5 @@ def _nothing(n_intervals: int, n_trials: int, reason: str) -> PulseIntervalFit:
         n_intervals=n_intervals,
         n_trials=n_trials,
         reason=reason,
+        parameters=np.empty(0),
     )

@@ -21,7 +21,7 @@ from ..checks import check_array
 from ..errors import InputError
 from .intervals import Estimate, _tail
 from .pulse_patterns import PulsePattern
-from .train_search import TrainData, bounds, fit_trains, natural, profile_train
+from .train_search import TrainData, bounds, fit_trains, natural, profile_trains
 
 if TYPE_CHECKING:
     from numpy.typing import ArrayLike, NDArray
@@ -176,8 +176,7 @@ def fit_tsodyks_markram(amplitude: ArrayLike, *, patterns: Sequence[PulsePattern
     from scipy.special import fdtrc, stdtrit
 
     inflated = 1.0 + deviance / freedom
-    allowed = deviance + float(stdtrit(freedom, 1.0 - tail)) ** 2 * inflated
-    ends = profile_train(known, best, allowed=allowed)
+    ends = profile_trains(known, best, rise=float(stdtrit(freedom, 1.0 - tail)) ** 2 * inflated)
     estimates, open_words = _in_words(known, best, ends)
     spare = sum(train.mean.size for train in known) - len(_NAMES)
     p_fit = (
