@@ -131,7 +131,7 @@ def provenance_of(measured: Measured, *, pipeline: Pipeline) -> dict[str, Any]:
         "format": "boutonrelease analysis",
         "format_version": FORMAT_VERSION,
         "created": datetime.now(UTC).isoformat(timespec="seconds"),
-        "versions": _versions(),
+        "versions": package_versions(),
         "movie": {
             "files": [str(Path(file).resolve()) for file in movie.files],
             "bytes": [Path(file).stat().st_size for file in movie.files],
@@ -198,7 +198,8 @@ def read_saved(path: str | Path) -> SavedAnalysis:
         raise SavedAnalysisError(f"{path}: setting {where}: {first['msg']} (given {first['input']!r}).") from error
 
 
-def _versions() -> dict[str, str]:
+def package_versions() -> dict[str, str]:
+    """Return the versions of Python, this program and what it rests on."""
     from importlib.metadata import version
 
     packages = (

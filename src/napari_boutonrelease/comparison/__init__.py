@@ -5,6 +5,7 @@ from __future__ import annotations
 from .matching import Matches, match_boutons, matches_from_ids, measure_shift
 from .recording import ComparedRecording, recording_from_result, recording_from_tables
 from .results import Comparison
+from .run import compare_recordings
 from .settings import CompareSettings
 
 __all__ = [
@@ -12,6 +13,7 @@ __all__ = [
     "ComparedRecording",
     "Comparison",
     "Matches",
+    "compare_recordings",
     "match_boutons",
     "matches_from_ids",
     "measure_shift",

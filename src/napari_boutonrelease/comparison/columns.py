@@ -28,7 +28,7 @@ JOINT = TableDefinition(
         *with_limits(number("q", DFF, "response to one vesicle, the same in all recordings", minimum=0)),
         number("q_cv", "", "coefficient of variation of one vesicle's response", minimum=0),
         choice("changed", "what differs between recordings", "none", "p", "q", "both"),
-        probability("changed_p", "p that what changed did not; where nothing did, the smaller of the next two"),
+        probability("changed_p", "likelihood-ratio p that nothing differs"),
         probability("p_changed_p", "likelihood-ratio p that p_site is the same in all recordings"),
         probability("q_changed_p", "likelihood-ratio p that q is the same in all recordings"),
         column("n_set", "string", "", "numbers of sites that the data cannot exclude", pattern=r"\d+(;\d+)*"),
@@ -52,7 +52,8 @@ CONDITIONS = TableDefinition(
         *with_limits(probability("p_release_own", "the same from this recording's own analysis")),
         *with_limits(number("ppr", "", "paired-pulse ratio of this recording")),
         *with_limits(number("q_own", DFF, "response to one vesicle from this recording's own analysis", minimum=0)),
-        *with_limits(number("amplitude_mean", DFF, "mean amplitude of pulse 1, failures included")),
+        number("amplitude_mean", DFF, "mean amplitude of pulse 1, failures included"),
+        number("amplitude_se", DFF, "standard error of amplitude_mean", minimum=0),
         number("noise_sd", DFF, "noise of one amplitude", minimum=0),
     ),
 )
@@ -68,13 +69,64 @@ CHANGES = TableDefinition(
         *with_limits(number("p_release_change", "", "p_release in b minus that in a", minimum=-1, maximum=1)),
         probability("p_changed_p", "likelihood-ratio p that p_site is the same in both"),
         probability("p_changed_p_adjusted", "the same, adjusted for all boutons of the pair (Benjamini-Hochberg)"),
-        *with_limits(number("q_ratio", "", "q in b over that in a", minimum=0)),
+        *with_limits(number("q_ratio", "", "q in b over that in a, n_sites the same in both", minimum=0)),
         probability("q_changed_p", "likelihood-ratio p that q is the same in both"),
         probability("q_changed_p_adjusted", "the same, adjusted for all boutons of the pair (Benjamini-Hochberg)"),
         *with_limits(number("ppr_ratio", "", "paired-pulse ratio in b over that in a", minimum=0)),
         *with_limits(number("amplitude_ratio", "", "mean amplitude of pulse 1 in b over that in a")),
         *with_limits(number("inverse_cv2_ratio", "", "1/CV² of pulse 1 in b over that in a, noise taken out")),
-        choice("locus", "what 1/CV² against mean points to", "release", "quantal_size", "mixed", "unresolved"),
+        choice(
+            "locus",
+            "what 1/CV² against mean points to",
+            *("release", "quantal_size", "mixed", "neither", "unresolved"),
+        ),
+    ),
+)
+
+VARIANCE_MEAN = TableDefinition(
+    name="variance_mean",
+    meaning="a row a bouton: variance against mean over the pulses of all recordings",
+    key=("bouton",),
+    columns=(
+        count("bouton", _BOUTON.meaning, minimum=1, required=True, unique=True),
+        count("conditions", "pulses and recordings that entered"),
+        *with_limits(number("q", DFF, "mean response to one vesicle", minimum=0)),
+        *with_limits(
+            number("n_sites", "", "number of sites, not rounded; empty where the parabola is not bent enough")
+        ),
+        probability("bend_p", "one-sided p of a straight line against a bent one"),
+        probability("fit_p", "goodness-of-fit p of the parabola"),
+        column("note", "string", "", "why a number is missing or weak"),
+    ),
+)
+
+INTERVALS = TableDefinition(
+    name="intervals",
+    meaning="a row a bouton and pulse interval, over all recordings",
+    key=("bouton", "interval_s"),
+    columns=(
+        _BOUTON,
+        number("interval_s", "s", "time from pulse 1 to pulse 2", minimum=0),
+        column("recordings", "string", "", "recordings with this interval, joined by ;"),
+        count("trials", "trials in which both pulses were measured"),
+        *with_limits(number("ppr", "", "paired-pulse ratio at this interval")),
+    ),
+)
+
+RECOVERY = TableDefinition(
+    name="recovery",
+    meaning="a row a bouton: paired-pulse ratio against pulse interval, model chosen by AICc",
+    key=("bouton",),
+    columns=(
+        count("bouton", _BOUTON.meaning, minimum=1, required=True, unique=True),
+        choice("model", "time course of the ratio", "none", "constant", "facilitation", "depression", "both"),
+        *with_limits(number("facilitation", "", "a of 1 + a exp(-interval / facilitation_s)", minimum=0)),
+        *with_limits(number("facilitation_s", "s", "time constant with which facilitation wears off", minimum=0)),
+        *with_limits(number("depression", "", "d of 1 - d exp(-interval / depression_s)", minimum=0)),
+        *with_limits(number("depression_s", "s", "time constant of the recovery from depression", minimum=0)),
+        probability("p_constant", "p that the ratio is 1 at every interval"),
+        probability("fit_p", "goodness-of-fit p of the chosen curve"),
+        column("note", "string", "", "why a number is missing or weak"),
     ),
 )
 
@@ -90,3 +142,7 @@ UNMATCHED = TableDefinition(
         column("missing_in", "string", "", "recordings in which it was not found, joined by ;"),
     ),
 )
+
+TABLES: dict[str, TableDefinition] = {
+    table.name: table for table in (JOINT, CONDITIONS, CHANGES, VARIANCE_MEAN, INTERVALS, RECOVERY, UNMATCHED)
+}

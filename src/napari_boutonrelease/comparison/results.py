@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, Any
 if TYPE_CHECKING:
     import pandas as pd
 
+    from .joint_step import BoutonFits
     from .matching import Matches
     from .recording import ComparedRecording
     from .settings import CompareSettings
@@ -26,6 +27,8 @@ class Comparison:
         What was compared; ids of boutons are those of the first.
     matches : Matches
         Which bouton is which.
+    fits : tuple of BoutonFits
+        Joint fits and parabola of each bouton of the first recording.
     joint, conditions, changes, variance_mean, unmatched : DataFrame
         The tables that `comparison/columns.py` describes.
     intervals, recovery : DataFrame
@@ -43,6 +46,7 @@ class Comparison:
     name: str
     recordings: tuple[ComparedRecording, ...]
     matches: Matches
+    fits: tuple[BoutonFits, ...]
     joint: pd.DataFrame
     conditions: pd.DataFrame
     changes: pd.DataFrame
