@@ -14,6 +14,8 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from .correlation import correlate, likelihood_template
+
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
@@ -336,10 +338,7 @@ class Reference:
                 return
 
     def find(self, frames: NDArray[np.generic], *, max_shift_px: float) -> tuple[FloatArray, FloatArray]:
-        """Coarse drift of frames by cross-correlation with the likelihood template, to about a pixel.
-
-        For Poisson light the log likelihood of a shift is the correlation of the frame with the logarithm of the
-        reference; its coarse structure is taken out, so that the background may change.
+        """Coarse drift of frames by cross-correlation, to about a pixel.
 
         Parameters
         ----------
@@ -352,37 +351,10 @@ class Reference:
         -------
         dy, dx : (n_frames,) ndarray of float
         """
-        from scipy.fft import irfft2, next_fast_len, rfft2
-
-        binning = max(1, round(float(np.sqrt(self.image.size / _FEW_PIXELS))))
-        template = _binned(self._likelihood_template()[None], binning)[0]
-        usable = _binned(self._usable[None].astype(np.float32), binning)[0] > 0.99
-        n_y, n_x = template.shape
-        reach_y, reach_x = (min(int(np.ceil(max_shift_px / binning)), n // 2) for n in (n_y, n_x))
-        size = (next_fast_len(n_y + reach_y, real=True), next_fast_len(n_x + reach_x, real=True))
-        spectrum = np.conj(rfft2(template, s=size))
-        lags_y, lags_x = np.arange(-reach_y, reach_y + 1), np.arange(-reach_x, reach_x + 1)
-        dy, dx = np.zeros(len(frames)), np.zeros(len(frames))
-        for start in range(0, len(frames), 16):
-            small = _binned(frames[start : start + 16], binning)
-            small = (small - small[:, usable].mean(axis=1)[:, None, None]) * usable
-            likeness = irfft2(rfft2(small, s=size) * spectrum, s=size)[:, lags_y[:, None], lags_x]
-            best = likeness.reshape(len(small), -1).argmax(axis=1)
-            for k, (i, j) in enumerate(zip(*np.divmod(best, len(lags_x)), strict=True)):
-                dy[start + k] = lags_y[i] + _summit(likeness[k, :, j], i)
-                dx[start + k] = lags_x[j] + _summit(likeness[k, i], j)
-        dy, dx = binning * self._directions @ np.stack([dy, dx])
+        template = likelihood_template(self.image, self._weights)
+        coarse = correlate(frames, template=template, usable=self._usable, max_shift_px=max_shift_px)
+        dy, dx = self._directions @ coarse
         return dy, dx
-
-    def _likelihood_template(self) -> Single:
-        from scipy.ndimage import gaussian_filter
-
-        dark = float(np.percentile(self.image, 5))
-        lift = max(float(np.sqrt(1.0 / np.median(self._weights))), 0.05 * float(np.ptp(self.image)), 1e-12)
-        logarithm = np.log(np.maximum(self.image - dark, 0.0) + lift)
-        fine = gaussian_filter(logarithm, 0.7) - gaussian_filter(logarithm, 8.0)
-        template: Single = fine.astype(np.float32)
-        return template
 
 
 def _signal(normal: FloatArray) -> float:
@@ -398,26 +370,3 @@ def _grouped(cells: NDArray[np.int_], active: NDArray[np.intp]) -> list[tuple[tu
     order = np.argsort(which, kind="stable")
     ends = np.cumsum(np.bincount(which, minlength=len(kinds)))[:-1]
     return [((int(y), int(x)), active[members]) for (y, x), members in zip(kinds, np.split(order, ends), strict=True)]
-
-
-def _binned(frames: NDArray[np.generic], binning: int) -> Single:
-    if binning == 1:
-        return frames.astype(np.float32)
-    n, n_y, n_x = frames.shape
-    high, wide = n_y // binning * binning, n_x // binning * binning
-    rows = np.zeros((n, high // binning, wide), dtype=np.float32)
-    for k in range(binning):
-        rows += frames[:, k:high:binning, :wide]
-    binned: Single = rows[:, :, 0::binning].copy()
-    for k in range(1, binning):
-        binned += rows[:, :, k::binning]
-    return binned
-
-
-def _summit(profile: Single, at: int) -> float:
-    """Where a parabola through the best lag and its neighbours peaks, relative to the best lag."""
-    if not 0 < at < len(profile) - 1:
-        return 0.0
-    before, here, after = (float(value) for value in profile[at - 1 : at + 2])
-    bend = before - 2.0 * here + after
-    return 0.5 * (before - after) / bend if bend < 0 else 0.0
