@@ -189,7 +189,7 @@ def test_a_protocol_beside_the_movie_is_found(dock, files, tmp_path, when_idle):
     (tmp_path / "cell.protocol.toml").write_text(
         "[recording]\nframe_interval_s = 0.01\n[stimuli]\nfirst_s = 0.5\ntrials = 1\n"
     )
-    dock.open_source(tmp_path / "cell.tif")
+    dock.open_button.open_source(tmp_path / "cell.tif")
     when_idle(dock)
     assert dock.model.protocol.stimuli.first_s == 0.5
     assert "cell.protocol.toml" in dock.about.text()
@@ -241,7 +241,7 @@ def test_channels_are_asked_for(dock, tmp_path, when_idle, monkeypatch):
     stack = np.random.default_rng(0).integers(0, 99, (6, 2, 8, 9), dtype=np.uint16)
     tifffile.imwrite(tmp_path / "two.tif", stack, imagej=True, metadata={"axes": "TCYX"})
     monkeypatch.setattr(QInputDialog, "getItem", lambda _self, _title, _text, items, *_: (items[1], True))
-    dock.open_source(tmp_path / "two.tif")
+    dock.open_button.open_source(tmp_path / "two.tif")
     when_idle(dock)
     np.testing.assert_array_equal(np.asarray(movie_layer(dock.viewer).data), stack[:, 1])
     assert dock.model.settings.recording.channel == 1
@@ -251,7 +251,7 @@ def test_a_file_that_is_no_movie_is_a_sentence(dock, tmp_path, when_idle, monkey
     told = []
     monkeypatch.setattr(worker.notifications, "show_error", told.append)
     (tmp_path / "notes.tif").write_text("not a movie")
-    dock.open_source(tmp_path / "notes.tif")
+    dock.open_button.open_source(tmp_path / "notes.tif")
     when_idle(dock)
     assert len(told) == 1
     assert "notes.tif" in told[0]
@@ -367,7 +367,7 @@ def test_two_viewers_stay_apart(qtbot, files, when_idle):
     docks = [RecordingDock(ViewerModel()) for _ in range(2)]
     for one in docks:
         qtbot.addWidget(one)
-    docks[0].open_source(files.movie)
+    docks[0].open_button.open_source(files.movie)
     when_idle(docks[0])
     docks[0].load_protocol(files.protocol_file)
     assert docks[0].model is not docks[1].model
@@ -381,7 +381,7 @@ def test_closing_lets_go_of_the_viewer(make_napari_viewer, files, when_idle, qtb
     viewer = make_napari_viewer()
     dock = RecordingDock(viewer)
     viewer.window.add_dock_widget(dock, name="Recording")
-    dock.open_source(files.movie)
+    dock.open_button.open_source(files.movie)
     when_idle(dock)
     dock.load_protocol(files.protocol_file)
     dock.analyse()

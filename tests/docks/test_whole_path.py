@@ -51,7 +51,7 @@ def analysed(make_napari_viewer, files, quick, when_idle, monkeypatch):
     viewer = make_napari_viewer()
     open_all(viewer)
     recording = dock_of(viewer, "Recording")
-    recording.open_source(files.movie)
+    recording.open_button.open_source(files.movie)
     when_idle(recording)
     monkeypatch.setattr(QFileDialog, "getOpenFileName", lambda *_: (str(files.protocol_file), ""))
     click(recording.load_button)
@@ -173,7 +173,7 @@ def test_two_windows_stay_apart(make_napari_viewer, files, when_idle):
         open_dock(viewer, "Recording")
         open_dock(viewer, "Results")
     dock = dock_of(one, "Recording")
-    dock.open_source(files.movie)
+    dock.open_button.open_source(files.movie)
     when_idle(dock)
     dock.load_protocol(files.protocol_file)
     assert model_of(other).movie is None

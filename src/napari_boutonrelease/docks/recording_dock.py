@@ -3,10 +3,8 @@
 from __future__ import annotations
 
 import html
-from collections.abc import Sequence
-from dataclasses import dataclass, field
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING
 
 from qtpy.QtCore import Qt
 from qtpy.QtWidgets import (
@@ -14,28 +12,26 @@ from qtpy.QtWidgets import (
     QComboBox,
     QFileDialog,
     QHBoxLayout,
-    QInputDialog,
     QLabel,
-    QMenu,
     QPushButton,
     QSizePolicy,
     QWidget,
 )
 
-from ..errors import ChannelError, InputError
-from ..recording import Movie, Protocol, open_movie, read_protocol, resolve_timing, write_protocol
+from ..errors import InputError
+from ..recording import Protocol, read_protocol, resolve_timing, write_protocol
 from .layers import (
     add_movie,
     current_frame,
     image_layers,
     movie_layer,
-    movie_layer_settings,
     movie_of_layer,
     recalibrate,
     set_movie_layer,
     text_overlay,
 )
 from .number_field import NumberField
+from .open_movie import OpenMovieButton
 from .panel import Panel, sentence_label
 from .protocol_form import ProtocolForm, in_words
 from .quality import findings
@@ -47,22 +43,10 @@ if TYPE_CHECKING:
     from napari.layers import Image
 
     from ..analysis.measured import Measured
-    from ..analysis.progress import Progress
-    from ..recording import Timing
+    from ..recording import Movie, Timing
+    from .open_movie import OpenedMovie
 
-MOVIE_FILES = "TIFF movies (*.tif *.tiff *.btf *.tf8 *.stk);;All files (*)"
 _PROTOCOL_FILES = "Protocols (*.toml)"
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class _Opened:
-    """A movie from disk with the settings of its layer; without one, the titles of channels to choose from."""
-
-    source: str | Path | Sequence[str | Path]
-    channel: int | None
-    movie: Movie | None = None
-    settings: dict[str, Any] = field(default_factory=dict)
-    titles: tuple[str, ...] = ()
 
 
 class RecordingDock(Panel):
@@ -97,12 +81,8 @@ class RecordingDock(Panel):
         self.movies.setSizePolicy(QSizePolicy.Policy.Expanding, QSizePolicy.Policy.Fixed)
         self.movies.setPlaceholderText("no movie yet")
         self.movies.activated.connect(self._choose_listed)
-        self.open_button = QPushButton("Open movie...")
-        menu = QMenu(self.open_button)
-        menu.addAction("A file...", self._ask_file)
-        menu.addAction("Files, one a trial...", self._ask_files)
-        menu.addAction("A folder, one file a trial...", self._ask_folder)
-        self.open_button.setMenu(menu)
+        self.open_button = OpenMovieButton(self.runner)
+        self.open_button.opened.connect(self._take_opened)
         self.column.addLayout(_row(self.movies, self.open_button))
         self.about = sentence_label("Open a movie, drop one on the viewer, or take one from File > Open Sample.")
         self.column.addWidget(self.about)
@@ -154,27 +134,9 @@ class RecordingDock(Panel):
 
     # the movie
 
-    def open_source(self, source: str | Path | Sequence[str | Path], *, channel: int | None = None) -> None:
-        """Open a movie from disk as a new layer and choose it."""
-
-        def work(progress: Progress) -> _Opened:
-            progress(0, 0)
-            try:
-                movie = open_movie(source, channel=channel)
-            except ChannelError as error:
-                return _Opened(source=source, channel=None, titles=error.titles)
-            return _Opened(source=source, channel=channel, movie=movie, settings=movie_layer_settings(movie))
-
-        self.runner.run(work, self._take_opened, words="Opening the movie", kind="open")
-
-    def _take_opened(self, opened: _Opened) -> None:
-        if opened.movie is None:
-            chosen = self._ask_channel(opened.titles)
-            if chosen is not None:
-                self.open_source(opened.source, channel=chosen)
-            return
+    def _take_opened(self, opened: OpenedMovie) -> None:
         self.model.choose("recording", channel=opened.channel)
-        self.choose_layer(add_movie(self.viewer, opened.movie, **opened.settings))
+        self.choose_layer(add_movie(self.viewer, opened.movie, **opened.layer_settings))
 
     def choose_layer(self, layer: Image) -> None:
         """Take a layer as the movie to analyse, with the protocol that comes with it."""
@@ -201,27 +163,6 @@ class RecordingDock(Panel):
 
     def _choose_listed(self, index: int) -> None:
         self.choose_layer(image_layers(self.viewer)[index])
-
-    def _ask_file(self) -> None:
-        path, _ = QFileDialog.getOpenFileName(self, "Open a movie", "", MOVIE_FILES)
-        if path:
-            self.open_source(path)
-
-    def _ask_files(self) -> None:
-        paths, _ = QFileDialog.getOpenFileNames(self, "Open the files of a recording, one a trial", "", MOVIE_FILES)
-        if paths:
-            self.open_source(paths)
-
-    def _ask_folder(self) -> None:
-        path = QFileDialog.getExistingDirectory(self, "Open a folder of files, one a trial")
-        if path:
-            self.open_source(path)
-
-    def _ask_channel(self, titles: tuple[str, ...]) -> int | None:
-        title, chosen = QInputDialog.getItem(
-            self, "Choose a channel", "Channel to analyse, counted from 0:", list(titles), 0, False
-        )
-        return titles.index(title) if chosen else None
 
     # the protocol
 
