@@ -108,14 +108,6 @@ def on_plane(movie_layer: Layer) -> dict[str, Any]:
     }
 
 
-def lie_on(movie_layer: Layer, *layers: Layer | None) -> None:
-    """Let two-dimensional layers follow a movie that was calibrated anew."""
-    place = on_plane(movie_layer)
-    for layer in layers:
-        if layer is not None and (tuple(layer.scale), tuple(layer.units)) != (place["scale"], place["units"]):
-            layer.scale, layer.translate, layer.units = place["scale"], place["translate"], place["units"]
-
-
 def movie_of_layer(layer: Layer) -> Movie:
     """Return the movie behind an image layer, the same one each time.
 

@@ -24,37 +24,20 @@ _CHILD = "from napari_boutonrelease.reports.apart import _write; _write()"
 
 
 def write_result_apart(
-    result: AnalysisResult,
-    folder: Path,
-    *,
-    overwrite: bool,
-    progress: Callable[[int, int], None] | None = None,
+    result: AnalysisResult, folder: Path, *, progress: Callable[[int, int], None] | None = None, **options: bool
 ) -> Path:
     """Do what `write_result` does in another process, and wait for it.
 
-    Parameters
-    ----------
-    result : AnalysisResult
-        What was found.
-    folder : Path
-        Folder to be made, or replaced if it holds results.
-    overwrite : bool
-        Whether results that are there may be replaced.
-    progress : callable, optional
-        Called with (done, total) files. Raising from it ends the writing; what was there stays as it was.
-
-    Returns
-    -------
-    Path
-        The folder.
+    Parameters and errors are those of `write_result`, besides these. Raising from `progress` ends the writing; what was
+    there stays as it was.
 
     Raises
     ------
     OutputError
-        As `write_result`, or if the process died.
+        Also if the process died.
     """
     with tempfile.TemporaryFile() as parcel, tempfile.TemporaryFile("w+", encoding="utf-8") as complaints:
-        pickle.dump((result, Path(folder).absolute(), overwrite), parcel)
+        pickle.dump((result, Path(folder).absolute(), options), parcel)
         parcel.seek(0)
         child = subprocess.Popen(
             [sys.executable, "-c", _CHILD],
@@ -87,8 +70,8 @@ def _write() -> None:
         sys.stdout.write(json.dumps(what) + "\n")
         sys.stdout.flush()
 
-    result, folder, overwrite = pickle.load(sys.stdin.buffer)
+    result, folder, options = pickle.load(sys.stdin.buffer)
     try:
-        write_result(result, folder, overwrite=overwrite, progress=lambda done, total: tell(done=done, total=total))
+        write_result(result, folder, **options, progress=lambda done, total: tell(done=done, total=total))
     except InputError as error:
         tell(error=str(error))
