@@ -17,6 +17,7 @@ COMMANDS = {
     "simulate": "write a simulated movie, its protocol and its truth",
     "inspect": "say what a movie holds and whether it can be analysed",
     "analyse": "analyse one recording: boutons, release, quanta, report",
+    "compare": "compare the same boutons in two or more analysed recordings",
     "plan": "say how many trials a wanted precision needs",
     "view": "open a movie or a saved analysis in napari, with the docks",
 }

@@ -126,7 +126,7 @@ def _fit_bouton(
 
 
 def _common_vesicle(recordings: Sequence[ComparedRecording]) -> LogPrior | None:
-    """What the axons have for a vesicle, held so loosely that a bouton that releases hardly leans on it.
+    """Return the axons' vesicle, held so loosely that a bouton that releases hardly leans on it.
 
     It says to a silent bouton how large a response would have been; without it, none could be too small to be seen.
     """

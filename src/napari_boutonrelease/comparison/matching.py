@@ -114,7 +114,9 @@ def measure_shift(reference: Floats, image: Floats) -> tuple[Floats, float]:
     (one, inside_one), (other, inside_other) = (_structure(picture, size) for picture in (reference, image))
     if not (one.any() and other.any()):
         return np.zeros(2), 0.0
-    back, *_ = phase_cross_correlation(one, other, upsample_factor=_STEPS_PER_PX, normalization=None)
+    back, *_ = phase_cross_correlation(  # type: ignore[no-untyped-call]
+        one, other, upsample_factor=_STEPS_PER_PX, normalization=None
+    )
     laid_on = moved(other, back, order=1)
     common = inside_one & (moved(inside_other.astype(np.float64), back, order=1) > 0.99)
     a, b = one[common], laid_on[common]

@@ -20,6 +20,16 @@ if TYPE_CHECKING:
     Floats = NDArray[np.float64]
 
 
+NEEDED_OF_BOUTONS = (
+    *("bouton", "y_px", "x_px", "noise_sd", "noise_n", "trials", "flags"),
+    *(f"{name}{end}" for name in ("p_release", "ppr", "q", "n_sites") for end in ("", "_lo", "_hi")),
+    *("amplitude_mean", "amplitude_se"),
+)
+"""Columns of the table of boutons without which there is nothing to compare."""
+
+NEEDED_OF_RESPONSES = ("bouton", "trial", "pulse", "stimulus_s", "amplitude", "amplitude_se", "used")
+
+
 @dataclass(frozen=True, slots=True, kw_only=True)
 class ComparedRecording:
     """One recording of the boutons that are compared.

@@ -34,6 +34,7 @@ _MEANINGS = {
     "summary.json": "results of the whole axon and the recording's quality",
     "analysis.json": "all that is needed to reopen and to repeat the analysis",
     "report.pdf": "what a person reads first",
+    "comparison.json": "what was compared, with which settings, and what holds for all boutons together",
     "plan.json": "what the plan was asked for",
     "recording.nwb": "the results as Neurodata Without Borders",
 }

@@ -9,7 +9,12 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from ..analysis.columns import BOUTONS, RESPONSES
-from ..comparison.recording import ComparedRecording, recording_from_tables
+from ..comparison.recording import (
+    NEEDED_OF_BOUTONS,
+    NEEDED_OF_RESPONSES,
+    ComparedRecording,
+    recording_from_tables,
+)
 from ..errors import SavedAnalysisError
 from .folder import MARK
 from .tables import read_table
@@ -47,8 +52,8 @@ def read_recording(path: str | Path, *, name: str | None = None) -> ComparedReco
     return recording_from_tables(
         name=name or folder.resolve().name.removesuffix(".release"),
         source=str(folder),
-        boutons=read_table(folder / "boutons.csv", table=BOUTONS),
-        responses=read_table(folder / "responses.csv", table=RESPONSES),
+        boutons=read_table(folder / "boutons.csv", table=BOUTONS, needed=NEEDED_OF_BOUTONS),
+        responses=read_table(folder / "responses.csv", table=RESPONSES, needed=NEEDED_OF_RESPONSES),
         null_amplitude=_null_amplitude(folder / "traces.npz"),
         mean_image=_mean_image(folder / "mean_image.tif"),
         summary=summary,

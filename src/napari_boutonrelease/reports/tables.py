@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import csv
 import math
-from collections.abc import Callable
+from collections.abc import Callable, Collection
 from typing import TYPE_CHECKING, Any
 
 from ..analysis.column_types import Column, TableDefinition, check_columns
@@ -45,7 +45,7 @@ def write_table(frame: pd.DataFrame, path: Path, *, table: TableDefinition) -> N
         writer.writerows(zip(*cells, strict=True))
 
 
-def read_table(path: Path, *, table: TableDefinition) -> pd.DataFrame:
+def read_table(path: Path, *, table: TableDefinition, needed: Collection[str] | None = None) -> pd.DataFrame:
     """Read a table that `write_table` wrote.
 
     Parameters
@@ -54,6 +54,9 @@ def read_table(path: Path, *, table: TableDefinition) -> pd.DataFrame:
         CSV file.
     table : TableDefinition
         Its entry in the data dictionary.
+    needed : collection of str, optional
+        Columns that must be there; all, where left out. Others that the version which wrote the table did not know yet
+        are empty, and those that this one does not know are left out.
 
     Returns
     -------
@@ -77,6 +80,9 @@ def read_table(path: Path, *, table: TableDefinition) -> pd.DataFrame:
             na_values=[""],
             dtype={column.name: types[column.type] for column in columns},
         )
+        if needed is not None and set(needed) <= set(frame.columns):
+            known = {column.name: types[column.type] for column in columns}
+            frame = frame.reindex(columns=list(known)).astype(known)
         check_columns(table, frame.columns)
     except (OSError, ValueError) as error:
         raise SavedAnalysisError(f"{path} cannot be read as the table {table.name}: {error}") from error
