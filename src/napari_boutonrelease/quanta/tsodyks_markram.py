@@ -166,11 +166,11 @@ def fit_tsodyks_markram(amplitude: ArrayLike, *, patterns: Sequence[PulsePattern
             trains.append(_in_blocks(pattern.pulse_s, trials))
     known = [train for train in trains if train is not None]
     if not trains:
-        return _no_fit(f"the model needs {_LEAST_TRIALS} complete trials of {LEAST_PULSES} or more pulses")
+        return no_train_model(f"the model needs {_LEAST_TRIALS} complete trials of {LEAST_PULSES} or more pulses")
     if len(known) < len(trains):
-        return _no_fit("some response does not vary from trial to trial: its spread is unknown")
+        return no_train_model("some response does not vary from trial to trial: its spread is unknown")
     if all(np.all(train.mean <= 0) for train in known):
-        return _no_fit("no mean response is above zero")
+        return no_train_model("no mean response is above zero")
     best, deviance = fit_trains(known)
     freedom = sum(train.freedom for train in known)
     from scipy.special import fdtrc, stdtrit
@@ -248,7 +248,14 @@ def _in_words(trains: Sequence[TrainData], best: Floats, ends: Floats) -> tuple[
     return estimates, "; ".join(words)
 
 
-def _no_fit(reason: str) -> TrainModel:
+def no_train_model(reason: str) -> TrainModel:
+    """Return the model where there is no fit, and why.
+
+    Examples
+    --------
+    >>> no_train_model("no train").fitted
+    False
+    """
     unknown = Estimate(value=np.nan, lo=np.nan, hi=np.nan, method=f"none: {reason}")
     return TrainModel(
         u=unknown,
