@@ -8,6 +8,7 @@ import json
 import frictionless
 import pytest
 
+from napari_boutonrelease.analysis.columns import BOUTONS
 from napari_boutonrelease.cli.main import main
 
 HEADER = "bouton,trials,p_release,n_sites,snr,q_cv,flags,more"
@@ -98,6 +99,10 @@ def test_an_analysis_gets_a_row_a_bouton(results, capsys, name):
     assert "bouton 5: no quantal fit" in out
     assert "bouton 2: change: p_release 0.9 cannot rise by 0.2" in out
     assert "p_release changed by +0.2, over 2 boutons, before and after each: " in out
+
+
+def test_the_columns_that_are_read_are_those_that_an_analysis_writes():
+    assert set(HEADER.split(",")) - {"more"} <= set(BOUTONS.names)
 
 
 def test_more_light_can_be_asked_of_an_analysis(results, capsys):

@@ -11,7 +11,7 @@ import numpy as np
 import pytest
 
 import napari_boutonrelease as br
-from napari_boutonrelease.cli.main import COMMANDS, build_parser
+from napari_boutonrelease.cli.main import COMMANDS, build_parser, main
 from napari_boutonrelease.simulation import BoutonRecipe, preset_recipe, simulate_recording, write_simulation
 
 ROOT = Path(__file__).parents[2]
@@ -129,3 +129,17 @@ def test_the_snippets_for_scripts_run(folder, recipe, monkeypatch, tmp_path):
         exec(compile(snippet, "script.md", "exec"), names)
     assert (tmp_path / "axon.release" / "boutons.csv").exists()
     assert 0.3 < names["fit"].p_release.value < 0.9
+
+
+def test_the_plan_of_the_page_is_what_the_command_prints(capsys):
+    page = ROOT / "docs" / "how-to" / "plan-trials.md"
+    command, promised = fences(page, "")[0], fences(page, "text")[0]
+    assert main(shlex.split(command)[1:]) == 0
+    pairs = list(zip(capsys.readouterr().out.splitlines(), promised.splitlines(), strict=True))
+    assert pairs[:2] == [(line, line) for line, _ in pairs[:2]]
+    for found, shown in pairs[2:]:  # numbers may differ in the last digit between versions of what they rest on
+        goals, trials = zip(
+            *((line[:67].rstrip(), float(line[67:73].replace(",", ""))) for line in (found, shown)), strict=True
+        )
+        assert goals[0] == goals[1]
+        assert trials[0] == pytest.approx(trials[1], rel=0.02)

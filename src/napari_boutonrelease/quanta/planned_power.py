@@ -11,7 +11,7 @@ from scipy.special import nctdtr, ndtr, ndtri, stdtrit
 from .intervals import Estimate, wilson_interval
 from .planned_bouton import Doubts, PlannedBouton
 from .pulse_pairs import DETECTED_SE
-from .release_information import change_covariance
+from .release_information import effective_trials
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -108,15 +108,28 @@ def simulated_ppr_power(
 
 
 def change_power(bouton: PlannedBouton, *, change: float, n_trials: int, doubts: Doubts, confidence: float) -> float:
-    """Chance that a change of one bouton's p_release is significant, with `n_trials` in each condition.
+    """Chance that a change of one bouton's p_release is significant, whatever its vesicles do.
 
-    Normal on the scale arcsin(sqrt(p)), on which perfect calls have equal variance (Cohen 1988, chapter 6).
+    Normal on the scale arcsin(sqrt(p)), on which the variance of perfect calls does not depend on p (Cohen 1988,
+    chapter 6). Both recordings are measured on their own: vesicles, too, may have changed.
+
+    Parameters
+    ----------
+    bouton : PlannedBouton
+        The bouton before.
+    change : float
+        Change of p_release.
+    n_trials : int
+        Trials in each condition.
+    doubts : Doubts
+        How well the rest is known beforehand, in each condition.
+    confidence : float
+        Coverage of the interval of the change that is to exclude 0.
     """
-    after = bouton.releasing(bouton.p_release + change)
-    covariance = change_covariance(bouton, after, n_trials=n_trials, doubts=doubts)
-    se = float(np.sqrt(np.array([-1.0, 1.0]) @ covariance @ np.array([-1.0, 1.0])))
-    step = abs(float(np.arcsin(np.sqrt(after.p_release)) - np.arcsin(np.sqrt(bouton.p_release)))) / se
-    z = float(ndtri(0.5 * (1.0 + confidence)))
+    both = (bouton, bouton.releasing(bouton.p_release + change))
+    before, after = (np.arcsin(np.sqrt(one.p_release)) for one in both)
+    variance = sum(0.25 / effective_trials(one, n_trials=n_trials, doubts=doubts) for one in both)
+    step, z = float(abs(after - before) / np.sqrt(variance)), float(ndtri(0.5 * (1.0 + confidence)))
     return float(ndtr(step - z) + ndtr(-step - z))
 
 
@@ -151,9 +164,10 @@ def paired_change_power(
 
 def _change_variance(bouton: PlannedBouton, change: float, n_trials: int, doubts: Doubts) -> float:
     """Variance of the change of p_release that one bouton shows."""
-    after = bouton.releasing(bouton.p_release + change)
-    slopes = np.array([-1.0, 1.0]) * [2.0 * np.sqrt(p * (1.0 - p)) for p in (bouton.p_release, after.p_release)]
-    return float(slopes @ change_covariance(bouton, after, n_trials=n_trials, doubts=doubts) @ slopes)
+    return sum(
+        one.p_release * (1.0 - one.p_release) / effective_trials(one, n_trials=n_trials, doubts=doubts)
+        for one in (bouton, bouton.releasing(bouton.p_release + change))
+    )
 
 
 def paired_power(mean: float, variance: float, *, n: int, confidence: float) -> float:

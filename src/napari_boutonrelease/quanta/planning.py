@@ -7,7 +7,7 @@ do well enough. What is worked out, and from what:
 - n sites or one more: exact distribution of the log-likelihood ratio (`sites_evidence`);
 - paired-pulse ratio: paired t-test of both amplitudes, of which excluding the ratio 1 is a monotone transform, and
   beside it simulated recordings;
-- change of p_release: at one bouton from the joint information of both conditions, over boutons by a paired t-test.
+- change of p_release: at one bouton from the information of both conditions, over boutons by a paired t-test.
 """
 
 from __future__ import annotations
@@ -208,7 +208,7 @@ def trials_for_change(
     power : float
         Wanted chance that the change is significant at 1 - `confidence`, two-sided.
     doubts : Doubts
-        How well the rest is known beforehand; it is the same in both conditions.
+        How well the rest is known beforehand, in each condition.
     confidence : float
         Coverage of the interval of the change that is to exclude 0.
     max_trials : int

@@ -22,7 +22,6 @@ if TYPE_CHECKING:
     Floats = NDArray[np.float64]
 
 _DIFFERENCE = 1e-4
-_N_PARAMETERS = 5  # angle, log q, log q_cv, log noise, 1/n_sites
 _KNOWN = 1e-6  # doubt that stands for none
 
 
@@ -101,33 +100,6 @@ def expected_width(bouton: PlannedBouton, *, n_trials: int, doubts: Doubts, conf
     n = effective_trials(bouton, n_trials=n_trials, doubts=doubts)
     lo, hi = wilson_interval(bouton.p_release * n, n, confidence=confidence)
     return float(hi - lo)
-
-
-def change_covariance(before: PlannedBouton, after: PlannedBouton, *, n_trials: int, doubts: Doubts) -> Floats:
-    """Covariance of both angles of p_release, from one bouton recorded before and after.
-
-    Vesicles, their variation, the noise and the number of sites are the same in both, so that doubt about them
-    cancels in part.
-
-    Parameters
-    ----------
-    before, after : PlannedBouton
-        The bouton in both conditions; they differ in p_site.
-    n_trials : int
-        Trials in each condition.
-    doubts : Doubts
-        How well the rest is known beforehand.
-
-    Returns
-    -------
-    (2, 2) ndarray
-    """
-    both = np.zeros((_N_PARAMETERS + 1, _N_PARAMETERS + 1))
-    for angle, bouton in enumerate((before, after)):
-        rows = np.array([angle, *range(2, _N_PARAMETERS + 1)])
-        both[np.ix_(rows, rows)] += n_trials * release_information(bouton)
-    both[1:, 1:] += _prior(doubts, n_trials)
-    return np.asarray(np.linalg.inv(both)[:2, :2])
 
 
 def _prior(doubts: Doubts, n_trials: int) -> Floats:
