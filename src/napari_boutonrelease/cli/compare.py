@@ -152,14 +152,19 @@ def _out_folder(given: str | None, *, first: str) -> "Path":
 
 def _bouton_lines(comparison: "Comparison") -> "list[str]":
     """Return a line a bouton: sites, vesicle, what changed."""
+    import numpy as np
+
+    from ..reports.facts import texts, values
     from .summary import with_interval
 
-    lines = ["bouton  n_sites  q (dF/F)               changed"]
-    for row in comparison.joint.itertuples():
-        if row.recordings < 2:
-            continue
-        sites = "-" if row.n_set is None or row.n_sites != row.n_sites else str(row.n_set).replace(";", " ")
-        vesicle = with_interval(float(row.q), float(row.q_lo), float(row.q_hi))
-        changed = "-" if row.changed is None or row.changed != row.changed else f"{row.changed} (p {row.changed_p:.2g})"
-        lines.append(f"{row.bouton:>6}  {sites:<7}  {vesicle:<21}  {changed}")
+    joint = comparison.joint
+    n_set, changed, p = texts(joint, "n_set"), texts(joint, "changed"), values(joint, "changed_p")
+    releases = np.isfinite(values(joint, "n_sites"))
+    q, q_lo, q_hi = (values(joint, f"q{end}") for end in ("", "_lo", "_hi"))
+    lines = ["bouton  n_sites   q (dF/F)              changed"]
+    for row in np.flatnonzero(values(joint, "recordings") > 1):
+        sites = n_set[row].replace(";", " ") if releases[row] else "-"
+        vesicle = with_interval(q[row], q_lo[row], q_hi[row])
+        change = f"{changed[row]} (p {p[row]:.2g})" if changed[row] else "-"
+        lines.append(f"{values(joint, 'bouton')[row]:>6g}  {sites:<8}  {vesicle:<20}  {change}")
     return lines

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
+from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 from .figures_comparison import (
@@ -18,7 +19,7 @@ from .figures_comparison import (
     matches_mm,
     parabolas_mm,
 )
-from .figures_page import A4_MM, MARGIN_MM, Area, blank_figure, line_mm, text_width_mm
+from .figures_page import A4_MM, MARGIN_MM, Area, blank_figure, line_mm, text_width_mm, wrapped
 from .figures_style import BODY, HEAD, MUTED, SMALL, TITLE, styled
 from .words import counted, fixed, p_words, with_limits
 
@@ -31,6 +32,16 @@ if TYPE_CHECKING:
     from ..comparison import Comparison
 
 _MOST_CHANGES_MM = 150.0
+
+
+@dataclass(frozen=True, slots=True)
+class _Section:
+    """A figure of the report with what a reader needs to understand it."""
+
+    title: str
+    height: float
+    draw: Callable[[Area, Comparison], None]
+    caption: str
 
 
 def write_comparison_report(comparison: Comparison, path: Path) -> None:
@@ -142,31 +153,75 @@ def _recordings_table(page: Area, comparison: Comparison, y: float) -> float:
     return y
 
 
+def _sections(comparison: Comparison) -> list[_Section]:
+    sections = [
+        _Section(
+            "Which bouton is which",
+            min(matches_mm(comparison), 110.0),
+            draw_matches,
+            "Mean images with the ids of the first recording: blue where a bouton was found in every recording, grey "
+            "where in some. Crosses are boutons of later recordings without a partner. Check by eye that ids sit on the same "
+            "boutons.",
+        ),
+        _Section(
+            "Release probability in each recording",
+            62.0,
+            draw_release,
+            "Pulse 1, from each recording's own analysis, with 95 % intervals.",
+        ),
+        _Section(
+            "What changed",
+            min(changes_mm(comparison), _MOST_CHANGES_MM),
+            draw_changes,
+            "95 % intervals, filled where they exclude no change; not corrected for the number of boutons (the p-values "
+            "in changes.csv are). The ratio of q comes from the joint fit of both recordings, with one number of sites.",
+        ),
+        _Section(
+            "Number of release sites",
+            62.0,
+            draw_sites,
+            "Points: most likely number; bars: numbers that the data cannot exclude. Different release probabilities in "
+            "the recordings are what tells the number of sites.",
+        ),
+        _Section(
+            "1/CV² against mean",
+            66.0,
+            draw_inverse_cv2,
+            "Pulse 1, the variance of the noise taken out, 95 % intervals by resampling trials.",
+        ),
+        _Section(
+            "Variance against mean",
+            parabolas_mm(comparison),
+            draw_parabolas,
+            "Each point is a pulse of a recording, noise taken out, ± standard error. The curve is the parabola of "
+            "binomial release with the expected variation of vesicles; it is straight where the number of sites stays open.",
+        ),
+    ]
+    if len(comparison.recovery):
+        sections.append(
+            _Section(
+                "Paired-pulse ratio against pulse interval",
+                62.0,
+                draw_intervals,
+                "Points: each bouton at each interval. Lines: the time course that AICc chose for each bouton.",
+            )
+        )
+    return sections
+
+
 def _pages(comparison: Comparison) -> list[Figure]:
     figure, page, y = _title_page(comparison)
     pages = [figure]
-    sections: list[tuple[str, float, Callable[[Area, Comparison], None]]] = [
-        ("Which bouton is which", min(matches_mm(comparison), 110.0), draw_matches),
-        ("Release probability in each recording", 62.0, draw_release),
-        (
-            "What changed: 95 % intervals, filled where they exclude no change",
-            min(changes_mm(comparison), _MOST_CHANGES_MM),
-            draw_changes,
-        ),
-        ("Number of release sites: bars are the numbers that the data cannot exclude", 62.0, draw_sites),
-        ("1/CV² against mean, pulse 1", 66.0, draw_inverse_cv2),
-        ("Variance against mean, noise taken out", parabolas_mm(comparison), draw_parabolas),
-    ]
-    if len(comparison.recovery):
-        sections.append(("Paired-pulse ratio against pulse interval", 62.0, draw_intervals))
-    for title, height, draw in sections:
-        if y + height + 9.0 > page.height:
+    for section in _sections(comparison):
+        caption_mm = line_mm(SMALL) * len(wrapped(section.caption, page.width, size=SMALL))
+        if y + section.height + caption_mm + 9.0 > page.height:
             figure = blank_figure(*A4_MM)
             page, y = Area.of(figure, margin=MARGIN_MM), 0.0
             pages.append(figure)
-        page.text(0.0, y, title, size=HEAD, weight="bold")
-        draw(page.part(0.0, y + 6.5, page.width, height), comparison)
-        y += height + 11.0
+        page.text(0.0, y, section.title, size=HEAD, weight="bold")
+        section.draw(page.part(0.0, y + 6.5, page.width, section.height), comparison)
+        page.paragraph(0.0, y + section.height + 8.5, page.width, section.caption, size=SMALL, color=MUTED)
+        y += section.height + caption_mm + 16.0
     for number, one in enumerate(pages, start=1):
         whole = Area.of(one)
         whole.text(

@@ -57,7 +57,8 @@ def matches_mm(comparison: Comparison) -> float:
     """Height that the mean images need, mm."""
     tall = max(one.mean_image.shape[0] / one.mean_image.shape[1] for one in comparison.recordings)
     width = _image_width_mm(comparison, 172.0)
-    return math.ceil(len(comparison.recordings) / _columns(comparison)) * (min(tall * width, 90.0) + 8.0)
+    rows = math.ceil(len(comparison.recordings) / _columns(comparison))
+    return rows * (min(float(tall) * width, 90.0) + 8.0)
 
 
 def draw_matches(area: Area, comparison: Comparison) -> None:
