@@ -2,6 +2,7 @@
 
 from .binomial import SitesFit, fit_binomial, fit_sites
 from .co_release import CoRelease, measure_co_release
+from .compression import Compression, measure_compression, pool_compression
 from .differences import difference_of_estimates, ratio_of_estimates
 from .failures import (
     binomial_failures,
@@ -68,6 +69,7 @@ from .ratios import FiellerInterval, bootstrap_ratio_interval, fieller_interval,
 from .recovery import PairedMeans, PulseIntervalFit, fit_pulse_intervals, paired_means, ratio_as_means
 from .release_information import effective_trials, expected_width
 from .release_moments import ReleaseVariation, release_cumulants, release_variance
+from .saturation import UndoneSaturation, saturate, undo_saturation
 from .site_search import ReleaseModel
 from .sites_evidence import SitesEvidence, sites_evidence
 from .split_half import SplitHalf, correlate_release_with_ratio
@@ -81,7 +83,7 @@ from .threshold import (
     rogan_gladen,
 )
 from .trains import PulseTrain, measure_train, pool_in_vesicles
-from .tsodyks_markram import TrainModel, fit_tsodyks_markram, release_shares
+from .tsodyks_markram import TrainModel, fit_tsodyks_markram, no_train_model, release_shares
 from .variance_mean import VarianceMeanFit, fit_parabola, fit_variance_mean
 from .vesicle_sizes import gamma_vesicles_logpdf, gamma_vesicles_slopes
 
@@ -89,6 +91,7 @@ __all__ = [
     "AxonRelease",
     "BetaBinomialFit",
     "CoRelease",
+    "Compression",
     "Doubts",
     "Estimate",
     "FiellerInterval",
@@ -117,6 +120,7 @@ __all__ = [
     "StimulusFailures",
     "TrainModel",
     "TrialsNeeded",
+    "UndoneSaturation",
     "VarianceMeanFit",
     "balanced_threshold",
     "benjamini_hochberg",
@@ -157,6 +161,7 @@ __all__ = [
     "jeffreys_interval",
     "mcnemar_test",
     "measure_co_release",
+    "measure_compression",
     "measure_gradient",
     "measure_heterogeneity",
     "measure_history",
@@ -166,6 +171,7 @@ __all__ = [
     "measure_train",
     "mixture_loglikelihood",
     "newcombe_difference_interval",
+    "no_train_model",
     "null_loglikelihood",
     "paired_change_power",
     "paired_means",
@@ -174,6 +180,7 @@ __all__ = [
     "poisson_gaussian_loglikelihood",
     "poisson_log_weights",
     "poisson_m_max",
+    "pool_compression",
     "pool_in_vesicles",
     "ppr_power",
     "pulse_interval_groups",
@@ -186,6 +193,7 @@ __all__ = [
     "release_shares",
     "release_variance",
     "rogan_gladen",
+    "saturate",
     "simulated_ppr_power",
     "sites_evidence",
     "trials_for_change",
@@ -194,6 +202,7 @@ __all__ = [
     "trials_for_sites",
     "trials_for_width",
     "unbiased_ratio",
+    "undo_saturation",
     "variance_of_variance",
     "variance_of_variance_from_kurtosis",
     "vesicle_posterior",
