@@ -10,7 +10,8 @@ from matplotlib.axes import Axes
 from matplotlib.lines import Line2D
 from qtpy.QtCore import Qt
 
-from .live_plot import CLICK_PX, LivePlot
+from .bouton_plot import BoutonPlot
+from .live_plot import CLICK_PX
 from .panel import Panel
 from .plots import Palette
 from .shown_bouton import ShownBouton
@@ -19,7 +20,7 @@ _GRIP_PX = 6.0
 _REACH_PX = 14.0
 
 
-class AmplitudePlot(LivePlot):
+class AmplitudePlot(BoutonPlot):
     """Amplitudes of one bouton with the call threshold.
 
     Parameters
@@ -37,7 +38,6 @@ class AmplitudePlot(LivePlot):
     def __init__(self, panel: Panel, *, on_click: Callable[[int], None], on_drag: Callable[[float], None]) -> None:
         self._on_click = on_click
         self._on_drag = on_drag
-        self._shown: ShownBouton | None = None
         self._pressed: tuple[float, float] | None = None
         self._dragging = False
         super().__init__(panel)
@@ -46,19 +46,10 @@ class AmplitudePlot(LivePlot):
         self.mpl_connect("motion_notify_event", self._motion)
         self.mpl_connect("button_release_event", self._release)
 
-    def show_bouton(self, shown: ShownBouton | None) -> None:
-        """Show another bouton, or the same with other results."""
-        before, self._shown = self._shown, shown
-        same = (
-            before is not None
-            and shown is not None
-            and (before.row, before.pulse) == (shown.row, shown.pulse)
-            and before.measured.responses is shown.measured.responses
-        )
-        if same:
-            self.move()
-        else:
-            self.refill()
+    def same_data(self, before: ShownBouton, now: ShownBouton) -> bool:
+        """Tell whether the amplitudes are the same."""
+        same_pulse = (before.row, before.pulse) == (now.row, now.pulse)
+        return same_pulse and before.measured.responses is now.measured.responses
 
     def make(self, axes: Axes, palette: Palette) -> None:
         """Make the artists."""

@@ -9,38 +9,27 @@ from matplotlib.lines import Line2D
 from matplotlib.patches import Patch, StepPatch
 
 from ..reports.histogram import histogram_of
-from .live_plot import LivePlot
+from .bouton_plot import BoutonPlot
 from .panel import Panel
 from .plots import Palette
 from .shown_bouton import ShownBouton
 
 
-class HistogramPlot(LivePlot):
+class HistogramPlot(BoutonPlot):
     """Histogram of one bouton and pulse."""
 
     margins_px = (42.0, 34.0, 10.0, 34.0)
 
     def __init__(self, panel: Panel) -> None:
-        self._shown: ShownBouton | None = None
         super().__init__(panel)
         self.setToolTip(
             "Amplitudes of the trials; those without stimulus, scaled to the share of failures; "
             "and the fitted model: dashed for 0, 1, 2, ... vesicles, the line for their sum."
         )
 
-    def show_bouton(self, shown: ShownBouton | None) -> None:
-        """Show another bouton, or the same with other results."""
-        before, self._shown = self._shown, shown
-        same = (
-            before is not None
-            and shown is not None
-            and (before.row, before.pulse) == (shown.row, shown.pulse)
-            and before.measured.release is shown.measured.release
-        )
-        if same:
-            self.move()
-        else:
-            self.refill()
+    def same_data(self, before: ShownBouton, now: ShownBouton) -> bool:
+        """Tell whether the fits are the same."""
+        return (before.row, before.pulse) == (now.row, now.pulse) and before.measured.release is now.measured.release
 
     def make(self, axes: Axes, palette: Palette) -> None:
         """Make the artists."""

@@ -9,35 +9,25 @@ import pandas as pd
 from matplotlib.axes import Axes
 
 from ..reports.words import with_limits
+from .bouton_plot import BoutonPlot
 from .live_plot import LivePlot
 from .panel import Panel
 from .plots import Palette
 from .shown_bouton import ShownBouton
 
 
-class PulsePairPlot(LivePlot):
+class PulsePairPlot(BoutonPlot):
     """Amplitudes of both pulses with their thresholds, which part the trials as the history table counts them."""
 
     margins_px = (54.0, 34.0, 10.0, 34.0)
 
     def __init__(self, panel: Panel) -> None:
-        self._shown: ShownBouton | None = None
         super().__init__(panel)
         self.setToolTip("A point a trial. The thresholds part releases from failures; the corners say how many trials.")
 
-    def show_bouton(self, shown: ShownBouton | None) -> None:
-        """Show another bouton, or the same with other results."""
-        before, self._shown = self._shown, shown
-        same = (
-            before is not None
-            and shown is not None
-            and before.row == shown.row
-            and before.measured.release is shown.measured.release
-        )
-        if same:
-            self.move()
-        else:
-            self.refill()
+    def same_data(self, before: ShownBouton, now: ShownBouton) -> bool:
+        """Tell whether the pulses are the same."""
+        return before.row == now.row and before.measured.release is now.measured.release
 
     def make(self, axes: Axes, palette: Palette) -> None:
         """Make the artists."""

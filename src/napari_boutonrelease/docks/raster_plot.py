@@ -13,7 +13,8 @@ from qtpy.QtCore import QEvent
 from qtpy.QtGui import QHelpEvent
 from qtpy.QtWidgets import QToolTip
 
-from .live_plot import CLICK_PX, LivePlot
+from .bouton_plot import BoutonPlot
+from .live_plot import CLICK_PX
 from .panel import Panel
 from .plots import Palette
 from .shown_bouton import ShownBouton
@@ -22,7 +23,7 @@ _LEFT_OUT, _FAILED, _RELEASED = 0, 1, 2
 _NAME_PX = 11
 
 
-class RasterPlot(LivePlot):
+class RasterPlot(BoutonPlot):
     """Calls of all boutons in all trials, one pulse.
 
     Parameters
@@ -37,27 +38,19 @@ class RasterPlot(LivePlot):
 
     def __init__(self, panel: Panel, *, on_click: Callable[[int, int], None]) -> None:
         self._on_click = on_click
-        self._shown: ShownBouton | None = None
         self._pressed: tuple[float, float] | None = None
         super().__init__(panel)
         self.setToolTip("Calls of all boutons. Click one to select its bouton and trial.")
         self.mpl_connect("button_press_event", self._press)
         self.mpl_connect("button_release_event", self._release)
 
-    def show_bouton(self, shown: ShownBouton | None) -> None:
-        """Show other calls, or another selection."""
-        before, self._shown = self._shown, shown
-        same = (
-            before is not None
-            and shown is not None
-            and before.measured.places is shown.measured.places
-            and before.n_trials == shown.n_trials
-            and before.pulse == shown.pulse
+    def same_data(self, before: ShownBouton, now: ShownBouton) -> bool:
+        """Tell whether the boutons, trials and pulse are the same."""
+        return (
+            before.measured.places is now.measured.places
+            and before.n_trials == now.n_trials
+            and before.pulse == now.pulse
         )
-        if same:
-            self.move()
-        else:
-            self.refill()
 
     def make(self, axes: Axes, palette: Palette) -> None:
         """Make the artists."""

@@ -10,7 +10,8 @@ from matplotlib.axes import Axes
 from numpy.typing import NDArray
 from qtpy.QtGui import QWheelEvent
 
-from .live_plot import CLICK_PX, LivePlot
+from .bouton_plot import BoutonPlot
+from .live_plot import CLICK_PX
 from .panel import Panel
 from .plots import Palette, envelope
 from .shown_bouton import ShownBouton
@@ -20,7 +21,7 @@ _CALLS, _SPONTANEOUS, _STIMULI = 0.96, 0.85, 0.03
 """Heights of the marks, in parts of the axes."""
 
 
-class TracePlot(LivePlot):
+class TracePlot(BoutonPlot):
     """Trace of one bouton over the recording.
 
     Parameters
@@ -35,7 +36,6 @@ class TracePlot(LivePlot):
 
     def __init__(self, panel: Panel, *, on_click: Callable[[float], None]) -> None:
         self._on_click = on_click
-        self._shown: ShownBouton | None = None
         self._frame: int | None = None
         self._view_s: tuple[float, float] | None = None  # None: all of it
         self._pressed: tuple[float, tuple[float, float]] | None = None
@@ -47,16 +47,16 @@ class TracePlot(LivePlot):
         self.mpl_connect("motion_notify_event", self._drag)
         self.mpl_connect("button_release_event", self._release)
 
+    def same_data(self, before: ShownBouton, now: ShownBouton) -> bool:
+        """Tell whether the traces are the same."""
+        return np.array_equal(before.trace, now.trace, equal_nan=True)
+
     def show_bouton(self, shown: ShownBouton | None) -> None:
-        """Show another bouton, or the same with other results."""
-        before, self._shown = self._shown, shown
+        """Show another bouton, or the same with other results; another recording is shown whole."""
+        before = self._shown
         if before is None or shown is None or before.measured.recording is not shown.measured.recording:
             self._view_s = None
-        same = before is not None and shown is not None and np.array_equal(before.trace, shown.trace, equal_nan=True)
-        if same:
-            self.move()
-        else:
-            self.refill()
+        super().show_bouton(shown)
 
     def show_frame(self, frame: int | None) -> None:
         """Mark the frame that the viewer shows."""

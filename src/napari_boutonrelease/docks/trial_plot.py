@@ -19,7 +19,8 @@ from ..reports.aligned_trials import (
     mean_of_trials,
 )
 from ..reports.figures_trials import time_unit
-from .live_plot import CLICK_PX, LivePlot
+from .bouton_plot import BoutonPlot
+from .live_plot import CLICK_PX
 from .panel import Panel
 from .plots import Palette
 from .shown_bouton import ShownBouton
@@ -28,7 +29,7 @@ _MOST_LINES = 200
 _REACH_PX = 14.0
 
 
-class TrialPlot(LivePlot):
+class TrialPlot(BoutonPlot):
     """Trials of one bouton, aligned on pulse 1.
 
     Parameters
@@ -44,7 +45,6 @@ class TrialPlot(LivePlot):
     def __init__(self, panel: Panel, *, on_click: Callable[[int], None]) -> None:
         self._on_click = on_click
         self._pressed: tuple[float, float] | None = None
-        self._shown: ShownBouton | None = None
         self._trials: AlignedTrials | None = None
         self._colours = ("", "")
         super().__init__(panel)
@@ -52,20 +52,13 @@ class TrialPlot(LivePlot):
         self.mpl_connect("button_press_event", self._press)
         self.mpl_connect("button_release_event", self._release)
 
-    def show_bouton(self, shown: ShownBouton | None) -> None:
-        """Show another bouton, or the same with other results."""
-        before, self._shown = self._shown, shown
-        same = (
-            before is not None
-            and shown is not None
-            and before.row == shown.row
-            and before.measured.amplitudes is shown.measured.amplitudes
-            and before.excluded == shown.excluded
+    def same_data(self, before: ShownBouton, now: ShownBouton) -> bool:
+        """Tell whether the trials are the same."""
+        return (
+            before.row == now.row
+            and before.measured.amplitudes is now.measured.amplitudes
+            and before.excluded == now.excluded
         )
-        if same:
-            self.move()
-        else:
-            self.refill()
 
     def make(self, axes: Axes, palette: Palette) -> None:
         """Make the artists."""
