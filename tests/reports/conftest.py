@@ -272,6 +272,8 @@ def make_result(*, seed: int = 1, boutons: int = 9, trials: int = 60, pulses: in
         responses=_frame("responses", responses),
         spontaneous=_frame("spontaneous", spontaneous),
         drift=drift,
+        trials=_frame("trials", _trials(responses, stimulus_s, rng)),
+        co_release=_frame("co_release", _pairs(bouton_rows, rng)),
         estimates=pd.DataFrame(estimates, columns=["bouton", "quantity", "method", "value", "lo", "hi"]),
         summary=_summary(frames, height, width, trials, pulses, bouton_rows) if boutons else {},
         provenance={
@@ -301,6 +303,48 @@ def make_result(*, seed: int = 1, boutons: int = 9, trials: int = 60, pulses: in
         shape=SHAPE,
         shape_from="recording",
     )
+
+
+def _trials(responses, stimulus_s, rng):
+    rows = []
+    for (trial, pulse), time_s in np.ndenumerate(stimulus_s):
+        inside = [row for row in responses if (row["trial"], row["pulse"]) == (trial + 1, pulse + 1) and row["used"]]
+        known = bool(inside)
+        rows.append(
+            {
+                "trial": trial + 1,
+                "pulse": pulse + 1,
+                "stimulus_s": time_s,
+                "boutons": len(inside),
+                "released": sum(row["p_released"] for row in inside) if known else np.nan,
+                "released_expected": 0.4 * len(inside) if known else np.nan,
+                "stimulus_failure_p": (0.97 if trial == 20 and pulse == 0 else 0.01 * rng.random())
+                if known
+                else np.nan,
+                "used": int(known),
+                "reason": None if known else "no bouton measured",
+            }
+        )
+    return rows
+
+
+def _pairs(bouton_rows, rng):
+    measured = [row for row in bouton_rows if "p_release" in row]
+    return [
+        {
+            "bouton": one["bouton"],
+            "other_bouton": other["bouton"],
+            "correlation": float(np.clip(rng.normal(0, 0.15), -1, 1)),
+            "p": p,
+            "p_adjusted": min(1.0, 4 * p),
+            "together": 10.0,
+            "together_expected": 9.0,
+            "distance_um": other["axon_um"] - one["axon_um"],
+        }
+        for i, one in enumerate(measured)
+        for other in measured[i + 1 :]
+        for p in [rng.random()]
+    ]
 
 
 def make_footprints(y_px, x_px, shape):

@@ -13,6 +13,7 @@ if TYPE_CHECKING:
 
     from ..recording import Drift, Protocol, Timing
     from ..responses import AmplitudeFit, Responses, SpontaneousReleases
+    from .axon_step import AxonStatistics, FailedStimuli
     from .hand_edits import HandEdits
     from .places import Places
     from .quantal_step import Counts, ReleaseFits
@@ -63,11 +64,15 @@ class Measured:
     responses : Responses
         Baseline, response shape and amplitudes of all trials.
     amplitudes : AmplitudeFit
-        Those amplitudes that count: excluded trials are NaN.
+        Those amplitudes that count: excluded trials and stimuli are NaN.
     spontaneous : SpontaneousReleases
         Releases without stimulus.
     release : ReleaseFits
         Release and quanta.
+    failed : FailedStimuli
+        Stimuli that seem to have reached no bouton.
+    axon_statistics : AxonStatistics
+        What the boutons say together.
     counts : Counts
         Calls.
     axon : path or (k, 2) ndarray or None
@@ -84,6 +89,8 @@ class Measured:
     amplitudes: AmplitudeFit
     spontaneous: SpontaneousReleases
     release: ReleaseFits
+    failed: FailedStimuli
+    axon_statistics: AxonStatistics
     counts: Counts
     axon: str | Path | NDArray[np.float64] | None
 

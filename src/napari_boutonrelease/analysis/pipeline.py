@@ -28,6 +28,7 @@ from ..responses import (
     plan_trial_windows,
     rest_s,
 )
+from .axon_step import look_for_failed_stimuli, measure_axon, without_stimuli
 from .hand_edits import HandEdits
 from .measured import Measured, Traced
 from .places import Places, lay_footprints, take_footprints
@@ -48,6 +49,7 @@ if TYPE_CHECKING:
     from ..response_shape import ResponseShape
     from ..responses import AmplitudeFit, Responses
     from .progress import Progress
+    from .quantal_step import ReleaseFits
     from .settings import Settings
 
 __all__ = ["STEPS", "Measured", "Pipeline", "Traced"]
@@ -147,16 +149,40 @@ class Pipeline:
             ),
         )
         amplitudes = _without(responses.amplitudes, edits.excluded)
-        release = self._step(
-            "release",
-            (self._key("responses"), edits.excluded, _digest(settings.quanta), _digest(settings.pairs), settings.seed),
-            lambda: fit_release(
-                amplitudes,
+
+        def fit(used: AmplitudeFit) -> ReleaseFits:
+            return fit_release(
+                used,
                 saturated=np.array(["saturated" in flags for flags in places.footprints.flags], dtype=np.bool_),
                 quanta=settings.quanta,
                 pulse_pairs=settings.pairs,
                 rng=np.random.default_rng([settings.seed, 1]),
                 progress=steps.step("release"),
+            )
+
+        release = self._step(
+            "release",
+            (self._key("responses"), edits.excluded, _digest(settings.quanta), _digest(settings.pairs), settings.seed),
+            lambda: fit(amplitudes),
+        )
+        failed = self._step(
+            "failed stimuli",
+            (self._key("release"), settings.calls.exclude_stimulus_failures, settings.calls.stimulus_failure_cut),
+            lambda: look_for_failed_stimuli(amplitudes, release.axon, settings=settings.calls),
+        )
+        if failed.excluded:
+            amplitudes = without_stimuli(amplitudes, failed.suspected)
+            release = self._step("release without failed stimuli", self._key("failed stimuli"), lambda: fit(amplitudes))
+        axon_statistics = self._step(
+            "axon",
+            (self._key("failed stimuli"), _digest(settings.axon)),
+            lambda: measure_axon(
+                amplitudes,
+                release.axon,
+                axon_um=places.axon_um,
+                failed=failed,
+                settings=settings.axon,
+                rng=np.random.default_rng([settings.seed, 2]),
             ),
         )
         counts = self._step(
@@ -175,6 +201,8 @@ class Pipeline:
             amplitudes=amplitudes,
             spontaneous=spontaneous,
             release=release,
+            failed=failed,
+            axon_statistics=axon_statistics,
             counts=counts,
             axon=traced.axon,
         )

@@ -24,7 +24,7 @@ class AnalysisResult:
     ----------
     name : str
         Stem of the movie's file name.
-    boutons, pulses, responses, spontaneous, drift : DataFrame
+    boutons, pulses, responses, spontaneous, drift, trials, co_release : DataFrame
         The tables whose columns `reports/columns.py` describes.
     estimates : DataFrame
         Every estimate of the same quantity side by side: columns `bouton, quantity, method, value, lo, hi`, where
@@ -63,6 +63,8 @@ class AnalysisResult:
     responses: pd.DataFrame
     spontaneous: pd.DataFrame
     drift: pd.DataFrame
+    trials: pd.DataFrame
+    co_release: pd.DataFrame
     estimates: pd.DataFrame
     summary: Mapping[str, Any]
     provenance: Mapping[str, Any]

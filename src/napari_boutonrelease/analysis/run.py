@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING
 
+from .axon_tables import co_release_table, trial_table
 from .pipeline import Measured, Pipeline
 from .results import AnalysisResult
 from .savefile import provenance_of
@@ -74,6 +75,8 @@ def put_together(measured: Measured, *, pipeline: Pipeline) -> AnalysisResult:
         responses=response_table(measured),
         spontaneous=spontaneous_table(measured),
         drift=drift_table(measured),
+        trials=trial_table(measured),
+        co_release=co_release_table(measured),
         estimates=estimates_table(measured),
         summary=summarise(measured),
         provenance=provenance_of(measured, pipeline=pipeline),

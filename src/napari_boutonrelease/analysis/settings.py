@@ -65,6 +65,13 @@ class CallSettings(_Step):
         Literal["sd", "balanced"],
         Field(description="sd: threshold_sd × noise_sd; balanced: expected misses equal expected false calls"),
     ] = "sd"
+    exclude_stimulus_failures: Annotated[
+        bool, Field(description="leave out stimuli that are suspected to have reached no bouton")
+    ] = False
+    stimulus_failure_cut: Annotated[
+        float,
+        Field(ge=0.5, lt=1, description="probability of having reached no bouton above which a stimulus is suspected"),
+    ] = 0.5
 
 
 class QuantalSettings(_Step):
@@ -84,6 +91,21 @@ class PairSettings(_Step):
     bootstrap: Annotated[int, Field(ge=100, description="resamplings of the trials for the ratio's interval")] = 4000
 
 
+class AxonSettings(_Step):
+    """What the boutons of one axon say together."""
+
+    permutations: Annotated[
+        int, Field(ge=99, le=100_000, description="random orders for each test of the axon as a whole")
+    ] = 999
+    neighbours: Annotated[
+        Literal["binary", "row"],
+        Field(description="weights of Moran's I; binary: each pair counts once; row: each bouton counts once"),
+    ] = "binary"
+    block_trials: Annotated[
+        int, Field(ge=4, description="trials within which co-release is compared, so that slow changes do not count")
+    ] = 20
+
+
 class Settings(_Step):
     """All settings of one analysis."""
 
@@ -93,4 +115,5 @@ class Settings(_Step):
     calls: CallSettings = CallSettings()
     quanta: QuantalSettings = QuantalSettings()
     pairs: PairSettings = PairSettings()
+    axon: AxonSettings = AxonSettings()
     seed: Annotated[int, Field(ge=0, description="seed of every random number")] = 1

@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from ..quanta import binomial_failures, direct_vesicles, poisson_failures, vesicles_from_cv
+from .axon_tables import axon_cautions, summarise_axon
 from .quantal_step import CONFIDENCE
 
 if TYPE_CHECKING:
@@ -55,6 +56,7 @@ def summarise(measured: Measured) -> dict[str, Any]:
             "slow_decay_s": measured.responses.shape.slow_decay_s if measured.responses.shape.slow_fraction else None,
         },
         "population": _population(measured),
+        **summarise_axon(measured),
         "quality": {
             "gain": _number(light.gain),
             "gain_lo": _number(light.gain_lo),
@@ -243,6 +245,7 @@ def cautions_of(measured: Measured) -> tuple[str, ...]:
         cautions.append("Boutons found by shape alone may be silent boutons, or bright specks that are none.")
     if measured.timing.pixel_size_um is None:
         cautions.append("The pixel size is unknown: 0.16 µm was assumed for the size of a bouton.")
+    cautions += axon_cautions(measured)
     if measured.responses.shape_from == "assumed":
         cautions.append("The response shape is assumed: too few responses were clear enough to measure it.")
     if not measured.drift.corrected and measured.settings.recording.correct_motion:

@@ -10,6 +10,7 @@ from ..boutons import crosstalk_matrix
 from ..flags import join_flags
 from ..quanta import wilson_interval
 from ..responses import measure_rundown
+from .axon_step import SUSPECTED
 from .columns import TABLES
 from .quantal_step import CONFIDENCE
 
@@ -121,6 +122,9 @@ def bouton_table(measured: Measured) -> pd.DataFrame:
             "n_set": _choice(releases, np.array([";".join(map(str, members)) for members in axon.n_set], dtype=object)),
             "q_own": [one.q.value for one in measured.release.own],
             "p_release_own": [one.p_release.value for one in measured.release.own],
+            "p_release_shrunk": measured.axon_statistics.heterogeneity.shrunken,
+            "p_release_shrunk_lo": measured.axon_statistics.heterogeneity.shrunken_lo,
+            "p_release_shrunk_hi": measured.axon_statistics.heterogeneity.shrunken_hi,
             "flags": bouton_flags(measured),
         },
     )
@@ -166,6 +170,8 @@ def response_table(measured: Measured) -> pd.DataFrame:
     amplitude = measured.responses.amplitudes.amplitude[at]
     used = np.isfinite(fit.amplitude[at])
     reason = np.where(measured.responses.baseline.usable[bouton], "frames missing", "f0 unusable").astype(object)
+    if measured.failed.excluded:
+        reason[measured.failed.suspected[trial, pulse]] = SUSPECTED
     for excluded, why in measured.edits.excluded:
         reason[trial == excluded - 1] = why
     return _frame(

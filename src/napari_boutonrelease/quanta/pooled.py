@@ -58,6 +58,11 @@ class AxonRelease:
         probability of 0 is within the 95 % likelihood interval.
     release_evidence : (n_boutons, n_pulses) ndarray
         Log-likelihood ratio of the best p_release against none.
+    p_release_grid : (n_p,) ndarray
+        Where `p_release_mass` lies.
+    p_release_mass : (n_boutons, n_pulses, n_p) ndarray
+        Posterior of p_release given that the bouton does release, under the Jeffreys prior, which is flat on this grid;
+        NaN without an amplitude.
     p_released : (n_boutons, n_trials, n_pulses) ndarray
         Posterior probability that this pulse released; NaN where the amplitude is.
     p_site, p_site_lo, p_site_hi : (n_boutons, n_pulses) ndarray
@@ -93,6 +98,8 @@ class AxonRelease:
     p_release_lo: Floats
     p_release_hi: Floats
     release_evidence: Floats
+    p_release_grid: Floats
+    p_release_mass: Floats
     p_released: Floats
     p_site: Floats
     p_site_lo: Floats
@@ -223,12 +230,13 @@ def fit_axon_release(
     vesicles, vesicles_lo, vesicles_hi = (np.full((n_boutons, n_pulses), np.nan) for _ in range(3))
     m = np.arange(1, n_max + 1)[:, None] * grid.p_site
     p_released = np.full(a.shape, np.nan)
+    mass = np.full((n_boutons, n_pulses, grid.p_release.size), np.nan)
     n_probability = posterior.sum(axis=(1, 2, 3))
     n_sites = n_probability.argmax(axis=1) + 1
     for b, j in np.argwhere(np.isfinite(a).any(axis=1)):
         known = np.isfinite(a[b, :, j])
         pulse = _look_at_pulse(a[b, known, j], sd[b, known, j], scales[b][0], posterior[b], grid)
-        of_p = pulse.probability.sum(axis=0)
+        of_p = mass[b, j] = pulse.probability.sum(axis=0)
         p_release[b, j], p_lo[b, j], p_hi[b, j] = _summary_of_p(of_p, grid.p_release, axon.silent[b])
         evidence[b, j] = pulse.evidence
         if pulse.evidence < _IN_LIKELIHOOD_INTERVAL:
@@ -250,6 +258,8 @@ def fit_axon_release(
         p_release_lo=p_lo,
         p_release_hi=p_hi,
         release_evidence=evidence,
+        p_release_grid=grid.p_release,
+        p_release_mass=mass,
         p_released=p_released,
         p_site=p_site,
         p_site_lo=site_lo,
