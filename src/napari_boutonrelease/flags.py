@@ -75,6 +75,11 @@ _DEFINITIONS = (
         "Look at the histogram: reporter saturation, rundown or two boutons in one footprint.",
     ),
     FlagDefinition(
+        "compressed",
+        "Responses to several vesicles are smaller than their sum (p < 0.01): the reporter seems to saturate.",
+        "Set max_dff to the dF/F of the saturated reporter; until then q, n_sites and p_site are biased.",
+    ),
+    FlagDefinition(
         "silent",
         "No evidence of release: p_release is an upper limit.",
         "Quote p_release_hi.",

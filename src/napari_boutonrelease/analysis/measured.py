@@ -61,6 +61,9 @@ class Measured:
         Boutons and their footprints.
     f : (n_boutons, n_frames) ndarray
         Brightness of each bouton, background, neighbours and bare axon taken off (counts).
+        The reporter's saturation is undone where settings give it.
+    above_ceiling : (n_boutons,) ndarray of int
+        Frames in which the reporter's ceiling is reached, where settings give one: left out.
     responses : Responses
         Baseline, response shape and amplitudes of all trials.
     amplitudes : AmplitudeFit
@@ -85,6 +88,7 @@ class Measured:
     recording: Recording
     places: Places
     f: NDArray[np.float64]
+    above_ceiling: NDArray[np.int64]
     responses: Responses
     amplitudes: AmplitudeFit
     spontaneous: SpontaneousReleases

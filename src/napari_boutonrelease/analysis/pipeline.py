@@ -30,6 +30,7 @@ from ..responses import (
 )
 from .axon_step import look_for_failed_stimuli, measure_axon, without_stimuli
 from .hand_edits import HandEdits
+from .linear_reporter import LinearTraces, linear_traces
 from .measured import Measured, Traced
 from .places import Places, lay_footprints, take_footprints
 from .progress import StepProgress
@@ -131,8 +132,9 @@ class Pipeline:
         self.check_inputs()
         steps = StepProgress(progress, shares=STEPS)
         traced = self.trace(settings, edits=edits, steps=steps)
-        recording, places, f = traced.recording, traced.places, traced.f
-        responses = self._respond(f, places, recording, settings, steps=steps)
+        recording, places = traced.recording, traced.places
+        linear, responses = self._respond(traced.f, places, recording, settings, steps=steps)
+        f = linear.f
         spontaneous = self._step(
             "spontaneous",
             (self._key("responses"), settings.calls.threshold_sd, settings.responses.false_spontaneous),
@@ -197,6 +199,7 @@ class Pipeline:
             recording=recording,
             places=places,
             f=f,
+            above_ceiling=linear.n_above,
             responses=responses,
             amplitudes=amplitudes,
             spontaneous=spontaneous,
@@ -310,7 +313,7 @@ class Pipeline:
         """
         sites = self._look_for(shape, recording, settings, steps=steps)
         places, f = self._trace(sites, recording, HandEdits(), settings, steps=steps)
-        responses = self._respond(f, places, recording, settings, steps=steps)
+        _, responses = self._respond(f, places, recording, settings, steps=steps)
         if responses.shape_from != "recording":
             return None
         ratio = responses.shape.decay_s / shape.decay_s
@@ -364,15 +367,14 @@ class Pipeline:
         settings: Settings,
         *,
         steps: StepProgress,
-    ) -> Responses:
-        """Fit the amplitudes."""
+    ) -> tuple[LinearTraces, Responses]:
+        """Fit the amplitudes; where the reporter saturates, once to know F0 and once more without saturation."""
         steps.step("responses")
-        chosen = settings.responses
-        return self._step(
-            "responses",
-            (self._key("traces"), _digest(chosen)),
-            lambda: measure_responses(
-                f,
+        chosen, reporter = settings.responses, settings.reporter
+
+        def measure(traces: NDArray[np.float64]) -> Responses:
+            return measure_responses(
+                traces,
                 timing=recording.timing,
                 y_px=places.footprints.y_px,
                 used=recording.drift.used,
@@ -382,8 +384,14 @@ class Pipeline:
                 percentile=chosen.percentile,
                 running_s=chosen.percentile_s,
                 slope=chosen.slope,
-            ),
-        )
+            )
+
+        def respond() -> tuple[LinearTraces, Responses]:
+            shown = measure(f)
+            linear = linear_traces(f, baseline=shown.baseline, reporter=reporter)
+            return linear, shown if reporter.max_dff is None else measure(linear.f)
+
+        return self._step("responses", (self._key("traces"), _digest(chosen), _digest(reporter)), respond)
 
     def _read(
         self, places: Places, recording: Recording, settings: Settings, *, progress: Progress

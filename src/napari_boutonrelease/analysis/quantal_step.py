@@ -9,6 +9,7 @@ import numpy as np
 
 from ..quanta import (
     AxonRelease,
+    Compression,
     Estimate,
     LogPrior,
     PulsePair,
@@ -19,8 +20,10 @@ from ..quanta import (
     benjamini_hochberg,
     fit_axon_release,
     fit_sites,
+    measure_compression,
     measure_history,
     measure_pulse_pair,
+    pool_compression,
     rogan_gladen,
 )
 from ..responses import AmplitudeFit, ReleaseCalls, call_releases
@@ -51,12 +54,18 @@ class ReleaseFits:
         Pulse 2 against pulse 1; None without a second pulse.
     verdicts : tuple of str
         `facilitation`, `depression`, `unresolved`, or empty; corrected for the number of boutons.
+    compression : tuple of Compression
+        Whether each bouton's amplitudes are compressed, from the first two pulses.
+    axon_compression : Compression
+        The same of all boutons that tell, together.
     """
 
     axon: AxonRelease
     own: tuple[SitesFit, ...]
     pairs: tuple[PulsePair | None, ...]
     verdicts: tuple[str, ...]
+    compression: tuple[Compression, ...]
+    axon_compression: Compression
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -110,6 +119,7 @@ def fit_release(
     )
     own: list[SitesFit] = []
     pairs: list[PulsePair | None] = []
+    compression: list[Compression] = []
     priors = ReleasePriors(q=None, q_cv=LogPrior(centre=quanta.q_cv, log_sd=quanta.q_cv_doubt), noise=None)
     for b in range(n_boutons):
         with np.errstate(invalid="ignore", divide="ignore"):
@@ -138,9 +148,26 @@ def fit_release(
             if n_pulses > 1 and np.isfinite(fit.noise_sd[b])
             else None
         )
+        compression.append(
+            measure_compression(
+                np.full_like(amplitude[b, :, :2], np.nan) if saturated[b] else amplitude[b, :, :2],
+                noise[b, :, :2],
+                q=float(axon.q[b]) if axon.silent_probability[b] < 0.5 else np.nan,
+                n_max=quanta.n_max,
+                q_cv=quanta.q_cv,  # what the axon's fit finds has taken in the compression
+                q_cv_doubt=quanta.q_cv_doubt,
+            )
+        )
         if progress is not None:
             progress(_AXON_PARTS * n_boutons + b + 1, (_AXON_PARTS + 1) * n_boutons)
-    return ReleaseFits(axon=axon, own=tuple(own), pairs=tuple(pairs), verdicts=_verdicts(pairs))
+    return ReleaseFits(
+        axon=axon,
+        own=tuple(own),
+        pairs=tuple(pairs),
+        verdicts=_verdicts(pairs),
+        compression=tuple(compression),
+        axon_compression=pool_compression(compression),
+    )
 
 
 def count_releases(fit: AmplitudeFit, axon: AxonRelease, *, settings: CallSettings) -> Counts:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import Annotated, Literal
 
-from pydantic import BaseModel, ConfigDict, Field
+from pydantic import BaseModel, ConfigDict, Field, model_validator
 
 
 class _Step(BaseModel):
@@ -55,6 +55,24 @@ class ResponseSettings(_Step):
     false_spontaneous: Annotated[
         float, Field(gt=0, description="spontaneous releases a bouton that noise may feign in one recording")
     ] = 0.1
+
+
+class ReporterSettings(_Step):
+    """Saturation of the reporter, undone before amplitudes are fitted."""
+
+    max_dff: Annotated[
+        float | None, Field(gt=0, description="dF/F of the fully bound reporter; none: it is taken as linear")
+    ] = None
+    hill: Annotated[float, Field(gt=0, description="Hill coefficient of its binding")] = 1.0
+    rest_share: Annotated[
+        float | None, Field(gt=0, lt=1, description="share bound at rest; needed where hill is not 1")
+    ] = None
+
+    @model_validator(mode="after")
+    def _rest_is_known(self) -> ReporterSettings:
+        if self.hill != 1 and self.rest_share is None:
+            raise ValueError("needs rest_share where hill is not 1")
+        return self
 
 
 class CallSettings(_Step):
@@ -112,6 +130,7 @@ class Settings(_Step):
     recording: RecordingSettings = RecordingSettings()
     detection: DetectionSettings = DetectionSettings()
     responses: ResponseSettings = ResponseSettings()
+    reporter: ReporterSettings = ReporterSettings()
     calls: CallSettings = CallSettings()
     quanta: QuantalSettings = QuantalSettings()
     pairs: PairSettings = PairSettings()

@@ -17,6 +17,7 @@ if TYPE_CHECKING:
     from ..quanta import AxonRelease
     from .pipeline import Measured
 
+_COMPRESSED = 0.01
 _METHODS_FROM_AXON = "whole axon, this bouton's amplitudes"
 _ALONE = "this bouton alone"
 
@@ -254,9 +255,27 @@ def cautions_of(measured: Measured) -> tuple[str, ...]:
         cautions.append(
             f"{100 * measured.recording.light.bleaching:.0f} % of the light was lost: noise grows over the recording."
         )
+    cautions += _compression_cautions(measured)
     cautions += [
         "Reporter saturation compresses large responses and hides multivesicular release.",
         "A reporter's dF/F is not transmitter; n_sites is only as good as q over noise.",
         "For research, not for diagnosis.",
     ]
     return tuple(cautions)
+
+
+def _compression_cautions(measured: Measured) -> list[str]:
+    """Say whether the reporter looks saturated, and what the correction could not do."""
+    reporter, pooled = measured.settings.reporter, measured.release.axon_compression
+    above = int(measured.above_ceiling.sum())
+    if reporter.max_dff is not None:
+        if not above:
+            return []
+        return [f"{above} frames of boutons reach the reporter's ceiling, max_dff = {reporter.max_dff:g}: left out."]
+    if not pooled.p < _COMPRESSED:
+        return []
+    return [
+        f"Responses of several vesicles are smaller than their sum (p = {pooled.p:.2g}, {pooled.n_boutons} boutons), "
+        f"as where one vesicle takes {100 * pooled.compression:.0f} % of the reporter's range: without max_dff, "
+        "q, n_sites and p_site are biased."
+    ]

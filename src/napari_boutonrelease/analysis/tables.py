@@ -25,6 +25,7 @@ _LOW_SIGNAL = 2.0
 _POOR_FIT = 0.01
 _RUNDOWN = 0.01
 _CROSSTALK = 0.1
+_COMPRESSED = 0.01
 _OWN_SHARE = 0.5
 
 
@@ -276,6 +277,8 @@ def bouton_flags(measured: Measured) -> list[str]:
             codes.add("q_assumed")
         if measured.release.own[b].fit_p < _POOR_FIT:
             codes.add("poor_fit")
+        if measured.release.compression[b].p < _COMPRESSED:
+            codes.add("compressed")
         if shared[b] > _CROSSTALK:
             codes.add("crosstalk")
         if rundown.release_p[b] < _RUNDOWN or rundown.amplitude_p[b] < _RUNDOWN:
