@@ -29,6 +29,7 @@ _LOOK_FIRST = (1, 5, 7)  # are there components at all?
 _LOG_Q = np.linspace(-0.5, 0.5, 11)
 _LOG_Q_CV = np.array([-1.5, 0.0, 1.5])  # in units of the doubt
 _IN_INTERVAL = 1.92  # half the 95 % point of chi-squared with one degree of freedom
+_SEVERAL = 1.5  # nats by which several vesicles must be better than one
 _LEAST_SKEW = 0.02  # stands for the normal limit
 _LEAST_MIXTURE = np.float32(1e-37)
 _LEAST_RELEASES = 5.0  # amplitudes beyond half a vesicle
@@ -127,7 +128,7 @@ def measure_compression(
     first = {k: _at_compression(pulses, sizes, _C[k]) for k in _LOOK_FIRST}
     single = max(float(best[0]) for best, _ in first.values())
     several = max(float(best[1:].max(initial=-np.inf)) for best, _ in first.values())
-    if several - single < _IN_INTERVAL:
+    if several - single < _SEVERAL:
         return _cannot_tell("the amplitudes do not need more than one vesicle at a time")
     curve = np.array([(first[k] if k in first else _at_compression(pulses, sizes, c))[1] for k, c in enumerate(_C)])
     return _summary(curve - curve[_NONE], n_boutons=1)
