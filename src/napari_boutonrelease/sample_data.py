@@ -21,12 +21,18 @@ def slow_single() -> list[LayerData]:
 
 def _sample(preset: str) -> list[LayerData]:
     import numpy as np
+    from napari.utils import progress
 
     from .simulation.movie import protocol_of, simulate_recording
     from .simulation.presets import preset_recipe
 
     recipe = preset_recipe(preset)
-    simulation = simulate_recording(recipe, rng=np.random.default_rng(_SEED))
+    with progress(total=recipe.n_frames, desc=f"Simulating {preset}") as bar:
+        simulation = simulate_recording(
+            recipe,
+            rng=np.random.default_rng(_SEED),
+            progress=lambda done, _: bar.update(done - bar.n),  # the window may breathe meanwhile
+        )
     layer = {
         "name": f"boutons {preset}",
         "scale": (recipe.frame_interval_s, recipe.pixel_size_um, recipe.pixel_size_um),

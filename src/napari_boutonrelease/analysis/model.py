@@ -177,25 +177,31 @@ class AnalysisModel:
         ValidationError
             If a value is out of range.
         """
+        self.settings = self._with_choices(step, **choices)
+
+    def _with_choices(self, step: str, **choices: Any) -> Settings:
         content = self._settings.model_dump()
         content[step] |= choices
-        self.settings = Settings.model_validate(content)
+        return Settings.model_validate(content)
 
     def set_threshold(self, threshold_sd: float) -> None:
         """Call the releases anew at another threshold, at once; everything else stays."""
-        self.choose("calls", threshold_sd=threshold_sd, threshold_rule="sd")
-        if self._measured is not None:
-            counts = count_releases(
-                self._measured.amplitudes, self._measured.release.axon, settings=self._settings.calls
-            )
-            calls = self._settings.calls
-            self._take(
-                replace(
-                    self._measured,
-                    counts=counts,
-                    settings=self._measured.settings.model_copy(update={"calls": calls}),
-                )
-            )
+        settings = self._with_choices("calls", threshold_sd=threshold_sd, threshold_rule="sd")
+        measured, calls = self._measured, settings.calls
+        if measured is None:
+            self.settings = settings
+            return
+        if settings == self._settings and calls == measured.settings.calls:
+            return
+        counts = count_releases(measured.amplitudes, measured.release.axon, settings=calls)
+        # Both at once: in between, the results would be told to be stale.
+        self._settings = settings
+        self._measured = replace(
+            measured, counts=counts, settings=measured.settings.model_copy(update={"calls": calls})
+        )
+        self._tables = {}
+        self.settings_changed.emit()
+        self.measured_changed.emit()
 
     # edits by hand
 
@@ -282,14 +288,17 @@ class AnalysisModel:
             raise InputError("There is no recording yet: choose a movie and give the stimulus times first.")
         return Request(pipeline=self._pipeline, settings=self._settings, edits=self._edits)
 
-    def accept(self, request: Request, measured: Measured) -> bool:
-        """Take what was measured, unless another recording was opened meanwhile; tell whether it was taken."""
+    def accept(self, request: Request, measured: Measured, *, tables: dict[str, pd.DataFrame] | None = None) -> bool:
+        """Take what was measured, unless another recording was opened meanwhile; tell whether it was taken.
+
+        Its `tables_of` may come with it, where they were made elsewhere; else each is made when it is asked for.
+        """
         if request.pipeline is not self._pipeline:
             return False
-        self._take(measured)
+        self._take(measured, tables or {})
         return True
 
-    def _take(self, measured: Measured) -> None:
+    def _take(self, measured: Measured, tables: dict[str, pd.DataFrame]) -> None:
         self._measured = measured
         if self._traced is None or self._traced.places is not measured.places:
             self._traced = Traced(
@@ -301,7 +310,7 @@ class AnalysisModel:
                 axon=measured.axon,
             )
             self.traced_changed.emit()
-        self._tables = {}
+        self._tables = dict(tables)
         if self._selection.bouton not in measured.places.bouton:
             first = int(measured.places.bouton[0]) if len(measured.places.bouton) else None
             self._selection = replace(self._selection, bouton=first)
@@ -401,3 +410,8 @@ def trace(request: Request, *, progress: Progress | None = None) -> Traced:
 def compute(request: Request, *, progress: Progress | None = None) -> Measured:
     """Run the steps of a request that are not known yet."""
     return request.pipeline.measure(request.settings, edits=request.edits, progress=progress)
+
+
+def tables_of(measured: Measured) -> dict[str, pd.DataFrame]:
+    """Make all tables that `AnalysisModel.table` can be asked for; may run anywhere."""
+    return {name: make(measured) for name, make in _TABLES.items()}

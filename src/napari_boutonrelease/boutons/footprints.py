@@ -261,7 +261,7 @@ def _assemble(
         footprint_px=np.bincount(label.ravel(), minlength=len(ys) + 1)[1 : len(ys) + 1],
         shaft_counts=_like_the_others(np.array(shaft, dtype=np.float64)),
         spot_sigma_px=spot_sigma_px,
-        flags=tuple(_flags(y, x, profile, optics) for y, x, profile in zip(ys, xs, profiles, strict=True)),
+        flags=_flags(ys, xs, profiles, optics),
     )
 
 
@@ -356,21 +356,27 @@ def _brighter(
     return np.asarray(binary_dilation(bright, iterations=int(np.ceil(sigma_px))) if bright.any() else bright)
 
 
-def _flags(y: float, x: float, profile: Patch, optics: Optics) -> frozenset[str]:
-    found = set()
-    seen = profile.values >= _SEEN
-    if np.any(optics.on_sample(optics.saturated)[profile.slices] & seen):
-        found.add("saturated")
-    if np.any(optics.on_sample(optics.dead)[profile.slices] & seen):
-        found.add("dead_pixels")
-    energy = profile.values**2
-    inside = optics.always_inside()[profile.slices]
+def _flags(
+    ys: NDArray[np.float64], xs: NDArray[np.float64], profiles: Sequence[Patch], optics: Optics
+) -> tuple[frozenset[str], ...]:
+    saturated, dead = optics.on_sample(optics.saturated), optics.on_sample(optics.dead)
+    always_inside = optics.always_inside()
     height, width = optics.mean_image.shape
-    reach = 0.5 * min(profile.values.shape)
-    beyond = min(y + 0.5, x + 0.5, height - 0.5 - y, width - 0.5 - x) < min(reach, 2.0)
-    if beyond or np.sum(energy * ~inside) > _CUT_SHARE * np.sum(energy):
-        found.add("edge")
-    return frozenset(found)
+    flags = []
+    for y, x, profile in zip(ys, xs, profiles, strict=True):
+        found = set()
+        seen = profile.values >= _SEEN
+        if np.any(saturated[profile.slices] & seen):
+            found.add("saturated")
+        if np.any(dead[profile.slices] & seen):
+            found.add("dead_pixels")
+        energy = profile.values**2
+        reach = 0.5 * min(profile.values.shape)
+        beyond = min(y + 0.5, x + 0.5, height - 0.5 - y, width - 0.5 - x) < min(reach, 2.0)
+        if beyond or np.sum(energy * ~always_inside[profile.slices]) > _CUT_SHARE * np.sum(energy):
+            found.add("edge")
+        flags.append(frozenset(found))
+    return tuple(flags)
 
 
 def crosstalk_matrix(footprints: Footprints) -> NDArray[np.float64]:

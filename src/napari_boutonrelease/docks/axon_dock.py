@@ -19,6 +19,7 @@ from qtpy.QtWidgets import (
 from ..reports.words import headlines
 from .axon_plot import COLUMNS, AxonPlot, choices, title
 from .bouton_layers import bouton_layers_of
+from .calm import WhenCalm
 from .panel import Panel, sentence_label
 from .worker import ProgressRow
 
@@ -71,8 +72,9 @@ class AxonDock(Panel):
         self.parts.addWidget(self.text, 1)
         self.column.addLayout(self.parts, 1)
         self.column.addWidget(ProgressRow(self.runner, self))
-        self.link(self.model.recording_changed, self._show)
-        self.link(self.model.measured_changed, self._show)
+        self._calm = WhenCalm(self.model, self._show_when_seen, self)
+        self.link(self.model.recording_changed, self._calm.follow)
+        self.link(self.model.measured_changed, self._calm.follow)
         self.link(self.model.selection_changed, self.plot.refresh)
         self.link(self.model.settings_changed, self._show_state)
         self.link(self.model.edits_changed, self._show_state)
@@ -83,6 +85,9 @@ class AxonDock(Panel):
         super().resizeEvent(event)
         wide = event.size().width() > _WIDE_PX
         self.parts.setDirection(QBoxLayout.Direction.LeftToRight if wide else QBoxLayout.Direction.TopToBottom)
+
+    def _show_when_seen(self) -> None:
+        self.when_seen(self._show)
 
     def _show(self) -> None:
         measured = self.model.measured

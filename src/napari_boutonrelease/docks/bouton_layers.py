@@ -12,18 +12,22 @@ import numpy as np
 from napari.utils import notifications
 from numpy.typing import NDArray
 from psygnal import Signal
+from qtpy.QtCore import QTimer
 
 from ..analysis.bouton_edits import add_bouton, delete_boutons, move_boutons, redraw_bouton
 from ..analysis.model import Request, trace
 from ..analysis.pipeline import Traced
 from ..errors import InputError
-from .bouton_marks import Marks, marks_of, show_marks
+from .bouton_marks import Marks, marks_of, show_marks, shows
+from .calm import WhenCalm
 from .layers import movie_layer, on_plane
 from .panel import bare_viewer, model_of
 from .worker import ANALYSIS, runner_of
 
 if TYPE_CHECKING:
     from napari.layers import Labels, Layer, Points
+
+    from ..analysis.progress import Progress
 
 _LEAST_MOVE_PX = 0.1  # a hand that trembles during a click does not move a bouton
 _BRUSH_PX = 3
@@ -64,12 +68,13 @@ class BoutonLayers:
         self._redrawing: int | None = None
         self._undrawn: NDArray[np.int32] | None = None
         self._shown_before = False
+        self._calm = WhenCalm(self.model, partial(_call_weakly, WeakMethod(self.refresh)))
         for signal, slot in (
             (self.model.recording_changed, self._forget),
             (self.model.settings_changed, self._axon_may_differ),
             (self.model.edits_changed, self._edited),
             (self.model.traced_changed, self.refresh),
-            (self.model.measured_changed, self.refresh),
+            (self.model.measured_changed, self._follow_measured),
             (self.model.selection_changed, self._show_selection),
         ):
             signal.connect(slot)
@@ -191,12 +196,18 @@ class BoutonLayers:
         sites, movie = self.model.sites(), movie_layer(viewer)
         if sites is None or movie is None:
             return
-        self._show_footprints(viewer, movie)
-        self._marks = marks_of(self.model, sites, column=self._column)
+        before, self._marks = self._marks, marks_of(self.model, sites, column=self._column)
         with self._quietly():
-            points = self.points or self._add_points(viewer, movie)
-            show_marks(points, self._marks)
+            points = self.points
+            if points is None or not before.like(self._marks) or not shows(points, self._marks):
+                points = points or self._add_points(viewer, movie)
+                show_marks(points, self._marks)
             lie_on(movie, points, self.footprints)
+        if self.footprints is None:
+            # napari takes a while to make each kind of layer: the window may breathe between the two.
+            QTimer.singleShot(0, partial(_call_weakly, WeakMethod(self._show_footprints)))
+        else:
+            self._show_footprints()
         self._show_selection()
         self.changed.emit()
 
@@ -219,11 +230,12 @@ class BoutonLayers:
             points.bind_key(key, _on_key(act), overwrite=True)
         return points
 
-    def _show_footprints(self, viewer: Any, movie: Layer) -> None:
+    def _show_footprints(self) -> None:
         from napari.layers import Labels
 
-        traced = self.model.traced
-        if traced is None:
+        viewer, traced = self._viewer(), self.model.traced
+        movie = None if viewer is None else movie_layer(viewer)
+        if viewer is None or traced is None or movie is None or self._redrawing is not None:
             return
         label = traced.places.footprints.label
         labels = self.footprints
@@ -235,6 +247,7 @@ class BoutonLayers:
             add_quietly(viewer, labels, above=movie)
             self._footprints = ref(labels)
             labels.events.paint.connect(self._painted)
+            self.changed.emit()
         elif not np.array_equal(labels.data, label):
             labels.data = label.copy()
 
@@ -264,11 +277,16 @@ class BoutonLayers:
         if traced is not None and (edits.placed, edits.cleared) != (traced.edits.placed, traced.edits.cleared):
             self.measure()
 
+    def _follow_measured(self) -> None:
+        self._calm.follow()
+
     def _axon_may_differ(self) -> None:
-        self.refresh()
         traced, pipeline = self.model.traced, self.model.pipeline
         if traced is not None and pipeline is not None and traced.axon is not pipeline.axon:
+            self.refresh()
             self.measure()
+        else:
+            self._calm.follow()
 
     def measure(self) -> None:
         """Find and read what is not known yet, then measure it, in the worker; marks and footprints come first."""
@@ -276,7 +294,7 @@ class BoutonLayers:
         if request is not None:
             runner = runner_of(self.model)
             runner.run(
-                lambda progress: (request, trace(request, progress=progress)),
+                partial(_traced, request),
                 partial(_call_weakly, WeakMethod(self._take_traces)),
                 words="Looking for boutons" if self.model.traced is None else "Reading boutons",
                 kind=ANALYSIS,  # takes the place of an analysis of what was before
@@ -389,7 +407,16 @@ def _on_key(act: Callable[[], None] | None) -> Callable[[Any], None]:
     return pressed
 
 
-def _call_weakly(method: WeakMethod[Any], argument: Any) -> None:
+def _traced(request: Request, progress: Progress) -> tuple[Request, Traced]:
+    """Read the traces, in the worker; what the layers need besides is loaded here, too, and not while it blocks."""
+    import pandas  # noqa: F401
+    from napari.utils.colormaps import label_colormap
+
+    label_colormap()
+    return request, trace(request, progress=progress)
+
+
+def _call_weakly(method: WeakMethod[Any], *arguments: Any) -> None:
     there = method()
     if there is not None:
-        there(argument)
+        there(*arguments)

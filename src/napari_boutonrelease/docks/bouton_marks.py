@@ -63,6 +63,15 @@ class Marks:
     column: str | None
     limits: tuple[float, float]
 
+    def like(self, other: Marks) -> bool:
+        """Whether other marks look the same."""
+        return (
+            (self.size_px, self.column, self.limits) == (other.size_px, other.column, other.limits)
+            and np.array_equal(self.y_px, other.y_px)
+            and np.array_equal(self.x_px, other.x_px)
+            and self.features.equals(other.features)
+        )
+
     @classmethod
     def none(cls) -> Marks:
         """Return no marks."""
@@ -130,6 +139,11 @@ def show_marks(points: Points, marks: Marks) -> None:
     bar = getattr(points, "border_colorbar", None)
     if bar is not None:
         bar.visible = marks.column is not None
+
+
+def shows(points: Points, marks: Marks) -> bool:
+    """Whether a layer's points are where the marks are; a person may have dragged, added or removed some."""
+    return np.array_equal(points.data, np.column_stack([marks.y_px, marks.x_px]))
 
 
 def _symbols(marks: Marks) -> list[str]:

@@ -2,12 +2,12 @@
 
 from __future__ import annotations
 
+from abc import ABCMeta, abstractmethod
 from typing import Any
 
 from matplotlib.artist import Artist
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
-from qtpy.QtGui import QPaintEvent
 
 from .panel import Panel
 from .plots import Palette, Plot
@@ -17,7 +17,11 @@ CLICK_PX = 4.0
 """The mouse may move this far between press and release of a click."""
 
 
-class LivePlot(Plot):
+class _AbstractWidget(type(Plot), ABCMeta):  # type: ignore[misc]
+    """Lets a class of widgets leave methods to its subclasses."""
+
+
+class LivePlot(Plot, metaclass=_AbstractWidget):
     """Base of plots that answer at once.
 
     A subclass makes its artists in `make`, gives them data in `fill` and puts those listed in `moving` (made with
@@ -42,16 +46,16 @@ class LivePlot(Plot):
         self._sentence: Any = None
         super().__init__(panel, self._build, height_px=height_px)
 
+    @abstractmethod
     def make(self, axes: Axes, palette: Palette) -> None:
         """Make the artists; called anew when the theme changes."""
-        raise NotImplementedError
 
+    @abstractmethod
     def fill(self, axes: Axes) -> None:
         """Give the artists their data."""
-        raise NotImplementedError
 
     def place(self) -> None:
-        """Put the moving artists in place."""
+        """Put the moving artists in place, where there are any."""
 
     def fit(self, axes: Axes) -> None:
         """Suit what is written to the size of the axes; called before every rendering."""
@@ -92,19 +96,27 @@ class LivePlot(Plot):
             self._picture = self.copy_from_bbox(self.figure.bbox)
             self._draw_moving()
 
-    def paintEvent(self, event: QPaintEvent) -> None:
+    @property
+    def waits(self) -> bool:
+        """Whether what is painted is not what is to be shown."""
+        return super().waits or self._need != _NOTHING
+
+    def catch_up(self) -> None:
         """Bring up to date what has changed, and no more."""
         need, self._need = self._need, _NOTHING
-        if self.axes is not None and need:
-            if need == _FILL:
-                self.fill(self.axes)
+        if self.axes is None or self._outdated:
+            super().catch_up()
+            return
+        if need == _FILL:
+            self.fill(self.axes)
+        if need:
             self.place()
-            if need == _FILL or self._picture is None:
-                self.draw()
-            else:
-                self.restore_region(self._picture)
-                self._draw_moving()
-        super().paintEvent(event)
+        if need == _FILL or self._resized or self._picture is None:
+            self._resized = False
+            self.draw()
+        else:
+            self.restore_region(self._picture)
+            self._draw_moving()
 
     def _ask(self, need: int) -> None:
         self._need = max(self._need, need)

@@ -9,7 +9,7 @@ from weakref import WeakKeyDictionary
 
 from qtpy.QtCore import QEvent, Qt
 from qtpy.QtGui import QKeyEvent
-from qtpy.QtWidgets import QFrame, QLabel, QScrollArea, QSizePolicy, QVBoxLayout, QWidget
+from qtpy.QtWidgets import QDockWidget, QFrame, QLabel, QScrollArea, QSizePolicy, QVBoxLayout, QWidget
 
 from ..analysis.model import AnalysisModel
 from .binding import warn_of_binding
@@ -61,6 +61,8 @@ class Panel(QScrollArea):
         self.runner = runner_of(self.model)
         self._links: list[tuple[Any, Callable[..., Any]]] = []
         self._open = True
+        self._in_sight = True
+        self._missed: dict[str, Callable[[], object]] = {}
         _PANELS[self.model] = _PANELS.get(self.model, 0) + 1
         self.body = QWidget()
         self.column = QVBoxLayout(self.body)
@@ -75,6 +77,20 @@ class Panel(QScrollArea):
         """Connect a signal of the model, a layer or the viewer to a method of this panel, until it is closed."""
         signal.connect(slot)
         self._links.append((signal, slot))
+
+    def when_seen(self, show: Callable[[], object]) -> None:
+        """Call a method of this panel now, or, while another dock's tab hides it, once as soon as it is seen again."""
+        if self._in_sight:
+            show()
+        else:
+            self._missed[show.__name__] = show
+
+    def _sight(self, visible: bool) -> None:
+        self._in_sight = visible
+        if visible and self._open:
+            missed, self._missed = self._missed, {}
+            for show in missed.values():
+                show()
 
     def unlink(self, *_: object) -> None:
         """Let go of everything watched; the work that only this analysis' last panel waits for ends."""
@@ -98,6 +114,8 @@ class Panel(QScrollArea):
             dock = self.parent()
             if dock is not None:
                 dock.destroyed.connect(self.unlink)  # the window was closed
+                if isinstance(dock, QDockWidget):
+                    dock.visibilityChanged.connect(self._sight)
             else:
                 self.unlink()  # the x of the dock was clicked
         return bool(super().event(event))

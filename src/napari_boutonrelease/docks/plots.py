@@ -19,6 +19,7 @@ from qtpy.QtWidgets import QSizePolicy
 
 from ..reports import figures_style as style
 from .panel import Panel
+from .turns import TURNS
 
 _SMALLEST_PX = 60
 _BINS = 1000
@@ -110,6 +111,7 @@ class Plot(FigureCanvasQTAgg):
         self._panel_theme = lambda: panel.viewer.theme
         self._draw = draw
         self._outdated = True
+        self._resized = False
         self._cursor: Cursor | None = None
         self.setMinimumSize(160, height_px)
         self.setSizePolicy(QSizePolicy.Policy.Expanding, QSizePolicy.Policy.Expanding)
@@ -135,11 +137,28 @@ class Plot(FigureCanvasQTAgg):
             if self._cursor is not None:
                 self._cursor.keep_background()
 
-    def paintEvent(self, event: QPaintEvent) -> None:
-        """Bring the figure up to date before it is shown."""
-        if self._outdated:
-            self._outdated = False
+    @property
+    def waits(self) -> bool:
+        """Whether what is painted is not what is to be shown."""
+        return self._outdated or self._resized
+
+    def catch_up(self) -> None:
+        """Draw what is to be shown."""
+        outdated, self._outdated, self._resized = self._outdated, False, False
+        if outdated:
             self._make()
+        else:
+            self.draw()
+
+    def draw_idle(self) -> None:
+        """Draw the same figure at another size, before it is painted next."""
+        self._resized = True
+        self.update()
+
+    def paintEvent(self, event: QPaintEvent) -> None:
+        """Bring the figure up to date before it is shown, unless others are in the middle of it."""
+        if self.waits and TURNS.may_draw(self):
+            self.catch_up()
         super().paintEvent(event)
 
     def showEvent(self, event: QShowEvent) -> None:

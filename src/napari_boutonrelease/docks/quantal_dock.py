@@ -22,6 +22,7 @@ from qtpy.QtWidgets import (
 )
 
 from ..analysis.summary import estimates_table
+from .calm import CALM_MS
 from .histogram_plot import HistogramPlot
 from .panel import Panel, sentence_label
 from .plot_grid import PlotGrid
@@ -34,7 +35,6 @@ from .sites_plot import SitesPlot
 if TYPE_CHECKING:
     import napari
 
-_CALM_MS = 60  # words and tables wait until the threshold rests for as long
 _COLUMN_PX = 190
 _TRAIN = 3  # pulses from which a train is drawn
 
@@ -71,10 +71,10 @@ class QuantalDock(Panel):
         self.column.addWidget(self.content, 1)
         self._calm = QTimer(self)
         self._calm.setSingleShot(True)
-        self._calm.setInterval(_CALM_MS)
+        self._calm.setInterval(CALM_MS)
         self._calm.timeout.connect(self._write)
         for signal in (self.model.recording_changed, self.model.measured_changed, self.model.selection_changed):
-            self.link(signal, self._show)
+            self.link(signal, self._follow)
         self.link(self.model.settings_changed, self._show_state)
         self.link(self.model.edits_changed, self._show_state)
         self._show()
@@ -120,6 +120,9 @@ class QuantalDock(Panel):
 
     # what the model says
 
+    def _follow(self) -> None:
+        self.when_seen(self._show)
+
     def _show(self) -> None:
         shown = shown_bouton(self.model)
         self.message.setText(NOTHING_YET if self.model.measured is None else NO_BOUTON)
@@ -144,7 +147,7 @@ class QuantalDock(Panel):
         self._filling = False
 
     def _show_state(self) -> None:
-        self._calm.start()
+        self.when_seen(self._calm.start)
 
     def _write(self) -> None:
         """Write what takes longer than a picture: sentences and tables."""

@@ -75,11 +75,11 @@ class ResponsesDock(Panel):
         self.column.addWidget(self.content, 1)
         self.column.addWidget(ProgressRow(self.runner, self))
         self._add_shortcuts()
-        self.link(self.model.recording_changed, self._show)
-        self.link(self.model.measured_changed, self._show)
-        self.link(self.model.selection_changed, self._show)
+        self.link(self.model.recording_changed, self._follow)
+        self.link(self.model.measured_changed, self._follow)
+        self.link(self.model.selection_changed, self._follow)
         self.link(self.model.settings_changed, self._show_state)
-        self.link(self.model.edits_changed, self._show)
+        self.link(self.model.edits_changed, self._follow)
         self.link(self.viewer.dims.events.current_step, self._follow_frame)
         self._show()
 
@@ -154,6 +154,9 @@ class ResponsesDock(Panel):
             shortcut.activated.connect(slot)
 
     # what the model says
+
+    def _follow(self) -> None:
+        self.when_seen(self._show)
 
     def _show(self) -> None:
         shown = shown_bouton(self.model)

@@ -29,6 +29,7 @@ from ..analysis.summary import cautions_of
 from ..errors import InputError, OutputError
 from ..reports import check_can_write
 from ..reports.apart import write_result_apart
+from .calm import WhenCalm
 from .layers import show_frame
 from .panel import Panel, sentence_label
 from .reopen import ask_and_reopen
@@ -51,6 +52,7 @@ _FIRST = {
     ),
 }
 _KEYS = ("bouton", "trial", "pulse")
+_EXPORT = "Tables, traces, footprints, figures and report are written into the folder."
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -68,12 +70,13 @@ class ResultsDock(Panel):
         super().__init__(napari_viewer)
         self._following = False
         self._stale_tabs: set[str] = set()
+        self._calm = WhenCalm(self.model, self._show_when_seen, self)
         self._build()
-        self.link(self.model.measured_changed, self._show_measured)
-        self.link(self.model.recording_changed, self._show_measured)
+        self.link(self.model.measured_changed, self._calm.follow)
+        self.link(self.model.recording_changed, self._calm.follow)
         self.link(self.model.settings_changed, self._show_state)
         self.link(self.model.edits_changed, self._show_state)
-        self.link(self.model.selection_changed, self._follow_selection)
+        self.link(self.model.selection_changed, self._follow_selected)
         self._show_measured()
 
     def _build(self) -> None:
@@ -103,7 +106,7 @@ class ResultsDock(Panel):
         self.folder = QLineEdit()
         self.folder.setPlaceholderText("folder for the results")
         self.folder.setAccessibleName("Folder for the results")
-        self.folder.setToolTip("Tables, traces, footprints, figures and report are written here.")
+        self.folder.setToolTip(_EXPORT)
         self.choose_button = QToolButton()
         self.choose_button.setText("...")
         self.choose_button.setToolTip("Choose another folder.")
@@ -156,6 +159,12 @@ class ResultsDock(Panel):
         return TableTab(view=view, rows=rows)
 
     # tables
+
+    def _show_when_seen(self) -> None:
+        self.when_seen(self._show_measured)
+
+    def _follow_selected(self) -> None:
+        self.when_seen(self._follow_selection)
 
     def _show_measured(self, *_: object) -> None:
         measured = self.model.measured
@@ -236,8 +245,10 @@ class ResultsDock(Panel):
 
     def export(self) -> None:
         """Write everything into the folder, as the command line does; ask before results are replaced."""
-        text = self.folder.text().strip()
         measured, pipeline = self.model.measured, self.model.pipeline
+        if not self.folder.text().strip():  # a movie that is no file has no place beside it
+            self._ask_folder()
+        text = self.folder.text().strip()
         if not text or measured is None or pipeline is None:
             return
         folder = Path(text).expanduser()
@@ -289,8 +300,11 @@ class ResultsDock(Panel):
     def _show_state(self, *_: object) -> None:
         measured: Measured | None = self.model.measured
         ready = measured is not None and not self.model.stale
-        self.export_button.setEnabled(ready and bool(self.folder.text().strip()) and not self.runner.busy)
-        self.report_button.setEnabled(bool(self.folder.text().strip()) and self._report().is_file())
+        chosen = bool(self.folder.text().strip())
+        self.export_button.setText("Export" if chosen else "Export...")
+        self.export_button.setToolTip(_EXPORT if chosen else f"Choose a folder. {_EXPORT}")
+        self.export_button.setEnabled(ready and not self.runner.busy)
+        self.report_button.setEnabled(chosen and self._report().is_file())
         self.copy_button.setEnabled(measured is not None)
         if measured is None:
             self._say("Nothing was measured yet: choose a movie in the Recording dock and analyse it.")

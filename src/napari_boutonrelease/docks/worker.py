@@ -14,7 +14,7 @@ from qtpy.compat import isalive
 from qtpy.QtCore import QObject, Signal
 from qtpy.QtWidgets import QHBoxLayout, QLabel, QProgressBar, QPushButton, QSizePolicy, QWidget
 
-from ..analysis.model import AnalysisModel, Request, compute
+from ..analysis.model import AnalysisModel, Request, compute, tables_of
 from ..analysis.pipeline import Measured
 from ..analysis.progress import Progress
 from ..errors import AnalysisWarning, InputError
@@ -116,12 +116,16 @@ class Runner(QObject):
         """Compute what is asked for and give it to the model; then call `on_done` if the model took it."""
         after = None if on_done is None else _if_alive(on_done)
 
-        def take(measured: Measured) -> None:
-            model = self._model()
-            if model is not None and model.accept(request, measured) and after is not None:
+        def work(progress: Progress) -> tuple[Measured, dict[str, Any]]:
+            measured = compute(request, progress=progress)
+            return measured, tables_of(measured)
+
+        def take(outcome: tuple[Measured, dict[str, Any]]) -> None:
+            model, (measured, tables) = self._model(), outcome
+            if model is not None and model.accept(request, measured, tables=tables) and after is not None:
                 after(measured)
 
-        self.run(lambda progress: compute(request, progress=progress), take, words="Analysing", kind=ANALYSIS)
+        self.run(work, take, words="Analysing", kind=ANALYSIS)
 
     def cancel(self) -> None:
         """Stop the running job at its next step and forget those that wait."""
