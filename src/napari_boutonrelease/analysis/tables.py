@@ -57,6 +57,7 @@ def bouton_table(measured: Measured) -> pd.DataFrame:
     releases = known & (axon.silent_probability < 0.5)
     pairs = measured.release.pairs
     mean, se = _mean_and_se(first_release)
+    shared = crosstalk(measured)
     return _frame(
         "boutons",
         {
@@ -114,7 +115,7 @@ def bouton_table(measured: Measured) -> pd.DataFrame:
             "quantal_model": np.where(known, "binomial", "none"),
             "fit_p": [one.fit_p for one in measured.release.own],
             "spontaneous_per_min": measured.spontaneous.per_min,
-            "crosstalk": crosstalk(measured),
+            "crosstalk": shared,
             "p_corrected": [one.value for one in measured.counts.corrected],
             "p_corrected_lo": [one.lo for one in measured.counts.corrected],
             "p_corrected_hi": [one.hi for one in measured.counts.corrected],
@@ -126,7 +127,7 @@ def bouton_table(measured: Measured) -> pd.DataFrame:
             "p_release_shrunk": measured.axon_statistics.heterogeneity.shrunken,
             "p_release_shrunk_lo": measured.axon_statistics.heterogeneity.shrunken_lo,
             "p_release_shrunk_hi": measured.axon_statistics.heterogeneity.shrunken_hi,
-            "flags": bouton_flags(measured),
+            "flags": _flags(measured, shared),
         },
     )
 
@@ -255,10 +256,13 @@ def crosstalk(measured: Measured) -> NDArray[np.float64]:
 
 def bouton_flags(measured: Measured) -> list[str]:
     """Say why to doubt each bouton."""
+    return _flags(measured, crosstalk(measured))
+
+
+def _flags(measured: Measured, shared: NDArray[np.float64]) -> list[str]:
     fit, axon = measured.amplitudes, measured.release.axon
     usable = measured.responses.baseline.usable
     rundown = measure_rundown(fit.amplitude, called=measured.counts.calls.called)
-    shared = crosstalk(measured)
     all_silent = bool(np.all(axon.silent_probability > 0.5)) if len(shared) else False
     flags = []
     for b, found in enumerate(measured.places.footprints.flags):
