@@ -358,3 +358,26 @@ def test_the_answer_is_the_fewest_that_do():
 def test_a_goal_that_makes_no_sense_is_refused(ask, words):
     with pytest.raises(InputError, match=words):
         ask()
+
+
+@pytest.mark.parametrize(
+    "extreme",
+    [
+        {"n_sites": 8, "p_site": 0.999, "q_over_noise": 100.0},
+        {"n_sites": 1, "p_site": 1e-4, "q_over_noise": 0.1},
+        {"n_sites": 1, "p_site": 0.9999, "q_over_noise": 4.0},
+    ],
+)
+def test_extreme_boutons_get_an_answer_or_a_reason(extreme):
+    bouton = replace(TYPICAL, **extreme)
+    change = -0.3 if bouton.p_release > 0.5 else 0.3
+    answers = [
+        for_width(bouton, width=0.1),
+        for_sites(bouton),
+        for_ppr(bouton, ratio=0.5),
+        for_change(bouton, change=change),
+        for_paired([bouton] * 5, change=change, change_sd=0.1),
+    ]
+    for answer in answers:
+        assert (answer.trials is None) == bool(answer.reason)
+        assert (answer.trials is None) == bool(np.isnan(answer.reached))

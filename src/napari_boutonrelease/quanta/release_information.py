@@ -22,6 +22,7 @@ if TYPE_CHECKING:
     Floats = NDArray[np.float64]
 
 _DIFFERENCE = 1e-4
+_LEAST_ANGLE = 0.01  # from p_release 0 and 1, where the angle turns back
 _KNOWN = 1e-6  # doubt that stands for none
 
 
@@ -41,7 +42,8 @@ def release_information(bouton: PlannedBouton) -> Floats:
         a site more, at the same p_release, would change.
     """
     amplitude = amplitude_grid(bouton)
-    at = np.array([np.arcsin(np.sqrt(bouton.p_release)), np.log(bouton.q_over_noise), np.log(bouton.q_cv), 0.0])
+    angle = np.clip(np.arcsin(np.sqrt(bouton.p_release)), _LEAST_ANGLE, 0.5 * np.pi - _LEAST_ANGLE)
+    at = np.array([angle, np.log(bouton.q_over_noise), np.log(bouton.q_cv), 0.0])
 
     def probability(parameters: Floats, *, more_sites: int = 0) -> Floats:
         n = bouton.n_sites + more_sites
