@@ -32,7 +32,7 @@ def test_images_of_other_sizes_are_laid_on_one_another():
 
 
 def test_boutons_are_matched_through_movement_with_gaps_on_either_side(make_recording):
-    moved = SPOTS + [2.0, -3.0]
+    moved = SPOTS - [-2.0, 3.0]
     there = moved[[4, 2, 1, 0]]  # another order, and bouton 4 is missing
     extra = np.array([[5.0, 50.0]])
     first = make_recording(position_px=SPOTS, mean_image=picture(SPOTS, seed=1))

@@ -20,6 +20,7 @@ if TYPE_CHECKING:
 
 _PERMUTATIONS = 20_000
 _FALSE_DISCOVERIES = 0.05
+_PLAINLY_ALIKE = 0.7  # correlation of two images of one field
 
 
 def summarise(
@@ -56,6 +57,16 @@ def summarise(
 def cautions_of(summary: dict[str, Any], *, joint: pd.DataFrame) -> tuple[str, ...]:
     """Return the sentences that a reader must see beside the numbers."""
     cautions = []
+    unlike = [
+        one["name"]
+        for one in summary["recordings"][1:]
+        if one["likeness"] is not None and (one["likeness"] < _PLAINLY_ALIKE or 2 * one["matched"] < one["boutons"])
+    ]
+    if unlike:
+        cautions.append(
+            f"The image of {', '.join(unlike)} is little like the first, or few boutons were found again: look at the "
+            "matches before anything else."
+        )
     lost = [one["name"] for one in summary["recordings"][1:] if one["matched"] < summary["recordings"][0]["boutons"]]
     if lost:
         cautions.append(
