@@ -39,7 +39,7 @@ def compared(analysed):
 
 def test_it_writes_tables_that_the_data_package_describes(compared):
     package = frictionless.Package(str(compared / "datapackage.json"))
-    report = frictionless.validate(package)
+    report = package.validate()
     assert report.valid, [error.message for task in report.tasks for error in task.errors]
     assert {"joint", "conditions", "changes", "variance_mean", "unmatched"} <= set(package.resource_names)
     assert (compared / "report.pdf").stat().st_size > 10_000
