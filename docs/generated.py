@@ -58,9 +58,10 @@ def columns() -> str:
     """Every column of every table."""
     from napari_boutonrelease.analysis.columns import SUMMARY, TABLES
     from napari_boutonrelease.analysis.plan_columns import PLAN, PLAN_CURVES
+    from napari_boutonrelease.comparison.columns import TABLES as COMPARED
 
     parts = []
-    for table in (*TABLES.values(), PLAN, PLAN_CURVES):
+    for table in (*TABLES.values(), *COMPARED.values(), PLAN, PLAN_CURVES):
         rows = ((f"`{column.name}`", column.type, column.unit, column.meaning) for column in table.columns)
         heading = f"## {table.name}.csv\n\n{table.meaning[0].upper()}{table.meaning[1:]}.\n\n"
         parts.append(heading + _table(("column", "type", "unit", "meaning"), rows))
