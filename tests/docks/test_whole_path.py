@@ -180,7 +180,7 @@ def test_two_windows_stay_apart(make_napari_viewer, files, when_idle):
     assert dock_of(other, "Recording").movies.count() == 0
     assert len(other.layers) == 0
     one.close()
-    dock_of(other, "Recording").open_source(files.movie)
+    dock_of(other, "Recording").open_button.open_source(files.movie)
     when_idle(dock_of(other, "Recording"))
     assert len(other.layers) == 1
 
