@@ -15,6 +15,7 @@ from .column_types import number as _number
 from .column_types import probability as _probability
 from .column_types import time_column as _time
 from .column_types import with_limits as _limits
+from .train_columns import INTERVALS, RECOVERY, TRAIN_SUMMARY, TRAINS
 
 _BOUTON = _count("bouton", "bouton id, from 1", minimum=1, required=True)
 _TRIAL = _count("trial", "trial number, from 1", minimum=1, required=True)
@@ -100,6 +101,8 @@ PULSES = TableDefinition(
         _number("amplitude_se", DFF, "standard error of amplitude_mean", minimum=0),
         _number("amplitude_sd", DFF, "SD of the amplitudes over the trials", minimum=0),
         _number("potency", DFF, "mean amplitude of the pulses that released"),
+        _number("cumulative_mean", DFF, "mean of the amplitudes summed from pulse 1 up to this one"),
+        _number("cumulative_se", DFF, "standard error of cumulative_mean", minimum=0),
     ),
 )
 
@@ -184,7 +187,8 @@ CO_RELEASE = TableDefinition(
 )
 
 TABLES: dict[str, TableDefinition] = {
-    table.name: table for table in (BOUTONS, PULSES, RESPONSES, SPONTANEOUS, DRIFT, TRIALS, CO_RELEASE)
+    table.name: table
+    for table in (BOUTONS, PULSES, RESPONSES, SPONTANEOUS, DRIFT, TRIALS, CO_RELEASE, TRAINS, INTERVALS, RECOVERY)
 }
 
 SUMMARY: dict[str, str] = {
@@ -293,5 +297,6 @@ SUMMARY: dict[str, str] = {
     "quality.frames_left_out": "frames left out of every fit",
     "quality.saturated_px": "pixels that reach the detector's ceiling",
     "quality.dead_px": "pixels that do not change at all",
+    **TRAIN_SUMMARY,
 }
 """Keys of the summary that reports put into words, as dotted paths; each may be missing or null."""

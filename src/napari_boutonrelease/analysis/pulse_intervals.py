@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -88,7 +89,7 @@ def interval_summary(measured: Measured) -> dict[str, Any]:
     ratios = [_pair(summed, group, noise_sd=noise_sd, measured=measured, rng=rng).ppr for group in groups]
     row = _row(_time_course(summed, groups, noise_sd=noise_sd))
     return {
-        "interval_s": [group.interval_s for group in groups],
+        "interval_s": [round(group.interval_s, 9) for group in groups],
         "ppr": [_ready(ratio.value) for ratio in ratios],
         "ppr_lo": [_ready(ratio.lo) for ratio in ratios],
         "ppr_hi": [_ready(ratio.hi) for ratio in ratios],
@@ -114,7 +115,13 @@ def _time_course(amplitude: Floats, groups: tuple[PulsePattern, ...], *, noise_s
         if pair is not None and pair.first > 2.0 * noise_sd / np.sqrt(pair.n_trials):
             interval_s.append(group.interval_s)
             means.append(pair)
-    return fit_pulse_intervals(interval_s, means, confidence=CONFIDENCE)
+    course = fit_pulse_intervals(interval_s, means, confidence=CONFIDENCE)
+    left_out = len(groups) - len(means)
+    if not left_out:
+        return course
+    where = f" at {left_out} of {len(groups)} intervals" if means else ""
+    noisy = f"the first response is within noise of zero{where}"
+    return replace(course, reason="; ".join(filter(None, [noisy, course.reason if means else ""])))
 
 
 def _pair(

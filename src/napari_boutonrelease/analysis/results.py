@@ -24,7 +24,7 @@ class AnalysisResult:
     ----------
     name : str
         Stem of the movie's file name.
-    boutons, pulses, responses, spontaneous, drift, trials, co_release : DataFrame
+    boutons, pulses, responses, spontaneous, drift, trials, co_release, trains, intervals, recovery : DataFrame
         The tables whose columns `reports/columns.py` describes.
     estimates : DataFrame
         Every estimate of the same quantity side by side: columns `bouton, quantity, method, value, lo, hi`, where
@@ -65,6 +65,9 @@ class AnalysisResult:
     drift: pd.DataFrame
     trials: pd.DataFrame
     co_release: pd.DataFrame
+    trains: pd.DataFrame
+    intervals: pd.DataFrame
+    recovery: pd.DataFrame
     estimates: pd.DataFrame
     summary: Mapping[str, Any]
     provenance: Mapping[str, Any]

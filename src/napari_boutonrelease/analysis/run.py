@@ -6,10 +6,12 @@ from typing import TYPE_CHECKING
 
 from .axon_tables import co_release_table, trial_table
 from .pipeline import Measured, Pipeline
+from .pulse_intervals import interval_table, recovery_table
 from .results import AnalysisResult
 from .savefile import provenance_of
 from .summary import cautions_of, estimates_table, summarise
 from .tables import bouton_table, drift_table, pulse_table, response_table, spontaneous_table
+from .trains import train_table
 
 if TYPE_CHECKING:
     from pathlib import Path
@@ -77,6 +79,9 @@ def put_together(measured: Measured, *, pipeline: Pipeline) -> AnalysisResult:
         drift=drift_table(measured),
         trials=trial_table(measured),
         co_release=co_release_table(measured),
+        trains=train_table(measured),
+        intervals=interval_table(measured),
+        recovery=recovery_table(measured),
         estimates=estimates_table(measured),
         summary=summarise(measured),
         provenance=provenance_of(measured, pipeline=pipeline),

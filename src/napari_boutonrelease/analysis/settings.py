@@ -124,6 +124,17 @@ class AxonSettings(_Step):
     ] = 20
 
 
+class TrainSettings(_Step):
+    """Trains of pulses, and pulse pairs at several intervals."""
+
+    late_pulses: Annotated[
+        int, Field(ge=2, description="last pulses of a train through whose cumulative amplitudes the line goes")
+    ] = 4
+    same_interval_s: Annotated[
+        float, Field(ge=0, description="pulse intervals that differ by no more than this count as the same, s")
+    ] = 0.001
+
+
 class Settings(_Step):
     """All settings of one analysis."""
 
@@ -134,5 +145,6 @@ class Settings(_Step):
     calls: CallSettings = CallSettings()
     quanta: QuantalSettings = QuantalSettings()
     pairs: PairSettings = PairSettings()
+    trains: TrainSettings = TrainSettings()
     axon: AxonSettings = AxonSettings()
     seed: Annotated[int, Field(ge=0, description="seed of every random number")] = 1

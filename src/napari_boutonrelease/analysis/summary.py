@@ -8,7 +8,9 @@ import numpy as np
 
 from ..quanta import binomial_failures, direct_vesicles, poisson_failures, vesicles_from_cv
 from .axon_tables import axon_cautions, summarise_axon
+from .pulse_intervals import interval_cautions, interval_summary
 from .quantal_step import CONFIDENCE
+from .trains import train_cautions, train_summary
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -58,6 +60,7 @@ def summarise(measured: Measured) -> dict[str, Any]:
         },
         "population": _population(measured),
         **summarise_axon(measured),
+        **_several_pulses(measured),
         "quality": {
             "gain": _number(light.gain),
             "gain_lo": _number(light.gain_lo),
@@ -102,6 +105,12 @@ def _population(measured: Measured) -> dict[str, Any]:
         "ppr_hi": ppr[2],
         "boutons_with_ppr": int(np.isfinite(ratios).sum()),
     }
+
+
+def _several_pulses(measured: Measured) -> dict[str, Any]:
+    """Trains and pulse intervals, where the protocol has them."""
+    groups = {"train": train_summary(measured), "pulse_intervals": interval_summary(measured)}
+    return {name: content for name, content in groups.items() if content}
 
 
 def _any_release(measured: Measured) -> bool:
@@ -247,6 +256,7 @@ def cautions_of(measured: Measured) -> tuple[str, ...]:
     if measured.timing.pixel_size_um is None:
         cautions.append("The pixel size is unknown: 0.16 µm was assumed for the size of a bouton.")
     cautions += axon_cautions(measured)
+    cautions += train_cautions(measured) + interval_cautions(measured)
     if measured.responses.shape_from == "assumed":
         cautions.append("The response shape is assumed: too few responses were clear enough to measure it.")
     if not measured.drift.corrected and measured.settings.recording.correct_motion:

@@ -138,6 +138,8 @@ def pulse_table(measured: Measured) -> pd.DataFrame:
     n, _, n_pulses = fit.amplitude.shape
     lo, hi = wilson_interval(calls.n_called, calls.n_trials, confidence=CONFIDENCE)
     statistics = [_mean_and_se(fit.amplitude[:, :, j]) for j in range(n_pulses)]
+    cumulative = np.cumsum(fit.amplitude, axis=2)
+    summed = [_mean_and_se(cumulative[:, :, j]) for j in range(n_pulses)]
     with np.errstate(invalid="ignore", divide="ignore"):
         p_called = calls.n_called / calls.n_trials
     spread = np.array([_sd(fit.amplitude[:, :, j]) for j in range(n_pulses)]).reshape(n_pulses, n).T
@@ -158,6 +160,8 @@ def pulse_table(measured: Measured) -> pd.DataFrame:
             "amplitude_se": np.array([se for _, se in statistics]).reshape(n_pulses, n).T.ravel(),
             "amplitude_sd": spread.ravel(),
             "potency": _potency(fit.amplitude, axon.p_released).ravel(),
+            "cumulative_mean": np.array([mean for mean, _ in summed]).reshape(n_pulses, n).T.ravel(),
+            "cumulative_se": np.array([se for _, se in summed]).reshape(n_pulses, n).T.ravel(),
         },
     )
 

@@ -103,7 +103,7 @@ def train_summary(measured: Measured) -> dict[str, Any]:
     row = {key: _ready(value) for key, value in _row(found, patterns[0]).items()}
     del row["steady_p"], row["interval_s"]
     train = found.train
-    curves: dict[str, Any] = {"pulse_s": patterns[0].pulse_s.tolist()}
+    curves: dict[str, Any] = {"pulse_s": patterns[0].pulse_s.round(9).tolist()}
     if train is not None:
         curves |= {
             "late_pulses": train.n_late,

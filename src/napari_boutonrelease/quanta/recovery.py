@@ -25,8 +25,9 @@ IntervalModel = Literal["none", "constant", "facilitation", "depression", "both"
 
 _LEAST_INTERVALS: dict[IntervalModel, int] = {"constant": 3, "facilitation": 3, "depression": 3, "both": 5}
 _PARAMETERS: dict[IntervalModel, int] = {"constant": 0, "facilitation": 2, "depression": 2, "both": 4}
-_SHORTEST, _LONGEST = 0.2, 10.0  # time constants looked for, in units of the shortest and the longest interval
-_MOST_FACILITATION = 50.0
+_SHORTEST, _LONGEST = 0.5, 10.0  # time constants looked for, in units of the shortest and the longest interval
+_MOST_FACILITATION = 10.0
+_BOTH_BETTER = 2.0  # AICc by which both terms must beat one: less is as good as equal (Burnham & Anderson 2002)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -181,7 +182,7 @@ def fit_pulse_intervals(interval_s: ArrayLike, means: Sequence[PairedMeans], *, 
     -------
     PulseIntervalFit
         Facilitation and depression need three different intervals, both together five. AICc counts trials, since the
-        spread is known from them (Hurvich & Tsai 1989).
+        spread is known from them (Hurvich & Tsai 1989); both terms must be better than one by 2.
 
     Raises
     ------
@@ -207,7 +208,8 @@ def fit_pulse_intervals(interval_s: ArrayLike, means: Sequence[PairedMeans], *, 
         if n_intervals >= least and not (k > 2 and price >= min(aicc.values())):
             fits[model] = _best_fit(model, gap, distance)
             aicc[model] = fits[model][1] + price
-    chosen = min(fits, key=lambda model: aicc[model])
+    handicap = {"both": _BOTH_BETTER}
+    chosen = min(fits, key=lambda model: aicc[model] + handicap.get(model, 0.0))
     best, deviance = fits[chosen]
     p_constant = _chi_square_p(fits["constant"][1], gap.size)
     named, reason = _estimates(chosen, gap, distance, best, confidence=confidence)
