@@ -154,6 +154,9 @@ def make_result(*, seed: int = 1, boutons: int = 9, trials: int = 60, pulses: in
             **{name: first[name] for name in ("p_called", "p_called_lo", "p_called_hi")},
             "false_calls_expected": 0.006 * trials,
             "p_release": 0.004 if silent else rate,
+            "p_release_shrunk": 0.85 * rate + 0.06,
+            "p_release_shrunk_lo": max(0.85 * rate - 0.03, 0.0),
+            "p_release_shrunk_hi": min(0.85 * rate + 0.18, 1.0),
             "p_release_lo": 0.0 if silent else low,
             "p_release_hi": high,
             **{name: first[name] for name in ("amplitude_mean", "amplitude_se", "potency")},
@@ -274,6 +277,9 @@ def make_result(*, seed: int = 1, boutons: int = 9, trials: int = 60, pulses: in
         drift=drift,
         trials=_frame("trials", _trials(responses, stimulus_s, rng)),
         co_release=_frame("co_release", _pairs(bouton_rows, rng)),
+        trains=empty_table(TABLES["trains"]),
+        intervals=empty_table(TABLES["intervals"]),
+        recovery=empty_table(TABLES["recovery"]),
         estimates=pd.DataFrame(estimates, columns=["bouton", "quantity", "method", "value", "lo", "hi"]),
         summary=_summary(frames, height, width, trials, pulses, bouton_rows) if boutons else {},
         provenance={
@@ -399,10 +405,34 @@ def _summary(frames, height, width, trials, pulses, bouton_rows):
             "ppr_lo": 1.02,
             "ppr_hi": 1.36,
         },
-        "heterogeneity": {"sd": 0.21, "sd_lo": 0.13, "sd_hi": 0.36, "p": 2e-7},
-        "morans_i": {"value": -0.12, "p": 0.41},
-        "co_release": {"value": 0.02, "p": 0.37},
-        "stimulus_failures": {"trials": 2, "expected": 1.4, "p": 0.41},
+        "heterogeneity": {"boutons": len(measured), "sd": 0.21, "sd_lo": 0.13, "sd_hi": 0.36, "p": 2e-7},
+        "morans_i": {"value": -0.12, "expected": -0.14, "p": 0.41, "weighting": "binary"},
+        "p_release_against_distance": {
+            "slope_per_um": -0.004,
+            "slope_per_um_lo": -0.012,
+            "slope_per_um_hi": 0.004,
+            "at_start": 0.5,
+            "rank_correlation": -0.21,
+            "p": 0.61,
+        },
+        "co_release": {
+            "value": 0.02,
+            "independent_lo": -0.04,
+            "independent_hi": 0.04,
+            "p": 0.37,
+            "pairs": 28,
+            "pairs_together": 1,
+        },
+        "stimulus_failures": {
+            "trials": 2,
+            "expected": 1.4,
+            "p": 0.41,
+            "share": 0.011,
+            "share_lo": 0.0,
+            "share_hi": 0.05,
+            "suspected": 1,
+            "excluded": False,
+        },
         "quality": {
             "gain": 2.1,
             "read_noise_counts": 3.4,
@@ -423,6 +453,69 @@ def result() -> AnalysisResult:
 def small_result() -> AnalysisResult:
     """Few boutons and trials, quick to draw."""
     return make_result(seed=2, boutons=2, trials=8)
+
+
+@pytest.fixture(scope="session")
+def train_result() -> AnalysisResult:
+    """Trains of six pulses at two intervals; the last bouton says nothing."""
+    full = make_result(seed=8, boutons=3, trials=10, pulses=6)
+    amplitude = np.array([1.0, 0.7, 0.5, 0.42, 0.4, 0.4])
+    limits = {"": 1.0, "_lo": 0.8, "_hi": 1.3}
+
+    def with_limits(**numbers):
+        return {name + end: value * factor for name, value in numbers.items() for end, factor in limits.items()}
+
+    known = {"pool": 0.4, "pool_vesicles": 3.5, "u": 0.3, "tau_rec_s": 0.4, "tau_facil_s": 0.1, "resources": 0.6}
+    trains = [
+        {"bouton": b, "pulses": 6, "interval_s": 0.05, "trials": 9, "steady_p": 0.4, "model_p": 0.5, "note": note}
+        | (with_limits(**known) if b < 3 else {})
+        for b, note in ((1, None), (2, "tau_rec_s has no upper limit"), (3, "no pool: first response within noise"))
+    ]
+    trains[1] |= {"u_hi": np.inf, "tau_rec_s": np.nan, "tau_rec_s_hi": np.inf}
+    intervals = [
+        {"bouton": b, "interval_s": gap, "trials": 5, "first_mean": 0.1, "second_mean": 0.1 * ratio}
+        | (with_limits(ppr=ratio) if b < 3 else {})
+        for b in (1, 2, 3)
+        for gap, ratio in ((0.05, 0.5), (0.12, 0.7), (0.4, 0.95))
+    ]
+    recovery = [
+        {"bouton": 1, "intervals": 3, "model": "depression", "constant_p": 0.01, "model_p": 0.6}
+        | with_limits(depression=0.6, depression_s=0.2),
+        {"bouton": 2, "intervals": 3, "model": "constant", "constant_p": 0.3, "model_p": 0.3, "note": "no time course"},
+        {"bouton": 3, "intervals": 0, "model": "none", "note": "the first response is within noise of zero"},
+    ]
+    ratios = np.array([0.5, 0.7, 0.95])
+    summary = {
+        "train": {
+            "pulses": 6,
+            "trials": 9,
+            "late_pulses": 4,
+            "pulse_s": (0.05 * np.arange(6)).tolist(),
+            "amplitude": amplitude.tolist(),
+            "amplitude_lo": (0.8 * amplitude).tolist(),
+            "amplitude_hi": (1.2 * amplitude).tolist(),
+            "cumulative": np.cumsum(amplitude).tolist(),
+            "cumulative_se": np.full(6, 0.05).tolist(),
+            "note": "late responses are 41 % of the first",
+            **with_limits(steady_ratio=0.41, pool=1.36, replenished=0.41, u=0.4, tau_rec_s=0.3, resources=2.5),
+            "tau_facil_s": None,
+        },
+        "pulse_intervals": {
+            "interval_s": [0.05, 0.12, 0.4],
+            "ppr": ratios.tolist(),
+            "ppr_lo": (0.7 * ratios).tolist(),
+            "ppr_hi": [0.8, 1.1, None],
+            "model": "depression",
+            **with_limits(depression=0.6, depression_s=0.2),
+        },
+    }
+    return replace(
+        full,
+        trains=_frame("trains", trains),
+        intervals=_frame("intervals", intervals),
+        recovery=_frame("recovery", recovery),
+        summary={**full.summary, **summary},
+    )
 
 
 @pytest.fixture(scope="session")

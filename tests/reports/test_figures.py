@@ -117,7 +117,7 @@ def check_layout(figure, *, dpi=300):
     return " ".join(text.get_text() for text, _ in extents)
 
 
-@pytest.mark.parametrize("name", ["result", "quiet_result", "blank_result", "empty_result"])
+@pytest.mark.parametrize("name", ["result", "train_result", "quiet_result", "blank_result", "empty_result"])
 def test_no_text_on_a_page_is_cut_or_covered(request, name):
     for page in pages(request.getfixturevalue(name)):
         check_layout(page())
@@ -241,6 +241,23 @@ def test_every_figure_stands_alone_without_cut_text(result):
     for stem, draw in listing.items():
         if not stem.startswith("bouton") or stem in ("bouton_01", "bouton_04", "bouton_07"):
             check_layout(draw(), dpi=150)
+
+
+def test_trains_and_pulse_intervals_have_figures_where_there_are_any(result, train_result):
+    assert not {"trains", "pulse_intervals"} & figures_of(result).keys()
+    listing = figures_of(train_result)
+    said = check_layout(listing["trains"](), dpi=150)
+    assert "u 0.40 and recovery 300 ms" in said
+    assert "pool 1.36 dF/F (95 %: 1.09 to 1.77)" in said
+    assert "depression 0.60, 200 ms" in check_layout(listing["pulse_intervals"](), dpi=150)
+
+
+def test_trains_that_say_nothing_are_drawn_as_words(train_result):
+    summary = {**train_result.summary, "train": {"pulses": 6, "note": "no pool"}}
+    bare = replace(train_result, trains=train_result.trains.assign(pool_vesicles=np.nan, u=np.nan), summary=summary)
+    said = check_layout(figures_of(bare)["trains"](), dpi=150)
+    assert "No bouton has a pool." in said
+    assert "The amplitudes of the train" in said
 
 
 def test_text_in_svg_stays_text(written):

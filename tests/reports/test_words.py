@@ -34,6 +34,15 @@ def test_verdicts_follow_the_numbers(result, group, change, expected):
     assert expected not in " ".join(headlines(result))
 
 
+def test_trains_and_pulse_intervals_are_said_where_there_are_any(result, train_result):
+    said = " ".join(headlines(train_result))
+    assert "responses settle at 0.41 (95 % interval 0.33 to 0.53) of the first" in said
+    assert "comes back with a time constant of 300 ms (95 % interval 240 ms to 390 ms)" in said
+    assert "Depression recovers between pulses with a time constant of 200 ms" in said
+    assert "Facilitation wears off" not in said
+    assert "settle" not in " ".join(headlines(result))
+
+
 @pytest.mark.parametrize("missing", [{}, {"population": None}, {"population": {"p_release": float("nan")}}])
 def test_what_is_unknown_is_left_out(result, missing):
     bare = replace(result, summary=missing)

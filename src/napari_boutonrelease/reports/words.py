@@ -212,6 +212,7 @@ def headlines(result: AnalysisResult) -> list[str]:
     if math.isfinite(number(result, "population.ppr")):
         ratio = _between(result, "population.ppr")
         sentences.append(f"The paired-pulse ratio of all boutons together is {ratio}; {_verdict_words(result)}.")
+    sentences += _train_sentences(result)
     sentences += _axon_sentences(result)
     return [*sentences, *_silent_sentences(result)]
 
@@ -270,6 +271,29 @@ def selected_differ(result: AnalysisResult) -> bool:
     return 0 < selected < number(result, "population.boutons")
 
 
+def _train_sentences(result: AnalysisResult) -> list[str]:
+    """Say where trains settle and how fast release recovers, of all boutons together."""
+    sentences = []
+    if math.isfinite(number(result, "train.steady_ratio")):
+        sentence = f"Over the train, responses settle at {_between(result, 'train.steady_ratio')} of the first"
+        if number(result, "train.tau_rec_s") > 0:
+            sentence += f"; what is used comes back with {_time_between(result, 'train.tau_rec_s')}"
+        sentences.append(sentence + ".")
+    for name, does in (("facilitation", "Facilitation wears off"), ("depression", "Depression recovers")):
+        if number(result, f"pulse_intervals.{name}_s") > 0:
+            time = _time_between(result, f"pulse_intervals.{name}_s")
+            sentences.append(f"{does} between pulses with {time}.")
+    return sentences
+
+
+def _time_between(result: AnalysisResult, path: str) -> str:
+    value, low, high = (number(result, path + end) for end in ("", "_lo", "_hi"))
+    text = f"a time constant of {duration(value)}"
+    if math.isfinite(low) and math.isfinite(high):
+        return f"{text} (95 % interval {duration(low)} to {duration(high)})"
+    return f"{text} (at least {duration(low)} at 95 %, without an upper limit)" if low > 0 else text
+
+
 def _axon_sentences(result: AnalysisResult) -> list[str]:
     sentences = []
     moran, moran_p = number(result, "morans_i.value"), number(result, "morans_i.p")
@@ -286,10 +310,11 @@ def _axon_sentences(result: AnalysisResult) -> list[str]:
     failed, expected = number(result, "stimulus_failures.trials"), number(result, "stimulus_failures.expected")
     if math.isfinite(failed) and math.isfinite(expected):
         p = number(result, "stimulus_failures.p")
-        doubt = " This is too many: suspect failed stimulation." if p < 0.05 else ""
+        doubt = f" This is too many ({p_words(p)}): suspect failed stimulation." if p < 0.05 else ""
+        stimuli = "stimulus" if fixed(failed, decimals=0) == "1" else "stimuli"
         sentences.append(
-            f"Every bouton failed in {counted(failed, 'trial')}; independent boutons would do so in "
-            f"{short(expected)}.{doubt}"
+            f"Every bouton failed at {fixed(failed, decimals=0)} {stimuli}; independent boutons would do so at "
+            f"{expected_count(expected)}.{doubt}"
         )
     return sentences
 
