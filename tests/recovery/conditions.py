@@ -82,12 +82,14 @@ def study_conditions(conditions, *, boutons, rng, singly=False):
         release = [one for pulses in found.p_release for one in pulses]
         p_release = 1.0 - (1.0 - p) ** n
         own_q = q * np.array(conditions.q_ratio[: len(recordings)])
+        alone = [fit([one]) for one in recordings] if singly else []
         values = {
             "n": n,
             "n_estimate": found.n_sites,
             "n_in_set": n in found.n_set,
             "set_size": len(found.n_set),
-            "n_alone": [fit([one]).n_sites for one in recordings] if singly else [],
+            "n_alone": [one.n_sites for one in alone],
+            "set_size_alone": [len(one.n_set) for one in alone],
             "q_ratio": found.q.value / q,
             "q_inside": found.q.lo <= q <= found.q.hi,
             "own_q_inside": [a.lo <= b <= a.hi for a, b in zip(found.q_by_recording, own_q, strict=True)],
@@ -117,6 +119,7 @@ def summarise_conditions(found):
         "n_in_set_by_n": [round(float(found["n_in_set"][n == k].mean()), 3) for k in np.unique(n)],
         "set_size": found["set_size"].mean(),
         "n_right_alone": (found["n_alone"] == n[:, None]).mean(axis=0).tolist(),
+        "set_size_alone": found["set_size_alone"].mean(axis=0).tolist(),
         "q_bias": found["q_ratio"].mean() - 1.0,
         "q_coverage": found["q_inside"].mean(),
         "own_q_coverage": found["own_q_inside"].mean(axis=0).tolist(),
@@ -137,6 +140,7 @@ _COLUMNS = (
     "n_in_set",
     "set_size",
     "n_alone",
+    "set_size_alone",
     "q_ratio",
     "q_inside",
     "own_q_inside",

@@ -38,6 +38,7 @@ if TYPE_CHECKING:
 
 _FEW_TRIALS = 20
 _LOW_SIGNAL = 2.0
+_SURE = 0.01
 _METHOD = "joint profile likelihood"
 _MISSING = Estimate(value=np.nan, lo=np.nan, hi=np.nan, method="none: no amplitude")
 _NO_RELEASE = Estimate(value=np.nan, lo=np.nan, hi=np.nan, method="none: no release told apart from noise")
@@ -72,7 +73,8 @@ class JointFit:
     noise_scale : (n_recordings,) ndarray
         Noise over the noise given; NaN without amplitudes.
     shared_q : bool
-        Whether n_sites, p_site, p_release, q_cv and the noise rest on one q in all recordings; False where q changed.
+        Whether n_sites, p_site, p_release, q_cv and the noise rest on one q in all recordings; False where q changed
+        beyond doubt (p < 0.01).
     log_likelihood : dict of str to float
         Maximum with priors, in nats, where between recordings nothing (`none`), p_site (`p`), q (`q`) or both (`both`)
         may differ.
@@ -155,7 +157,14 @@ def fit_joint(
 
     Notes
     -----
-    Tests are likelihood ratios referred to chi-squared (Wilks 1938). Measured figures are in the tests of recovery.
+    Tests are likelihood ratios referred to chi-squared (Wilks 1938), at the n_sites that both models together find most
+    probable: the ratio of maxima at different n_sites was measured to be too large. Measured at 40 to 80 trials, 1 to 4
+    sites, one vesicle 2.5 or 4.4 noise SDs, nominal level 5 %: p_site found changed in 4.6 % where it was not (1800
+    boutons, q changed or not), q in 6.0 % (2150).
+
+    The prior 1/n_sites chooses n_sites. With pairs of pulses at p_site 0.15, 0.22 and 0.6, 0.45, 80 trials each, 1 to 4
+    sites alike often and q 4.4 noise SDs, it was exactly right in 75.5 % of 400 boutons, maximum likelihood alone in
+    73.5 %; a steeper prior gains up to 2 % more, but only because no bouton had more than four.
 
     Examples
     --------
@@ -182,7 +191,8 @@ def fit_joint(
     # a vesicle's size and every p_site are what release adds to the noise
     silent = evidence < 0.5 * float(chdtri(len(cells.first) + 1, 1.0 - confidence))
     change = _compare(cells, summits, alpha=1.0 - confidence, silent=silent)
-    shared_q = change.changed not in ("q", "both")
+    # a q that only seems to have changed costs n_sites and p_site more than one that has not been noticed to
+    shared_q = not (change.changed in ("q", "both") and change.q_changed_p < _SURE)
     base = summits["p" if shared_q else "both"]
     n_set, at = base.n_set(margin), base.at_best
 
@@ -247,7 +257,8 @@ def _compare(cells: Cells, summits: dict[Change, Summits], *, alpha: float, sile
 
     def p_value(richer: Change, simpler: Change) -> float:
         more, less = summits[richer], summits[simpler]
-        ratio = max(2.0 * (more.best - less.best), 0.0)
+        n = int(np.argmax(more.objective + less.objective))
+        ratio = max(2.0 * float(more.objective[n] - less.objective[n]), 0.0)
         return float(chdtrc(more.n_free - less.n_free, ratio)) if more.n_free > less.n_free else float("nan")
 
     unknown = "one recording: no change to ask about" if cells.n_recordings == 1 else ""
@@ -302,7 +313,8 @@ def _probabilities(
     """p_site and p_release of each recording and pulse."""
     lo, hi = find_reach(cells, summits, parameters=cells.p_site, n_set=n_set, margin=margin)
     least, largest = p_bounds()
-    lo, hi = np.where(lo <= least, 0.0, lo), np.where(hi >= largest, 1.0, hi)
+    at_end = 0.01 * least  # rounding of a limit that reached its bound
+    lo, hi = np.where(lo <= least + at_end, 0.0, lo), np.where(hi >= largest - at_end, 1.0, hi)
     value = summits.at_best[cells.p_site]
     tables = []
     for power in (np.ones(len(n_set)), np.array(n_set, dtype=np.float64)):
