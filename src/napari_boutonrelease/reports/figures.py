@@ -19,6 +19,7 @@ from .figures_map import figure_map
 from .figures_pairs import figure_pulse_pairs, figure_train
 from .figures_quality import figure_quality
 from .figures_style import styled
+from .figures_together import figure_together, shows_together
 
 __all__ = [
     "figure_bouton",
@@ -27,6 +28,7 @@ __all__ = [
     "figure_pulse_pairs",
     "figure_quality",
     "figure_release_along_axon",
+    "figure_together",
     "figure_train",
     "figures_of",
     "write_figure",
@@ -43,6 +45,8 @@ def figures_of(result: AnalysisResult) -> dict[str, Callable[[], Figure]]:
         "calls": partial(figure_calls, result),
         "quality": partial(figure_quality, result),
     }
+    if shows_together(result):
+        listing["boutons_together"] = partial(figure_together, result)
     if result.stimulus_s.shape[1] > 1:
         listing["pulse_pairs"] = partial(figure_pulse_pairs, result)
     if result.stimulus_s.shape[1] > 2:

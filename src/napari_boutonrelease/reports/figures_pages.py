@@ -20,6 +20,7 @@ from .figures_pairs import draw_pulse_pairs, draw_train
 from .figures_quality import draw_quality
 from .figures_style import BODY, HEAD, INK, MUTED, SHADE, SMALL, TITLE, styled
 from .figures_text import caution_pages, flag_blocks, paged, table_pages
+from .figures_together import draw_together, shows_together
 from .words import counted, fixed, headlines, listed, recording_facts, recording_line, selected_differ, short
 
 Page = Callable[[], Figure]
@@ -40,6 +41,8 @@ def pages(result: AnalysisResult) -> list[Page]:
         listing.append(partial(calls_page, result))
         if n_pulses > 1 and not _pairs_fit_below(result):
             listing.append(partial(pairs_page, result))
+        if shows_together(result):
+            listing.append(partial(together_page, result))
         listing += [partial(bouton_page, result, first) for first in range(0, n_boutons, 2)]
     listing += list(_quality_pages(result))
     listing += [partial(_drawn, "Cautions and method", draw) for draw in caution_pages(result)]
@@ -253,6 +256,14 @@ def _draw_pairs(area: Area, result: AnalysisResult) -> float:
         "right, boutons that show no release are left out."
     )
     return area.paragraph(0.0, 90.0, area.width, words + missing, size=SMALL, color=MUTED)
+
+
+@styled
+def together_page(result: AnalysisResult) -> Figure:
+    """Draw how much boutons differ, their order along the axon, release in common, and failed stimuli."""
+    figure, area = _new_page("The boutons together")
+    draw_together(area.part(0.0, 12.0, area.width, area.height - 12.0), result)
+    return figure
 
 
 @styled
