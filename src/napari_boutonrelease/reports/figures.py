@@ -20,16 +20,19 @@ from .figures_pairs import figure_pulse_pairs, figure_train
 from .figures_quality import figure_quality
 from .figures_style import styled
 from .figures_together import figure_together, shows_together
+from .figures_trains import figure_pulse_intervals, figure_trains
 
 __all__ = [
     "figure_bouton",
     "figure_calls",
     "figure_map",
+    "figure_pulse_intervals",
     "figure_pulse_pairs",
     "figure_quality",
     "figure_release_along_axon",
     "figure_together",
     "figure_train",
+    "figure_trains",
     "figures_of",
     "write_figure",
 ]
@@ -51,6 +54,10 @@ def figures_of(result: AnalysisResult) -> dict[str, Callable[[], Figure]]:
         listing["pulse_pairs"] = partial(figure_pulse_pairs, result)
     if result.stimulus_s.shape[1] > 2:
         listing["train"] = partial(figure_train, result)
+    if len(result.trains):
+        listing["trains"] = partial(figure_trains, result)
+    if len(result.intervals):
+        listing["pulse_intervals"] = partial(figure_pulse_intervals, result)
     ids = [int(bouton) for bouton in result.boutons["bouton"]]
     digits = max(len(str(max(ids, default=0))), 2)
     for row, bouton in enumerate(ids):

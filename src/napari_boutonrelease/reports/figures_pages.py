@@ -10,7 +10,7 @@ import numpy as np
 from matplotlib.figure import Figure
 
 from ..analysis.results import AnalysisResult
-from .facts import nothing_released, number, silent, values
+from .facts import fact, nothing_released, number, silent, values
 from .figures_axon import axon_title, draw_release_along_axon, selection_words
 from .figures_bouton import BLOCK_MM, draw_bouton
 from .figures_calls import draw_calls
@@ -21,6 +21,14 @@ from .figures_quality import draw_quality
 from .figures_style import BODY, HEAD, INK, MUTED, SHADE, SMALL, TITLE, styled
 from .figures_text import caution_pages, flag_blocks, paged, table_pages
 from .figures_together import draw_together, shows_together
+from .figures_trains import (
+    INTERVALS_CAPTION,
+    INTERVALS_MM,
+    TRAINS_CAPTION,
+    TRAINS_MM,
+    draw_pulse_intervals,
+    draw_trains,
+)
 from .words import counted, fixed, headlines, listed, recording_facts, recording_line, selected_differ, short
 
 Page = Callable[[], Figure]
@@ -41,6 +49,10 @@ def pages(result: AnalysisResult) -> list[Page]:
         listing.append(partial(calls_page, result))
         if n_pulses > 1 and not _pairs_fit_below(result):
             listing.append(partial(pairs_page, result))
+        if len(result.trains):
+            listing.append(partial(trains_page, result))
+        if len(result.intervals):
+            listing.append(partial(intervals_page, result))
         if shows_together(result):
             listing.append(partial(together_page, result))
         listing += [partial(bouton_page, result, first) for first in range(0, n_boutons, 2)]
@@ -256,6 +268,30 @@ def _draw_pairs(area: Area, result: AnalysisResult) -> float:
         "right, boutons that show no release are left out."
     )
     return area.paragraph(0.0, 90.0, area.width, words + missing, size=SMALL, color=MUTED)
+
+
+@styled
+def trains_page(result: AnalysisResult) -> Figure:
+    """Draw what the trains say of all boutons together, and of each."""
+    figure, area = _new_page("Trains: depletion and facilitation")
+    y = area.paragraph(0.0, 10.0, area.width, TRAINS_CAPTION, size=SMALL, color=MUTED)
+    draw_trains(area.part(0.0, y + 3.0, area.width, TRAINS_MM), result)
+    note = fact(result, "train.note")
+    if note:
+        area.paragraph(0.0, y + 6.0 + TRAINS_MM, area.width, f"All boutons together: {note}.", color=INK)
+    return figure
+
+
+@styled
+def intervals_page(result: AnalysisResult) -> Figure:
+    """Draw the paired-pulse ratio against the pulse interval."""
+    figure, area = _new_page("Pulse intervals")
+    y = area.paragraph(0.0, 10.0, area.width, INTERVALS_CAPTION, size=SMALL, color=MUTED)
+    draw_pulse_intervals(area.part(0.0, y + 3.0, area.width, INTERVALS_MM), result)
+    note = fact(result, "pulse_intervals.note")
+    if note:
+        area.paragraph(0.0, y + 6.0 + INTERVALS_MM, area.width, f"All boutons together: {note}.", color=INK)
+    return figure
 
 
 @styled
