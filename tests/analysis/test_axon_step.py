@@ -5,6 +5,7 @@ import pytest
 
 from napari_boutonrelease.analysis.axon_step import SUSPECTED, exclude_suspected, suspected_trials
 from napari_boutonrelease.analysis.hand_edits import HandEdits
+from napari_boutonrelease.analysis.model import AnalysisModel
 from napari_boutonrelease.analysis.pipeline import Pipeline
 from napari_boutonrelease.analysis.run import put_together
 from napari_boutonrelease.analysis.settings import Settings
@@ -121,3 +122,16 @@ def test_a_higher_cut_suspects_no_more(pipeline, kept):
     measured = pipeline.measure(strict)
     assert np.all(measured.failed.suspected <= kept.failed.suspected)
     assert measured.release is kept.release
+
+
+def test_the_model_leaves_suspected_trials_out_and_takes_them_back(pipeline, kept):
+    model = AnalysisModel()
+    model.open(pipeline.movie, pipeline.protocol, axon=pipeline.axon)
+    model.exclude_suspected_trials()  # nothing is measured yet
+    assert not model.can_undo
+    model.accept(model.request(), kept)
+    model.exclude_suspected_trials()
+    assert {trial for trial, _ in model.edits.excluded} == set(suspected_trials(kept))
+    assert {reason for _, reason in model.edits.excluded} == {SUSPECTED}
+    model.undo()
+    assert model.edits.excluded == ()

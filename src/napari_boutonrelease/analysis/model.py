@@ -14,6 +14,7 @@ from psygnal import Signal
 
 from ..boutons import trace_axon
 from ..errors import InputError
+from .axon_step import exclude_suspected
 from .hand_edits import HandEdits
 from .measured import Measured, Traced
 from .pipeline import Pipeline
@@ -217,6 +218,11 @@ class AnalysisModel:
             self._undone = []
             self._edits = edits.following(self._edits)
             self.edits_changed.emit()
+
+    def exclude_suspected_trials(self) -> None:
+        """Leave out the trials in which a stimulus seems to have reached no bouton; can be undone."""
+        if self._measured is not None:
+            self.edit(exclude_suspected(self._edits, self._measured))
 
     @property
     def can_undo(self) -> bool:
