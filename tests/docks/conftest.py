@@ -20,10 +20,6 @@ from napari_boutonrelease.docks.panel import model_of
 from napari_boutonrelease.recording import Protocol, movie_from_array, write_protocol
 from napari_boutonrelease.simulation import BoutonRecipe, preset_recipe, simulate_recording
 
-# Each window of napari gives back some 8000 references to None that it never took. Before Python 3.12, where None
-# cannot run out of them, twenty windows in one process would end it; these references are there to be lost.
-_SPARE = [None] * 2_000_000
-
 
 @dataclass(frozen=True)
 class Files:
