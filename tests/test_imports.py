@@ -41,9 +41,10 @@ def test_every_public_name_resolves(name):
 
 def test_public_names_are_pinned():
     pinned = (
-        "Analysis AnalysisWarning BoutonFileError InputError Movie MovieError OutputError Protocol ProtocolError "
-        "RegularStimuli ResponseShape SavedAnalysisError Settings StimulusTable analyse analysis boutons "
-        "movie_from_array open_movie quanta read_protocol recording reports responses simulation write_protocol"
+        "Analysis AnalysisWarning BoutonFileError CompareSettings ComparedRecordings InputError Movie MovieError "
+        "OutputError Protocol ProtocolError RegularStimuli ResponseShape SavedAnalysisError Settings StimulusTable "
+        "analyse analysis boutons compare comparison movie_from_array open_movie quanta read_protocol recording "
+        "reports responses simulation write_protocol"
     )
     assert sorted(napari_boutonrelease.__all__) == pinned.split()
 

@@ -9,9 +9,10 @@ __version__ = "0.1.0"
 
 TYPE_CHECKING = False  # typing's own flag would cost the command line a tenth of its start
 if TYPE_CHECKING:
-    from . import analysis, boutons, quanta, recording, reports, responses, simulation
+    from . import analysis, boutons, comparison, quanta, recording, reports, responses, simulation
     from .analysis.settings import Settings
-    from .api import Analysis, analyse
+    from .api import Analysis, ComparedRecordings, analyse, compare
+    from .comparison.settings import CompareSettings
     from .errors import (
         AnalysisWarning,
         BoutonFileError,
@@ -25,10 +26,11 @@ if TYPE_CHECKING:
     from .recording.protocol import Protocol, RegularStimuli, StimulusTable, read_protocol, write_protocol
     from .response_shape import ResponseShape
 
-_ROOMS = ("analysis", "boutons", "quanta", "recording", "reports", "responses", "simulation")
+_ROOMS = ("analysis", "boutons", "comparison", "quanta", "recording", "reports", "responses", "simulation")
 
 _HOMES = {
-    "api": ("Analysis", "analyse"),
+    "api": ("Analysis", "ComparedRecordings", "analyse", "compare"),
+    "comparison.settings": ("CompareSettings",),
     "analysis.settings": ("Settings",),
     "errors": (
         "AnalysisWarning",
@@ -49,6 +51,8 @@ __all__ = [
     "Analysis",
     "AnalysisWarning",
     "BoutonFileError",
+    "CompareSettings",
+    "ComparedRecordings",
     "InputError",
     "Movie",
     "MovieError",
@@ -63,6 +67,8 @@ __all__ = [
     "analyse",
     "analysis",
     "boutons",
+    "compare",
+    "comparison",
     "movie_from_array",
     "open_movie",
     "quanta",

@@ -8,6 +8,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from .analysis.results import AnalysisResult
+from .comparison.results import Comparison
 
 if TYPE_CHECKING:
     import numpy as np
@@ -15,6 +16,7 @@ if TYPE_CHECKING:
 
     from .analysis.hand_edits import HandEdits
     from .analysis.settings import Settings
+    from .comparison.settings import CompareSettings
     from .recording.movie import Movie
     from .recording.protocol import Protocol
 
@@ -57,6 +59,44 @@ class Analysis(AnalysisResult):
         from .reports import write_result
 
         return write_result(self, Path(folder), overwrite=overwrite, progress=progress)
+
+
+class ComparedRecordings(Comparison):
+    """Everything that a comparison found, as in `Comparison`, and able to write itself."""
+
+    __slots__ = ()
+
+    def write(
+        self,
+        folder: str | Path,
+        *,
+        overwrite: bool = False,
+        progress: Callable[[int, int], None] | None = None,
+    ) -> Path:
+        """Write tables, figures and report into a folder, whole or not at all.
+
+        Parameters
+        ----------
+        folder : path
+            Folder to make, or to replace if it holds a comparison.
+        overwrite : bool
+            Replace a comparison that is already there.
+        progress : callable, optional
+            Called with (done, total) files.
+
+        Returns
+        -------
+        Path
+            The folder.
+
+        Raises
+        ------
+        OutputError
+            If the folder holds a comparison and `overwrite` is false, holds anything else, or cannot be written.
+        """
+        from .reports import write_comparison
+
+        return write_comparison(self, Path(folder), overwrite=overwrite, progress=progress)
 
 
 def analyse(
@@ -119,6 +159,60 @@ def analyse(
         progress=progress,
     )
     return Analysis(**{field.name: getattr(result, field.name) for field in fields(AnalysisResult)})
+
+
+def compare(
+    analyses: Sequence[str | Path | AnalysisResult],
+    *,
+    names: Sequence[str] | None = None,
+    settings: CompareSettings | None = None,
+    pairs: NDArray[np.int64] | None = None,
+    progress: Callable[[int, int], None] | None = None,
+) -> ComparedRecordings:
+    """Compare the same boutons in two or more analysed recordings.
+
+    Parameters
+    ----------
+    analyses : sequence of path or AnalysisResult
+        Folders of results (or the `analysis.json` in them) or analyses in memory, in the order in which they were
+        recorded; ids of boutons are those of the first.
+    names : sequence of str, optional
+        What to call the recordings; the names of movies or folders, where left out.
+    settings : CompareSettings, optional
+        Choices of the comparison.
+    pairs : (n, n_recordings) ndarray of int, optional
+        A row a bouton: its id in each recording, 0 where it is not there. Found by the mean images, where left out.
+    progress : callable, optional
+        Called with (done, total) boutons.
+
+    Returns
+    -------
+    ComparedRecordings
+        Tables, fits and summary.
+
+    Raises
+    ------
+    InputError
+        If an analysis cannot be read, or the recordings do not show the same boutons.
+
+    Examples
+    --------
+    >>> comparison = compare(["control.release", "drug.release"])  # doctest: +SKIP
+    >>> comparison.changes[["bouton", "p_release_change", "p_changed_p_adjusted"]]  # doctest: +SKIP
+    """
+    from .comparison import CompareSettings, compare_recordings, recording_from_result
+    from .errors import InputError
+    from .reports import read_recording
+
+    if names is not None and len(names) != len(analyses):
+        raise InputError(f"names has {len(names)} names for {len(analyses)} recordings.")
+    called: Sequence[str | None] = names if names is not None else [None] * len(analyses)
+    recordings = [
+        recording_from_result(one, name=name) if isinstance(one, AnalysisResult) else read_recording(one, name=name)
+        for one, name in zip(analyses, called, strict=True)
+    ]
+    found = compare_recordings(recordings, settings=settings or CompareSettings(), pairs=pairs, progress=progress)
+    return ComparedRecordings(**{field.name: getattr(found, field.name) for field in fields(Comparison)})
 
 
 def _as_movie(source: MovieSource, *, channel: int | None) -> Movie:

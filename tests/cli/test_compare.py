@@ -8,6 +8,7 @@ import pandas as pd
 import pytest
 import tifffile
 
+import napari_boutonrelease as br
 from napari_boutonrelease.cli.compare import read_pairs
 from napari_boutonrelease.cli.main import main
 from napari_boutonrelease.errors import InputError
@@ -104,6 +105,16 @@ def test_a_wrong_call_says_what_is_wrong(analysed, words, message, capsys):
     folders = map(str, analysed) if words else ()
     assert main(["compare", *folders, *words]) == 2
     assert message in capsys.readouterr().err
+
+
+def test_the_function_gives_what_the_command_writes(compared, analysed, tmp_path):
+    comparison = br.compare([analysed[0]] * 2, names=["one", "again"], settings=br.CompareSettings(bootstrap=200))
+    comparison.write(tmp_path / "out")
+    for name in ("joint", "conditions", "changes", "variance_mean", "unmatched"):
+        one, other = ((folder / f"{name}.csv").read_bytes() for folder in (compared, tmp_path / "out"))
+        assert one == other
+    with pytest.raises(InputError, match=r"names has 1 names for 2 recordings"):
+        br.compare(analysed, names=["one"])
 
 
 def test_what_is_no_result_or_lacks_a_file_is_refused(analysed, tmp_path, capsys):

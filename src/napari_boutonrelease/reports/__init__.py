@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+from .comparison import write_comparison
 from .datapackage import describe_package
 from .export import write_result
 from .folder import check_can_write, replaced_whole
+from .stored import read_recording
 from .strict_json import json_ready, write_json
 from .tables import read_table, write_table
 
@@ -12,8 +14,10 @@ __all__ = [
     "check_can_write",
     "describe_package",
     "json_ready",
+    "read_recording",
     "read_table",
     "replaced_whole",
+    "write_comparison",
     "write_json",
     "write_result",
     "write_table",
