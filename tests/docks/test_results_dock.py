@@ -264,6 +264,20 @@ def test_a_folder_of_other_things_is_not_replaced(dock, tmp_path, when_idle):
     assert [path.name for path in tmp_path.iterdir()] == ["diary.txt"]
 
 
+def test_export_asks_where_to_write_what_has_no_place_of_its_own(dock, tmp_path, when_idle, monkeypatch):
+    dock.folder.clear()  # as for a movie that is no file
+    assert dock.export_button.text() == "Export..."
+    monkeypatch.setattr(QFileDialog, "getExistingDirectory", lambda *_: "")
+    click(dock.export_button)
+    assert not dock.runner.busy
+    monkeypatch.setattr(QFileDialog, "getExistingDirectory", lambda *_: str(tmp_path))
+    click(dock.export_button)
+    when_idle(dock)
+    assert dock.folder.text() == str(tmp_path)
+    assert dock.export_button.text() == "Export"
+    assert (tmp_path / "boutons.csv").is_file()
+
+
 def test_what_has_changed_since_cannot_be_exported(dock):
     assert dock.export_button.isEnabled()
     dock.model.edit(HandEdits().exclude(3, "artefact"))

@@ -135,6 +135,7 @@ class Pipeline:
         recording, places = traced.recording, traced.places
         linear, responses = self._respond(traced.f, places, recording, settings, steps=steps)
         f = linear.f
+        steps.step("spontaneous")
         spontaneous = self._step(
             "spontaneous",
             (self._key("responses"), settings.calls.threshold_sd, settings.responses.false_spontaneous),
