@@ -277,6 +277,7 @@ def make_result(*, seed: int = 1, boutons: int = 9, trials: int = 60, pulses: in
         drift=drift,
         trials=_frame("trials", _trials(responses, stimulus_s, rng)),
         co_release=_frame("co_release", _pairs(bouton_rows, rng)),
+        detection=empty_table(TABLES["detection"]),
         trains=empty_table(TABLES["trains"]),
         intervals=empty_table(TABLES["intervals"]),
         recovery=empty_table(TABLES["recovery"]),

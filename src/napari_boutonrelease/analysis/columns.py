@@ -15,6 +15,7 @@ from .column_types import number as _number
 from .column_types import probability as _probability
 from .column_types import time_column as _time
 from .column_types import with_limits as _limits
+from .selection_columns import DETECTION, SELECTION_SUMMARY
 from .train_columns import INTERVALS, RECOVERY, TRAIN_SUMMARY, TRAINS
 
 _BOUTON = _count("bouton", "bouton id, from 1", minimum=1, required=True)
@@ -188,7 +189,19 @@ CO_RELEASE = TableDefinition(
 
 TABLES: dict[str, TableDefinition] = {
     table.name: table
-    for table in (BOUTONS, PULSES, RESPONSES, SPONTANEOUS, DRIFT, TRIALS, CO_RELEASE, TRAINS, INTERVALS, RECOVERY)
+    for table in (
+        BOUTONS,
+        PULSES,
+        RESPONSES,
+        SPONTANEOUS,
+        DRIFT,
+        TRIALS,
+        CO_RELEASE,
+        DETECTION,
+        TRAINS,
+        INTERVALS,
+        RECOVERY,
+    )
 }
 
 SUMMARY: dict[str, str] = {
@@ -237,6 +250,7 @@ SUMMARY: dict[str, str] = {
     "population.ppr_lo": "lower end of its 95 % interval, over trials",
     "population.ppr_hi": "upper end of its 95 % interval, over trials",
     "population.boutons_with_ppr": "boutons with a paired-pulse ratio of their own",
+    **SELECTION_SUMMARY,
     "heterogeneity.boutons": "boutons that were compared",
     "heterogeneity.sd": "true SD of p_release between boutons, sampling taken out",
     "heterogeneity.sd_lo": "lower end of its 95 % interval",

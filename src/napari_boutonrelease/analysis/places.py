@@ -12,6 +12,7 @@ from ..boutons import Footprints, build_footprints
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
+    from ..boutons import QuietPlaces
     from .recording_step import Recording
     from .settings import Settings
     from .sites import Sites
@@ -39,6 +40,10 @@ class Places:
         Evidence that a maximum needed; NaN where positions were given.
     expected_false : float
         False ones expected among those found by responses; NaN where positions were given.
+    spot_sigma_px : float
+        Gaussian sigma of a bouton's image (px).
+    quiet : QuietPlaces or None
+        Places without a bouton found by its responses; None where there was no evidence to judge.
     """
 
     bouton: NDArray[np.int64]
@@ -49,6 +54,8 @@ class Places:
     evidence: NDArray[np.float64]
     evidence_cut: float
     expected_false: float
+    spot_sigma_px: float
+    quiet: QuietPlaces | None
 
 
 def lay_footprints(sites: Sites, recording: Recording, *, settings: Settings) -> Places:
@@ -77,6 +84,8 @@ def lay_footprints(sites: Sites, recording: Recording, *, settings: Settings) ->
         evidence=sites.evidence,
         evidence_cut=sites.evidence_cut,
         expected_false=sites.expected_false,
+        spot_sigma_px=sites.spot_sigma_px,
+        quiet=sites.quiet,
     )
 
 

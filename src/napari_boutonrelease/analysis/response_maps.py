@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from ..boutons import ResponseStack, project_responses, scan_shapes
+from ..boutons.windows import project, trial_windows
 from ..response_shape import ResponseShape
 from .recording_step import BLOCK_FRAMES
 
@@ -72,6 +73,30 @@ def map_responses(recording: Recording, shape: ResponseShape, *, progress: Progr
         block_frames=BLOCK_FRAMES,
         progress=progress,
     )
+
+
+def seen_through(recording: Recording, *, looked_for: ResponseShape, true: ResponseShape) -> tuple[float, float]:
+    """Tell what maps of one time course show of responses of another.
+
+    Returns
+    -------
+    gain : float
+        Height in the maps of a response of height 1, mean over the trials' first pulses.
+    light_share : float
+        Mean light of such a response in the frames that decide, weighted as the noise of a map weighs them.
+    """
+    timing = recording.timing
+    pre_s, post_s = _window_s(timing, looked_for)
+    used = recording.drift.used
+    windows = trial_windows(timing, used=used, shape=looked_for, pre_s=pre_s, post_s=post_s)
+    gains, shares = [], []
+    for one in project(windows, timing=timing, shape=looked_for, height_px=1):
+        weights = one.weights[0, 0].astype(np.float64)
+        since = timing.frame_start_s[one.window.frames] - one.window.stimulus_s[0]
+        seen = true.frame_average(since, exposure_s=timing.exposure_s)
+        gains.append(float(weights @ seen))
+        shares.append(float(weights**2 @ seen / np.sum(weights**2)))
+    return (float(np.mean(gains)), float(np.mean(shares))) if gains else (1.0, 1.0)
 
 
 def _window_s(timing: Timing, shape: ResponseShape) -> tuple[float, float]:

@@ -24,7 +24,8 @@ class AnalysisResult:
     ----------
     name : str
         Stem of the movie's file name.
-    boutons, pulses, responses, spontaneous, drift, trials, co_release, trains, intervals, recovery : DataFrame
+    boutons, pulses, responses, spontaneous, drift, trials : DataFrame
+    co_release, detection, trains, intervals, recovery : DataFrame
         The tables whose columns `reports/columns.py` describes.
     estimates : DataFrame
         Every estimate of the same quantity side by side: columns `bouton, quantity, method, value, lo, hi`, where
@@ -65,6 +66,7 @@ class AnalysisResult:
     drift: pd.DataFrame
     trials: pd.DataFrame
     co_release: pd.DataFrame
+    detection: pd.DataFrame
     trains: pd.DataFrame
     intervals: pd.DataFrame
     recovery: pd.DataFrame

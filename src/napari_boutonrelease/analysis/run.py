@@ -9,6 +9,7 @@ from .pipeline import Measured, Pipeline
 from .pulse_intervals import interval_table, recovery_table
 from .results import AnalysisResult
 from .savefile import provenance_of
+from .selection import detection_table, measure_selection, selection_cautions, selection_summary
 from .summary import cautions_of, estimates_table, summarise
 from .tables import bouton_table, drift_table, pulse_table, response_table, spontaneous_table
 from .trains import train_table
@@ -70,6 +71,7 @@ def run_analysis(
 def put_together(measured: Measured, *, pipeline: Pipeline) -> AnalysisResult:
     """Make the tables and the summary of what was measured."""
     recording, responses = measured.recording, measured.responses
+    selection = measure_selection(measured)
     return AnalysisResult(
         name=pipeline.movie.name,
         boutons=bouton_table(measured),
@@ -79,13 +81,14 @@ def put_together(measured: Measured, *, pipeline: Pipeline) -> AnalysisResult:
         drift=drift_table(measured),
         trials=trial_table(measured),
         co_release=co_release_table(measured),
+        detection=detection_table(selection),
         trains=train_table(measured),
         intervals=interval_table(measured),
         recovery=recovery_table(measured),
         estimates=estimates_table(measured),
-        summary=summarise(measured),
+        summary={**summarise(measured), "selection": selection_summary(selection)},
         provenance=provenance_of(measured, pipeline=pipeline),
-        cautions=cautions_of(measured),
+        cautions=(*selection_cautions(selection), *cautions_of(measured)),
         settings=measured.settings,
         time_s=recording.timing.frame_start_s,
         f=measured.f,

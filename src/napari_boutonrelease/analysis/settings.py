@@ -36,6 +36,14 @@ class DetectionSettings(_Step):
     ] = "weighted"
 
 
+class SelectionSettings(_Step):
+    """Which boutons the detection would have missed."""
+
+    planted: Annotated[
+        int, Field(ge=0, le=5000, description="boutons simulated at each release probability; 0 leaves it out")
+    ] = 400
+
+
 class ResponseSettings(_Step):
     """Traces and amplitudes."""
 
@@ -140,6 +148,7 @@ class Settings(_Step):
 
     recording: RecordingSettings = RecordingSettings()
     detection: DetectionSettings = DetectionSettings()
+    selection: SelectionSettings = SelectionSettings()
     responses: ResponseSettings = ResponseSettings()
     reporter: ReporterSettings = ReporterSettings()
     calls: CallSettings = CallSettings()

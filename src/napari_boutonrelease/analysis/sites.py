@@ -22,7 +22,7 @@ if TYPE_CHECKING:
 
     from numpy.typing import NDArray
 
-    from ..boutons import Maxima, ResponseStack
+    from ..boutons import Maxima, QuietPlaces, ResponseStack
     from .hand_edits import HandEdits, Place
     from .recording_step import Recording
     from .settings import DetectionSettings
@@ -57,6 +57,8 @@ class Sites:
         Evidence that a maximum needed, and false ones expected among those found by responses; NaN where given.
     maxima : Maxima or None
         Maxima of the evidence, for a preview of other cuts; None where there was no evidence to judge.
+    quiet : QuietPlaces or None
+        Places without a bouton found by its responses; None where there was no evidence to judge.
     """
 
     bouton: NDArray[np.int64]
@@ -72,6 +74,7 @@ class Sites:
     evidence_cut: float
     expected_false: float
     maxima: Maxima | None
+    quiet: QuietPlaces | None = None
 
     def take(self, order: NDArray[np.intp] | NDArray[np.bool_]) -> Sites:
         """Keep or reorder boutons."""
@@ -136,6 +139,7 @@ def find_sites(
         evidence_cut=found.cut,
         expected_false=found.expected_false,
         maxima=found.maxima,
+        quiet=found.quiet,
     )
 
 

@@ -16,7 +16,9 @@ from .footprints import (
 )
 from .maps import ResponseStack, project_responses, scan_shapes
 from .optics import Optics
+from .planting import PlantedBoutons, plant_boutons
 from .positions import GivenBoutons, distance_along, read_axon, read_positions
+from .quiet_places import QuietPlaces
 from .shape_candidates import ShapeCandidates, find_shape_candidates
 from .spots import estimate_spot_sigma
 
@@ -29,6 +31,8 @@ __all__ = [
     "MatchedMaps",
     "Maxima",
     "Optics",
+    "PlantedBoutons",
+    "QuietPlaces",
     "ResponseStack",
     "ShapeCandidates",
     "build_footprints",
@@ -43,6 +47,7 @@ __all__ = [
     "matched_filter",
     "measure_false_rate",
     "mixture_evidence",
+    "plant_boutons",
     "project_responses",
     "read_axon",
     "read_positions",

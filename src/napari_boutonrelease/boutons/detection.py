@@ -10,8 +10,9 @@ import numpy as np
 
 from .cuts import Cuts, Maxima, allowed_false, find_maxima
 from .deflation import SpotModel
-from .evidence import MAX_NATS_PER_TRIAL, mixture_evidence, standardise
+from .evidence import mixture_evidence, standardise
 from .false_discovery import local_maxima, measure_false_rate
+from .quiet_places import QuietPlaces, choose_quiet_places, evidence_by_itself
 from .shape_candidates import ShapeCandidates, find_shape_candidates
 
 if TYPE_CHECKING:
@@ -19,7 +20,6 @@ if TYPE_CHECKING:
 
     from .maps import ResponseStack
 
-_NULL_CHANCE = 4.0  # nats that noise reaches at one of many places
 _LEAST_SEEN = 0.8  # of the energy of a spot: one cut by the border is averaged over too few pixels to be believed
 _MAX_ROUNDS = 12
 _PREVIEW_SPACING = 1.5  # of the spacing: flanks of strong boutons, not taken out there, are no boutons
@@ -53,6 +53,8 @@ class Detection:
         Gaussian sigma of a bouton's image, measured where clear boutons stand alone, else as given (px).
     maxima : Maxima or None
         Maxima of the evidence, for a preview of other cuts; None where boutons were looked for by shape alone.
+    quiet : QuietPlaces or None
+        Places without a bouton found by its responses, to measure which boutons were missed; None as for `maxima`.
     """
 
     y_px: NDArray[np.float64]
@@ -66,6 +68,7 @@ class Detection:
     expected_false: float
     spot_sigma_px: float
     maxima: Maxima | None
+    quiet: QuietPlaces | None
 
 
 def detect_boutons(
@@ -169,6 +172,19 @@ def detect_boutons(
         cut_at_shape=at_shape,
         expected_false=allowed if len(score) else 0.0,
         maxima=find_maxima(evidence, cuts=cuts, spacing_px=_PREVIEW_SPACING * spacing_px),
+        quiet=choose_quiet_places(
+            stack,
+            matched,
+            found_y_px=model.y_px,
+            found_x_px=model.x_px,
+            spots=_near(shapes, radius_px=0.75, shape=evidence.shape),
+            blind=blind,
+            spacing_px=spacing_px,
+            spot_sigma_px=spot_sigma_px,
+            cut=anywhere,
+            cut_at_shape=at_shape,
+            rng=rng,
+        ),
     )
     advance(4, steps)
     return detection
@@ -208,6 +224,7 @@ def detect_by_shape(
         expected_false=nothing,
         spot_sigma_px=spot_sigma_px,
         maxima=None,
+        quiet=None,
     )
 
 
@@ -269,14 +286,9 @@ def _find_releasing(
 
 
 def _by_itself(model: SpotModel) -> NDArray[np.float64]:
-    """Return the evidence that each place would show without any stimulus, with three SD of its chance on top.
-
-    Spontaneous releases and whatever flickers or wobbles are as frequent at the pseudo-stimuli. A release counts up to
-    `MAX_NATS_PER_TRIAL`, and numbers of releases scatter as Poisson numbers do, here and there.
-    """
+    """Return the evidence that each place would show without any stimulus."""
     ratio = model.standardised.shape[1] / model.null_standardised.shape[1]
-    expected = ratio * np.maximum(model.null_evidence() - _NULL_CHANCE, 0.0)
-    return np.asarray(expected + 3 * np.sqrt(2 * MAX_NATS_PER_TRIAL * expected))
+    return evidence_by_itself(model.null_evidence(), evoked_per_null=ratio)
 
 
 def _keep(
@@ -319,6 +331,7 @@ def _merge(
     cut_at_shape: float,
     expected_false: float,
     maxima: Maxima,
+    quiet: QuietPlaces,
 ) -> Detection:
     """Join what was found by responses with what was found by shape, pair by pair from the closest."""
     distance = np.hypot(model.y_px[:, None] - shapes.y_px, model.x_px[:, None] - shapes.x_px)
@@ -358,4 +371,5 @@ def _merge(
         expected_false=expected_false,
         spot_sigma_px=model.spot_sigma_px,
         maxima=maxima,
+        quiet=quiet,
     )

@@ -3,6 +3,7 @@
 from .binomial import SitesFit, fit_binomial, fit_sites
 from .co_release import CoRelease, measure_co_release
 from .compression import Compression, measure_compression, pool_compression
+from .detection_curve import DetectionCurve, fit_detection_curve
 from .differences import difference_of_estimates, ratio_of_estimates
 from .failures import (
     binomial_failures,
@@ -70,6 +71,7 @@ from .recovery import PairedMeans, PulseIntervalFit, fit_pulse_intervals, paired
 from .release_information import effective_trials, expected_width
 from .release_moments import ReleaseVariation, release_cumulants, release_variance
 from .saturation import UndoneSaturation, saturate, undo_saturation
+from .selection import SelectionCorrection, correct_for_detection
 from .site_search import ReleaseModel
 from .sites_evidence import SitesEvidence, sites_evidence
 from .split_half import SplitHalf, correlate_release_with_ratio
@@ -92,6 +94,7 @@ __all__ = [
     "BetaBinomialFit",
     "CoRelease",
     "Compression",
+    "DetectionCurve",
     "Doubts",
     "Estimate",
     "FiellerInterval",
@@ -114,6 +117,7 @@ __all__ = [
     "ReleaseModel",
     "ReleasePriors",
     "ReleaseVariation",
+    "SelectionCorrection",
     "SitesEvidence",
     "SitesFit",
     "SplitHalf",
@@ -132,6 +136,7 @@ __all__ = [
     "change_power",
     "clopper_pearson_interval",
     "component_logpdf",
+    "correct_for_detection",
     "correlate_release_with_ratio",
     "detection_power",
     "difference_of_estimates",
@@ -148,6 +153,7 @@ __all__ = [
     "fit_axon_release",
     "fit_beta_binomial",
     "fit_binomial",
+    "fit_detection_curve",
     "fit_joint",
     "fit_parabola",
     "fit_poisson_histogram",
