@@ -61,7 +61,7 @@ def columns() -> str:
     from napari_boutonrelease.comparison.columns import TABLES as COMPARED
 
     parts = []
-    for table in (*TABLES.values(), *COMPARED.values(), PLAN, PLAN_CURVES):
+    for table in {table.name: table for table in (*TABLES.values(), *COMPARED.values(), PLAN, PLAN_CURVES)}.values():
         rows = ((f"`{column.name}`", column.type, column.unit, column.meaning) for column in table.columns)
         heading = f"## {table.name}.csv\n\n{table.meaning[0].upper()}{table.meaning[1:]}.\n\n"
         parts.append(heading + _table(("column", "type", "unit", "meaning"), rows))

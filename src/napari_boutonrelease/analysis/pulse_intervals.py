@@ -47,19 +47,14 @@ def interval_table(measured: Measured) -> pd.DataFrame:
     rng = np.random.default_rng(measured.settings.seed)
     rows = []
     for b, bouton in enumerate(measured.places.bouton):
-        for group in groups if np.isfinite(fit.noise_sd[b]) else ():
-            pair = _pair(fit.amplitude[b], group, noise_sd=fit.noise_sd[b], measured=measured, rng=rng)
-            rows.append(
-                {
-                    "bouton": int(bouton),
-                    "interval_s": group.interval_s,
-                    "trials": pair.n_trials,
-                    "first_mean": pair.first_mean,
-                    "second_mean": pair.second_mean,
-                    "ppr": pair.ppr.value,
-                    "ppr_lo": pair.ppr.lo,
-                    "ppr_hi": pair.ppr.hi,
-                }
+        if np.isfinite(fit.noise_sd[b]):
+            rows += interval_rows(
+                int(bouton),
+                fit.amplitude[b],
+                groups,
+                noise_sd=fit.noise_sd[b],
+                n_bootstrap=measured.settings.pairs.bootstrap,
+                rng=rng,
             )
     return pd.DataFrame(rows, columns=list(INTERVALS.names))
 
@@ -70,11 +65,44 @@ def recovery_table(measured: Measured) -> pd.DataFrame:
 
     groups, fit = interval_groups(measured), measured.amplitudes
     rows = [
-        {"bouton": int(bouton), "intervals": course.n_intervals, **_row(course)}
+        recovery_row(int(bouton), fit.amplitude[b], groups, noise_sd=fit.noise_sd[b])
         for b, bouton in enumerate(measured.places.bouton if groups else ())
-        for course in (_time_course(fit.amplitude[b], groups, noise_sd=fit.noise_sd[b]),)
     ]
     return pd.DataFrame(rows, columns=list(RECOVERY.names))
+
+
+def interval_rows(
+    bouton: int,
+    amplitude: Floats,
+    groups: tuple[PulsePattern, ...],
+    *,
+    noise_sd: float,
+    n_bootstrap: int,
+    rng: np.random.Generator,
+) -> list[dict[str, Any]]:
+    """Return one bouton's rows of the table `intervals`, from its amplitudes (trial, pulse)."""
+    pairs = [(group, _pair(amplitude, group, noise_sd=noise_sd, n_bootstrap=n_bootstrap, rng=rng)) for group in groups]
+    return [
+        {
+            "bouton": bouton,
+            "interval_s": group.interval_s,
+            "trials": pair.n_trials,
+            "first_mean": pair.first_mean,
+            "second_mean": pair.second_mean,
+            "ppr": pair.ppr.value,
+            "ppr_lo": pair.ppr.lo,
+            "ppr_hi": pair.ppr.hi,
+        }
+        for group, pair in pairs
+    ]
+
+
+def recovery_row(
+    bouton: int, amplitude: Floats, groups: tuple[PulsePattern, ...], *, noise_sd: float
+) -> dict[str, Any]:
+    """Return one bouton's row of the table `recovery`, from its amplitudes (trial, pulse)."""
+    course = _time_course(amplitude, groups, noise_sd=noise_sd)
+    return {"bouton": bouton, "intervals": course.n_intervals, **_row(course)}
 
 
 def interval_summary(measured: Measured) -> dict[str, Any]:
@@ -86,7 +114,8 @@ def interval_summary(measured: Measured) -> dict[str, Any]:
     summed = fit.amplitude[known].sum(axis=0)
     noise_sd = float(np.sqrt(np.sum(fit.noise_sd[known] ** 2)))
     rng = np.random.default_rng(measured.settings.seed)
-    ratios = [_pair(summed, group, noise_sd=noise_sd, measured=measured, rng=rng).ppr for group in groups]
+    n_bootstrap = measured.settings.pairs.bootstrap
+    ratios = [_pair(summed, group, noise_sd=noise_sd, n_bootstrap=n_bootstrap, rng=rng).ppr for group in groups]
     row = _row(_time_course(summed, groups, noise_sd=noise_sd))
     return {
         "interval_s": [round(group.interval_s, 9) for group in groups],
@@ -125,14 +154,14 @@ def _time_course(amplitude: Floats, groups: tuple[PulsePattern, ...], *, noise_s
 
 
 def _pair(
-    amplitude: Floats, group: PulsePattern, *, noise_sd: float, measured: Measured, rng: np.random.Generator
+    amplitude: Floats, group: PulsePattern, *, noise_sd: float, n_bootstrap: int, rng: np.random.Generator
 ) -> PulsePair:
     return measure_pulse_pair(
         amplitude[group.trials, 0],
         amplitude[group.trials, 1],
         noise_sd=noise_sd,
         confidence=CONFIDENCE,
-        n_bootstrap=measured.settings.pairs.bootstrap,
+        n_bootstrap=n_bootstrap,
         rng=rng,
     )
 

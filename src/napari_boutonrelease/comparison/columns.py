@@ -12,6 +12,7 @@ from ..analysis.column_types import (
     probability,
     with_limits,
 )
+from ..analysis.train_columns import INTERVALS, RECOVERY
 
 _BOUTON = count("bouton", "bouton id in the first recording", minimum=1, required=True)
 _RECORDING = column("recording", "string", "", "name of the recording", required=True)
@@ -96,36 +97,6 @@ VARIANCE_MEAN = TableDefinition(
         ),
         probability("bend_p", "one-sided p of a straight line against a bent one"),
         probability("fit_p", "goodness-of-fit p of the parabola"),
-        column("note", "string", "", "why a number is missing or weak"),
-    ),
-)
-
-INTERVALS = TableDefinition(
-    name="intervals",
-    meaning="a row a bouton and pulse interval, over all recordings",
-    key=("bouton", "interval_s"),
-    columns=(
-        _BOUTON,
-        number("interval_s", "s", "time from pulse 1 to pulse 2", minimum=0),
-        column("recordings", "string", "", "recordings with this interval, joined by ;"),
-        count("trials", "trials in which both pulses were measured"),
-        *with_limits(number("ppr", "", "paired-pulse ratio at this interval")),
-    ),
-)
-
-RECOVERY = TableDefinition(
-    name="recovery",
-    meaning="a row a bouton: paired-pulse ratio against pulse interval, model chosen by AICc",
-    key=("bouton",),
-    columns=(
-        count("bouton", _BOUTON.meaning, minimum=1, required=True, unique=True),
-        choice("model", "time course of the ratio", "none", "constant", "facilitation", "depression", "both"),
-        *with_limits(number("facilitation", "", "a of 1 + a exp(-interval / facilitation_s)", minimum=0)),
-        *with_limits(number("facilitation_s", "s", "time constant with which facilitation wears off", minimum=0)),
-        *with_limits(number("depression", "", "d of 1 - d exp(-interval / depression_s)", minimum=0)),
-        *with_limits(number("depression_s", "s", "time constant of the recovery from depression", minimum=0)),
-        probability("p_constant", "p that the ratio is 1 at every interval"),
-        probability("fit_p", "goodness-of-fit p of the chosen curve"),
         column("note", "string", "", "why a number is missing or weak"),
     ),
 )
