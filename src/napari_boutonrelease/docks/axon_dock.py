@@ -1,4 +1,4 @@
-"""The Axon dock: the map coloured by any number, that number along the axon, and the population in words."""
+"""The Axon dock: the map coloured by any number, that number along the axon, the population, other recordings."""
 
 from __future__ import annotations
 
@@ -20,6 +20,8 @@ from ..reports.words import headlines
 from .axon_plot import COLUMNS, AxonPlot, choices, title
 from .bouton_layers import bouton_layers_of
 from .calm import WhenCalm
+from .comparison_part import ComparisonPart
+from .pages import Pages
 from .panel import Panel, sentence_label
 from .worker import ProgressRow
 
@@ -40,7 +42,7 @@ class AxonDock(Panel):
         self.shown = QComboBox()
         self.shown.setAccessibleName("Number shown")
         self.shown.setSizeAdjustPolicy(QComboBox.SizeAdjustPolicy.AdjustToMinimumContentsLengthWithIcon)
-        self.shown.setMinimumContentsLength(18)
+        self.shown.setMinimumContentsLength(14)
         self.shown.currentIndexChanged.connect(self._choose)
         self.colour = QCheckBox("Colour the marks")
         self.colour.setToolTip("Colour the marks in the image by this number, with a colour bar; else by how found.")
@@ -54,8 +56,11 @@ class AxonDock(Panel):
         self.plot = AxonPlot(self)
         self.words = sentence_label()
         self.stale = sentence_label(_STALE)
-        self.column.addLayout(row)
-        self.column.addWidget(self.meaning)
+        alone = QWidget()
+        column = QVBoxLayout(alone)
+        column.setContentsMargins(0, 4, 0, 0)
+        column.addLayout(row)
+        column.addWidget(self.meaning)
         text = QWidget()
         beside = QVBoxLayout(text)
         beside.setContentsMargins(0, 0, 0, 0)
@@ -70,8 +75,14 @@ class AxonDock(Panel):
         self.parts = QBoxLayout(QBoxLayout.Direction.TopToBottom)
         self.parts.addWidget(self.plot, 2)
         self.parts.addWidget(self.text, 1)
-        self.column.addLayout(self.parts, 1)
-        self.column.addWidget(ProgressRow(self.runner, self))
+        column.addLayout(self.parts, 1)
+        self.comparison = ComparisonPart(self)
+        self.tabs = Pages()
+        self.tabs.add(alone, "This recording", "Boutons along the axon, and what they say together")
+        self.tabs.add(self.comparison, "Comparison", "The same boutons in several recordings")
+        self.column.addWidget(self.tabs, 1)
+        self.progress = ProgressRow(self.runner, self)
+        self.column.addWidget(self.progress)
         self._calm = WhenCalm(self.model, self._show_when_seen, self)
         self.link(self.model.recording_changed, self._calm.follow)
         self.link(self.model.measured_changed, self._calm.follow)

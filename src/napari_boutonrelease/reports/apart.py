@@ -15,16 +15,19 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from ..errors import InputError, OutputError
+from .comparison import write_comparison
 from .export import write_result
 
 if TYPE_CHECKING:
+    from ..analysis.progress import Progress
     from ..analysis.results import AnalysisResult
+    from ..comparison import Comparison
 
 _CHILD = "from napari_boutonrelease.reports.apart import _write; _write()"
 
 
 def write_result_apart(
-    result: AnalysisResult, folder: Path, *, progress: Callable[[int, int], None] | None = None, **options: bool
+    result: AnalysisResult, folder: Path, *, progress: Progress | None = None, **options: bool
 ) -> Path:
     """Do what `write_result` does in another process, and wait for it.
 
@@ -36,8 +39,21 @@ def write_result_apart(
     OutputError
         Also if the process died.
     """
+    return _write_apart(write_result, result, folder, progress=progress, options=options)
+
+
+def write_comparison_apart(
+    comparison: Comparison, folder: Path, *, progress: Progress | None = None, **options: bool
+) -> Path:
+    """Do what `write_comparison` does in another process, and wait for it; see `write_result_apart`."""
+    return _write_apart(write_comparison, comparison, folder, progress=progress, options=options)
+
+
+def _write_apart(
+    write: Callable[..., Path], what: object, folder: Path, *, progress: Progress | None, options: dict[str, bool]
+) -> Path:
     with tempfile.TemporaryFile() as parcel, tempfile.TemporaryFile("w+", encoding="utf-8") as complaints:
-        pickle.dump((result, Path(folder).absolute(), options), parcel)
+        pickle.dump((write, what, Path(folder).absolute(), options), parcel)
         parcel.seek(0)
         child = subprocess.Popen(
             [sys.executable, "-c", _CHILD],
@@ -70,8 +86,8 @@ def _write() -> None:
         sys.stdout.write(json.dumps(what) + "\n")
         sys.stdout.flush()
 
-    result, folder, options = pickle.load(sys.stdin.buffer)
+    write, what, folder, options = pickle.load(sys.stdin.buffer)
     try:
-        write_result(result, folder, **options, progress=lambda done, total: tell(done=done, total=total))
+        write(what, folder, **options, progress=lambda done, total: tell(done=done, total=total))
     except InputError as error:
         tell(error=str(error))

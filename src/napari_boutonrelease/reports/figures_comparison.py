@@ -28,6 +28,7 @@ SERIES = (EVOKED, PULSE_2, "#63b8a8", "#9c3a76", FIT, "#1d2833")
 """Colours of recordings, in their order; markers differ, too."""
 
 MARKERS = ("o", "s", "D", "^", "v", "P")
+_SITES = (("first recording alone", NULL, "s"), ("all recordings together", EVOKED, "o"))
 _PARABOLAS_A_ROW, _MOST_PARABOLAS = 4, 16
 
 
@@ -103,6 +104,15 @@ def _show_matches(axes: Axes, comparison: Comparison, k: int) -> None:
 def draw_release(area: Area, comparison: Comparison) -> None:
     """Draw each bouton's release probability over the recordings, with intervals."""
     axes = area.axes(13.0, 6.0, area.width - 15.0, area.height - 19.0)
+    plot_release(axes, comparison)
+    axes.legend(
+        handles=recording_handles(comparison), loc="lower left", bbox_to_anchor=(0.0, 1.01),
+        ncols=min(len(comparison.recordings), 4),
+    )  # fmt: skip
+
+
+def plot_release(axes: Axes, comparison: Comparison) -> None:
+    """Plot each bouton's release probability over the recordings; boutons stand at 0, 1, ... in their order."""
     conditions, ids = comparison.conditions, values(comparison.joint, "bouton")
     n = len(comparison.recordings)
     for row, bouton in enumerate(ids):
@@ -119,7 +129,6 @@ def draw_release(area: Area, comparison: Comparison) -> None:
     axes.set_ylim(-0.03, 1.03)
     axes.set_ylabel("p_release")
     _name_boutons(axes, ids)
-    _legend(axes, comparison)
 
 
 def changes_mm(comparison: Comparison) -> float:
@@ -187,14 +196,16 @@ def _forest(axes: Axes, changes: pd.DataFrame, column: str, *, none: float, loga
 def draw_sites(area: Area, comparison: Comparison) -> None:
     """Draw the numbers of sites that are not excluded: all recordings together beside the first alone."""
     axes = area.axes(13.0, 6.0, area.width - 15.0, area.height - 19.0)
+    if plot_sites(axes, comparison):
+        axes.legend(handles=sites_handles(), loc="lower left", bbox_to_anchor=(0.0, 1.01), ncols=2)
+
+
+def plot_sites(axes: Axes, comparison: Comparison) -> bool:
+    """Plot the numbers of sites as `draw_sites` does, boutons at 0, 1, ...; tell whether there was any."""
     joint, first = comparison.joint, comparison.recordings[0]
     ids = values(joint, "bouton")
-    sets = (
-        ("first recording alone", first.boutons, -0.17, NULL, "s"),
-        ("all recordings together", joint, 0.17, EVOKED, "o"),
-    )
     drawn = False
-    for _, table, shift, colour, marker in sets:
+    for table, shift, (_, colour, marker) in zip((first.boutons, joint), (-0.17, 0.17), _SITES, strict=True):
         best, lo, hi = (values(table, "n_sites" + end) for end in ("", "_lo", "_hi"))
         known = np.isfinite(best)
         drawn |= bool(known.any())
@@ -203,14 +214,18 @@ def draw_sites(area: Area, comparison: Comparison) -> None:
         axes.plot(np.flatnonzero(known) + shift, best[known], marker, color=colour, markersize=5, linestyle="none")
     if not drawn:
         say_nothing_to_show(axes, "No bouton releases.")
-        return
+        return False
     axes.set_ylim(0.4, comparison.settings.n_max + 0.6)
     axes.set_yticks(range(1, comparison.settings.n_max + 1))
     axes.grid(axis="y", color=HAIRLINE, linewidth=0.5)
     axes.set_ylabel("n_sites")
     _name_boutons(axes, ids)
-    handles = [Line2D([], [], color=colour, marker=marker, label=name) for name, _, _, colour, marker in sets]
-    axes.legend(handles=handles, loc="lower left", bbox_to_anchor=(0.0, 1.01), ncols=2)
+    return True
+
+
+def sites_handles(*, most_letters: int = 40) -> list[Line2D]:
+    """Return what the marks of `plot_sites` mean, for a legend; names end after so many letters."""
+    return [Line2D([], [], color=colour, marker=marker, label=name[:most_letters]) for name, colour, marker in _SITES]
 
 
 def draw_inverse_cv2(area: Area, comparison: Comparison) -> None:
@@ -352,12 +367,12 @@ def _name_boutons(axes: Axes, ids: Sequence[float] | Floats) -> None:
     axes.set_xlabel("bouton of the first recording")
 
 
-def _legend(axes: Axes, comparison: Comparison) -> None:
-    handles = [
-        Line2D([], [], color=_colour(k), marker=_marker(k), linestyle="none", label=recording.name[:40])
+def recording_handles(comparison: Comparison, *, most_letters: int = 40) -> list[Line2D]:
+    """Return what the marks of `plot_release` mean, for a legend; names end after so many letters."""
+    return [
+        Line2D([], [], color=_colour(k), marker=_marker(k), linestyle="none", label=recording.name[:most_letters])
         for k, recording in enumerate(comparison.recordings)
     ]
-    axes.legend(handles=handles, loc="lower left", bbox_to_anchor=(0.0, 1.01), ncols=min(len(handles), 4))
 
 
 def _columns(comparison: Comparison) -> int:
