@@ -111,6 +111,41 @@ class SpotModel:
             updated[y0:y1, x0:x1] = mixture_evidence(local.astype(np.float32)).reshape(y1 - y0, x1 - x0)
         return updated
 
+    def read_one_more(
+        self, y_px: NDArray[np.integer], x_px: NDArray[np.integer]
+    ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """Read further places, each as if it were one more spot.
+
+        Returns
+        -------
+        standardised : (n, n_evoked) ndarray
+            Heights in noise SD.
+        per_count : (n,) ndarray
+            What a spot of height 1 adds to it, in a map with noise factor 1.
+        """
+        profiles = self._profiles()
+        standardised, per_count = np.zeros((len(y_px), len(self._evoked))), np.zeros(len(y_px))
+        for index, (y, x) in enumerate(zip(y_px.astype(float), x_px.astype(float), strict=True)):
+            reach = (_WINDOW_SIGMAS + PROFILE_REACH_SIGMA) * self.spot_sigma_px
+            near = np.flatnonzero(np.hypot(self.y_px - y, self.x_px - x) < reach)
+            own = gaussian_patch(y, x, sigma_px=self.spot_sigma_px, shape=self._shape)
+            weights = separated_weights(
+                y_px=[y],
+                x_px=[x],
+                profiles=[own, *(profiles[i] for i in near)],
+                inverse_variance=self._inverse_variance,
+                radius_px=_WINDOW_SIGMAS * self.spot_sigma_px,
+                separate=True,
+            )
+            values = np.nan_to_num(weights[0].values)
+            inverse = np.maximum(self._inverse_variance[weights[0].slices], 1e-30)
+            variance = float(np.sum(values**2 / inverse, where=values != 0))
+            if variance > 0:
+                read = read_maps(self._evoked, [Patch(y0=weights[0].y0, x0=weights[0].x0, values=values)])
+                per_count[index] = 1.0 / np.sqrt(variance)
+                standardised[index] = read[0] / self._evoked_factor * per_count[index]
+        return standardised, per_count
+
     def _profiles(self) -> list[Patch]:
         return [
             gaussian_patch(y, x, sigma_px=self.spot_sigma_px, shape=self._shape)

@@ -175,8 +175,7 @@ def detect_boutons(
         quiet=choose_quiet_places(
             stack,
             matched,
-            found_y_px=model.y_px,
-            found_x_px=model.x_px,
+            model=model,
             spots=_near(shapes, radius_px=0.75, shape=evidence.shape),
             blind=blind,
             spacing_px=spacing_px,

@@ -82,9 +82,9 @@ def plant_boutons(
     """Count how many planted boutons exceed the cut that the detection used.
 
     A bouton takes brightness, vesicle and number of sites from one of `boutons`, and a place from `places`. Its light
-    at rest adds photon noise, unless the place is a spot that has it already; so does the light of its responses. What
-    detection does beyond the evidence at one place (fitting positions, separating neighbours) is left out: it is for
-    boutons that stand alone.
+    at rest adds photon noise, unless the place is a spot that has it already; so does the light of its responses. As in
+    the detection, both the maximum of the evidence map and the evidence of a spot fitted there must exceed the cut.
+    Neighbours are not separated: the count is for boutons that stand alone.
 
     Parameters
     ----------
@@ -108,20 +108,24 @@ def plant_boutons(
     kind = rng.integers(len(boutons.q), size=n_planted)
     needs_less = rng.random(n_planted) < boutons.spot_share
     needed = np.where(needs_less, min(places.cut_at_shape, places.cut), places.cut) + places.by_itself[at]
-    step, noise = np.empty((n_planted, len(NEAR))), np.empty(n_planted)
-    for i in range(n_planted):
-        step[i], noise[i] = _seen(places, boutons, place=int(at[i]), f0=float(boutons.f0_counts[kind[i]]), rng=rng)
+    seen = [
+        _seen(places, boutons, place=int(place), f0=float(boutons.f0_counts[one]), rng=rng)
+        for place, one in zip(at, kind, strict=True)
+    ]
+    steps, noise = np.array([one[0] for one in seen]), np.array([one[1] for one in seen])
     found = np.zeros(np.size(p_release), dtype=np.int64)
-    group = max(1, _AT_ONCE // (len(NEAR) * places.z.shape[2]))
+    group = max(1, _AT_ONCE // (steps.shape[1] * places.z.shape[2]))
     for index, p in enumerate(np.ravel(p_release)):
         for first in range(0, n_planted, group):
             some = slice(first, first + group)
             heights = _heights(places, boutons, kind=kind[some], p_release=float(p), rng=rng)
-            extra = np.sqrt(noise[some, None] * np.maximum(heights, 0.0)) * rng.standard_normal(heights.shape)
-            planted = (heights / places.evoked_factor)[:, None, :] * step[some, :, None] + extra[:, None, :]
-            z = places.z[at[some]] + planted.astype(np.float32)
+            shot = np.sqrt(noise[some, None] * np.maximum(heights, 0.0)) * rng.standard_normal(heights.shape)
+            planted = (heights / places.evoked_factor)[:, None, :] * steps[some, :, None] + shot[:, None, :]
+            own = np.concatenate([places.z[at[some]], places.fitted[at[some], None]], axis=1)
+            z = own + planted.astype(np.float32)
             evidence = mixture_evidence(np.ascontiguousarray(z.reshape(-1, z.shape[2]).T)).reshape(z.shape[:2])
-            found[index] += int(np.count_nonzero(evidence.max(axis=1) > needed[some]))
+            at_last = np.minimum(evidence[:, :-1].max(axis=1), evidence[:, -1])
+            found[index] += int(np.count_nonzero(at_last > needed[some]))
     return found
 
 
@@ -148,7 +152,10 @@ def _heights(
 def _seen(
     places: QuietPlaces, boutons: PlantedBoutons, *, place: int, f0: float, rng: np.random.Generator
 ) -> tuple[NDArray[np.float64], float]:
-    """Standardised response to a spot of height 1 around a place, and the variance that its light adds at the peak."""
+    """Standardised response to a spot of height 1, and the variance that a count of its light adds to it.
+
+    The response is (n_near + 1,): in the map around the place, and where a spot is fitted.
+    """
     y, x = int(places.y_px[place]), int(places.x_px[place])
     height, width = places.scale.shape
     reach = PROFILE_REACH_SIGMA * (boutons.spot_sigma_px + places.spot_sigma_px) + box_half_px(places.spot_sigma_px)
@@ -169,6 +176,9 @@ def _seen(
     scale = places.scale[rows, columns]
     seen = filtered[rows - y0, columns - x0] * scale
     energy = float(np.sum(image**2 * inverse))
+    dark = np.where(np.isfinite(variance), 1.0 / places.pixel_variance[wide], 0.0)
+    dimmed = np.sqrt(energy / max(float(np.sum(image**2 * dark)), 1e-30))
+    fitted = float(places.fitted_per_count[place]) * dimmed
     noise = float(np.sum(image**3 * inverse**2)) / energy if energy > 0 else 0.0
     per_count = boutons.variance_per_count * boutons.light_share
-    return np.asarray(seen, dtype=np.float64), per_count * noise * float(scale[len(NEAR) // 2]) ** 2
+    return np.append(seen, fitted), per_count * noise * float(scale[len(NEAR) // 2]) ** 2

@@ -13,6 +13,7 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from ..response_shape import ResponseShape
+    from .deflation import SpotModel
     from .evidence import MatchedMaps
     from .maps import ResponseStack
 
@@ -39,6 +40,10 @@ class QuietPlaces:
         Whether the mean image shows a spot there, which holds a bouton's light already.
     z : (n, n_near, n_evoked) ndarray of float32
         Standardised response of the place and the pixels around it (`NEAR`), found boutons taken out.
+    fitted : (n, n_evoked) ndarray of float32
+        Standardised height of a spot fitted there, as detection fits a candidate.
+    fitted_per_count : (n,) ndarray
+        What a spot of height 1 (counts) adds to it, in a map with noise factor 1.
     by_itself : (n,) ndarray
         Evidence that a place shows without any stimulus, which a bouton there would have to exceed (nats).
     pixel_variance, scale : (y, x) ndarray
@@ -59,6 +64,8 @@ class QuietPlaces:
     x_px: NDArray[np.intp]
     at_spot: NDArray[np.bool_]
     z: NDArray[np.float32]
+    fitted: NDArray[np.float32]
+    fitted_per_count: NDArray[np.float64]
     by_itself: NDArray[np.float64]
     pixel_variance: NDArray[np.float32]
     scale: NDArray[np.float32]
@@ -85,8 +92,7 @@ def choose_quiet_places(
     stack: ResponseStack,
     matched: MatchedMaps,
     *,
-    found_y_px: NDArray[np.float64],
-    found_x_px: NDArray[np.float64],
+    model: SpotModel,
     spots: NDArray[np.bool_],
     blind: NDArray[np.bool_],
     spacing_px: float,
@@ -103,8 +109,8 @@ def choose_quiet_places(
         Response and null maps.
     matched : MatchedMaps
         The same through the matched filter, found boutons taken out of the evoked ones.
-    found_y_px, found_x_px : (n_found,) ndarray
-        Boutons found by their responses (px).
+    model : SpotModel
+        Boutons found by their responses.
     spots : (y, x) ndarray of bool
         Middles of spots of the mean image.
     blind : (y, x) ndarray of bool
@@ -124,7 +130,7 @@ def choose_quiet_places(
         Up to `N_PLACES` of them; none where boutons leave no room.
     """
     height, width = blind.shape
-    free = _free(blind, found_y_px, found_x_px, spacing_px=spacing_px)
+    free = _free(blind, model.y_px, model.x_px, spacing_px=spacing_px)
     on_spot = np.flatnonzero(spots & free)
     on_spot = rng.permutation(on_spot)[: int(_SPOT_SHARE * N_PLACES)]
     others = np.flatnonzero(free & ~spots)
@@ -139,11 +145,14 @@ def choose_quiet_places(
         if stack.null_from == "gaps" and len(matched.null)
         else np.zeros(len(y), dtype=np.float32)
     )
+    fitted, fitted_per_count = model.read_one_more(y, x)
     return QuietPlaces(
         y_px=y.astype(np.intp),
         x_px=x.astype(np.intp),
         at_spot=np.arange(len(chosen)) < len(on_spot),
         z=z,
+        fitted=fitted.astype(np.float32),
+        fitted_per_count=fitted_per_count,
         by_itself=evidence_by_itself(null_evidence, evoked_per_null=len(matched.evoked) / max(len(matched.null), 1)),
         pixel_variance=matched.pixel_variance.astype(np.float32),
         scale=matched.scale.astype(np.float32),

@@ -18,6 +18,7 @@ from .figures_calls import figure_calls
 from .figures_map import figure_map
 from .figures_pairs import figure_pulse_pairs, figure_train
 from .figures_quality import figure_quality
+from .figures_selection import figure_detection, shows_detection
 from .figures_style import styled
 from .figures_together import figure_together, shows_together
 from .figures_trains import figure_pulse_intervals, figure_trains
@@ -25,6 +26,7 @@ from .figures_trains import figure_pulse_intervals, figure_trains
 __all__ = [
     "figure_bouton",
     "figure_calls",
+    "figure_detection",
     "figure_map",
     "figure_pulse_intervals",
     "figure_pulse_pairs",
@@ -48,6 +50,8 @@ def figures_of(result: AnalysisResult) -> dict[str, Callable[[], Figure]]:
         "calls": partial(figure_calls, result),
         "quality": partial(figure_quality, result),
     }
+    if shows_detection(result):
+        listing["detection"] = partial(figure_detection, result)
     if shows_together(result):
         listing["boutons_together"] = partial(figure_together, result)
     if result.stimulus_s.shape[1] > 1:

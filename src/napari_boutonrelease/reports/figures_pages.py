@@ -18,6 +18,7 @@ from .figures_map import draw_evidence, draw_map
 from .figures_page import A4_MM, MARGIN_MM, Area, blank_figure, line_mm, text_width_mm, wrapped
 from .figures_pairs import draw_pulse_pairs, draw_train
 from .figures_quality import draw_quality
+from .figures_selection import draw_selection, shows_detection
 from .figures_style import BODY, HEAD, INK, MUTED, SHADE, SMALL, TITLE, styled
 from .figures_text import caution_pages, flag_blocks, paged, table_pages
 from .figures_together import draw_together, shows_together
@@ -53,6 +54,8 @@ def pages(result: AnalysisResult) -> list[Page]:
             listing.append(partial(trains_page, result))
         if len(result.intervals):
             listing.append(partial(intervals_page, result))
+        if shows_detection(result):
+            listing.append(partial(detection_page, result))
         if shows_together(result):
             listing.append(partial(together_page, result))
         listing += [partial(bouton_page, result, first) for first in range(0, n_boutons, 2)]
@@ -291,6 +294,14 @@ def intervals_page(result: AnalysisResult) -> Figure:
     note = fact(result, "pulse_intervals.note")
     if note:
         area.paragraph(0.0, y + 6.0 + INTERVALS_MM, area.width, f"All boutons together: {note}.", color=INK)
+    return figure
+
+
+@styled
+def detection_page(result: AnalysisResult) -> Figure:
+    """Draw which boutons the detection would have missed, and say the mean corrected for that."""
+    figure, area = _new_page("Boutons that would have been missed")
+    draw_selection(area.part(0.0, 10.0, area.width, area.height - 10.0), result)
     return figure
 
 

@@ -262,7 +262,36 @@ def _population_sentences(result: AnalysisResult) -> list[str]:
             f"Over the {found} found by their responses it is {mean}. This mean is too high where the other spots are "
             "boutons, the mean over all too low where they are none."
         )
-    return sentences
+    return sentences + _corrected_sentences(result)
+
+
+def _corrected_sentences(result: AnalysisResult) -> list[str]:
+    """Say the mean corrected for boutons that the detection missed, and of which it speaks."""
+    if not math.isfinite(number(result, "selection.p_release")):
+        return []
+    smallest = short(number(result, "selection.smallest_p_release"))
+    return [
+        f"Corrected for boutons that were missed, mean p_release is {_between(result, 'selection.p_release')} over "
+        f"boutons with p_release above {smallest}; of those below, silent ones among them, nothing can be inferred."
+    ]
+
+
+def selection_sentences(result: AnalysisResult) -> list[str]:
+    """Say which boutons the detection finds, how many it missed, and the mean corrected for that."""
+    half, most = (number(result, f"selection.p_found_{name}") for name in ("half", "most"))
+    sentences = []
+    if math.isfinite(half):
+        nearly = f", and 95 % with {short(most)}" if math.isfinite(most) else "; 95 % with none"
+        sentences.append(f"In this recording, 50 % of boutons are found with p_release {short(half)}{nearly}.")
+    missed = number(result, "selection.missed_per_found")
+    if math.isfinite(missed):
+        boutons = counted(number(result, "selection.boutons"), "bouton")
+        between = _between(result, "selection.missed_per_found")
+        sentences.append(
+            f"For each bouton found by its responses, {between} are expected to have been missed ({boutons} found, "
+            f"mean p_release of these {fixed(number(result, 'selection.p_release_found'))})."
+        )
+    return sentences + _corrected_sentences(result)
 
 
 def selected_differ(result: AnalysisResult) -> bool:
