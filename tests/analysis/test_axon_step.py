@@ -110,11 +110,11 @@ def test_the_boutons_are_compared(pipeline, kept):
 
 
 def test_suspected_trials_can_be_left_out_by_hand(kept, left_out):
-    trials = suspected_trials(kept)
+    trials = suspected_trials(kept, HandEdits())
     assert set(trials) == set((np.flatnonzero(kept.failed.suspected.any(axis=1)) + 1).tolist())
     edits = exclude_suspected(HandEdits(), kept)
     assert edits.excluded == tuple((trial, SUSPECTED) for trial in trials)
-    assert suspected_trials(left_out) == ()
+    assert suspected_trials(left_out, HandEdits()) == ()
 
 
 def test_a_higher_cut_suspects_no_more(pipeline, kept):
@@ -131,7 +131,7 @@ def test_the_model_leaves_suspected_trials_out_and_takes_them_back(pipeline, kep
     assert not model.can_undo
     model.accept(model.request(), kept)
     model.exclude_suspected_trials()
-    assert {trial for trial, _ in model.edits.excluded} == set(suspected_trials(kept))
+    assert {trial for trial, _ in model.edits.excluded} == set(suspected_trials(kept, HandEdits()))
     assert {reason for _, reason in model.edits.excluded} == {SUSPECTED}
     model.undo()
     assert model.edits.excluded == ()

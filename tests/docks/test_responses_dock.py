@@ -1,5 +1,6 @@
 """The Responses dock, driven with mouse and keys."""
 
+from dataclasses import replace
 from itertools import pairwise
 
 import numpy as np
@@ -409,3 +410,62 @@ def test_plots_stand_below_one_another_in_a_narrow_dock(dock):
     dock.resize(1346, 230)
     settle()
     assert len({plot.geometry().top() for plot in (dock.trace, dock.trials, dock.amplitudes, dock.raster)}) == 1
+
+
+@pytest.fixture
+def with_failures(dock, recording):
+    """The dock on a recording in which pulse 1 of two trials seems to have reached no bouton."""
+    movie, protocol, measured = recording
+    failed = measured.failed
+    suspected, probability = np.zeros_like(failed.suspected), failed.found.probability.copy()
+    suspected[[4, 9], 0] = True
+    probability[[4, 9], 0] = 0.97
+    doubtful = replace(failed, suspected=suspected, found=replace(failed.found, probability=probability))
+    fill(dock.model, (movie, protocol, replace(measured, failed=doubtful)))
+    settle()
+    return dock
+
+
+def marked(plot):
+    """Trials marked above a plot."""
+    line = next(line for line in plot.axes.lines if line.get_marker() == "v")
+    return np.asarray(line.get_xdata()).tolist()
+
+
+def test_suspected_stimulus_failures_are_marked_at_their_pulse(with_failures):
+    dock = with_failures
+    assert marked(dock.raster) == marked(dock.amplitudes) == [5, 10]
+    assert "no stimulus?" in dock.raster.axes.get_title(loc="right")
+    at = on(dock.raster, *dock.raster.cell_px(1, 4))
+    assert "0.97" in dock.raster._words_at(at.x(), at.y())
+    at = on(dock.raster, *dock.raster.cell_px(1, 5))
+    assert "no bouton" not in dock.raster._words_at(at.x(), at.y())
+    dock.pulse.setCurrentIndex(1)
+    settle()
+    assert marked(dock.raster) == marked(dock.amplitudes) == []
+
+
+def test_one_button_leaves_all_suspected_failures_out_and_undo_takes_them_back(with_failures):
+    dock, model = with_failures, with_failures.model
+    model.edit(model.edits.exclude(5, "movement"))
+    settle()
+    assert dock.leave_out.text() == "Leave out 1 suspected failure"
+    model.undo()
+    settle()
+    assert dock.leave_out.text() == "Leave out 2 suspected failures"
+    click(dock.leave_out, dock.leave_out.rect().center())
+    assert model.edits.excluded == ((5, "suspected stimulus failure"), (10, "suspected stimulus failure"))
+    assert not dock.leave_out.isVisible()
+    assert marked(dock.raster) == []
+    assert dock.again.isEnabled()
+    assert {5, 10} <= set(hollow_trials(dock))
+    model.undo()
+    settle()
+    assert model.edits.excluded == ()
+    assert marked(dock.raster) == [5, 10]
+
+
+def test_without_suspicion_there_is_no_button(dock):
+    assert not dock.leave_out.isVisible()
+    assert marked(dock.raster) == []
+    assert "no stimulus?" not in dock.raster.axes.get_title(loc="right")

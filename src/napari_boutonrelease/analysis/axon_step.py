@@ -21,6 +21,7 @@ from ..quanta import (
     measure_gradient,
     measure_heterogeneity,
     measure_morans_i,
+    release_curves,
     release_log_ratio,
 )
 from .quantal_step import CONFIDENCE
@@ -145,10 +146,15 @@ def measure_axon(
         Source of the permutations.
     """
     p_release = axon.p_release[:, 0]
-    released, trials = effective_counts(axon.p_release_mass[:, 0], axon.p_release_grid)
+    released, trials, shared_variance = _comparable_counts(fit, axon)
     return AxonStatistics(
         heterogeneity=measure_heterogeneity(
-            released, trials, confidence=CONFIDENCE, n_simulations=settings.permutations, rng=rng
+            released,
+            trials,
+            confidence=CONFIDENCE,
+            n_simulations=settings.permutations,
+            rng=rng,
+            shared_variance=shared_variance,
         ),
         morans_i=measure_morans_i(
             p_release,
@@ -179,17 +185,40 @@ def measure_axon(
     )
 
 
-def suspected_trials(measured: Measured) -> tuple[int, ...]:
-    """Trials, from 1, of which at least one stimulus is suspected to have failed and which still count."""
+def _comparable_counts(
+    fit: AmplitudeFit, axon: AxonRelease
+) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
+    """Return releases and trials that tell as much as pulse 1 of each bouton, and the variance that all share."""
+    grid = axon.p_release_grid
+    curves = release_curves(
+        fit.amplitude[:, :, 0],
+        fit.amplitude_se[:, :, 0] * axon.noise_scale[:, None],
+        q=axon.axon_q,
+        q_log_sd=axon.axon_q_spread,
+        q_cv=axon.q_cv,
+        n_sites=axon.n_sites,
+        p_site=axon.p_site[:, 0],
+        p_release=grid,
+    )
+    released, trials = effective_counts(curves, grid)
+    a, b = released + 0.5, trials - released + 0.5
+    alone = a * b / ((a + b) ** 2 * (a + b + 1.0))
+    mass = axon.p_release_mass[:, 0]
+    mean = mass @ grid
+    return released, trials, np.maximum(mass @ grid**2 - mean**2 - alone, 0.0)
+
+
+def suspected_trials(measured: Measured, edits: HandEdits) -> tuple[int, ...]:
+    """Trials, from 1, of which at least one stimulus is suspected to have failed and which were not left out yet."""
     if measured.failed.excluded:
         return ()
-    left_out = {trial for trial, _ in measured.edits.excluded}
+    left_out = {trial for trial, _ in edits.excluded}
     trials = np.flatnonzero(measured.failed.suspected.any(axis=1)) + 1
     return tuple(int(trial) for trial in trials if int(trial) not in left_out)
 
 
 def exclude_suspected(edits: HandEdits, measured: Measured) -> HandEdits:
     """Leave the suspected trials out by hand, whole and with the reason, so that a person can take each back."""
-    for trial in suspected_trials(measured):
+    for trial in suspected_trials(measured, edits):
         edits = edits.exclude(trial, SUSPECTED)
     return edits

@@ -14,16 +14,19 @@ from psygnal import Signal
 
 from ..boutons import trace_axon
 from ..errors import InputError
-from .axon_step import exclude_suspected
+from .axon_step import exclude_suspected, suspected_trials
+from .axon_tables import trial_table
 from .hand_edits import HandEdits
 from .measured import Measured, Traced
 from .pipeline import Pipeline
 from .progress import StepProgress
+from .pulse_intervals import interval_table, recovery_table
 from .quantal_step import count_releases
 from .run import put_together
 from .settings import Settings
 from .summary import summarise
 from .tables import bouton_table, pulse_table, response_table, spontaneous_table
+from .trains import train_table
 
 if TYPE_CHECKING:
     from pathlib import Path
@@ -41,7 +44,12 @@ _TABLES = {
     "pulses": pulse_table,
     "responses": response_table,
     "spontaneous": spontaneous_table,
+    "trials": trial_table,
+    "trains": train_table,
+    "intervals": interval_table,
+    "recovery": recovery_table,
 }
+_WITH_CALLS = ("boutons", "pulses", "responses")  # these change with the threshold
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -83,6 +91,8 @@ class AnalysisModel:
         New footprints and traces; what is measured of them follows.
     measured_changed
         New results.
+    summary_changed
+        More is known of the whole axon; all else stays.
     selection_changed
         Another bouton, trial or pulse.
     """
@@ -92,6 +102,7 @@ class AnalysisModel:
     edits_changed = Signal()
     traced_changed = Signal()
     measured_changed = Signal()
+    summary_changed = Signal()
     selection_changed = Signal()
 
     def __init__(self) -> None:
@@ -103,6 +114,7 @@ class AnalysisModel:
         self._traced: Traced | None = None
         self._measured: Measured | None = None
         self._tables: dict[str, pd.DataFrame] = {}
+        self._summary: dict[str, Any] | None = None
         self._selection = Selection()
 
     # recording
@@ -135,7 +147,7 @@ class AnalysisModel:
         same_movie = self.movie is movie
         self._pipeline = Pipeline(movie, protocol, boutons=boutons, axon=axon)
         self._traced = None
-        self._measured = None
+        self._measured = self._summary = None
         self._tables = {}
         if edits is not None or not same_movie:
             self._edits, self._done, self._undone = edits or HandEdits(), [], []
@@ -144,7 +156,7 @@ class AnalysisModel:
 
     def close(self) -> None:
         """Let go of the recording, its edits and results."""
-        self._pipeline = self._traced = self._measured = None
+        self._pipeline = self._traced = self._measured = self._summary = None
         self._tables = {}
         self._edits, self._done, self._undone = HandEdits(), [], []
         self._selection = Selection()
@@ -200,7 +212,7 @@ class AnalysisModel:
         self._measured = replace(
             measured, counts=counts, settings=measured.settings.model_copy(update={"calls": calls})
         )
-        self._tables = {}
+        self._tables = {name: table for name, table in self._tables.items() if name not in _WITH_CALLS}
         self.settings_changed.emit()
         self.measured_changed.emit()
 
@@ -218,6 +230,11 @@ class AnalysisModel:
             self._undone = []
             self._edits = edits.following(self._edits)
             self.edits_changed.emit()
+
+    @property
+    def suspected_trials(self) -> tuple[int, ...]:
+        """Trials, from 1, in which a stimulus seems to have reached no bouton and which were not left out yet."""
+        return () if self._measured is None else suspected_trials(self._measured, self._edits)
 
     def exclude_suspected_trials(self) -> None:
         """Leave out the trials in which a stimulus seems to have reached no bouton; can be undone."""
@@ -294,18 +311,27 @@ class AnalysisModel:
             raise InputError("There is no recording yet: choose a movie and give the stimulus times first.")
         return Request(pipeline=self._pipeline, settings=self._settings, edits=self._edits)
 
-    def accept(self, request: Request, measured: Measured, *, tables: dict[str, pd.DataFrame] | None = None) -> bool:
+    def accept(
+        self,
+        request: Request,
+        measured: Measured,
+        *,
+        tables: dict[str, pd.DataFrame] | None = None,
+        summary: dict[str, Any] | None = None,
+    ) -> bool:
         """Take what was measured, unless another recording was opened meanwhile; tell whether it was taken.
 
-        Its `tables_of` may come with it, where they were made elsewhere; else each is made when it is asked for.
+        Its `tables_of` and `summarise` may come with it, where they were made elsewhere; else each is made when it is
+        asked for.
         """
         if request.pipeline is not self._pipeline:
             return False
-        self._take(measured, tables or {})
+        self._take(measured, tables or {}, summary)
         return True
 
-    def _take(self, measured: Measured, tables: dict[str, pd.DataFrame]) -> None:
+    def _take(self, measured: Measured, tables: dict[str, pd.DataFrame], summary: dict[str, Any] | None) -> None:
         self._measured = measured
+        self._summary = summary
         if self._traced is None or self._traced.places is not measured.places:
             self._traced = Traced(
                 settings=measured.settings,
@@ -323,7 +349,7 @@ class AnalysisModel:
         self.measured_changed.emit()
 
     def table(self, name: str) -> pd.DataFrame:
-        """Return one of the tables `boutons`, `pulses`, `responses`, `spontaneous`.
+        """Return a table: `boutons`, `pulses`, `responses`, `spontaneous`, `trials`, `trains`, `intervals`, `recovery`.
 
         Raises
         ------
@@ -346,7 +372,15 @@ class AnalysisModel:
         """
         if self._measured is None:
             raise InputError("Nothing was measured yet: run the analysis first.")
-        return summarise(self._measured)
+        if self._summary is None:  # a threshold changes nothing in it
+            self._summary = summarise(self._measured)
+        return self._summary
+
+    def accept_selection(self, measured: Measured, selection: dict[str, Any]) -> None:
+        """Take into the summary what the detection would have missed, unless boutons were measured anew meanwhile."""
+        if self._measured is not None and measured.release is self._measured.release:
+            self._summary = {**self.summary(), "selection": selection}
+            self.summary_changed.emit()
 
     def result(self) -> AnalysisResult:
         """Put together all tables, arrays and provenance, as the command line writes them.

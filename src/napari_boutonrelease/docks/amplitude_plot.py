@@ -18,6 +18,7 @@ from .shown_bouton import ShownBouton
 
 _GRIP_PX = 6.0
 _REACH_PX = 14.0
+_ABOVE = 0.98  # of the axes' height
 
 
 class AmplitudePlot(BoutonPlot):
@@ -41,7 +42,10 @@ class AmplitudePlot(BoutonPlot):
         self._pressed: tuple[float, float] | None = None
         self._dragging = False
         super().__init__(panel)
-        self.setToolTip("Drag the dashed line to move the threshold of all boutons. Click a point to select its trial.")
+        self.setToolTip(
+            "Drag the dashed line to move the threshold of all boutons. Click a point to select its trial. "
+            "▼: this stimulus seems to have reached no bouton."
+        )
         self.mpl_connect("button_press_event", self._press)
         self.mpl_connect("motion_notify_event", self._motion)
         self.mpl_connect("button_release_event", self._release)
@@ -58,12 +62,16 @@ class AmplitudePlot(BoutonPlot):
         (self._failed,) = axes.plot([], [], color=palette.null, **dots)
         (self._called,) = axes.plot([], [], color=palette.evoked, **dots)
         (self._left_out,) = axes.plot([], [], color=palette.muted, fillstyle="none", **dots)
+        (self._suspected,) = axes.plot(
+            [], [], color=palette.fit, linestyle="none", marker="v", markersize=4.5, clip_on=False, animated=True,
+            transform=axes.get_xaxis_transform(),
+        )  # fmt: skip
         (self._selected,) = axes.plot(
             [], [], color=palette.pulse_2, linestyle="none", marker="o", markersize=8.5, markeredgewidth=1.6,
             fillstyle="none", animated=True,
         )  # fmt: skip
         self._threshold = axes.axhline(0.0, color=palette.fit, linewidth=1.3, linestyle="--", animated=True)
-        self.moving = [self._failed, self._called, self._left_out, self._threshold, self._selected]
+        self.moving = [self._failed, self._called, self._left_out, self._threshold, self._suspected, self._selected]
         handles = [
             Line2D([], [], linestyle="none", marker="o", markersize=3.6, color=palette.evoked, label="called"),
             Line2D([], [], linestyle="none", marker="o", markersize=3.6, color=palette.null, label="not"),
@@ -99,6 +107,8 @@ class AmplitudePlot(BoutonPlot):
         amplitude, kept, called = shown.amplitude, shown.kept, shown.called == 1
         for line, mine in ((self._failed, kept & ~called), (self._called, kept & called), (self._left_out, ~kept)):
             line.set_data(trial[mine], amplitude[mine])
+        suspected = trial[shown.suspected]
+        self._suspected.set_data(suspected, np.full(suspected.size, _ABOVE))
         self._threshold.set_visible(bool(np.isfinite(shown.threshold)))
         self._threshold.set_ydata([shown.threshold, shown.threshold])
         self._selected.set_visible(shown.trial is not None)

@@ -13,6 +13,7 @@ from qtpy.QtCore import QEvent
 from qtpy.QtGui import QHelpEvent
 from qtpy.QtWidgets import QToolTip
 
+from ..reports.words import fixed
 from .bouton_plot import BoutonPlot
 from .live_plot import CLICK_PX
 from .panel import Panel
@@ -21,6 +22,12 @@ from .shown_bouton import ShownBouton
 
 _LEFT_OUT, _FAILED, _RELEASED = 0, 1, 2
 _NAME_PX = 11
+_ABOVE = 1.03  # of the axes' height
+
+
+def failure_words(shown: ShownBouton, trial: int) -> str:
+    """Say how probable it is that a stimulus reached no bouton."""
+    return f"reached no bouton with a probability of {fixed(shown.failure_p[trial])}"
 
 
 class RasterPlot(BoutonPlot):
@@ -48,6 +55,7 @@ class RasterPlot(BoutonPlot):
         """Tell whether the boutons, trials and pulse are the same."""
         return (
             before.measured.places is now.measured.places
+            and before.measured.failed is now.measured.failed
             and before.n_trials == now.n_trials
             and before.pulse == now.pulse
         )
@@ -62,11 +70,15 @@ class RasterPlot(BoutonPlot):
             [], [], linestyle="none", marker="x", color=palette.muted, markersize=2.6, markeredgewidth=0.6,
             animated=True,
         )  # fmt: skip
+        (self._suspected,) = axes.plot(
+            [], [], linestyle="none", marker="v", color=palette.fit, markersize=4.5, clip_on=False, animated=True,
+            transform=axes.get_xaxis_transform(),
+        )  # fmt: skip
         self._row = Rectangle((0, 0), 1, 1, fill=False, edgecolor=palette.ink, linewidth=0.8, animated=True)
         self._cell = Rectangle((0, 0), 1, 1, fill=False, edgecolor=palette.pulse_2, linewidth=1.8, animated=True)
         axes.add_patch(self._row)
         axes.add_patch(self._cell)
-        self.moving = [self._image, self._crosses, self._row, self._cell]
+        self.moving = [self._image, self._crosses, self._suspected, self._row, self._cell]
         for spine in axes.spines.values():
             spine.set_visible(False)
         axes.tick_params(length=0)
@@ -83,8 +95,9 @@ class RasterPlot(BoutonPlot):
         self._image.set_extent((0.5, shown.n_trials + 0.5, n - 0.5, -0.5))
         axes.set_xlim(0.5, shown.n_trials + 0.5)
         axes.set_ylim(n - 0.5, -0.5)
+        failed = "; ▼ no stimulus?" if shown.measured.failed.suspected.any() else ""
         axes.set_title(
-            f"calls at pulse {shown.pulse + 1}; × left out", loc="right", fontsize=6.5, pad=3,
+            f"calls at pulse {shown.pulse + 1}; × left out{failed}", loc="right", fontsize=6.5, pad=6 if failed else 3,
             color=axes.xaxis.label.get_color(),
         )  # fmt: skip
 
@@ -107,6 +120,8 @@ class RasterPlot(BoutonPlot):
         self._image.set_data(states)
         row, trial = np.nonzero(states == _LEFT_OUT)
         self._crosses.set_data(trial + 1, row)
+        suspected = np.flatnonzero(shown.suspected)
+        self._suspected.set_data(suspected + 1, np.full(suspected.size, _ABOVE))
         self._row.set_bounds(0.5, shown.row - 0.5, shown.n_trials, 1.0)
         self._cell.set_visible(shown.trial is not None)
         if shown.trial is not None:
@@ -140,7 +155,9 @@ class RasterPlot(BoutonPlot):
         amplitude = shown.measured.responses.amplitudes.amplitude[row, trial, shown.pulse]
         words = f"Bouton {shown.measured.places.bouton[row]}, trial {trial + 1}: {amplitude:.3f} dF/F"
         reason = shown.excluded.get(trial)
-        return words if reason is None else f"{words}; left out: {reason}"
+        if reason is not None:
+            return f"{words}; left out: {reason}"
+        return f"{words}; {failure_words(shown, trial)}" if shown.suspected[trial] else words
 
     def _cell_at(self, x_px: float, y_px: float) -> tuple[int, int] | None:
         if self.axes is None or self._shown is None:

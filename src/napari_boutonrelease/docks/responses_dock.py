@@ -19,7 +19,7 @@ from qtpy.QtWidgets import (
 )
 from superqt import QFlowLayout
 
-from ..reports.words import expected_count, fixed
+from ..reports.words import counted, expected_count, fixed
 from .amplitude_plot import AmplitudePlot
 from .layers import current_frame, show_frame
 from .panel import Panel, sentence_label
@@ -119,6 +119,12 @@ class ResponsesDock(Panel):
         self.exclude = QPushButton()
         self.exclude.setToolTip("Leave the trial out of every estimate, or take it back (key X). Can be undone.")
         self.exclude.clicked.connect(self.toggle_excluded)
+        self.leave_out = QPushButton()
+        self.leave_out.setToolTip(
+            "Leave out the trials marked ▼, in which a stimulus seems to have reached no bouton, with that reason. "
+            "Can be undone; each can be taken back."
+        )
+        self.leave_out.clicked.connect(self.model.exclude_suspected_trials)
         self.again = QPushButton("Analyse again")
         self.again.setToolTip("Bring all numbers up to date, where trials, boutons or settings have changed since")
         self.again.clicked.connect(self._analyse_again)
@@ -137,6 +143,7 @@ class ResponsesDock(Panel):
             (QLabel("Threshold"), self.threshold),
             (self.costs,),
             (self.reason, self.exclude),
+            (self.leave_out,),
             (self.again,),
         ):
             row.addWidget(_together(*group))
@@ -211,6 +218,9 @@ class ResponsesDock(Panel):
 
     def _show_state(self) -> None:
         self.again.setEnabled(self.model.stale)
+        n = len(self.model.suspected_trials)
+        self.leave_out.setText(f"Leave out {counted(n, 'suspected failure')}")
+        self.leave_out.parentWidget().setVisible(n > 0)
 
     def _follow_frame(self, *_: object) -> None:
         self.trace.show_frame(current_frame(self.viewer))

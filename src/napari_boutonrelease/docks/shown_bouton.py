@@ -72,6 +72,18 @@ class ShownBouton:
         return kept
 
     @property
+    def suspected(self) -> NDArray[np.bool_]:
+        """At which trials the selected pulse seems to have reached no bouton (trial); those left out do not count."""
+        suspected = self.measured.failed.suspected[:, self.pulse].copy()
+        suspected[list(self.excluded)] = False
+        return suspected
+
+    @property
+    def failure_p(self) -> NDArray[np.float64]:
+        """Probability that the selected pulse reached no bouton (trial)."""
+        return self.measured.failed.found.probability[:, self.pulse]
+
+    @property
     def threshold(self) -> float:
         """Amplitude above which a response is called, dF/F."""
         return float(self.measured.counts.calls.threshold[self.row])

@@ -17,6 +17,7 @@ from qtpy.QtWidgets import QHBoxLayout, QLabel, QProgressBar, QPushButton, QSize
 from ..analysis.model import AnalysisModel, Request, compute, tables_of
 from ..analysis.pipeline import Measured
 from ..analysis.progress import Progress
+from ..analysis.summary import summarise
 from ..errors import AnalysisWarning, InputError
 
 Work = Callable[[Progress], Any]
@@ -116,13 +117,15 @@ class Runner(QObject):
         """Compute what is asked for and give it to the model; then call `on_done` if the model took it."""
         after = None if on_done is None else _if_alive(on_done)
 
-        def work(progress: Progress) -> tuple[Measured, dict[str, Any]]:
+        def work(progress: Progress) -> tuple[Measured, dict[str, Any], dict[str, Any]]:
             measured = compute(request, progress=progress)
-            return measured, tables_of(measured)
+            return measured, tables_of(measured), summarise(measured)
 
-        def take(outcome: tuple[Measured, dict[str, Any]]) -> None:
-            model, (measured, tables) = self._model(), outcome
-            if model is not None and model.accept(request, measured, tables=tables) and after is not None:
+        def take(outcome: tuple[Measured, dict[str, Any], dict[str, Any]]) -> None:
+            model, (measured, tables, summary) = self._model(), outcome
+            if model is None or not model.accept(request, measured, tables=tables, summary=summary):
+                return
+            if after is not None:
                 after(measured)
 
         self.run(work, take, words="Analysing", kind=ANALYSIS)
