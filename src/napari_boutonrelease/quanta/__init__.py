@@ -68,6 +68,7 @@ from .pulse_pairs import PulsePair, ReleaseHistory, fisher_exact_p, measure_hist
 from .pulse_patterns import PulsePattern, pulse_interval_groups, pulse_patterns
 from .ratios import FiellerInterval, bootstrap_ratio_interval, fieller_interval, unbiased_ratio
 from .recovery import PairedMeans, PulseIntervalFit, fit_pulse_intervals, paired_means, ratio_as_means
+from .release_curves import release_curves
 from .release_information import effective_trials, expected_width
 from .release_moments import ReleaseVariation, release_cumulants, release_variance
 from .saturation import UndoneSaturation, saturate, undo_saturation
@@ -195,6 +196,7 @@ __all__ = [
     "ratio_interval",
     "ratio_of_estimates",
     "release_cumulants",
+    "release_curves",
     "release_log_ratio",
     "release_shares",
     "release_variance",

@@ -213,7 +213,13 @@ def fit_beta_binomial(released: ArrayLike, trials: ArrayLike) -> BetaBinomialFit
 
 
 def measure_heterogeneity(
-    released: ArrayLike, trials: ArrayLike, *, confidence: float, n_simulations: int, rng: np.random.Generator
+    released: ArrayLike,
+    trials: ArrayLike,
+    *,
+    confidence: float,
+    n_simulations: int,
+    rng: np.random.Generator,
+    shared_variance: ArrayLike | None = None,
 ) -> Heterogeneity:
     """Measure the true spread of p_release between boutons, test it, and shrink each bouton's estimate.
 
@@ -233,6 +239,9 @@ def measure_heterogeneity(
         Draws for the test and for each spread tried.
     rng : numpy.random.Generator
         Source of those draws.
+    shared_variance : (n_boutons,) array_like of float, optional
+        Variance of each p_release by what is not known of all boutons alike, and what counts therefore leave out. It
+        makes no spread between boutons, and widens their shrunken intervals alone. None, where left out.
 
     References
     ----------
@@ -253,7 +262,8 @@ def measure_heterogeneity(
             shrunken_hi=hi,
             n_boutons=int(k.size),
         )
-    shrunken[known], lo[known], hi[known] = _shrink(k, n, confidence=confidence)
+    shared = np.zeros(k_all.shape) if shared_variance is None else np.asarray(shared_variance, dtype=np.float64)
+    shrunken[known], lo[known], hi[known] = _shrink(k, n, shared[known], confidence=confidence)
     fit = fit_beta_binomial(k, n)
     if not 0.0 < fit.mean < 1.0:
         sd = Estimate(value=0.0, lo=np.nan, hi=np.nan, method="none: every trial of every bouton had the same outcome")
@@ -360,7 +370,7 @@ def _doubtful_mean(mean: float, n: Floats, *, sd: float, size: int, rng: np.rand
     return np.clip(rng.beta(*_shape(mean, rho), size=(size, 1)), _LEAST_RHO, _MOST_RHO)
 
 
-def _shrink(k: Floats, n: Floats, *, confidence: float) -> tuple[Floats, Floats, Floats]:
+def _shrink(k: Floats, n: Floats, shared: Floats, *, confidence: float) -> tuple[Floats, Floats, Floats]:
     """Posterior mean and interval of each bouton's p_release, integrated over the beta distributions."""
     means = (np.arange(_MEANS) + 0.5) / _MEANS
     shares = (np.arange(_SPREADS) + 0.5) / _SPREADS
@@ -370,7 +380,10 @@ def _shrink(k: Floats, n: Floats, *, confidence: float) -> tuple[Floats, Floats,
     weight = np.exp(fits - fits.max())
     kept = weight > _NEGLIGIBLE * weight.max()
     a, b, weight = a[kept], b[kept], weight[kept] / weight[kept].sum()
-    value = weight @ ((a + k) / (a + b + n))
+    each = (a + k) / (a + b + n)
+    value = weight @ each
+    variance = weight @ (each * (1.0 - each) / (a + b + n + 1.0) + each**2) - value**2
+    wider = np.sqrt(1.0 + shared / variance)
     angle = (np.arange(_ANGLES) + 0.5) * (np.pi / 2 / _ANGLES)
     log_p, log_not = 2.0 * np.log(np.sin(angle)), 2.0 * np.log(np.cos(angle))
     tail = 0.5 * (1.0 - confidence)
@@ -382,5 +395,6 @@ def _shrink(k: Floats, n: Floats, *, confidence: float) -> tuple[Floats, Floats,
         density = (above - 0.5) * log_p + (below - 0.5) * log_not - betaln(above, below)
         mass = weight @ np.exp(density)
         cumulative = np.concatenate([[0.0], np.cumsum(mass)])
-        lo[i], hi[i] = np.sin(np.interp([tail, 1.0 - tail], cumulative / cumulative[-1], edges)) ** 2
+        ends, middle = np.interp([tail, 1.0 - tail], cumulative / cumulative[-1], edges), np.arcsin(np.sqrt(value[i]))
+        lo[i], hi[i] = np.sin(np.clip(middle + wider[i] * (ends - middle), 0.0, np.pi / 2)) ** 2
     return value, lo, hi
