@@ -14,6 +14,7 @@ from napari_boutonrelease.analysis.columns import TABLES
 from napari_boutonrelease.analysis.results import AnalysisResult
 from napari_boutonrelease.analysis.settings import Settings
 from napari_boutonrelease.flags import join_flags
+from napari_boutonrelease.quanta import wilson_interval
 from napari_boutonrelease.reports import write_result
 from napari_boutonrelease.response_shape import ResponseShape
 
@@ -454,6 +455,39 @@ def result() -> AnalysisResult:
 def small_result() -> AnalysisResult:
     """Few boutons and trials, quick to draw."""
     return make_result(seed=2, boutons=2, trials=8)
+
+
+@pytest.fixture(scope="session")
+def selected_result() -> AnalysisResult:
+    """Simulated boutons were planted: which ones would have been missed."""
+    full = make_result(seed=6, boutons=5, trials=10)
+    p = np.array([0.005, 0.01, 0.02, 0.045, 0.1, 0.2, 0.45, 1.0])
+    found = np.array([2, 7, 20, 90, 170, 195, 200, 200])
+    low, high = wilson_interval(found, np.full(p.size, 200), confidence=0.95)
+    rows = {
+        "p_release": p,
+        "planted": 200,
+        "found": found,
+        "found_share": found / 200,
+        "found_share_lo": low,
+        "found_share_hi": high,
+        "found_share_fit": found / 200,
+    }
+    selection = {
+        "p_found_half": 0.05,
+        "p_found_most": 0.18,
+        "smallest_p_release": 0.02,
+        "boutons": 4,
+        "p_release_found": 0.41,
+        "p_release": 0.33,
+        "p_release_lo": 0.2,
+        "p_release_hi": 0.5,
+        "missed_per_found": 0.4,
+        "missed_per_found_lo": 0.1,
+        "missed_per_found_hi": 1.2,
+        "method": "weights 1/D over beta-distributed p_release",
+    }
+    return replace(full, detection=pd.DataFrame(rows), summary={**full.summary, "selection": selection})
 
 
 @pytest.fixture(scope="session")

@@ -117,7 +117,9 @@ def check_layout(figure, *, dpi=300):
     return " ".join(text.get_text() for text, _ in extents)
 
 
-@pytest.mark.parametrize("name", ["result", "train_result", "quiet_result", "blank_result", "empty_result"])
+@pytest.mark.parametrize(
+    "name", ["result", "train_result", "selected_result", "quiet_result", "blank_result", "empty_result"]
+)
 def test_no_text_on_a_page_is_cut_or_covered(request, name):
     for page in pages(request.getfixturevalue(name)):
         check_layout(page())
@@ -250,6 +252,23 @@ def test_trains_and_pulse_intervals_have_figures_where_there_are_any(result, tra
     assert "u 0.40 and recovery 300 ms" in said
     assert "pool 1.36 dF/F (95 %: 1.09 to 1.77)" in said
     assert "depression 0.60, 200 ms" in check_layout(listing["pulse_intervals"](), dpi=150)
+
+
+def test_missed_boutons_have_a_figure_and_a_page_where_any_were_simulated(result, selected_result):
+    assert "detection" not in figures_of(result)
+    words = " ".join(text.get_text() for text in figures_of(selected_result)["detection"]().findobj(Text))
+    assert "50 % at 0.05" in words
+    assert "200 simulated boutons" in words
+    assert "below 0.02" in words
+    assert len(pages(selected_result)) == len(pages(replace(selected_result, detection=result.detection))) + 1
+
+
+def test_a_detection_that_misses_nearly_all_is_drawn_without_a_mean(selected_result):
+    table = selected_result.detection.assign(found_share=0.05, found_share_fit=0.05, found=10)
+    selection = {"boutons": 1, "method": "none: even boutons that always release are missed"}
+    blind = replace(selected_result, detection=table, summary={**selected_result.summary, "selection": selection})
+    words = " ".join(text.get_text() for text in figures_of(blind)["detection"]().findobj(Text))
+    assert "No corrected mean: even boutons that always release are missed." in words.replace("\n", " ")
 
 
 def test_trains_that_say_nothing_are_drawn_as_words(train_result):

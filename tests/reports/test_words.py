@@ -5,7 +5,13 @@ from dataclasses import replace
 import pytest
 
 from napari_boutonrelease.reports.facts import fact, number
-from napari_boutonrelease.reports.words import flag_holders, headlines, recording_facts, recording_line
+from napari_boutonrelease.reports.words import (
+    flag_holders,
+    headlines,
+    recording_facts,
+    recording_line,
+    selection_sentences,
+)
 
 
 def test_the_main_results_are_said_with_their_intervals(result):
@@ -32,6 +38,17 @@ def test_verdicts_follow_the_numbers(result, group, change, expected):
     changed = {**result.summary, group: {**result.summary[group], **change}}
     assert expected in " ".join(headlines(replace(result, summary=changed)))
     assert expected not in " ".join(headlines(result))
+
+
+def test_the_mean_corrected_for_missed_boutons_says_of_which_it_speaks(result, selected_result):
+    said = " ".join(headlines(selected_result))
+    assert "Corrected for boutons that were missed, mean p_release is 0.33 (95 % interval 0.20 to 0.50)" in said
+    assert "above 0.020" in said
+    assert "silent ones among them" in said
+    assert "Corrected" not in " ".join(headlines(result))
+    one = " ".join(selection_sentences(selected_result))
+    assert "50 % of boutons are found with p_release 0.050, and 95 % with 0.18" in one
+    assert "0.40 (95 % interval 0.10 to 1.20) are expected to have been missed (4 boutons found" in one
 
 
 def test_trains_and_pulse_intervals_are_said_where_there_are_any(result, train_result):
