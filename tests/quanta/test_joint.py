@@ -52,6 +52,27 @@ def test_sites_size_and_probability_are_recovered(calcium):
     assert found.n_trials == (150, 150)
 
 
+def test_the_ratio_of_two_vesicles_is_known_better_than_either():
+    rng = np.random.default_rng(8)
+    # four sites at a middling release probability: n_sites, and with it either q, stays open; their ratio does not
+    found = fit([record(rng, n_sites=4, p_site=(0.4, 0.4), q=q) for q in (0.4, 0.3)], n_max=8)
+    one, other = found.q_by_recording
+    assert len(found.n_set) > 1
+    assert found.q_ratio.value == pytest.approx(other.value / one.value)
+    assert found.q_ratio.lo < 0.75 < found.q_ratio.hi
+    width = np.log(found.q_ratio.hi / found.q_ratio.lo)
+    apart = np.hypot(np.log(other.hi / other.lo), np.log(one.hi / one.lo))
+    assert width < 0.85 * apart
+
+
+def test_the_interval_of_the_ratio_ends_where_its_test_says():
+    rng = np.random.default_rng(9)
+    for _ in range(4):
+        found = fit([record(rng, n_sites=1, p_site=(0.5,), q=q, trials=60) for q in (0.4, 0.33)], n_max=1)
+        excluded = not found.q_ratio.lo <= 1.0 <= found.q_ratio.hi
+        assert excluded == (found.q_changed_p < 0.05)
+
+
 def test_a_change_of_release_is_told_from_one_of_vesicle_size(calcium):
     _, found = calcium
     assert found.changed == "p"
@@ -69,6 +90,7 @@ def test_a_change_of_release_is_told_from_one_of_vesicle_size(calcium):
     assert not smaller.shared_q
     one, other = smaller.q_by_recording
     assert one.lo > other.hi
+    assert smaller.q_ratio.lo < 0.5 < smaller.q_ratio.hi < 1.0
     both = fit([record(rng, n_sites=2, p_site=(p,), q=q, trials=200) for p, q in ((0.15, 0.8), (0.8, 0.4))])
     assert both.changed == "both"
     assert "neither" in both.reason

@@ -97,7 +97,6 @@ def changes_table(
             p_release, ppr = (
                 [estimate_of(recording, column, there) for recording, there in at] for column in ("p_release", "ppr")
             )
-            q = fit.q_by_recording  # not the axon's, towards which each recording's own analysis leans
             cv2 = one.inverse_cv2.get((a, b))
             rows.append(
                 {
@@ -106,7 +105,7 @@ def changes_table(
                     "recording_b": recordings[b].name,
                     **limits("p_release_change", difference_of_estimates(p_release[1], p_release[0])),
                     "p_changed_p": fit.p_changed_p,
-                    **limits("q_ratio", ratio_of_estimates(q[1], q[0])),
+                    **limits("q_ratio", fit.q_ratio),  # each own analysis leans towards the axon's q
                     "q_changed_p": fit.q_changed_p,
                     **limits("ppr_ratio", ratio_of_estimates(ppr[1], ppr[0])),
                     **({} if cv2 is None else limits("amplitude_ratio", cv2.mean_ratio)),

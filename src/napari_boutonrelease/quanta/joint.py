@@ -23,7 +23,7 @@ from ..errors import InputError
 from .intervals import Estimate
 from .joint_data import JointData, read_cells
 from .joint_likelihood import p_bounds
-from .joint_summits import CHANGES, Change, find_reach, find_summits, silent_objective
+from .joint_summits import CHANGES, Change, find_q_ratio, find_reach, find_summits, silent_objective
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -41,6 +41,7 @@ _LOW_SIGNAL = 2.0
 _SURE = 0.01
 _METHOD = "joint profile likelihood"
 _MISSING = Estimate(value=np.nan, lo=np.nan, hi=np.nan, method="none: no amplitude")
+_ONE_RECORDING = Estimate(value=np.nan, lo=np.nan, hi=np.nan, method="none: one recording")
 _NO_RELEASE = Estimate(value=np.nan, lo=np.nan, hi=np.nan, method="none: no release told apart from noise")
 
 
@@ -65,6 +66,9 @@ class JointFit:
         Size of one vesicle (dF/F), the same in all recordings.
     q_by_recording : tuple of Estimate
         The same where each recording has its own; NaN without amplitudes.
+    q_ratio : Estimate
+        q of the last recording that has amplitudes over that of the first, where each has its own and n_sites is the
+        same in all. NaN for one recording.
     q_cv : float
         Coefficient of variation of a vesicle's size.
     p_site, p_release : tuple of tuple of Estimate
@@ -104,6 +108,7 @@ class JointFit:
     n_objective: Floats
     q: Estimate
     q_by_recording: tuple[Estimate, ...]
+    q_ratio: Estimate
     q_cv: float
     p_site: tuple[tuple[Estimate, ...], ...]
     p_release: tuple[tuple[Estimate, ...], ...]
@@ -222,6 +227,7 @@ def fit_joint(
         n_objective=base.objective - base.best,
         q=q,
         q_by_recording=tuple(q_by_recording),
+        q_ratio=_size_ratio(cells, summits["both"], margin=margin, silent=silent),
         q_cv=np.nan if silent else float(np.exp(at[cells.q_cv])),
         p_site=p_site,
         p_release=p_release,
@@ -301,6 +307,15 @@ def _sizes(cells: Cells, summits: Summits, *, margin: float, silent: bool) -> li
     ]
 
 
+def _size_ratio(cells: Cells, summits: Summits, *, margin: float, silent: bool) -> Estimate:
+    """Vesicle size of the last recording over that of the first."""
+    if silent or cells.n_recordings == 1:
+        return _NO_RELEASE if silent else _ONE_RECORDING
+    value = float(np.exp(summits.at_best[cells.q[-1]] - summits.at_best[cells.q[0]]))
+    lo, hi = find_q_ratio(cells, summits, n_set=summits.n_set(margin), margin=margin)
+    return Estimate(value=value, lo=float(np.exp(lo)), hi=float(np.exp(hi)), method=_METHOD)
+
+
 def _probabilities(
     recordings: Sequence[JointData],
     cells: Cells,
@@ -344,6 +359,7 @@ def _no_fit(recordings: Sequence[JointData], n_trials: tuple[int, ...], *, n_max
         n_objective=np.full(n_max, nan),
         q=_MISSING,
         q_by_recording=(_MISSING,) * len(recordings),
+        q_ratio=_MISSING,
         q_cv=nan,
         p_site=empty,
         p_release=empty,

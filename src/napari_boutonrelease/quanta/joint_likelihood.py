@@ -26,9 +26,6 @@ _LEAST = 1e-300
 _EDGE = 1e-7  # p_site stays this far from 0 and 1
 _MAX_STEPS = 60
 _TOLERANCE = 1e-3  # nats that one more step promises
-_PROFILE_STEPS = 8
-_Z_TOLERANCE = 0.03  # of the signed root of the deviance, of which 95 % intervals span 1.96
-_MAX_LOOKS = 14
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -126,6 +123,7 @@ def maximise(
     *,
     n_sites: int,
     held: Bools | None = None,
+    offset: Floats | None = None,
     max_steps: int = _MAX_STEPS,
 ) -> Climbs:
     """Climb from `start` (B, K) to a maximum of each problem.
@@ -145,6 +143,8 @@ def maximise(
         Number of sites of all problems.
     held : (B, K) ndarray of bool, optional
         Parameters that do not move, and may stand beyond their bounds; none where left out.
+    offset : (B, K) ndarray, optional
+        How far each tied parameter stays above its leader, 0 for leaders; 0 for all where left out.
     max_steps : int
         Looks at the likelihood, at most.
     """
@@ -155,8 +155,9 @@ def maximise(
     lower, upper = np.tile(cells.lower, (n_problems, 1)), np.tile(cells.upper, (n_problems, 1))
     fixed = np.zeros_like(free) if held is None else held
     theta = np.where(fixed, start, np.clip(start, lower, upper))
-    theta = np.take_along_axis(theta, leader, axis=1)
-    value, gradient, information = _tied(cells, theta, leader, n_sites=n_sites)
+    above = np.zeros_like(theta) if offset is None else offset
+    theta = np.take_along_axis(theta, leader, axis=1) + above
+    value, gradient, information = look_tied(cells, theta, leader, n_sites=n_sites)
     damping = np.full(n_problems, 1e-2)
     active = np.arange(n_problems)
     for _ in range(max_steps):
@@ -174,8 +175,8 @@ def maximise(
         if not active.size:
             break
         trial = np.where(free[active], np.clip(theta[active] + step, lower[active], upper[active]), theta[active])
-        trial = np.take_along_axis(trial, leader[active], axis=1)
-        new_value, new_gradient, new_information = _tied(cells, trial, leader[active], n_sites=n_sites)
+        trial = np.take_along_axis(trial, leader[active], axis=1) + above[active]
+        new_value, new_gradient, new_information = look_tied(cells, trial, leader[active], n_sites=n_sites)
         gained = new_value >= value[active]
         won, lost = active[gained], active[~gained]
         theta[won], value[won] = trial[gained], new_value[gained]
@@ -184,85 +185,6 @@ def maximise(
         damping[lost] = np.maximum(10.0 * damping[lost], 0.1)
         active = active[damping[active] < 1e7]  # else no step is small enough to gain: arrived
     return Climbs(theta, value)
-
-
-def profile_ends(
-    cells: Cells, best: Floats, leader: Ints, *, n_sites: int, parameter: Ints, side: Floats, level: float
-) -> Floats:
-    """Find how far each parameter can be moved before the others cannot keep the log-likelihood above `level`.
-
-    Parameters
-    ----------
-    cells : Cells
-        Amplitudes.
-    best : (K,) ndarray
-        The maximum.
-    leader : (K,) ndarray of int
-        Ties.
-    n_sites : int
-        Number of sites.
-    parameter, side : (B,) ndarray
-        Leaders to move, and whether down (-1) or up (+1).
-    level : float
-        Penalised log-likelihood, at most that of the maximum.
-
-    Returns
-    -------
-    (B,) ndarray
-        Where the level is reached, or the parameter's bound.
-    """
-    rows = np.arange(len(parameter))
-    ties = np.tile(leader, (rows.size, 1))
-    held = np.zeros(ties.shape, dtype=np.bool_)
-    held[rows, parameter] = True
-    value, _, information = _tied(cells, best[None, :], leader[None, :], n_sites=n_sites)
-    free = leader == np.arange(leader.size)
-    square = information[0][np.ix_(free, free)]
-    errors = np.zeros(leader.size)
-    errors[free] = np.sqrt(np.diag(np.linalg.pinv(square, hermitian=True)).clip(1e-12))
-    target = float(np.sqrt(2.0 * max(float(value[0]) - level, 0.0)))
-    # p_site bends at its ends; its arcsine angle does not, and the root of the deviance is nearly linear in it
-    is_p = parameter >= cells.p_site[0]
-    low, high = _bend(cells.lower[parameter], is_p), _bend(cells.upper[parameter], is_p)
-    centre = _bend(best[parameter], is_p)
-    bend = np.where(is_p, 2.0 * np.sqrt(np.clip(best[parameter] * (1 - best[parameter]), 1e-3, None)), 1.0)
-    step = np.clip(target * errors[parameter] / bend, 0.02, 0.5)
-    bound = np.where(side > 0, high, low)
-    inside, inside_root = centre.copy(), np.zeros(rows.size)
-    outside, outside_root = np.full(rows.size, np.nan), np.full(rows.size, np.nan)
-    theta = np.tile(best, (rows.size, 1))
-    ends = bound.copy()
-    at = centre + side * step
-    active = rows[np.abs(bound - centre) > 0]
-    for _ in range(_MAX_LOOKS if target > 0 else 0):
-        at = np.clip(at, low, high)
-        start = theta[active]
-        start[np.arange(active.size), parameter[active]] = _unbend(at[active], is_p[active])
-        found = maximise(cells, start, ties[active], n_sites=n_sites, held=held[active], max_steps=_PROFILE_STEPS)
-        root = np.sqrt(2.0 * np.maximum(float(value[0]) - found.objective, 0.0))
-        within = root <= target
-        theta[active[within]] = found.theta[within]
-        inside[active[within]], inside_root[active[within]] = at[active[within]], root[within]
-        outside[active[~within]], outside_root[active[~within]] = at[active[~within]], root[~within]
-        ends[active] = at[active]
-        done = (np.abs(root - target) < _Z_TOLERANCE) | (within & (at[active] == bound[active]))
-        active = active[~done]
-        if not active.size:
-            break
-        with np.errstate(invalid="ignore", divide="ignore"):
-            share = np.clip((target - inside_root) / (outside_root - inside_root), 0.08, 0.92)
-            further = np.clip(target / np.maximum(inside_root, 1e-3) - 1.0, 0.1, 2.0) * np.abs(inside - centre)
-        further = np.maximum(further, 0.3 * step)
-        at = np.where(np.isnan(outside), inside + side * further, inside + share * (outside - inside))
-    return np.where(target > 0, _unbend(ends, is_p), best[parameter])
-
-
-def _bend(values: Floats, is_p: Bools) -> Floats:
-    return np.where(is_p, np.arcsin(np.sqrt(np.clip(values, 0.0, 1.0))), values)
-
-
-def _unbend(values: Floats, is_p: Bools) -> Floats:
-    return np.where(is_p, np.sin(values) ** 2, values)
 
 
 def _step(
@@ -284,8 +206,8 @@ def _step(
     return step, promised
 
 
-def _tied(cells: Cells, theta: Floats, leader: Ints, *, n_sites: int) -> tuple[Floats, Floats, Floats]:
-    """Value, gradient and information by the leaders; those of the tied are 0."""
+def look_tied(cells: Cells, theta: Floats, leader: Ints, *, n_sites: int) -> tuple[Floats, Floats, Floats]:
+    """Return penalised log-likelihood, gradient and information by the leaders; those of the tied are 0."""
     value, gradient, information = _look(cells, theta, n_sites=n_sites)
     tie = (leader[:, :, None] == np.arange(theta.shape[1])).astype(np.float64)
     across = tie.transpose(0, 2, 1)

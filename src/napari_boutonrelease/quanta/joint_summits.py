@@ -7,7 +7,8 @@ from typing import TYPE_CHECKING, Literal
 
 import numpy as np
 
-from .joint_likelihood import maximise, profile_ends
+from .joint_likelihood import maximise
+from .joint_profiles import profile_difference, profile_ends
 from .joint_starts import Lattice
 
 if TYPE_CHECKING:
@@ -144,6 +145,25 @@ def find_reach(
             level=summits.best - margin + float(np.log(n)),
         ).reshape(2, -1)
     return ends[:, 0], ends[:, 1]
+
+
+def find_q_ratio(cells: Cells, summits: Summits, *, n_set: tuple[int, ...], margin: float) -> tuple[float, float]:
+    """Find the interval of the logarithm of the last recording's q over that of the first, over possible n_sites.
+
+    Both q lean on n_sites and q_cv alike, so that their ratio is known better than their own intervals tell.
+    """
+    ends = [
+        profile_difference(
+            cells,
+            summits.theta[n - 1],
+            summits.leader,
+            n_sites=n,
+            parameters=(int(cells.q[-1]), int(cells.q[0])),
+            level=summits.best - margin + float(np.log(n)),
+        )
+        for n in n_set
+    ]
+    return float(min(lo for lo, _ in ends)), float(max(hi for _, hi in ends))
 
 
 def silent_objective(cells: Cells) -> float:
