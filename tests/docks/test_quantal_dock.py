@@ -17,15 +17,14 @@ N_TRIALS = 24
 SILENT, BUSY = 1, 2  # ids
 
 
-def record(simulate, quick, pulses, folder):
+def record(simulate, quick, folder, **changes):
     """A silent and a busy bouton, at given places."""
     boutons = (
         {"y_px": 16.0, "x_px": x, "n_sites": 3, "p_site": p, "q_dff": 0.5, "f0_photons": 30.0}
         for x, p in ((14.0, 0.0), (40.0, 0.35))
     )
-    movie, protocol = simulate(
-        *boutons, seed=5, height_px=32, width_px=56, trials=N_TRIALS, trial_interval_s=0.8, pulses=pulses
-    )
+    chosen = {"seed": 5, "height_px": 32, "width_px": 56, "trials": N_TRIALS, "trial_interval_s": 0.8} | changes
+    movie, protocol = simulate(*boutons, **chosen)
     places = folder / "places.csv"
     places.write_text("y_px,x_px\n16,14\n16,40\n")
     model = AnalysisModel()
@@ -37,12 +36,24 @@ def record(simulate, quick, pulses, folder):
 
 @pytest.fixture(scope="module")
 def train(simulate, quick, tmp_path_factory):
-    return record(simulate, quick, 3, tmp_path_factory.mktemp("train"))
+    return record(simulate, quick, tmp_path_factory.mktemp("train"), pulses=3)
 
 
 @pytest.fixture(scope="module")
 def single(simulate, quick, tmp_path_factory):
-    return record(simulate, quick, 1, tmp_path_factory.mktemp("single"))
+    return record(simulate, quick, tmp_path_factory.mktemp("single"), pulses=1)
+
+
+@pytest.fixture(scope="module")
+def long_train(simulate, quick, tmp_path_factory):
+    return record(simulate, quick, tmp_path_factory.mktemp("long"), pulses=6, trials=16, recovery_s=0.3)
+
+
+@pytest.fixture(scope="module")
+def two_intervals(simulate, quick, tmp_path_factory):
+    """Pairs of pulses, 40 or 160 ms apart in turn."""
+    times = tuple((0.5 + 0.7 * k, 0.5 + 0.7 * k + (0.04, 0.16)[k % 2]) for k in range(N_TRIALS))
+    return record(simulate, quick, tmp_path_factory.mktemp("intervals"), pulse_table_s=times)
 
 
 def fill(model, recording):
@@ -191,6 +202,78 @@ def test_train_follows_the_pulse_number(show, train):
         drawn = next(line for line in plot.axes.lines if len(line.get_xdata()) == 3)
         np.testing.assert_array_equal(drawn.get_xdata(), [1, 2, 3])
         np.testing.assert_allclose(drawn.get_ydata(), mine[column])
+
+
+def drawn(plot, *, marker="o"):
+    line = next(line for line in plot.axes.lines if line.get_marker() == marker)
+    return np.asarray(line.get_xdata()), np.asarray(line.get_ydata())
+
+
+def tabs(dock):
+    return [dock.tables.tabText(k) for k in range(dock.tables.count()) if dock.tables.isTabVisible(k)]
+
+
+def test_three_pulses_are_too_few_for_a_pool(show, train):
+    dock = show(train)
+    assert not dock.cumulative.isVisible()
+    assert not dock.intervals.isVisible()
+    assert tabs(dock) == ["Estimates", "Pulse pair"]
+
+
+def test_train_shows_pool_and_model_of_its_table(show, long_train):
+    dock = show(long_train)
+    dock.resize(1346, 520)
+    dock.bouton.setCurrentIndex(BUSY - 1)
+    settle(dock)
+    assert dock.cumulative.isVisible()
+    pulses, trains = dock.model.table("pulses"), dock.model.table("trains")
+    row = trains[trains["bouton"] == BUSY].iloc[0]
+    at, total = drawn(dock.cumulative)
+    np.testing.assert_array_equal(at, np.arange(1, 7))
+    np.testing.assert_allclose(total, pulses[pulses["bouton"] == BUSY]["cumulative_mean"])
+    _, mean = drawn(dock.amplitude_train)
+    np.testing.assert_allclose(mean, pulses[pulses["bouton"] == BUSY]["amplitude_mean"])
+    curve = dock.amplitude_train._model.get_ydata()
+    assert len(curve) == 6
+    assert curve[0] == pytest.approx(row["u"] * row["resources"])  # the first pulse uses its share
+    table = dict(rows(dock.train_table))
+    assert table["share that pulse 1 uses, u"].startswith(f"{row['u']:.2f}")
+    assert tabs(dock) == ["Estimates", "Pulse pair", "Train"]
+    assert np.isfinite(row["pool"])
+    _, pool = drawn(dock.cumulative, marker="D")
+    assert pool == pytest.approx(row["pool"])
+    assert f"pool {row['pool']:.2f}" in dock.cumulative.axes.get_title(loc="right")
+
+    dock.bouton.setCurrentIndex(SILENT - 1)
+    settle(dock)
+    silent = trains[trains["bouton"] == SILENT].iloc[0]
+    assert len(dock.amplitude_train._model.get_ydata()) == (6 if np.isfinite(silent["u"]) else 0)
+    assert dict(rows(dock.train_table))["note"] == silent["note"]
+
+
+def test_ratio_against_the_pulse_interval(show, two_intervals):
+    dock = show(two_intervals)
+    dock.bouton.setCurrentIndex(BUSY - 1)
+    settle(dock)
+    assert dock.intervals.isVisible()
+    table = dock.model.table("intervals")
+    mine = table[table["bouton"] == BUSY]
+    gap, ratio = drawn(dock.intervals)
+    np.testing.assert_allclose(gap, [0.04, 0.16], atol=1e-6)
+    np.testing.assert_allclose(ratio, mine["ppr"])
+    assert tabs(dock) == ["Estimates", "Pulse pair", "Intervals"]
+    recovery = dock.model.table("recovery")
+    assert dict(rows(dock.interval_table))["time course"] == recovery[recovery["bouton"] == BUSY]["model"].iloc[0]
+    dock.bouton.setCurrentIndex(SILENT - 1)
+    settle(dock)
+    assert "no ratio" in dock.intervals.figure.texts[0].get_text() or np.isfinite(drawn(dock.intervals)[1]).any()
+
+
+def test_table_of_estimates_takes_what_is_left_of_its_row(show, single):
+    dock = show(single)  # words, histogram, sites, table
+    dock.resize(600, 460)
+    settle(dock)
+    assert dock.tables.geometry().right() == dock.content.width() - 1
 
 
 def test_single_pulses_leave_no_room_for_pairs(show, single):

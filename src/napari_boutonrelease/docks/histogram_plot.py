@@ -73,7 +73,7 @@ class HistogramPlot(BoutonPlot):
         axes.set_ylim(0.0, 1.08 * float(max(heights)))
         axes.set_xlim(float(found.edges[0]), float(found.edges[-1]))
         axes.locator_params(axis="y", nbins=4, integer=True)
-        axes.set_xlabel(f"amplitude of pulse {shown.pulse + 1} (dF/F)")
+        axes.set_xlabel(f"pulse {shown.pulse + 1} (dF/F)")
 
     def place(self) -> None:
         """Put the threshold in place."""

@@ -15,14 +15,16 @@ class PlotGrid(QWidget):
     Parameters
     ----------
     plots : sequence of (QWidget, int)
-        Each with its share of the width where all stand in one row.
+        Each with its share of the width where all stand in one row. The last one takes what is left of its row.
     least_px : int
         Width that a column needs on average.
+    last_px : int
+        Width that the last plot needs for all to stand in one row.
     """
 
-    def __init__(self, plots: Sequence[tuple[QWidget, int]], *, least_px: int) -> None:
+    def __init__(self, plots: Sequence[tuple[QWidget, int]], *, least_px: int, last_px: int = 0) -> None:
         super().__init__()
-        self._least_px = least_px
+        self._least_px, self._last_px = least_px, last_px
         self._plots = tuple(plots)
         self._left_out: set[QWidget] = set()
         self._grid = QGridLayout(self)
@@ -56,7 +58,7 @@ class PlotGrid(QWidget):
     def _arrange(self) -> None:
         shown = [(plot, share) for plot, share in self._plots if plot not in self._left_out]
         n = len(shown)
-        columns = max(next((one for one in (n, -(-n // 2), -(-n // 3)) if self.width() >= one * self._least_px), 1), 1)
+        columns = max(next((one for one in (n, -(-n // 2), -(-n // 3)) if self._has_room(one, shown)), 1), 1)
         if (n, columns) == self._now:
             return
         self._now = (n, columns)
@@ -68,7 +70,14 @@ class PlotGrid(QWidget):
             plot.hide()
         for place, (plot, share) in enumerate(shown):
             row, column = divmod(place, columns)
-            self._grid.addWidget(plot, row, column)
+            free = columns - column if place == n - 1 else 1  # the last one takes what is left of its row
+            self._grid.addWidget(plot, row, column, 1, free)
             self._grid.setColumnStretch(column, share if columns == n else 1)
             plot.show()
         self.updateGeometry()  # fewer rows need less height
+
+    def _has_room(self, columns: int, shown: Sequence[tuple[QWidget, int]]) -> bool:
+        shares = [share for _, share in shown]
+        last_px = self.width() * shares[-1] / sum(shares) if shares else 0
+        enough = columns < len(shown) or last_px >= self._last_px
+        return enough and self.width() >= columns * self._least_px

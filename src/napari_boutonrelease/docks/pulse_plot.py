@@ -1,16 +1,14 @@
-"""Pulse 2 against pulse 1, trial by trial, and a train pulse by pulse."""
+"""Pulse 2 against pulse 1, trial by trial."""
 
 from __future__ import annotations
 
-from typing import Any, Literal
+from typing import Any
 
 import numpy as np
-import pandas as pd
 from matplotlib.axes import Axes
 
 from ..reports.words import with_limits
 from .bouton_plot import BoutonPlot
-from .live_plot import LivePlot
 from .panel import Panel
 from .plots import Palette
 from .shown_bouton import ShownBouton
@@ -102,65 +100,3 @@ class PulsePairPlot(BoutonPlot):
         )
         for text, words in zip(self._corners, counts, strict=True):
             text.set_text(words)
-
-
-class TrainPlot(LivePlot):
-    """Mean amplitude, or p_release, against the pulse number.
-
-    Parameters
-    ----------
-    panel : Panel
-        The dock.
-    quantity : str
-        Which of the two.
-    """
-
-    margins_px = (54.0, 8.0, 10.0, 34.0)
-
-    def __init__(self, panel: Panel, *, quantity: Literal["amplitude", "p_release"]) -> None:
-        self._quantity = quantity
-        self._pulses: pd.DataFrame | None = None
-        super().__init__(panel, height_px=90)
-
-    def show_pulses(self, pulses: pd.DataFrame | None) -> None:
-        """Show the rows of one bouton of the table of pulses."""
-        self._pulses = pulses
-        self.refill()
-
-    def make(self, axes: Axes, palette: Palette) -> None:
-        """Make the artists."""
-        colour, marker = (palette.evoked, "o") if self._quantity == "amplitude" else (palette.fit, "s")
-        (self._bars,) = axes.plot([], [], color=colour, linewidth=1.0)
-        (self._line,) = axes.plot([], [], color=colour, linewidth=1.2, marker=marker, markersize=3.6)
-        axes.axhline(0.0, color=palette.hairline, linewidth=0.8, zorder=0)
-        axes.set_xlabel("pulse")
-        axes.set_ylabel("mean dF/F" if self._quantity == "amplitude" else "p_release")
-
-    def fill(self, axes: Axes) -> None:
-        """Show the means with their errors, or the probabilities with their intervals."""
-        pulses = self._pulses
-        self.say("" if pulses is not None and len(pulses) else "no bouton selected")
-        if pulses is None or not len(pulses):
-            return
-        at = pulses["pulse"].to_numpy(dtype=np.float64)
-        if self._quantity == "amplitude":
-            value = pulses["amplitude_mean"].to_numpy(dtype=np.float64)
-            error = pulses["amplitude_se"].to_numpy(dtype=np.float64)
-            low, high = value - error, value + error
-        else:
-            value, low, high = (
-                pulses[name].to_numpy(dtype=np.float64) for name in ("p_release", "p_release_lo", "p_release_hi")
-            )
-        self._line.set_data(at, value)
-        gap = np.full(len(at), np.nan)
-        self._bars.set_data(np.column_stack([at, at, at]).ravel(), np.column_stack([low, high, gap]).ravel())
-        known = np.concatenate([low, high, value])
-        known = known[np.isfinite(known)]
-        axes.set_xlim(0.4, at.max() + 0.6)
-        axes.locator_params(axis="x", integer=True)
-        if self._quantity == "p_release":
-            axes.set_ylim(-0.03, 1.03)
-            axes.set_yticks([0.0, 0.5, 1.0], ["0", "0.5", "1"])
-        elif known.size:
-            top, bottom = float(known.max()), min(float(known.min()), 0.0)
-            axes.set_ylim(bottom - 0.05 * (top - bottom), top + 0.1 * (top - bottom or 1.0))

@@ -21,21 +21,25 @@ from qtpy.QtWidgets import (
     QWidget,
 )
 
+from ..analysis.fitted_curves import train_curve
+from ..analysis.pulse_intervals import interval_groups
 from ..analysis.summary import estimates_table
+from ..analysis.trains import train_patterns
 from .calm import CALM_MS
 from .histogram_plot import HistogramPlot
 from .panel import Panel, sentence_label
 from .plot_grid import PlotGrid
-from .pulse_plot import PulsePairPlot, TrainPlot
-from .quantal_words import doubts, estimate_rows, headline, pair_rows
+from .pulse_plot import PulsePairPlot
+from .quantal_words import doubts, estimate_rows, headline, pair_rows, recovery_rows, train_rows
 from .responses_dock import NO_BOUTON, NOTHING_YET, fill_choices
 from .shown_bouton import ShownBouton, shown_bouton
 from .sites_plot import SitesPlot
+from .train_plot import CumulativePlot, IntervalPlot, TrainPlot, numbers_of, train_words
 
 if TYPE_CHECKING:
     import napari
 
-_COLUMN_PX = 190
+_COLUMN_PX, _TABLE_PX = 190, 400
 _TRAIN = 3  # pulses from which a train is drawn
 
 
@@ -56,6 +60,8 @@ class QuantalDock(Panel):
         trains.setContentsMargins(0, 0, 0, 0)
         trains.addWidget(self.amplitude_train)
         trains.addWidget(self.release_train)
+        self.cumulative = CumulativePlot(self)
+        self.intervals = IntervalPlot(self)
         self.content = PlotGrid(
             [
                 (self._make_words(), 4),
@@ -63,9 +69,12 @@ class QuantalDock(Panel):
                 (self.sites, 3),
                 (self.pair, 4),
                 (self.train, 4),
-                (self._make_tables(), 7),
+                (self.cumulative, 4),
+                (self.intervals, 4),
+                (self._make_tables(), 9),
             ],
             least_px=_COLUMN_PX,
+            last_px=_TABLE_PX,
         )
         self.column.addWidget(self.message)
         self.column.addWidget(self.content, 1)
@@ -115,6 +124,10 @@ class QuantalDock(Panel):
         self.tables = QTabWidget()
         self.tables.addTab(self.estimates, "Estimates")
         self.tables.addTab(self.pairs, "Pulse pair")
+        self.train_table = _table("train", "value (95 % interval)")
+        self.interval_table = _table("pulse intervals", "value (95 % interval)")
+        self.tables.addTab(self.train_table, "Train")
+        self.tables.addTab(self.interval_table, "Intervals")
         self.tables.setMinimumHeight(130)
         return self.tables
 
@@ -143,7 +156,11 @@ class QuantalDock(Panel):
         self.pulse_label.setVisible(n_pulses > 1)
         self.content.offer(self.pair, n_pulses > 1)
         self.content.offer(self.train, n_pulses >= _TRAIN)
-        self.tables.setTabVisible(1, n_pulses > 1)
+        is_train, several = bool(train_patterns(shown.measured)), bool(interval_groups(shown.measured))
+        self.content.offer(self.cumulative, is_train)
+        self.content.offer(self.intervals, several)
+        for tab, there in enumerate((n_pulses > 1, is_train, several), start=1):
+            self.tables.setTabVisible(tab, there)
         self._filling = False
 
     def _show_state(self) -> None:
@@ -161,10 +178,25 @@ class QuantalDock(Panel):
         if n_pulses > 1:
             _fill_table(self.pairs, pair_rows(measured, row))
         if n_pulses >= _TRAIN:
-            pulses = self.model.table("pulses")
-            mine = pulses[pulses["bouton"] == shown.bouton]
-            self.amplitude_train.show_pulses(mine)
-            self.release_train.show_pulses(mine)
+            self._write_train(shown)
+        if interval_groups(measured):
+            intervals = self.model.table("intervals")
+            recovery, words = numbers_of(self.model.table("recovery"), shown.bouton)
+            mine = intervals[intervals["bouton"] == shown.bouton]
+            self.intervals.show_intervals(mine, recovery, words.get("model", ""))
+            _fill_table(self.interval_table, recovery_rows(recovery, words))
+
+    def _write_train(self, shown: ShownBouton) -> None:
+        pulses = self.model.table("pulses")
+        mine = pulses[pulses["bouton"] == shown.bouton]
+        patterns = train_patterns(shown.measured)
+        train, words = numbers_of(self.model.table("trains"), shown.bouton)
+        curve = train_curve(train, patterns[0].pulse_s) if patterns and train else None
+        self.amplitude_train.show_pulses(mine, curve=curve, words=train_words(train))
+        self.release_train.show_pulses(mine)
+        if patterns:
+            self.cumulative.show_train(mine, train, words.get("note", ""))
+            _fill_table(self.train_table, train_rows(train, words.get("note", "")))
 
     def _sentences(self, shown: ShownBouton) -> str:
         parts = [headline(shown.measured, shown.row)]

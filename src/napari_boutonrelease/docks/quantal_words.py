@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
+
 import numpy as np
 import pandas as pd
 
@@ -91,6 +93,45 @@ def pair_rows(measured: Measured, row: int) -> list[tuple[str, str]]:
             ("neither", short(history.neither)),
         ]
     return rows
+
+
+def train_rows(train: Mapping[str, float], note: str) -> list[tuple[str, str]]:
+    """Write a bouton's row of the table of trains as names and values, with what to doubt."""
+    if not train:
+        return []
+    rows = [
+        (name, with_limits(*(train[f"{key}{end}"] for end in ("", "_lo", "_hi")), decimals=decimals))
+        for key, name, decimals in (
+            ("steady_ratio", "late over first amplitude", 2),
+            ("pool", "releasable pool (dF/F)", 2),
+            ("pool_vesicles", "releasable pool (vesicles)", 1),
+            ("replenished", "comes back from pulse to pulse (dF/F)", 3),
+            ("u", "share that pulse 1 uses, u", 2),
+            ("tau_rec_s", "recovery of resources (s)", 3),
+            ("tau_facil_s", "facilitation wears off (s)", 3),
+            ("resources", "all resources at once (dF/F)", 2),
+        )
+    ]
+    rows += [("fit of the model", _p(train["model_p"])), ("complete trials", f"{train['trials']:g}")]
+    return rows + ([("note", note)] if note else [])
+
+
+def recovery_rows(recovery: Mapping[str, float], words: Mapping[str, str]) -> list[tuple[str, str]]:
+    """Write a bouton's row of the table of recovery as names and values, with what to doubt."""
+    if not recovery:
+        return []
+    rows = [("time course", words.get("model", MISSING))]
+    rows += [
+        (name, with_limits(*(recovery[f"{key}{end}"] for end in ("", "_lo", "_hi")), decimals=decimals))
+        for key, name, decimals in (
+            ("facilitation", "facilitation at interval 0", 2),
+            ("facilitation_s", "facilitation wears off (s)", 3),
+            ("depression", "depression at interval 0", 2),
+            ("depression_s", "depression recovers (s)", 3),
+        )
+    ]
+    rows += [("ratio 1 at every interval", _p(recovery["constant_p"])), ("fit of the course", _p(recovery["model_p"]))]
+    return rows + ([("note", words["note"])] if words.get("note") else [])
 
 
 def _p(value: float) -> str:

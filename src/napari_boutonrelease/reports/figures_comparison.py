@@ -11,6 +11,7 @@ import numpy as np
 from matplotlib.figure import Figure
 from matplotlib.lines import Line2D
 
+from ..analysis.fitted_curves import ratio_curve
 from .facts import values
 from .figures_page import Area, blank_figure
 from .figures_style import EVOKED, FIT, HAIRLINE, INK, MUTED, NULL, PULSE_2, SMALL, say_nothing_to_show, styled
@@ -333,14 +334,10 @@ def draw_intervals(area: Area, comparison: Comparison) -> None:
 
 
 def _curve(recovery: pd.DataFrame, row: int, gap: Floats) -> Floats:
-    model = recovery["model"].iloc[row]
-    if model == "none":
+    if recovery["model"].iloc[row] == "none":
         return np.full(gap.shape, np.nan)
-    curve = np.ones(gap.shape)
-    for name, sign in (("facilitation", 1.0), ("depression", -1.0)):
-        if model in (name, "both"):
-            curve += sign * values(recovery, name)[row] * np.exp(-gap / values(recovery, f"{name}_s")[row])
-    return curve
+    names = ("facilitation", "facilitation_s", "depression", "depression_s")
+    return ratio_curve({name: float(values(recovery, name)[row]) for name in names}, gap)
 
 
 def _within(low: float, high: float, reach: float) -> list[float]:

@@ -9,8 +9,8 @@ from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 from numpy.typing import NDArray
 
+from ..analysis.fitted_curves import ratio_curve, train_curve
 from ..analysis.results import AnalysisResult
-from ..quanta import release_shares
 from .facts import fact, number, texts, values
 from .figures_page import Area, blank_figure
 from .figures_style import EVOKED, FIT, HAIRLINE, INK, MUTED, NULL, SMALL, say_nothing_to_show, styled
@@ -108,16 +108,8 @@ def _time_words(result: AnalysisResult, key: str, name: str) -> str:
 
 def _model_curve(result: AnalysisResult) -> NDArray[np.float64]:
     """Amplitudes that the model gives each pulse; empty without a model."""
-    u, resources = number(result, "train.u"), number(result, "train.resources")
-    pulse_s = _numbers(result, "train.pulse_s")
-    if not (math.isfinite(u) and math.isfinite(resources) and pulse_s.size):
-        return np.empty(0)
-    # a time constant that is not known is longer than the train can tell
-    recovery, facilitation = (
-        value if math.isfinite(value) else math.inf
-        for value in (number(result, "train.tau_rec_s"), number(result, "train.tau_facil_s"))
-    )
-    return np.asarray(resources * release_shares(pulse_s, u=u, tau_rec_s=recovery, tau_facil_s=facilitation))
+    row = {name: number(result, f"train.{name}") for name in ("u", "resources", "tau_rec_s", "tau_facil_s")}
+    return train_curve(row, _numbers(result, "train.pulse_s"))
 
 
 def _draw_cumulative(axes: Axes, result: AnalysisResult) -> None:
@@ -180,14 +172,15 @@ def _draw_time_course(axes: Axes, result: AnalysisResult, interval_s: NDArray[np
     axes.vlines(interval_s, low, high, color=INK, linewidth=1.0)
     axes.plot(interval_s, ratio, "o", color=INK)
     at = np.geomspace(interval_s.min() / 1.3, interval_s.max() * 1.3, 200)
-    curve, words = np.ones_like(at), []
-    for name, sign in (("facilitation", 1.0), ("depression", -1.0)):
+    row: dict[str, float] = {}
+    words = []
+    for name in ("facilitation", "depression"):
         size, time_s = (number(result, f"pulse_intervals.{name}{end}") for end in ("", "_s"))
+        row |= {name: size, f"{name}_s": time_s}
         if math.isfinite(size):
-            curve += sign * size * (np.exp(-at / time_s) if math.isfinite(time_s) else 1.0)
             words.append(f"{name} {fixed(size)}" + (f", {duration(time_s)}" if math.isfinite(time_s) else ""))
     if fact(result, "pulse_intervals.model") not in (None, "none"):
-        axes.plot(at, curve, color=FIT, linewidth=1.1)
+        axes.plot(at, ratio_curve(row, at), color=FIT, linewidth=1.1)
     axes.set_title("; ".join(words) or "no time course", loc="left", color=FIT if words else MUTED, fontsize=SMALL)
 
 
