@@ -43,7 +43,7 @@ def test_public_names_are_pinned():
     pinned = (
         "Analysis AnalysisWarning BoutonFileError CompareSettings ComparedRecordings InputError Movie MovieError "
         "OutputError Protocol ProtocolError RegularStimuli ResponseShape SavedAnalysisError Settings StimulusTable "
-        "analyse analysis boutons compare comparison movie_from_array open_movie quanta read_protocol recording "
+        "analyse analysis batch boutons compare comparison movie_from_array open_movie quanta read_protocol recording "
         "reports responses simulation write_protocol"
     )
     assert sorted(napari_boutonrelease.__all__) == pinned.split()

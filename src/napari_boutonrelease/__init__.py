@@ -9,7 +9,7 @@ __version__ = "0.1.0"
 
 TYPE_CHECKING = False  # typing's own flag would cost the command line a tenth of its start
 if TYPE_CHECKING:
-    from . import analysis, boutons, comparison, quanta, recording, reports, responses, simulation
+    from . import analysis, batch, boutons, comparison, quanta, recording, reports, responses, simulation
     from .analysis.settings import Settings
     from .api import Analysis, ComparedRecordings, analyse, compare
     from .comparison.settings import CompareSettings
@@ -26,7 +26,7 @@ if TYPE_CHECKING:
     from .recording.protocol import Protocol, RegularStimuli, StimulusTable, read_protocol, write_protocol
     from .response_shape import ResponseShape
 
-_ROOMS = ("analysis", "boutons", "comparison", "quanta", "recording", "reports", "responses", "simulation")
+_ROOMS = ("analysis", "batch", "boutons", "comparison", "quanta", "recording", "reports", "responses", "simulation")
 
 _HOMES = {
     "api": ("Analysis", "ComparedRecordings", "analyse", "compare"),
@@ -66,6 +66,7 @@ __all__ = [
     "StimulusTable",
     "analyse",
     "analysis",
+    "batch",
     "boutons",
     "compare",
     "comparison",

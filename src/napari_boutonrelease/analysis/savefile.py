@@ -42,6 +42,10 @@ class SavedAnalysis:
         Where the movie was; empty if it was an array.
     movie_digest : str or None
         SHA-256 of the movie's content; None if it was an array.
+    movie_bytes : tuple of int
+        Sizes of its files.
+    movie_modified_s : tuple of float
+        When its files were last changed (s since 1970); empty in analyses of older versions.
     boutons, axon : Path or None
         Files that were given.
     axon_px : (k, 2) ndarray or None
@@ -57,6 +61,8 @@ class SavedAnalysis:
     protocol: Protocol
     movie_files: tuple[Path, ...]
     movie_digest: str | None
+    movie_bytes: tuple[int, ...]
+    movie_modified_s: tuple[float, ...]
     boutons: Path | None
     axon: Path | None
     axon_px: NDArray[np.float64] | None
@@ -135,6 +141,7 @@ def provenance_of(measured: Measured, *, pipeline: Pipeline) -> dict[str, Any]:
         "movie": {
             "files": [str(Path(file).resolve()) for file in movie.files],
             "bytes": [Path(file).stat().st_size for file in movie.files],
+            "modified_s": [Path(file).stat().st_mtime for file in movie.files],
             "sha256": content_digest(movie) if movie.files else None,
             "shape": list(movie.shape),
             "dtype": str(movie.dtype),
@@ -184,6 +191,8 @@ def read_saved(path: str | Path) -> SavedAnalysis:
             protocol=protocol_from_dict(content["protocol"], source=path),
             movie_files=tuple(Path(file) for file in content["movie"]["files"]),
             movie_digest=content["movie"]["sha256"],
+            movie_bytes=tuple(content["movie"]["bytes"]),
+            movie_modified_s=tuple(content["movie"].get("modified_s", ())),
             boutons=None if content["boutons"] is None else Path(content["boutons"]),
             axon=None if content["axon"] is None else Path(content["axon"]),
             axon_px=None if content["axon_px"] is None else np.asarray(content["axon_px"], dtype=np.float64),

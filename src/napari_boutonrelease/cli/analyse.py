@@ -12,6 +12,7 @@ if TYPE_CHECKING:
     from typing import Any
 
     from ..analysis.settings import Settings
+    from ..reports import NwbDetails
 
 EPILOG = """\
 positions: y_px,x_px in pixels from 0 (centre of the first pixel) or y_um,x_um; a label TIFF has one number a bouton.
@@ -20,6 +21,18 @@ A setting on the command line wins over the same one in --settings or --from.
 boutonrelease analyse axon.tif --protocol axon.protocol.toml
 boutonrelease analyse trials/ --protocol pairs.toml --threshold-sd 3 --out axon3.release
 boutonrelease analyse --from axon.release/analysis.json --out again.release"""
+
+NWB_DETAILS = {
+    "session_start": ("TIME", "when the recording began, as in 2025-03-01T14:30 (default: what the movie's file says)"),
+    "subject_id": ("NAME", "animal or culture"),
+    "species": ("NAME", "Latin name, as in 'Rattus norvegicus'"),
+    "sex": ("LETTER", "M, F, O (other) or U (unknown)"),
+    "age": ("SPAN", "P30D for 30 days, P3W/P4W for 3 to 4 weeks"),
+    "reporter": ("NAME", "fluorescent reporter of release"),
+    "location": ("NAME", "part of the brain; in the mouse, a term of the Allen Mouse Brain Atlas, as in CA1"),
+    "experimenter": ("NAME", "who recorded: 'Last name, First name'"),
+    "institution": ("NAME", "where it was recorded"),
+}
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
@@ -34,6 +47,10 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--settings", metavar="FILE", help="settings from a TOML file or an analysis.json")
     parser.add_argument("--out", metavar="DIR", help="folder for the results (default: MOVIE.release beside the movie)")
     parser.add_argument("--overwrite", action="store_true", help="replace results that are already there")
+    group = parser.add_argument_group("Neurodata Without Borders")
+    group.add_argument("--nwb", action="store_true", help="also write recording.nwb, as does any option of this group")
+    for name, (metavar, meaning) in NWB_DETAILS.items():
+        group.add_argument(f"--nwb-{name.replace('_', '-')}", dest=f"nwb_{name}", metavar=metavar, help=meaning)
     add_settings_options(parser)
 
 
@@ -44,14 +61,26 @@ def run(args: argparse.Namespace) -> None:
     from .progress import progress_bar
     from .summary import summary_lines
 
+    nwb = _nwb_details(args)
     settings, source, inputs = _saved_inputs(args) if args.saved else _given_inputs(args)
     out = out_folder(args.out, movie=source)
     check_can_write(out, overwrite=args.overwrite)
     with progress_bar("analysing") as progress:
         analysis = analyse(**inputs, settings=settings, progress=progress)
     with progress_bar("writing") as progress:
-        analysis.write(out, overwrite=args.overwrite, progress=progress)
+        analysis.write(out, overwrite=args.overwrite, nwb=nwb or False, progress=progress)
     print(*summary_lines(analysis, folder=out), sep="\n")
+
+
+def _nwb_details(args: argparse.Namespace) -> "NwbDetails | None":
+    """Return what `recording.nwb` is to say; None where the file was not asked for."""
+    given = {name: getattr(args, f"nwb_{name}") for name in NWB_DETAILS}
+    if not args.nwb and all(value is None for value in given.values()):
+        return None
+    from ..reports import NwbDetails, check_can_write_nwb
+
+    check_can_write_nwb()
+    return NwbDetails(**given)
 
 
 def _given_inputs(args: argparse.Namespace) -> "tuple[Settings, str, dict[str, Any]]":
@@ -101,10 +130,6 @@ def out_folder(given: str | None, *, movie: str) -> "Path":
     """Return the folder asked for, else `MOVIE.release` beside the movie."""
     from pathlib import Path
 
-    if given:
-        return Path(given)
-    path = Path(movie)
-    stem = path.name
-    for suffix in (".tif", ".tiff", ".ome"):
-        stem = stem.removesuffix(suffix)
-    return path.with_name(f"{stem}.release")
+    from ..reports import default_folder
+
+    return Path(given) if given else default_folder(Path(movie))

@@ -17,6 +17,7 @@ COMMANDS = {
     "simulate": "write a simulated movie, its protocol and its truth",
     "inspect": "say what a movie holds and whether it can be analysed",
     "analyse": "analyse one recording: boutons, release, quanta, report",
+    "batch": "analyse many recordings, and put their boutons into one table",
     "compare": "compare the same boutons in two or more analysed recordings",
     "plan": "say how many trials a wanted precision needs",
     "view": "open a movie or a saved analysis in napari, with the docks",
@@ -70,7 +71,7 @@ def build_parser(command: str | None = None) -> "argparse.ArgumentParser":
 
 
 def command_module(name: str) -> "ModuleType":
-    """Import a command's module, which has `add_arguments(parser)` and `run(args)`."""
+    """Import a command's module, which has `add_arguments(parser)` and `run(args)`; that may return an exit code."""
     from importlib import import_module
 
     return import_module(f".{name}", __package__)
@@ -82,8 +83,9 @@ def _guarded(command: "ModuleType", args: "argparse.Namespace") -> int:
     if not args.debug:
         warnings.showwarning = _show_warning
     try:
-        command.run(args)
+        code = command.run(args)
         sys.stdout.flush()
+        return DONE if code is None else int(code)
     except BrokenPipeError:  # whoever read our output, `head` say, has seen enough
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
     except InputError as error:

@@ -9,17 +9,20 @@ if TYPE_CHECKING:
 
 
 @contextmanager
-def progress_bar(label: str) -> "Iterator[Callable[[int, int], None] | None]":
-    """Give a callback for (done, total), or None where stderr is not a terminal."""
+def progress_bar(label: str, *, counted: bool = False) -> "Iterator[Callable[[int, int], None] | None]":
+    """Give a callback for (done, total), or None where stderr is not a terminal; `counted` shows both numbers."""
     if not sys.stderr.isatty():
         yield None
         return
     from tqdm import tqdm
 
-    with tqdm(desc=label, leave=False, file=sys.stderr, bar_format="{desc}: {percentage:3.0f}% {bar} {elapsed}") as bar:
+    done = "{n_fmt}/{total_fmt}" if counted else "{percentage:3.0f}%"
+    with tqdm(desc=label, leave=False, file=sys.stderr, bar_format=f"{{desc}}: {done} {{bar}} {{elapsed}}") as bar:
 
         def update(done: int, total: int) -> None:
             bar.total = total
             bar.update(done - bar.n)
+            if counted:
+                bar.refresh()  # recordings are far between
 
         yield update

@@ -25,6 +25,14 @@ _STALE_S = 3600.0
 _LITTER = {".DS_Store", "Thumbs.db", "desktop.ini"}
 
 
+def default_folder(movie: Path) -> Path:
+    """Return `<movie>.release` beside a movie, which may be a file or a folder."""
+    stem = movie.name
+    for suffix in (".tif", ".tiff", ".ome"):
+        stem = stem.removesuffix(suffix)
+    return movie.with_name(f"{stem}.release")
+
+
 def check_can_write(folder: Path, *, overwrite: bool, mark: str = MARK) -> None:
     """Raise unless results can be written into `folder`, before any work is done.
 
