@@ -19,6 +19,7 @@ if TYPE_CHECKING:
     from .comparison.settings import CompareSettings
     from .recording.movie import Movie
     from .recording.protocol import Protocol
+    from .reports import NwbDetails
 
     MovieSource = str | Path | Sequence[str | Path] | NDArray[np.generic] | Movie
 
@@ -33,6 +34,7 @@ class Analysis(AnalysisResult):
         folder: str | Path,
         *,
         overwrite: bool = False,
+        nwb: bool | NwbDetails = False,
         progress: Callable[[int, int], None] | None = None,
     ) -> Path:
         """Write tables, traces, footprints, figures and report into a folder, whole or not at all.
@@ -43,6 +45,9 @@ class Analysis(AnalysisResult):
             Folder to make, or to replace if it holds results.
         overwrite : bool
             Replace results that are already there.
+        nwb : bool or NwbDetails
+            Also write `recording.nwb`, of the standard Neurodata Without Borders; `reports.NwbDetails` says what no
+            movie tells. Needs the extra `nwb`.
         progress : callable, optional
             Called with (done, total) files.
 
@@ -54,11 +59,13 @@ class Analysis(AnalysisResult):
         Raises
         ------
         OutputError
-            If the folder holds results and `overwrite` is false, holds anything else, or cannot be written.
+            If the folder holds results and `overwrite` is false, holds anything else, or cannot be written, or if pynwb
+            is needed and not installed.
         """
-        from .reports import write_result
+        from .reports import NwbDetails, write_result
 
-        return write_result(self, Path(folder), overwrite=overwrite, progress=progress)
+        details = NwbDetails() if nwb is True else nwb or None
+        return write_result(self, Path(folder), overwrite=overwrite, nwb=details, progress=progress)
 
 
 class ComparedRecordings(Comparison):

@@ -12,7 +12,7 @@ import sys
 import tempfile
 from collections.abc import Callable
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 from ..errors import InputError, OutputError
 from .comparison import write_comparison
@@ -27,7 +27,7 @@ _CHILD = "from napari_boutonrelease.reports.apart import _write; _write()"
 
 
 def write_result_apart(
-    result: AnalysisResult, folder: Path, *, progress: Progress | None = None, **options: bool
+    result: AnalysisResult, folder: Path, *, progress: Progress | None = None, **options: Any
 ) -> Path:
     """Do what `write_result` does in another process, and wait for it.
 
@@ -43,14 +43,14 @@ def write_result_apart(
 
 
 def write_comparison_apart(
-    comparison: Comparison, folder: Path, *, progress: Progress | None = None, **options: bool
+    comparison: Comparison, folder: Path, *, progress: Progress | None = None, **options: Any
 ) -> Path:
     """Do what `write_comparison` does in another process, and wait for it; see `write_result_apart`."""
     return _write_apart(write_comparison, comparison, folder, progress=progress, options=options)
 
 
 def _write_apart(
-    write: Callable[..., Path], what: object, folder: Path, *, progress: Progress | None, options: dict[str, bool]
+    write: Callable[..., Path], what: object, folder: Path, *, progress: Progress | None, options: dict[str, Any]
 ) -> Path:
     with tempfile.TemporaryFile() as parcel, tempfile.TemporaryFile("w+", encoding="utf-8") as complaints:
         pickle.dump((write, what, Path(folder).absolute(), options), parcel)

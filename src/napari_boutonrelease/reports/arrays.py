@@ -57,7 +57,7 @@ def write_weights(result: AnalysisResult, path: Path) -> None:
     height, width = footprints.label.shape
     tifffile.imwrite(
         path,
-        _weight_pages(footprints, (height, width)),
+        weight_pages(footprints, (height, width)),
         shape=(len(footprints.weights), height, width),
         dtype=np.float32,
         compression="zlib",
@@ -67,7 +67,7 @@ def write_weights(result: AnalysisResult, path: Path) -> None:
     )
 
 
-def _weight_pages(footprints: Any, shape: tuple[int, int]) -> Iterator[NDArray[np.float32]]:
+def weight_pages(footprints: Any, shape: tuple[int, int]) -> Iterator[NDArray[np.float32]]:
     """One full image a bouton; parts of a patch beyond the image are cut."""
     for patch, top, left in zip(footprints.weights, footprints.y0, footprints.x0, strict=True):
         page = np.zeros(shape, dtype=np.float32)

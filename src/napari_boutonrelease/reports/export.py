@@ -10,6 +10,7 @@ from ..analysis.columns import TABLES
 from .arrays import write_label_image, write_mean_image, write_traces, write_weights
 from .datapackage import describe_package
 from .folder import MARK, PACKAGE, replaced_whole
+from .nwb_details import NwbDetails, check_can_write_nwb
 from .strict_json import write_json
 from .tables import write_table
 
@@ -27,6 +28,7 @@ def write_result(
     *,
     overwrite: bool,
     figures: bool = True,
+    nwb: NwbDetails | None = None,
     extra_files: Mapping[str, Writer] | None = None,
     progress: Callable[[int, int], None] | None = None,
 ) -> Path:
@@ -42,6 +44,8 @@ def write_result(
         Whether results that are there may be replaced.
     figures : bool
         Whether to draw the report and the figures.
+    nwb : NwbDetails, optional
+        Also write `recording.nwb`, with these details.
     extra_files : mapping of str to callable, optional
         Further files that belong to the results: name and what writes it, given the path.
     progress : callable, optional
@@ -55,11 +59,13 @@ def write_result(
     Raises
     ------
     OutputError
-        If the folder holds results and `overwrite` is false, holds anything else, or cannot be written. What was
-        there stays as it was.
+        If the folder holds results and `overwrite` is false, holds anything else, or cannot be written, or if pynwb is
+        needed and not installed. What was there stays as it was.
     """
+    if nwb is not None:
+        check_can_write_nwb()
     folder = Path(folder)
-    writers = _writers(result, figures=figures) | dict(extra_files or {})
+    writers = _writers(result, figures=figures, nwb=nwb) | dict(extra_files or {})
     total = len(writers) + 1
     with replaced_whole(folder, overwrite=overwrite) as work:
         for done, (name, write) in enumerate(writers.items()):
@@ -77,7 +83,7 @@ def write_result(
     return folder
 
 
-def _writers(result: AnalysisResult, *, figures: bool) -> dict[str, Writer]:
+def _writers(result: AnalysisResult, *, figures: bool, nwb: NwbDetails | None) -> dict[str, Writer]:
     """Every file by name and what writes it."""
     writers: dict[str, Writer] = {f"{name}.csv": _table_writer(result, name) for name in TABLES}
     writers["traces.npz"] = lambda path: write_traces(result, path)
@@ -94,6 +100,10 @@ def _writers(result: AnalysisResult, *, figures: bool) -> dict[str, Writer]:
         writers["report.pdf"] = lambda path: write_report(result, path)
         for stem, draw in figures_of(result).items():
             writers[f"figures/{stem}.svg"] = _figure_writer(draw)
+    if nwb is not None:
+        from .nwb import write_nwb
+
+        writers["recording.nwb"] = lambda path: write_nwb(result, path, details=nwb)
     return writers
 
 
