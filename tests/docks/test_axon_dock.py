@@ -4,8 +4,10 @@ import numpy as np
 import pytest
 from napari.components import ViewerModel
 from qtpy.QtCore import QPoint, Qt
+from qtpy.QtGui import QTextDocumentFragment
 from qtpy.QtTest import QTest
 
+from napari_boutonrelease.analysis.selection import measure_selection, selection_summary
 from napari_boutonrelease.docks.axon_dock import AxonDock
 from napari_boutonrelease.docks.axon_plot import choices
 from napari_boutonrelease.docks.bouton_marks import NO_NUMBER, SILENT, sequential
@@ -71,10 +73,35 @@ def test_says_that_nothing_was_measured(empty):
     assert not dock.text.isVisible()
 
 
+def words(dock):
+    """What the dock says of all boutons, without its markup."""
+    return QTextDocumentFragment.fromHtml(dock.words.text()).toPlainText()
+
+
 def test_population_in_words(shown):
     _, dock = shown
-    assert dock.words.text().startswith("Mean p_release is ")
-    assert "no release" in dock.words.text()
+    said, summary = words(dock), dock.model.summary()
+    assert said.startswith("Mean p_release is ")
+    assert "no release" in said
+    assert f"True SD of p_release between boutons: {summary['heterogeneity']['sd']:.2f}" in said
+    failures = summary["stimulus_failures"]
+    assert f"At {failures['trials']:.0f} stimuli every bouton failed" in said
+    assert "Release and paired-pulse ratio\nNeeds 5 boutons" in said
+    assert "Missed boutons" not in said
+
+
+def test_missed_boutons_are_looked_for_when_asked(shown, qtbot):
+    _, dock = shown
+    assert dock.missed.isVisible()
+    dock.text.ensureWidgetVisible(dock.missed)
+    QTest.mouseClick(dock.missed, Qt.MouseButton.LeftButton)
+    qtbot.waitUntil(lambda: not dock.runner.busy, timeout=LONG_MS)
+    assert not dock.missed.isVisible()
+    expected = selection_summary(measure_selection(dock.model.measured))
+    assert dock.model.summary()["selection"] == expected
+    assert "Missed boutons\n" in words(dock)
+    dock.model.set_threshold(4.0)
+    assert dock.model.summary()["selection"] == expected  # it knows no threshold
 
 
 def test_every_number_with_its_unit_can_be_chosen(shown, qtbot):
@@ -159,7 +186,7 @@ def test_nothing_found_leaves_no_choice(shown, qtbot):
     drawn(qtbot, dock)
     assert choices(dock.model.table("boutons")) == []
     assert dock.shown.count() == 0
-    assert dock.words.text().startswith("No bouton was found")
+    assert words(dock).startswith("No bouton was found")
 
 
 def test_follows_the_theme(shown, qtbot):

@@ -9,6 +9,7 @@ from napari_boutonrelease.analysis.column_types import empty_table
 from napari_boutonrelease.analysis.columns import TABLES
 from napari_boutonrelease.reports.figures import figures_of
 from napari_boutonrelease.reports.figures_together import figure_together, shows_together
+from napari_boutonrelease.reports.together_words import together_facts
 
 
 def words_of(figure):
@@ -86,3 +87,22 @@ def test_the_figure_is_left_out_where_boutons_cannot_be_compared(result, empty_r
     assert not shows_together(empty_result)
     assert "boutons_together" not in figures_of(empty_result)
     assert not shows_together(changed(result, "heterogeneity", boutons=1))
+
+
+def test_split_halves_and_missed_boutons_are_put_into_words(result):
+    halves = {"boutons": 8, "value": -0.42, "lo": -0.8, "hi": 0.1, "p": 0.12}
+    halves |= {"plain": -0.7, "plain_lo": -0.9, "plain_hi": -0.2, "plain_p": 0.01}
+    known = changed(changed(result, "split_half", **halves), "recording", pulses=2)
+    said = dict(together_facts(changed(known, "selection", method="none: the boutons were given")))
+    words = said["Release and paired-pulse ratio"].replace("\u00a0", " ")
+    assert "over 8 boutons" in words
+    assert "−0.42 (−0.80 to 0.10), p = 0.12" in words
+    assert "From the same trials it is −0.70 (−0.90 to −0.20)" in words
+    assert said["Missed boutons"] == "The boutons were given."
+    alone = together_facts(changed(known, "recording", pulses=1))
+    assert "Release and paired-pulse ratio" not in dict(alone)
+
+
+def test_what_is_missing_is_said_without_a_figure_too(result):
+    said = dict(together_facts(changed(result, "heterogeneity", sd=None, method="none: needs two boutons")))
+    assert said["Spread between boutons"] == "Needs two boutons."

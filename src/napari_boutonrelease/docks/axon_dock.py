@@ -2,20 +2,25 @@
 
 from __future__ import annotations
 
+from html import escape
 from types import SimpleNamespace
 from typing import TYPE_CHECKING, Any
 
+from qtpy.QtCore import Qt
 from qtpy.QtGui import QResizeEvent
 from qtpy.QtWidgets import (
     QBoxLayout,
     QCheckBox,
     QComboBox,
     QHBoxLayout,
+    QPushButton,
     QScrollArea,
     QVBoxLayout,
     QWidget,
 )
 
+from ..analysis.selection import measure_selection, selection_summary
+from ..reports.together_words import together_facts
 from ..reports.words import headlines
 from .axon_plot import COLUMNS, AxonPlot, choices, title
 from .bouton_layers import bouton_layers_of
@@ -27,6 +32,9 @@ from .worker import ProgressRow
 
 if TYPE_CHECKING:
     import napari
+
+    from ..analysis.measured import Measured
+    from ..analysis.progress import Progress
 
 _WIDE_PX, _TEXT_PX = 640, 90
 _STALE = "Boutons or settings have changed since these numbers were measured."
@@ -55,7 +63,14 @@ class AxonDock(Panel):
         row.addStretch(1)
         self.plot = AxonPlot(self)
         self.words = sentence_label()
+        self.words.setTextFormat(Qt.TextFormat.RichText)
         self.stale = sentence_label(_STALE)
+        self.missed = QPushButton("Look for missed boutons")
+        self.missed.setToolTip(
+            "Simulate boutons in the noise of this recording, and see which the detection would have missed: "
+            "corrects mean p_release for them."
+        )
+        self.missed.clicked.connect(self._look_for_missed)
         alone = QWidget()
         column = QVBoxLayout(alone)
         column.setContentsMargins(0, 4, 0, 0)
@@ -66,6 +81,7 @@ class AxonDock(Panel):
         beside.setContentsMargins(0, 0, 0, 0)
         beside.addWidget(self.stale)
         beside.addWidget(self.words)
+        beside.addWidget(self.missed)
         beside.addStretch(1)
         self.text = QScrollArea()  # of its own: sentences must not make the plot higher than the dock
         self.text.setWidget(text)
@@ -86,9 +102,11 @@ class AxonDock(Panel):
         self._calm = WhenCalm(self.model, self._show_when_seen, self)
         self.link(self.model.recording_changed, self._calm.follow)
         self.link(self.model.measured_changed, self._calm.follow)
+        self.link(self.model.summary_changed, self._show_words)
         self.link(self.model.selection_changed, self.plot.refresh)
         self.link(self.model.settings_changed, self._show_state)
         self.link(self.model.edits_changed, self._show_state)
+        self.link(self.runner.changed, self._show_state)
         self._show()
 
     def resizeEvent(self, event: QResizeEvent) -> None:
@@ -115,16 +133,42 @@ class AxonDock(Panel):
         self.shown.setEnabled(bool(names))
         self.colour.setEnabled(bool(names))
         self._choose()
+        self._show_words()
+
+    def _show_state(self, *_: object) -> None:
+        self.stale.setVisible(self.model.stale)
+        known = self.model.measured is not None and "selection" in self.model.summary()
+        self.missed.setVisible(self.model.measured is not None and not known)
+        self.missed.setEnabled(not self.runner.busy)
+
+    def _show_words(self) -> None:
+        measured = self.model.measured
         self.words.setText("" if measured is None else self._population())
         self.text.setVisible(measured is not None)
         self._show_state()
 
-    def _show_state(self) -> None:
-        self.stale.setVisible(self.model.stale)
-
     def _population(self) -> str:
-        result: Any = SimpleNamespace(boutons=self.model.table("boutons"), summary=self.model.summary())
-        return " ".join(headlines(result))
+        summary = self.model.summary()
+        result: Any = SimpleNamespace(boutons=self.model.table("boutons"), summary=summary)
+        facts = together_facts(result) if summary["heterogeneity"]["boutons"] > 1 else []
+        parts = [escape(" ".join(headlines(result)))]
+        parts += [f"<b>{escape(title)}</b><br>{escape(sentence)}" for title, sentence in facts]
+        return "".join(f'<p style="margin:0 0 6px 0">{part}</p>' for part in parts)
+
+    def _look_for_missed(self) -> None:
+        """Measure which boutons the detection would have missed, in another thread."""
+        measured = self.model.measured
+        if measured is None:
+            return
+
+        def work(progress: Progress) -> tuple[Measured, dict[str, Any]]:
+            progress(0, 0)
+            return measured, selection_summary(measure_selection(measured))
+
+        self.runner.run(work, self._take_missed, words="Looking for missed boutons", kind="selection")
+
+    def _take_missed(self, outcome: tuple[Measured, dict[str, Any]]) -> None:
+        self.model.accept_selection(*outcome)
 
     def _choose(self, *_: object) -> None:
         if self._filling:

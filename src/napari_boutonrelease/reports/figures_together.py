@@ -12,7 +12,7 @@ from matplotlib.figure import Figure
 from matplotlib.lines import Line2D
 
 from ..analysis.results import AnalysisResult
-from .facts import fact, number, on_a_path, values
+from .facts import number, on_a_path, values
 from .figures_page import Area, blank_figure
 from .figures_style import (
     EVOKED,
@@ -26,7 +26,7 @@ from .figures_style import (
     say_nothing_to_show,
     styled,
 )
-from .words import counted, expected_count, fixed, p_words, short
+from .together_words import co_release_words, distance_words, spread_words, stimuli_words
 
 _SUSPECTED = 0.5
 _PULSES = (EVOKED, PULSE_2)
@@ -65,7 +65,7 @@ def draw_together(area: Area, result: AnalysisResult) -> None:
     y += 5.0
     area.text(0.0, y, "Stimulus by stimulus", size=HEAD, weight="bold")
     draw_stimuli(area.axes(11.0, y + 9.0, area.width - 13.0, 34.0), result)
-    area.paragraph(0.0, y + 53.0, area.width, _stimuli_words(result), size=SMALL, color=MUTED)
+    area.paragraph(0.0, y + 53.0, area.width, stimuli_words(result), size=SMALL, color=MUTED)
 
 
 def draw_spread(axes: Axes, result: AnalysisResult) -> None:
@@ -208,73 +208,14 @@ def _believed_cut(result: AnalysisResult) -> float:
 
 
 def _spread_words(result: AnalysisResult) -> str:
-    sd, low, high = (number(result, f"heterogeneity.sd{end}") for end in ("", "_lo", "_hi"))
-    interval = f" (95 % interval {fixed(low)} to {fixed(high)})" if math.isfinite(low + high) else ""
-    p = number(result, "heterogeneity.p")
-    test = f" That all share one p_release: {p_words(p)}." if math.isfinite(p) else ""
-    return (
-        f"True SD of p_release between boutons: {fixed(sd)}{interval}, sampling taken out (beta-binomial).{test} Bars: "
-        "95 % intervals of each bouton given what the others tell about it."
-    )
+    return f"{spread_words(result)} Bars: 95 % intervals of each bouton given what the others tell about it."
 
 
 def _co_release_words(result: AnalysisResult) -> str:
-    mean, low, high = (number(result, f"co_release.{key}") for key in ("value", "independent_lo", "independent_hi"))
-    if not math.isfinite(mean):
-        return _why(result, "co_release.reason")
-    pairs, together = (number(result, f"co_release.pairs{end}") for end in ("", "_together"))
-    among = f"; among independent boutons {fixed(low)} to {fixed(high)}" if math.isfinite(low + high) else ""
-    dots = (
-        f" Dots: {counted(together, 'pair')} of {pairs:g} that do not release independently."
-        if together > 0
-        else f" None of {counted(pairs, 'pair')} stands out."
-        if pairs > 0
-        else ""
-    )
-    p = number(result, "co_release.p")
-    return (
-        f"Mean correlation over stimuli {fixed(mean)}{among} ({p_words(p)}). Slow changes and suspected stimulus "
-        f"failures are taken out.{dots} Light of neighbours that was not separated correlates them too."
-    )
+    dots = " Dots: those pairs." if number(result, "co_release.pairs_together") > 0 else ""
+    return co_release_words(result) + dots
 
 
 def _distance_words(result: AnalysisResult) -> str:
-    slope, low, high = (number(result, f"p_release_against_distance.slope_per_um{end}") for end in ("", "_lo", "_hi"))
-    if not math.isfinite(slope):
-        return _why(result, "p_release_against_distance.method")
-    rank, p = (number(result, f"p_release_against_distance.{key}") for key in ("rank_correlation", "p"))
-    words = f"Dashed: p_release changes by {short(10 * slope)} (95 % interval {short(10 * low)} to {short(10 * high)}) "
-    words += "per 10 µm"
-    words += f"; rank correlation {fixed(rank)}, {p_words(p)}." if math.isfinite(rank) else "."
-    moran, moran_p = number(result, "morans_i.value"), number(result, "morans_i.p")
-    if math.isfinite(moran):
-        expected = fixed(number(result, "morans_i.expected"))
-        words += (
-            f" Moran's I of neighbours {fixed(moran)}, in random order {expected}, {p_words(moran_p)} "
-            f"({fact(result, 'morans_i.weighting') or 'binary'} weights)."
-        )
-    return words
-
-
-def _stimuli_words(result: AnalysisResult) -> str:
-    share, low, high = (number(result, f"stimulus_failures.share{end}") for end in ("", "_lo", "_hi"))
-    if not math.isfinite(share):
-        return _why(result, "stimulus_failures.method")
-    failed, expected, p = (number(result, f"stimulus_failures.{key}") for key in ("trials", "expected", "p"))
-    words = (
-        f"At {fixed(failed, decimals=0)} stimuli every bouton failed; independent boutons would at "
-        f"{expected_count(expected)}. Share of stimuli that reached no bouton: {fixed(100 * share, decimals=1)} % "
-        f"(95 % interval {fixed(100 * low, decimals=1)} to {fixed(100 * high, decimals=1)} %, {p_words(p)})."
-    )
-    if number(result, "stimulus_failures.suspected") > 0:
-        words += (
-            " The suspected ones were left out of every estimate."
-            if fact(result, "stimulus_failures.excluded")
-            else " The suspected ones still count: p_release is too low by their share."
-        )
-    return words
-
-
-def _why(result: AnalysisResult, path: str) -> str:
-    reason = str(fact(result, path) or "not available").removeprefix("none: ")
-    return f"{reason[:1].upper()}{reason[1:]}."
+    dashed = math.isfinite(number(result, "p_release_against_distance.slope_per_um"))
+    return distance_words(result) + (" Dashed: the fitted line." if dashed else "")
