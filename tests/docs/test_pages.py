@@ -113,6 +113,22 @@ def test_the_tables_can_be_read_as_the_page_says(folder, monkeypatch):
     assert names["dff"].shape == (len(names["boutons"]), len(names["time_s"]))
 
 
+def test_the_nwb_file_can_be_read_as_the_page_says(folder, monkeypatch, capsys):
+    monkeypatch.chdir(folder)
+    details = br.reports.NwbDetails(species="Rattus norvegicus")
+    analysis = br.analyse("axon.tif", "axon.protocol.toml")
+    analysis.write("axon.release", overwrite=True, nwb=details)
+    names: dict[str, object] = {}
+    (snippet,) = fences(ROOT / "docs" / "how-to" / "nwb.md", "python")
+    exec(compile(snippet, "nwb.md", "exec"), names)
+    assert "p_release_hi" in capsys.readouterr().out
+    assert names["dff"].shape == (len(analysis.time_s), len(names["boutons"]))
+    assert np.sum([weight for _, _, weight in names["weights"]]) == pytest.approx(
+        analysis.footprints.weights[0].sum(), abs=1e-4
+    )
+    assert len(names["trials"]) == 12
+
+
 def test_the_snippets_for_scripts_run(folder, recipe, monkeypatch, tmp_path):
     monkeypatch.chdir(tmp_path)
     for name in ("axon.tif", "axon.protocol.toml"):
