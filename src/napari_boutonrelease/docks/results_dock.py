@@ -6,10 +6,9 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from qtpy.QtCore import QItemSelectionModel, Qt, QUrl
+from qtpy.QtCore import Qt, QUrl
 from qtpy.QtGui import QDesktopServices, QKeySequence
 from qtpy.QtWidgets import (
-    QAbstractItemView,
     QApplication,
     QCheckBox,
     QFileDialog,
@@ -34,6 +33,7 @@ from .layers import show_frame
 from .panel import Panel, sentence_label
 from .reopen import ask_and_reopen
 from .table_model import TableModel
+from .table_view import select_rows, table_view
 from .worker import ProgressRow
 
 if TYPE_CHECKING:
@@ -139,21 +139,7 @@ class ResultsDock(Panel):
 
     def _make_table(self, name: str) -> TableTab:
         rows = TableModel(TABLES[name])
-        view = QTableView()
-        view.setModel(rows)
-        view.setSelectionBehavior(QAbstractItemView.SelectionBehavior.SelectRows)
-        view.setEditTriggers(QAbstractItemView.EditTrigger.NoEditTriggers)
-        view.setHorizontalScrollMode(QAbstractItemView.ScrollMode.ScrollPerPixel)
-        view.setTabKeyNavigation(False)  # Tab leads on to the buttons
-        view.verticalHeader().setVisible(False)
-        view.verticalHeader().setDefaultSectionSize(22)
-        header = view.horizontalHeader()
-        header.setSectionsMovable(True)
-        for place, column in enumerate(_FIRST.get(name, ())):
-            header.moveSection(header.visualIndex(TABLES[name].names.index(column)), place)
-        header.setSortIndicatorShown(True)
-        header.setSortIndicator(-1, Qt.SortOrder.AscendingOrder)
-        view.setSortingEnabled(True)
+        view = table_view(rows, TABLES[name], first=_FIRST.get(name, ()))
         view.selectionModel().selectionChanged.connect(self._select_from_table)
         rows.modelReset.connect(self._follow_selection)
         return TableTab(view=view, rows=rows)
@@ -210,7 +196,7 @@ class ResultsDock(Panel):
                 rows = [] if chosen.bouton is None else tab.rows.rows_where(**keys)
                 if name != "boutons" and chosen.trial is None and chosen.pulse is None:
                     rows = rows[:1]  # the first of many: selecting them all would only colour the table
-                _select_rows(tab.view, rows)
+                select_rows(tab.view, rows)
         finally:
             self._following = False
 
@@ -325,13 +311,3 @@ def default_folder(movie: Movie) -> Path | None:
     first = movie.files[0]
     beside = first.parent if len(movie.files) > 1 and movie.name == first.parent.resolve().name else first
     return beside.with_name(f"{movie.name}.release")
-
-
-def _select_rows(view: QTableView, rows: list[int]) -> None:
-    selection = view.selectionModel()
-    selection.clearSelection()
-    flags = QItemSelectionModel.SelectionFlag.Select | QItemSelectionModel.SelectionFlag.Rows
-    for row in rows:
-        selection.select(view.model().index(row, 0), flags)
-    if rows:
-        view.scrollTo(view.model().index(rows[0], max(view.columnAt(0), 0)))
