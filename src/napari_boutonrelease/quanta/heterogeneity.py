@@ -343,8 +343,9 @@ def _spread(
         p = middle if sd == 0 else rng.beta(*_shape(middle, rho), size=(n_simulations, k.size))
         statistic = _excess(rng.binomial(whole, p, size=(n_simulations, k.size)) * (n / whole), n)
         if i == 0:
-            # counts that vary less than chance would leave no spread at all: they say no more than typical ones do
-            typical = max(found, float(np.median(statistic)))
+            # Counts that vary less than chance would leave no spread at all: no more is made of them than of the lowest
+            # tenth of what equal boutons show.
+            typical = max(found, float(np.quantile(statistic, 0.1)))
         larger[i] = np.mean(statistic > found) + 0.5 * np.mean(statistic == found)
         larger_than_typical[i] = np.mean(statistic > typical) + 0.5 * np.mean(statistic == typical)
 

@@ -28,7 +28,7 @@ if TYPE_CHECKING:
 FEWEST = 5
 """Boutons below which no correlation is given."""
 
-_SEEN_SE = 2.0  # the first mean must rise this many SE of the noise above zero, in the half that gives the ratio
+_SEEN_SE = 2.0  # the first mean must rise this many SE of the noise above zero
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -75,7 +75,7 @@ def correlate_release_with_ratio(
     amplitude : (n_boutons, n_trials, 2) array_like
         Amplitudes of both pulses, dF/F; NaN where not measured.
     noise_sd : (n_boutons,) array_like
-        Noise of an amplitude: a bouton whose first mean is within it of zero, in either half, has no ratio.
+        Noise of an amplitude: a bouton whose first mean is within noise of zero has no ratio.
     confidence : float
         Coverage of the intervals: Fisher's z with its SE by the jackknife over boutons.
     n_permutations : int
@@ -101,15 +101,19 @@ def correlate_release_with_ratio(
         )
     there = np.isfinite(a).all(axis=2) & np.isfinite(chance)
     halves = (np.arange(chance.shape[1]) % 2 == 0, np.arange(chance.shape[1]) % 2 == 1)
+    # Asked of all trials: a half that must rise above noise too would keep the high halves of weak boutons alone.
+    count = there.sum(axis=1)
+    mean = np.where(there, a[:, :, 0], 0.0).sum(axis=1) / np.maximum(count, 1)
+    seen = mean > _SEEN_SE * noise / np.sqrt(np.maximum(count, 1))
     p, ratio = (np.full((3, len(a)), np.nan) for _ in range(2))
     for part, inside in enumerate((np.ones(chance.shape[1], dtype=bool), *halves)):
         for b in range(len(a)):
             used = there[b] & inside
             first = a[b, used, 0]
-            if used.sum() > 2 and first.mean() > _SEEN_SE * noise[b] / np.sqrt(used.sum()):
+            if used.sum() > 2 and seen[b]:
                 p[part, b] = chance[b, used].mean()
                 ratio[part, b] = _centred_ratio(a[b, used, 1], first)
-    known = np.isfinite(ratio).all(axis=0) & np.isfinite(p).all(axis=0)
+    known = ~np.isnan(ratio).any(axis=0) & np.isfinite(p).all(axis=0)
     n = int(known.sum())
     if n < FEWEST:
         none = Estimate(
@@ -137,6 +141,8 @@ def _centred_ratio(second: Floats, first: Floats) -> float:
     whose ratios scatter most, below the others in most samples, a correlation where there is none.
     """
     above, below = float(second.mean()), float(first.mean())
+    if below <= 0:
+        return float("inf")  # among ranks the highest
     if above <= 0:
         return above / below
     bias = second.var(ddof=1) / above**2 - first.var(ddof=1) / below**2
