@@ -8,6 +8,7 @@ import sys
 
 import pandas as pd
 import pytest
+from pynwb import NWBHDF5IO
 
 from napari_boutonrelease.cli.analyse import out_folder
 from napari_boutonrelease.cli.main import main
@@ -35,6 +36,15 @@ def analysed(recording):
     words = ["analyse", recording / "axon.tif", "--protocol", recording / "axon.protocol.toml", *QUICK]
     done = subprocess.run([sys.executable, "-c", code, *map(str, words)], capture_output=True, text=True, check=False)
     return recording / "axon.release", done
+
+
+@pytest.fixture(scope="module")
+def again(analysed, tmp_path_factory):
+    """The same analysis repeated from what it saved, now with a file of the open standard."""
+    out = tmp_path_factory.mktemp("again") / "again.release"
+    words = ["--from", str(analysed[0] / "analysis.json"), "--out", str(out), "--nwb-subject-id", "rat 12"]
+    assert main(["analyse", *words]) == 0
+    return out
 
 
 def tables(folder):
@@ -66,12 +76,19 @@ def test_existing_results_are_refused_before_any_work(analysed, capsys):
     assert tables(folder) == before
 
 
-def test_a_saved_analysis_repeats_to_the_same_tables(analysed, tmp_path):
+def test_a_saved_analysis_repeats_to_the_same_tables(analysed, again):
     folder = analysed[0]
-    assert main(["analyse", "--from", str(folder / "analysis.json"), "--out", str(tmp_path / "again")]) == 0
-    assert tables(tmp_path / "again") == tables(folder)
-    settings = [json.loads((place / "analysis.json").read_text())["settings"] for place in (folder, tmp_path / "again")]
+    assert tables(again) == tables(folder)
+    settings = [json.loads((place / "analysis.json").read_text())["settings"] for place in (folder, again)]
     assert settings[0] == settings[1]
+
+
+def test_the_nwb_file_is_written_where_it_is_asked_for(analysed, again):
+    assert not (analysed[0] / "recording.nwb").exists()
+    with NWBHDF5IO(again / "recording.nwb", "r") as io:
+        file = io.read()
+        assert file.subject.subject_id == "rat 12"
+        assert list(file.processing["ophys"]["boutons"]["bouton"]) == list(pd.read_csv(again / "boutons.csv")["bouton"])
 
 
 def test_a_saved_analysis_refuses_another_movie(analysed, tmp_path, capsys):

@@ -13,7 +13,7 @@ import numpy as np
 from ..analysis.columns import TABLES
 from ..recording.start_time import recording_start
 from .arrays import weight_pages
-from .facts import fact, frame_interval_s, pixel_size_um, texts, values
+from .facts import frame_interval_s, pixel_size_um, texts, values
 from .nwb_details import NwbDetails
 from .nwb_tables import interval_columns, make_column, make_intervals, make_table, sentence
 from .strict_json import json_ready
@@ -112,13 +112,12 @@ def _session_start(result: AnalysisResult, details: NwbDetails) -> tuple[datetim
 
 
 def _experiment(result: AnalysisResult, details: NwbDetails) -> str:
-    trials, pulses = fact(result, "recording.trials"), fact(result, "recording.pulses")
-    version = result.provenance.get("versions", {}).get("napari-boutonrelease", "")
+    trials, pulses = result.stimulus_s.shape
+    version = result.provenance.get("versions", {}).get("napari-boutonrelease", "of unknown version")
     parts = [
-        f"The axon was stimulated in {trials or len(result.stimulus_s)} trials of up to "
-        f"{pulses or result.stimulus_s.shape[1]} pulses; every bouton's responses were fitted with one time course and "
-        f"its release described by a binomial model. Analysed with napari-boutonrelease {version}".rstrip()
-        + ".",
+        f"The axon was stimulated in {trials} trials (pulses in a trial: {pulses}); every bouton's responses were "
+        "fitted with one time course and its release described by a binomial model. "
+        f"Analysed with napari-boutonrelease {version}.",
         "The notes hold all settings, the summary and the cautions, as JSON.",
         *result.cautions,
     ]
@@ -165,13 +164,12 @@ def _add_stimuli(file: NWBFile, result: AnalysisResult) -> None:
     rest = [column for column in TABLES[_STIMULI].columns if column.name != "stimulus_s"]
     file.add_time_intervals(make_table("stimuli", "A row a pulse that was given", frame, columns=rest, times=times))
 
-    reason = "reason"
-    by_trial = frame.assign(reason=texts(frame, reason)).groupby("trial", sort=False)
+    by_trial = frame.assign(reason=texts(frame, "reason")).groupby("trial", sort=False)
     trials = by_trial.agg(
         start=("stimulus_s", "min"),
         pulses=("pulse", "size"),
         pulses_used=("used", "sum"),
-        reason=(reason, lambda why: "; ".join(dict.fromkeys(one for one in why if one))),
+        reason=("reason", lambda why: "; ".join(dict.fromkeys(one for one in why if one))),
     ).reset_index()
     trial_words = ("time of the trial's first pulse", "first pulse of the next trial, or the end of the recording")
     columns = {
@@ -179,7 +177,7 @@ def _add_stimuli(file: NWBFile, result: AnalysisResult) -> None:
         "pulses": "pulses that were given",
         "pulses_used": "pulses that count in the estimates",
         "used": "whether any of its pulses counts in the estimates",
-        reason: "why pulses of the trial were left out, empty where all count",
+        "reason": "why pulses of the trial were left out, empty where all count",
     }
     trials["used"] = trials["pulses_used"] > 0
     data = [make_column(name, words, trials[name].tolist()) for name, words in columns.items()]
