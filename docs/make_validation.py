@@ -1,7 +1,8 @@
 """Makes explanation/validation.md: simulate, analyse, compare with the truth and with an ideal observer.
 
 `python docs/make_validation.py RECORDS` keeps one file a simulated recording in the folder RECORDS and makes only those
-that are missing; then it writes the page. `--only-write` makes none and takes what is there.
+that are missing; then it writes the page. `--only-write` makes none and takes what is there. `--only-comparisons`
+leaves the rest of the page as it is and writes the section about recordings compared.
 """
 
 from __future__ import annotations
@@ -17,8 +18,10 @@ import numpy as np
 HERE = Path(__file__).parent
 sys.path.insert(0, str(HERE.parent / "tests" / "recovery"))
 
+import comparisons  # noqa: E402
 import study  # noqa: E402
 import summary  # noqa: E402
+import two_conditions  # noqa: E402
 from population import AXONS, Population, study_axons, study_pairs, summarise, summarise_pairs  # noqa: E402
 
 import napari_boutonrelease  # noqa: E402
@@ -34,6 +37,8 @@ MOVIES = {
     "equal-25ms": 8,
     "slow-decay": 8,
 }
+FIELDS = 10
+CHANGE_BLOCKS = 3
 PAGE = HERE / "explanation" / "validation.md"
 
 
@@ -42,9 +47,14 @@ def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__)
     parser.add_argument("records", type=Path, help="folder that keeps what was found of each simulated recording")
     parser.add_argument("--only-write", action="store_true", help="run nothing; take the records that are there")
+    parser.add_argument("--only-comparisons", action="store_true", help="write one section: recordings compared")
     parser.add_argument("--note", default="", help="a sentence about these records, for the introduction")
     given = parser.parse_args()
     given.records.mkdir(parents=True, exist_ok=True)
+    compared = _compared(given)
+    if given.only_comparisons:
+        _replace_section(compared)
+        return
     movies, axons = {}, {}
     for name, (population, n_axons) in AXONS.items():
         axons[name] = (population, n_axons, _axons(name, population, n_axons, given))
@@ -53,7 +63,7 @@ def main() -> None:
         if given.only_write:
             seeds = [seed for seed in seeds if (given.records / f"{name}-{seed}.json").exists()]
         movies[name] = study.studied(name, seeds=seeds, folder=given.records, progress=_tell)
-    PAGE.write_text(_page(movies, axons, note=given.note), encoding="utf-8")
+    PAGE.write_text(_page(movies, axons, compared=compared, note=given.note), encoding="utf-8")
     print(f"{PAGE} written")
 
 
@@ -68,11 +78,47 @@ def _axons(name: str, population: Population, n_axons: int, given: argparse.Name
     return {key: np.array(values) for key, values in json.loads(path.read_text(encoding="utf-8")).items()}
 
 
+def _compared(given: argparse.Namespace) -> str:
+    """Return the section about recordings compared."""
+    fields, blocks = range(1, FIELDS + 1), range(1, CHANGE_BLOCKS + 1)
+    if given.only_write:
+        fields = [seed for seed in fields if (given.records / f"conditions-{seed}.json").exists()]
+        blocks = [
+            block
+            for block in blocks
+            if all(comparisons.record_path(given.records, name, block).exists() for name in comparisons.SCENARIOS)
+        ]
+    parts = ["## Recordings compared\n\n" + _COMPARED]
+    if fields:
+        parts.append(_two_conditions(two_conditions.studied_fields(seeds=fields, folder=given.records, progress=_tell)))
+    if blocks:
+        found = {
+            name: comparisons.studied_changes(name, blocks=blocks, folder=given.records, progress=_tell)
+            for name in comparisons.SCENARIOS
+        }
+        parts += [_CHANGES.format(axons=comparisons.AXONS, blocks=len(blocks)), _changes(found)]
+    return "\n".join(parts)
+
+
+def _replace_section(section: str) -> None:
+    """Write a section of the page in place of the one that has its heading."""
+    text = PAGE.read_text(encoding="utf-8")
+    heading = section.splitlines()[0] + "\n"
+    before, found, after = text.partition(heading)
+    if not found:
+        before, _, after = text.partition(_NEXT)
+        after = _NEXT + after
+    else:
+        after = after[after.index("\n## ") + 1 :]
+    PAGE.write_text(before + section + "\n" + after, encoding="utf-8")
+    print(f"{heading.strip('# ').strip()}: written to {PAGE}")
+
+
 def _tell(name: str, seed: int) -> None:
     print(f"{datetime.now(tz=UTC):%H:%M:%S} {name} seed {seed}", flush=True)
 
 
-def _page(movies: dict, axons: dict, *, note: str) -> str:
+def _page(movies: dict, axons: dict, *, compared: str, note: str) -> str:
     movies = {name: records for name, records in movies.items() if records}
     parts = [
         _INTRODUCTION.format(version=napari_boutonrelease.__version__) + (f"\n{note}\n" if note else ""),
@@ -96,7 +142,8 @@ def _page(movies: dict, axons: dict, *, note: str) -> str:
         _pair_statistics(),
         "## Numbers of sites\n\n" + _SITES,
         _sites(movies),
-        "## The statistics alone, without movies\n\n" + _AXONS,
+        compared,
+        _NEXT + "\n" + _AXONS,
         _statistics(axons),
         _silent_axons(axons),
         _SHORT,
@@ -310,6 +357,65 @@ def _sites(movies):
     return _table(header, rows)
 
 
+def _two_conditions(records):
+    one = two_conditions.summarise_fields(records)
+    ours, observer = one["ours"], one["observer"]
+    sites = _table(
+        ("", "analysis", "observer's amplitudes"),
+        [
+            ("boutons", one["boutons"], one["boutons"]),
+            *(
+                (label, f"{ours[key]:.3f}", f"{observer[key]:.3f}")
+                for label, key in (
+                    ("exactly right", "right"),
+                    ("right within 1", "within_one"),
+                    ("true n in `n_set`", "in_set"),
+                    ("more than one number in `n_set`", "unresolved"),
+                    ("q interval holds the truth", "q_coverage"),
+                    ("said to differ in p_site, as they do (p < 0.05)", "p_changed"),
+                    ("said to differ in q, as they do not (p < 0.05)", "q_changed"),
+                )
+            ),
+            (
+                "bias of q",
+                *(f"{100 * who['q_bias']:+.1f} ± {100 * who['q_bias_se']:.1f} %" for who in (ours, observer)),
+            ),
+            *(
+                (f"`{name}` holds the truth", *(_share_of(who["changes"][name]) for who in (ours, observer)))
+                for name in comparisons.CHANGES
+            ),
+        ],
+    )
+    found = (
+        f"{one['axons']} axons of 12 boutons, each filmed twice (seeds 1 to {one['axons']}): median q / noise "
+        f"{one['snr']:.1f}; {one['not_found_twice']} boutons were not found in both recordings, "
+        f"{one['wrong_matches']} were matched with another one.\n"
+    )
+    return found + "\n" + sites
+
+
+def _changes(found):
+    rows = []
+    for name, one in [*found.items(), ("all", comparisons.pool(found.values()))]:
+        said = comparisons.summarise_changes(one)
+        tests = [
+            "" if name == "all" else f"{said[test]['found']:.3f} ({said[test]['boutons']})"
+            for test in comparisons.TESTS
+        ]
+        rows.append((name, *(_share_of(said[change]) for change in comparisons.CHANGES), *tests))
+    names = [f"`{name}`" for name in comparisons.CHANGES]
+    tests = ["p_site said to differ", "q said to differ"]
+    return _table(("", *names, *tests), rows)
+
+
+def _percent(value, se):
+    return f"{100 * value:+.1f} ± {100 * se:.1f} %"
+
+
+def _share_of(one):
+    return f"{one['coverage']:.3f} ({one['boutons']})" if one["boutons"] else ""
+
+
 def _statistics(axons):
     rows = []
     for population, n_axons, found in axons.values():
@@ -458,6 +564,22 @@ ratio, and leaving them out biases those that remain downward:
 """
 _SITES = """Required: exactly right at least 0.95 times as often as the observer; the true number in `n_set` in at
 least 93 %.
+"""
+_NEXT = "## The statistics alone, without movies\n"
+_COMPARED = """Boutons with 1 to 4 sites are filmed at `p_site` 0.15 and at 0.6, 80 pairs of pulses each. Either movie
+is analysed by itself, boutons found in it; then both recordings are compared with the default settings. The
+observer reads the amplitudes of the same movies and hands them to the same comparison; both columns hold the boutons
+that the analysis found twice.
+
+Required: n exactly right at least 0.95 times as often as with the observer's amplitudes, right within 1 in at least
+95 %, the true n in `n_set` in at least 93 %; 93 to 97 % of the intervals hold the truth; where p_site stays, a change
+of it is found in 4 to 6 %.
+"""
+_CHANGES = """Without movies, 8 boutons an axon, 80 pairs of pulses, `p_site` of the first recording drawn for either
+pulse between 0.1 and 0.6 (0.2 and 0.6 at q/noise 2.5), q/noise 4.4 where nothing else is said. *Release changes*
+multiplies the odds of `p_site` by 4, *vesicles change* multiplies q by 0.7 (0.8 at q/noise 2.5), *both change* odds by
+0.4 and q by 1.3. {blocks} blocks of {axons} axons each; `p_release_change` rests on the first of them, which alone
+estimates each recording's own release. In brackets: boutons that have an estimate. Tests are at the level of 5 %:
 """
 _AXONS = """Amplitudes are drawn directly: `p_release` even between 0.1 and 0.9, 1 to 4 sites, q with a spread of 10 %
 between boutons, gamma vesicles of CV 0.3, 8 boutons with 80 trials where nothing else is said, the noise known from 300

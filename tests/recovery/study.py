@@ -139,13 +139,13 @@ def compare(simulation, measured, observed, *, settings=SETTINGS):
             one["false_calls_expected"] = float(calls.false_calls_expected[row, 0])
             one["verdict"] = release.verdicts[row]
             one["ours"] = _of_bouton(truth, index, fit=fit, axon=release.axon, b=row, sd=None, pair=release.pairs[row])
-        spots.append(_plain(one))
+        spots.append(plain(one))
     drift = measured.drift
     dy, dx = drift.dy_px - truth.dy_px, drift.dx_px - truth.dx_px
     shape = measured.responses.shape
     return {
         "spots": spots,
-        "stray": _plain(stray),
+        "stray": plain(stray),
         "found": len(measured.places.bouton),
         "drift_rms_px": [float(np.std(dy[drift.used])), float(np.std(dx[drift.used]))],
         "shape": [shape.latency_s, shape.rise_s, shape.decay_s, shape.slow_fraction, shape.slow_decay_s],
@@ -201,7 +201,7 @@ def _infer(fit, settings):
 
 
 def _of_axon(axon):
-    return _plain({name: getattr(axon, name) for name in ("axon_q", "axon_q_lo", "axon_q_hi", "q_cv", "axon_q_spread")})
+    return plain({name: getattr(axon, name) for name in ("axon_q", "axon_q_lo", "axon_q_hi", "q_cv", "axon_q_spread")})
 
 
 def _of_bouton(truth, index, *, fit, axon, b, sd, pair):
@@ -276,14 +276,14 @@ def _nearest_um(truth, index):
     return float(apart.min())
 
 
-def _plain(value):
+def plain(value):
     """Turn arrays into lists that JSON can hold, five digits kept."""
     if isinstance(value, dict):
-        return {key: _plain(entry) for key, entry in value.items()}
+        return {key: plain(entry) for key, entry in value.items()}
     if isinstance(value, list | tuple):
-        return [_plain(entry) for entry in value]
+        return [plain(entry) for entry in value]
     if isinstance(value, np.ndarray):
-        return _plain(value.tolist())
+        return plain(value.tolist())
     if isinstance(value, np.generic):
         value = value.item()
     return float(f"{value:.5g}") if isinstance(value, float) else value
