@@ -350,3 +350,15 @@ def test_nothing_is_cut_at_the_side(compared, width):
     compared.resize(width, 400)
     settle()
     assert compared.horizontalScrollBar().maximum() == 0
+
+
+def test_the_dock_settles_at_any_size(compared):
+    part = compared.comparison
+    part._exported(part.list.near())  # a sentence that wraps
+    for width in range(320, 1000, 85):
+        for height in (200, 330, 620):
+            compared.resize(width, height)
+            compared.tabs.setCurrentIndex(1 - compared.tabs.currentIndex())
+            QApplication.processEvents()
+    assert compared.width() == 915
+    assert compared.height() == 620

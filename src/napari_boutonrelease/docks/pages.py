@@ -18,6 +18,14 @@ class Pages(QTabWidget):
         self.setTabToolTip(self.addTab(page, title), tip)
         self._ask_for_room()
 
+    def hasHeightForWidth(self) -> bool:
+        """Ask for the same height at any width."""
+        return False  # sentences that wrap in several pages would drive a dock's scroll bars on and off for ever
+
+    def heightForWidth(self, width: int) -> int:  # noqa: ARG002
+        """There is none."""
+        return -1
+
     def _ask_for_room(self, *_: object) -> None:
         for index in range(self.count()):
             front = index == self.currentIndex()
