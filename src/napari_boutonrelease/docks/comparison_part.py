@@ -46,7 +46,7 @@ if TYPE_CHECKING:
     from ..recording import Movie
     from .panel import Panel
 
-_WIDE_PX, _LIST_PX = 640, 300
+_WIDE_PX, _LIST_PX = 680, 350
 _EMPTY = "Add the results of two or more recordings of the same boutons, in the order in which they were made."
 _ONE = "Add the results of another recording of the same boutons."
 _READY = "Press Compare."
