@@ -69,7 +69,7 @@ def analyse_on_cluster(jobs: Sequence[tuple[int, dict[str, Any]]], *, client: An
         future = client.submit(analyse_apart, index, job, key=f"boutonrelease-{run}-{index}", pure=False)
         indices[future] = index
     try:
-        for future in _distributed().as_completed(list(indices)):
+        for future in _distributed().as_completed(list(indices), loop=client.loop):
             if future.status == "finished":
                 yield future.result()
             else:

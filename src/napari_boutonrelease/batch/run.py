@@ -169,7 +169,10 @@ def _running(
 ) -> Iterator[Iterator[Ending]]:
     """Have the jobs run; what is still running at the end is stopped."""
     with nullcontext() if scheduler is None or not jobs else connected(scheduler) as client:
-        endings = analyse_here(jobs, workers=workers) if client is None else analyse_on_cluster(jobs, client=client)
+        if client is None:
+            endings = analyse_here(jobs, workers=max(1, workers))
+        else:
+            endings = analyse_on_cluster(jobs, client=client)
         with closing(endings):  # type: ignore[type-var]
             yield endings
 
