@@ -40,6 +40,24 @@ def test_beyond_the_border_the_nearest_pixel_stands_in():
     np.testing.assert_array_equal(shift_frame_block(frame, dy=[5.0], dx=[0.0])[0], [[8, 9, 10, 11]] * 3)
 
 
+@pytest.mark.parametrize("shape", [(3, 150, 20), (3, 5, 7), (3, 130, 1)])
+@pytest.mark.parametrize("reach_px", [0.5, 30.0, 500.0])
+def test_strips_and_borders_are_read_as_every_pixel_by_itself(shape, reach_px):
+    rng = np.random.default_rng(4)
+    frames = rng.poisson(20.0, shape).astype(np.uint16)
+    dy, dx = rng.uniform(-reach_px, reach_px, (2, len(frames)))
+    n_y, n_x = shape[1:]
+    plain = np.zeros(shape)
+    for k in range(len(frames)):
+        whole_y, whole_x = int(np.floor(dy[k])), int(np.floor(dx[k]))
+        for i, weight_y in enumerate(taps(dy[k] - whole_y)):
+            for j, weight_x in enumerate(taps(dx[k] - whole_x)):
+                rows = np.clip(np.arange(n_y) + whole_y + i - 1, 0, n_y - 1)
+                columns = np.clip(np.arange(n_x) + whole_x + j - 1, 0, n_x - 1)
+                plain[k] += weight_y * weight_x * frames[k][np.ix_(rows, columns)]
+    np.testing.assert_allclose(shift_frame_block(frames, dy=dy, dx=dx), plain, rtol=1e-4, atol=1e-3)
+
+
 @pytest.mark.parametrize(
     ("dy", "dx", "message"),
     [([0.0], [0.0, 0.0], "one dy and one dx per frame"), ([np.nan], [0.0], "must be finite")],

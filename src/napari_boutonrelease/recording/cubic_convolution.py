@@ -16,6 +16,8 @@ if TYPE_CHECKING:
 
 __all__ = ["shift_frame_block", "taps"]
 
+_STRIP_ROWS = 64  # rows worked on at a time, so that they stay in the processor's cache
+
 
 def taps(fraction: ArrayLike) -> NDArray[np.float64]:
     """Weights of the pixels i-1, i, i+1, i+2 that give the value at i + fraction.
@@ -85,14 +87,37 @@ def shift_frame_block(block: ArrayLike, *, dy: ArrayLike, dx: ArrayLike) -> NDAr
         )
     if not (np.isfinite(dy).all() and np.isfinite(dx).all()):
         raise InputError("dy and dx must be finite; leave frames of unknown drift out of the block.")
-    n_y, n_x = frames.shape[1:]
     shifted = np.empty(frames.shape, dtype=np.float32)
     whole_y, whole_x = np.floor(dy).astype(np.intp), np.floor(dx).astype(np.intp)
     weights_y, weights_x = (taps(drift - whole).astype(np.float32) for drift, whole in ((dy, whole_y), (dx, whole_x)))
     for k, frame in enumerate(frames):
-        rows = np.clip(np.arange(-1, n_y + 2) + whole_y[k], 0, n_y - 1)
-        columns = np.clip(np.arange(-1, n_x + 2) + whole_x[k], 0, n_x - 1)
-        tile = frame[rows].astype(np.float32)[:, columns]
-        along_y = sum(weight * tile[tap : tap + n_y] for tap, weight in enumerate(weights_y[k]))
-        shifted[k] = sum(weight * along_y[:, tap : tap + n_x] for tap, weight in enumerate(weights_x[k]))
+        for start in range(0, frames.shape[1], _STRIP_ROWS):
+            strip = shifted[k, start : start + _STRIP_ROWS]
+            tile = _read_around(frame, y=start + int(whole_y[k]), x=int(whole_x[k]), shape=strip.shape)
+            along_y = _weighted_sum([tile[tap : tap + len(strip)] for tap in range(4)], weights_y[k])
+            _weighted_sum([along_y[:, tap : tap + strip.shape[1]] for tap in range(4)], weights_x[k], out=strip)
     return shifted
+
+
+def _read_around(frame: NDArray[np.generic], *, y: int, x: int, shape: tuple[int, ...]) -> NDArray[np.float32]:
+    """Pixels from one before (y, x) to two after the far corner of `shape`; beyond the border the nearest pixel."""
+    (n_y, n_x), height, width = frame.shape, shape[0] + 3, shape[1] + 3
+    inside = 0 < y and y + height - 1 <= n_y
+    rows = frame[y - 1 : y - 1 + height] if inside else frame[np.clip(np.arange(y - 1, y - 1 + height), 0, n_y - 1)]
+    before = min(max(1 - x, 0), width)
+    after = min(max(x - 1 + width - n_x, 0), width - before)
+    tile = np.empty((height, width), dtype=np.float32)
+    tile[:, before : width - after] = rows[:, max(x - 1, 0) : max(x - 1, 0) + width - before - after]
+    tile[:, :before] = rows[:, :1]
+    tile[:, width - after :] = rows[:, -1:]
+    return tile
+
+
+def _weighted_sum(
+    parts: list[NDArray[np.float32]], weights: NDArray[np.float32], *, out: NDArray[np.float32] | None = None
+) -> NDArray[np.float32]:
+    total = np.multiply(parts[0], weights[0], out=out)
+    term = np.empty_like(total)
+    for part, weight in zip(parts[1:], weights[1:], strict=True):
+        total += np.multiply(part, weight, out=term)
+    return total
