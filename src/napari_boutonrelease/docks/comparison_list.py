@@ -176,7 +176,7 @@ class RecordingTable(QTableWidget):
         self.setRowCount(len(entries))
         for index, entry in enumerate(entries):
             name = QTableWidgetItem(entry.name)
-            source = QTableWidgetItem(_PRESENT if entry.folder is None else str(entry.folder))
+            source = QTableWidgetItem(_PRESENT if entry.folder is None else "/".join(entry.folder.parts[-2:]))
             source.setFlags(source.flags() & ~Qt.ItemFlag.ItemIsEditable)
             source.setToolTip("The analysis in this window" if entry.folder is None else str(entry.folder))
             self.setItem(index, 0, name)
