@@ -58,10 +58,13 @@ def columns() -> str:
     """Every column of every table."""
     from napari_boutonrelease.analysis.columns import SUMMARY, TABLES
     from napari_boutonrelease.analysis.plan_columns import PLAN, PLAN_CURVES
+    from napari_boutonrelease.batch.columns import recordings_table, study_table
     from napari_boutonrelease.comparison.columns import TABLES as COMPARED
 
     parts = []
-    for table in {table.name: table for table in (*TABLES.values(), *COMPARED.values(), PLAN, PLAN_CURVES)}.values():
+    studies = (study_table(()), recordings_table(()))
+    tables = (*TABLES.values(), *COMPARED.values(), PLAN, PLAN_CURVES, *studies)
+    for table in {table.name: table for table in tables}.values():
         rows = ((f"`{column.name}`", column.type, column.unit, column.meaning) for column in table.columns)
         heading = f"## {table.name}.csv\n\n{table.meaning[0].upper()}{table.meaning[1:]}.\n\n"
         parts.append(heading + _table(("column", "type", "unit", "meaning"), rows))

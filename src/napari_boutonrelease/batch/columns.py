@@ -38,7 +38,12 @@ _OF_RECORDING = (
     column("version", "string", "", "version of the program that analysed it"),
     number("seconds", "s", "time that the analysis took", minimum=0),
     number("cpu_s", "s", "processor time that it took", minimum=0),
-    number("peak_memory_mb", "MB", "most memory that it held at once (10⁶ bytes)", minimum=0),
+    number(
+        "peak_memory_mb",
+        "MB",
+        "most memory that it held at once (10⁶ bytes), the movie's file not counted under Linux",
+        minimum=0,
+    ),
     column("movie", "string", "", "movie, from the manifest's folder"),
     column("folder", "string", "", "folder of its results, from the folder of the study"),
 )

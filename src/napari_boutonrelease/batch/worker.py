@@ -93,12 +93,6 @@ def _analyse(job: dict[str, Any]) -> None:
 def peak_memory_mb() -> float | None:
     """Most memory that this process has held at once, in 10⁶ bytes; None where the system does not say."""
     try:
-        with open("/proc/self/status", encoding="ascii", errors="replace") as file:  # noqa: PTH123
-            kilobytes = next(line.split()[1] for line in file if line.startswith("VmHWM:"))
-        return int(kilobytes) * 1024 / 1e6
-    except (OSError, StopIteration):
-        pass
-    try:
         import resource
     except ImportError:
         return None
