@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 
 from napari_boutonrelease.errors import InputError
-from napari_boutonrelease.recording.cubic_convolution import shift_frame_block, taps
+from napari_boutonrelease.recording.cubic_convolution import DisplacedPixels, shift_frame_block, taps
 
 
 def test_taps_at_a_pixel_are_that_pixel_and_always_sum_to_one():
@@ -56,6 +56,16 @@ def test_strips_and_borders_are_read_as_every_pixel_by_itself(shape, reach_px):
                 columns = np.clip(np.arange(n_x) + whole_x + j - 1, 0, n_x - 1)
                 plain[k] += weight_y * weight_x * frames[k][np.ix_(rows, columns)]
     np.testing.assert_allclose(shift_frame_block(frames, dy=dy, dx=dx), plain, rtol=1e-4, atol=1e-3)
+
+
+def test_some_pixels_are_read_as_whole_frames_are():
+    rng = np.random.default_rng(5)
+    image = rng.uniform(0.0, 50.0, (20, 30))
+    pixels = rng.choice(image.size, 80, replace=False)
+    displaced = DisplacedPixels(image, pixels)
+    for dy, dx in rng.uniform(-4.0, 4.0, (40, 2)):
+        whole = shift_frame_block(image[None], dy=[dy], dx=[dx])[0]
+        np.testing.assert_allclose(displaced.read(dy=dy, dx=dx), whole.flat[pixels], rtol=1e-5, atol=1e-4)
 
 
 @pytest.mark.parametrize(

@@ -186,3 +186,21 @@ def test_progress_reaches_the_end(rng):
 def test_blocks_of_one_frame_are_refused():
     with pytest.raises(InputError, match="2 or more"):
         light_of(np.zeros((4, 8, 8)), block_frames=1)
+
+
+@pytest.mark.parametrize("dtype", [np.uint8, np.uint16, np.int32, np.float32])
+def test_means_are_exact_whatever_the_type_of_the_pixels(rng, dtype):
+    array = record(rng, np.broadcast_to(electrons(n_y=37, n_x=61), (90, 37, 61)), dtype=np.uint8).astype(dtype)
+    light = light_of(array, block_frames=40)
+    np.testing.assert_allclose(light.frame_mean, array.mean(axis=(1, 2), dtype=float), rtol=1e-12)
+    np.testing.assert_allclose(light.mean_image, array.mean(axis=0, dtype=float), rtol=1e-12)
+
+
+def test_some_of_the_pixels_and_pairs_of_a_large_movie_tell_its_noise(rng, monkeypatch):
+    monkeypatch.setattr("napari_boutonrelease.recording.light._PAIR_PIXELS", 0)  # as of a movie too large to test
+    expected = np.tile(electrons(n_y=32, n_x=96), (5, 2))
+    light = light_of(np.stack([record(rng, expected) for _ in range(1000)]), block_frames=64)
+    assert light.gain == pytest.approx(0.5, rel=0.02)
+    assert light.gain_lo < 0.5 < light.gain_hi
+    np.testing.assert_allclose(light.variance_at(OFFSET + 0.5 * np.array([5, 40])), [1.58, 10.3], rtol=0.05)
+    assert light.typical_variance == pytest.approx(0.25 * (np.median(expected) + 1.0) + 1 / 12, rel=0.02)

@@ -2,10 +2,11 @@
 
 from __future__ import annotations
 
-from .light import Light, light_at_rest, measure_light
+from .light import Light, measure_light
 from .motion import Drift, measure_drift, no_drift
 from .movie import Movie, content_digest, file_digest, fill_dead, movie_from_array, open_movie
 from .protocol import Protocol, protocol_from_dict, protocol_to_dict, read_protocol, write_protocol
+from .rest import light_at_rest
 from .stimuli import RegularStimuli, StimulusTable, read_stimulus_table
 from .timing import Timing, frame_times_s, resolve_timing, segment_frames, stimulus_frame
 

@@ -56,9 +56,13 @@ class FrameLevels:
                 raw = np.where(lost, np.nanmedian(np.where(lost, np.nan, raw)) if not lost.all() else 0.0, raw)
         rows, columns = self.tiles.shape[1:]
         high, wide = self.n_y // rows, self.n_x // columns
-        tiled = raw[:, : rows * high, : columns * wide].reshape(n, rows, high, columns, wide)
-        self.tiles[here] = tiled.mean(axis=(2, 4), dtype=np.float64)
-        self.mean[here] = raw.mean(axis=(1, 2), dtype=np.float64)
+        exact = np.uint32 if raw.dtype in (np.uint8, np.uint16) else np.float64
+        total = raw[:, rows * high :].sum(axis=(1, 2), dtype=np.float64)
+        for row in range(rows):
+            band = raw[:, row * high : (row + 1) * high].sum(axis=1, dtype=exact).astype(np.float64)
+            self.tiles[here, row] = band[:, : columns * wide].reshape(n, columns, wide).mean(axis=2) / high
+            total += band.sum(axis=1)
+        self.mean[here] = total / (self.n_y * self.n_x)
         self.blank[here] = raw.reshape(n, -1).max(axis=1) == raw.reshape(n, -1).min(axis=1)
         return missing
 

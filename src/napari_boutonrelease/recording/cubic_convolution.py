@@ -14,8 +14,9 @@ from ..errors import InputError
 if TYPE_CHECKING:
     from numpy.typing import ArrayLike, NDArray
 
-__all__ = ["shift_frame_block", "taps"]
+__all__ = ["DisplacedPixels", "shift_frame_block", "taps"]
 
+_MOST_CELLS = 16  # whole-pixel displacements whose neighbours are kept
 _STRIP_ROWS = 64  # rows worked on at a time, so that they stay in the processor's cache
 
 
@@ -99,10 +100,46 @@ def shift_frame_block(block: ArrayLike, *, dy: ArrayLike, dx: ArrayLike) -> NDAr
     return shifted
 
 
+class DisplacedPixels:
+    """Reads some pixels of one image at many small displacements.
+
+    The sixteen neighbours of each pixel are gathered once for all displacements of the same whole pixels; the rest is
+    one small product.
+
+    Parameters
+    ----------
+    image : (y, x) ndarray
+        What to read.
+    pixels : (n,) ndarray of int
+        Flat indices of the pixels.
+    """
+
+    def __init__(self, image: NDArray[np.floating], pixels: NDArray[np.intp]) -> None:
+        self._image = image
+        self._y, self._x = np.divmod(pixels, image.shape[1])
+        self._neighbours: dict[tuple[int, int], NDArray[np.float64]] = {}
+
+    def read(self, *, dy: float, dx: float) -> NDArray[np.float64]:
+        """Read the image at (y + dy, x + dx) of each pixel, (n,); beyond the border the nearest pixel."""
+        whole = int(np.floor(dy)), int(np.floor(dx))
+        if whole not in self._neighbours:
+            n_y, n_x = self._image.shape
+            step = np.arange(-1, 3)
+            y = np.clip(self._y[:, None] + whole[0] + step, 0, n_y - 1)
+            x = np.clip(self._x[:, None] + whole[1] + step, 0, n_x - 1)
+            if len(self._neighbours) >= _MOST_CELLS:
+                self._neighbours.pop(next(iter(self._neighbours)))
+            around = self._image[y[:, :, None], x[:, None, :]].reshape(len(y), 16)
+            self._neighbours[whole] = around.astype(np.float64)
+        mixing = np.outer(taps(dy - whole[0]), taps(dx - whole[1])).ravel()
+        result: NDArray[np.float64] = self._neighbours[whole] @ mixing
+        return result
+
+
 def _read_around(frame: NDArray[np.generic], *, y: int, x: int, shape: tuple[int, ...]) -> NDArray[np.float32]:
     """Pixels from one before (y, x) to two after the far corner of `shape`; beyond the border the nearest pixel."""
     (n_y, n_x), height, width = frame.shape, shape[0] + 3, shape[1] + 3
-    inside = 0 < y and y + height - 1 <= n_y
+    inside = y > 0 and y + height - 1 <= n_y
     rows = frame[y - 1 : y - 1 + height] if inside else frame[np.clip(np.arange(y - 1, y - 1 + height), 0, n_y - 1)]
     before = min(max(1 - x, 0), width)
     after = min(max(x - 1 + width - n_x, 0), width - before)
@@ -116,7 +153,7 @@ def _read_around(frame: NDArray[np.generic], *, y: int, x: int, shape: tuple[int
 def _weighted_sum(
     parts: list[NDArray[np.float32]], weights: NDArray[np.float32], *, out: NDArray[np.float32] | None = None
 ) -> NDArray[np.float32]:
-    total = np.multiply(parts[0], weights[0], out=out)
+    total: NDArray[np.float32] = np.multiply(parts[0], weights[0], out=out)
     term = np.empty_like(total)
     for part, weight in zip(parts[1:], weights[1:], strict=True):
         total += np.multiply(part, weight, out=term)

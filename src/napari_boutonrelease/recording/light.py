@@ -7,29 +7,28 @@ alone both halves are alike whatever the light level.
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
 
 from ..errors import InputError
 from .bad_frames import LOOK_AHEAD_FRAMES, FrameLevels
-from .cubic_convolution import shift_frame_block
+from .photon_transfer import photon_transfer_line, telling_pixels
 
 if TYPE_CHECKING:
     from collections.abc import Callable
 
     from numpy.typing import ArrayLike, NDArray
 
-    from .motion import Drift
     from .movie import Movie
 
     FloatArray = NDArray[np.float64]
 
-__all__ = ["Light", "light_at_rest", "measure_light"]
+__all__ = ["Light", "measure_light"]
 
-_MOST_PAIRS, _PAIR_PIXELS = 400, 50_000_000  # pairs of frames, and their pixels, that the noise at rest is taken from
 _STRETCHES = 15  # stretches of the recording whose median noise counts, so that one jump of the sample does not
+_PAIR_PIXELS, _LEAST_PAIRS = 12_000_000, 40  # pixels of a stretch's pairs of frames that its noise is taken from
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -138,7 +137,7 @@ def measure_light(
     extremes = _Extremes.empty(n_y, n_x)
     missing = np.zeros((n_y, n_x), dtype=np.intp)
     reasons: list[str] = []
-    before: NDArray[np.float32] | None = None
+    n_pairs = max(_LEAST_PAIRS, _PAIR_PIXELS // (n_y * n_x)) * len(stretches) // n_blocks + 1  # of each block
     for block, start in enumerate(range(0, n_frames, block_frames)):
         stop = min(start + block_frames, n_frames)
         raw = movie.read(start, min(stop + LOOK_AHEAD_FRAMES, n_frames))
@@ -148,8 +147,12 @@ def measure_light(
         reasons += here
         good = np.array([not reason for reason in here], dtype=np.bool_)
         frames = raw[: stop - start]
-        extremes.add(frames[good])
-        before = stretches[block * len(stretches) // n_blocks].add(frames, good, before)
+        stretch = stretches[block * len(stretches) // n_blocks]
+        stretch.add_pairs(frames, good, n_pairs)
+        if not good.all():
+            frames = frames[good]
+        stretch.add(frames)
+        extremes.add(frames)
         if progress is not None:
             progress(stop, n_frames)
     bad = np.array([bool(reason) for reason in reasons], dtype=np.bool_)
@@ -157,12 +160,12 @@ def measure_light(
     dead = (extremes.low >= extremes.high) | (missing > 0) if n_good > 1 else missing > 0
     saturated = extremes.saturated(n_good, movie.full_scale) & ~dead
     mean_image = sum((part.total for part in stretches), np.zeros((n_y, n_x))) / (n_good or np.nan)
-    usable = ~(saturated | dead)
-    mean, variance = (np.median(np.stack(parts)[:, usable], axis=0) for parts in _per_stretch(stretches, n_y, n_x))
+    alike, spread = telling_pixels(mean_image, ~(saturated | dead))
+    mean, variance = _medians(stretches, spread)
     known = np.isfinite(mean) & np.isfinite(variance)
     gain, gain_se, read_variance = photon_transfer_line(mean[known], variance[known], n_frames=n_good)
     step = 1e-9 if movie.full_scale is None else 1.0 / 12.0  # rounding to integers is noise, too
-    variance = variance[known]
+    variance = variance[known & np.isin(spread, alike)]
     return Light(
         gain=gain,
         gain_lo=gain - 1.96 * gain_se,
@@ -182,107 +185,6 @@ def measure_light(
     )
 
 
-def light_at_rest(movie: Movie, *, light: Light, drift: Drift) -> Light:
-    """Measure the noise again with the movement taken out: a sample that trembles looks noisier than its light is.
-
-    The change that the movement between two successive frames makes in the reference is taken from their difference,
-    as strongly as the difference shows it; what is left gives the photon-transfer line as in `measure_light`.
-
-    Parameters
-    ----------
-    movie : Movie
-        The recording.
-    light : Light
-        As measured without regard to movement.
-    drift : Drift
-        Its movement.
-
-    Returns
-    -------
-    Light
-        With gain, interval and read variance replaced; `light` itself where nothing moved or the line is not told.
-    """
-    firsts = np.flatnonzero(drift.used[:-1] & drift.used[1:])
-    n_pairs = min(len(firsts), _MOST_PAIRS, max(_PAIR_PIXELS // drift.reference.size, 20))
-    inside = ~(light.saturated | light.dead)
-    for axis, shift in enumerate((drift.dy_px, drift.dx_px)):
-        margin = int(np.ceil(np.abs(shift[drift.used]).max())) + 2 if drift.used.any() else 0
-        at = np.arange(inside.shape[axis])
-        inside &= np.expand_dims((at >= margin) & (at < inside.shape[axis] - margin), 1 - axis)
-    if not drift.corrected or not n_pairs or not inside.any():
-        return light
-    mean, falling = np.zeros(int(inside.sum())), np.zeros(int(inside.sum()))
-    for k in firsts[np.linspace(0, len(firsts) - 1, n_pairs).round().astype(int)]:
-        pair = slice(k, k + 2)
-        frames = np.asarray(movie.read(pair.start, pair.stop)[:, inside], dtype=np.float64)
-        still = np.broadcast_to(drift.reference, (2, *drift.reference.shape))
-        moved = shift_frame_block(still, dy=-drift.dy_px[pair], dx=-drift.dx_px[pair])[:, inside]
-        change, expected = frames[1] - frames[0], (moved[1] - moved[0]).astype(np.float64)
-        power = float(expected @ expected)
-        change -= expected * (float(change @ expected) / power if power > 0 else 0.0)
-        mean += frames.mean(axis=0) / n_pairs
-        falling += np.minimum(change, 0.0) ** 2 * ((1.0 + 1.1 / n_pairs) / n_pairs)
-    gain, gain_se, read_variance = photon_transfer_line(mean, falling, n_frames=2 * n_pairs)
-    if not np.isfinite(gain):
-        return light
-    half_width = 1.96 * gain_se
-    return replace(light, gain=gain, gain_lo=gain - half_width, gain_hi=gain + half_width, read_variance=read_variance)
-
-
-def photon_transfer_line(mean: FloatArray, variance: FloatArray, *, n_frames: int) -> tuple[float, float, float]:
-    """Fit variance = gain * mean + read_variance through pixels, robustly.
-
-    Pixels are gathered in bins of like brightness; the median variance of each bin enters a line whose outlying bins
-    lose weight (Tukey's biweight).
-
-    Parameters
-    ----------
-    mean, variance : (n_pixels,) ndarray of float
-        Temporal mean (counts) and variance (counts²) of each pixel.
-    n_frames : int
-        Frames behind each mean.
-
-    Returns
-    -------
-    gain, gain_se, read_variance : float
-        Slope, its standard error, intercept; NaN where the pixels are too alike in brightness.
-    """
-    unknown = (float("nan"),) * 3
-    if mean.size < 16 or n_frames < 8:
-        return unknown
-    dark, bright = np.percentile(mean, [1, 99])
-    if bright - dark < 5.0 * np.sqrt(np.median(variance) / n_frames) or bright <= dark:
-        return unknown
-    edges = np.union1d(np.linspace(mean.min(), mean.max(), 41), np.quantile(mean, np.linspace(0, 1, 41)))
-    which = np.clip(np.searchsorted(edges, mean, side="right") - 1, 0, edges.size - 2)
-    order = np.argsort(which, kind="stable")
-    pieces = np.split(order, np.flatnonzero(np.diff(which[order])) + 1)
-    pieces = [piece for piece in pieces if piece.size >= 4]
-    if len(pieces) < 5:
-        return unknown
-    x = np.array([mean[piece].mean() for piece in pieces])
-    y = np.array([np.median(variance[piece]) for piece in pieces])
-    n = np.array([min(piece.size, 200) for piece in pieces])  # a bin is never surer than the line is straight
-    middle = float(x.mean())  # a large offset must not swallow the slope
-    design = np.stack([x - middle, np.ones_like(x)], axis=1)
-    expected, trust = np.maximum(y, 1e-3 * y.max() + 1e-300), np.ones_like(x)
-    for _ in range(30):
-        scale = np.sqrt(n) / expected
-        rows = design * scale[:, None]
-        normal = rows.T @ (rows * trust[:, None])
-        line = np.linalg.lstsq(normal, rows.T @ (trust * y * scale), rcond=None)[0]
-        residual = y * scale - rows @ line
-        spread = 1.4826 * np.median(np.abs(residual)) + 1e-12
-        trust = np.maximum(1.0 - (residual / (6.0 * spread)) ** 2, 0.0) ** 2
-        expected = np.maximum(design @ line, 0.05 * np.median(y) + 1e-300)
-    free = max(float(np.sum(trust > 0)) - 2.0, 1.0)
-    scatter = float(np.sum(trust * residual**2)) / free
-    gain = float(line[0])
-    read_variance = float(line[1]) - gain * middle
-    gain_se = float(np.sqrt(scatter * np.linalg.pinv(normal)[0, 0]))
-    return (gain, gain_se, read_variance) if gain > 3.0 * gain_se else unknown
-
-
 @dataclass(slots=True)
 class _Stretch:
     """Sums over the good frames of one stretch of the recording."""
@@ -296,36 +198,37 @@ class _Stretch:
     def empty(cls, n_y: int, n_x: int) -> _Stretch:
         return cls(total=np.zeros((n_y, n_x)), falling=np.zeros((n_y, n_x)))
 
-    def add(
-        self, frames: NDArray[np.generic], good: NDArray[np.bool_], before: NDArray[np.float32] | None
-    ) -> NDArray[np.float32] | None:
-        """Take in frames; `before` is the good frame just before them, and the last one is returned if good."""
-        for frame, is_good in zip(frames, good, strict=True):
-            if not is_good:
-                before = None
-                continue
-            now = frame.astype(np.float32)
-            self.total += now
-            self.n_frames += 1
-            if before is not None:
-                fall = np.minimum(now - before, 0.0)
-                self.falling += fall * fall
-                self.n_pairs += 1
-            before = now
-        return before
+    def add(self, good_frames: NDArray[np.generic]) -> None:
+        """Take in good frames."""
+        exact = np.uint32 if good_frames.dtype in (np.uint8, np.uint16) else np.float64
+        self.total += good_frames.sum(axis=0, dtype=exact)
+        self.n_frames += len(good_frames)
+
+    def add_pairs(self, frames: NDArray[np.generic], good: NDArray[np.bool_], n_pairs: int) -> None:
+        """Take in how much pixels fall within pairs of successive good frames, evenly chosen."""
+        firsts = np.flatnonzero(good[:-1] & good[1:])
+        if len(firsts) > n_pairs:
+            firsts = firsts[np.linspace(0, len(firsts) - 1, n_pairs).round().astype(np.intp)]
+        for k in firsts:
+            change = np.subtract(frames[k + 1], frames[k], dtype=np.float32)
+            np.minimum(change, 0.0, out=change)
+            change *= change
+            self.falling += change
+        self.n_pairs += len(firsts)
 
 
-def _per_stretch(stretches: list[_Stretch], n_y: int, n_x: int) -> tuple[list[FloatArray], list[FloatArray]]:
-    """Mean and variance of each stretch that has frames. Half of E[d²] is the variance, and falls are half of E[d²].
+def _medians(stretches: list[_Stretch], pixels: NDArray[np.intp]) -> tuple[FloatArray, FloatArray]:
+    """Mean and variance of pixels, the medians over stretches that have frames.
 
-    Medians follow, and the median of such a mean over n pairs lies below it by 1.1 / n (a third of its relative
-    variance, as for chi-square; 3.3 / n by simulation).
+    Half of E[d²] is the variance, and falls are half of E[d²]. The median of such a mean over n pairs lies below it by
+    1.1 / n (a third of its relative variance, as for chi-square; 3.3 / n by simulation).
     """
     filled = [part for part in stretches if part.n_pairs]
-    nothing = np.full((n_y, n_x), np.nan)
-    means = [part.total / part.n_frames for part in filled] or [nothing]
-    variances = [part.falling * ((1.0 + 1.1 / part.n_pairs) / part.n_pairs) for part in filled] or [nothing]
-    return means, variances
+    if not filled:
+        return np.full(pixels.size, np.nan), np.full(pixels.size, np.nan)
+    means = [part.total.flat[pixels] / part.n_frames for part in filled]
+    variances = [part.falling.flat[pixels] * ((1.0 + 1.1 / part.n_pairs) / part.n_pairs) for part in filled]
+    return np.median(means, axis=0), np.median(variances, axis=0)
 
 
 @dataclass(slots=True)

@@ -15,7 +15,7 @@ import numpy as np
 from ..checks import check_positive
 from ..errors import InputError
 from .cubic_convolution import shift_frame_block
-from .light import photon_transfer_line
+from .photon_transfer import photon_transfer_line
 from .random_walk import smooth_random_walk
 from .registration import Fit, Reference
 from .wiener import without_noise
