@@ -11,7 +11,7 @@ if TYPE_CHECKING:
 
     FloatArray = NDArray[np.float64]
 
-__all__ = ["photon_transfer_line", "telling_pixels"]
+__all__ = ["above_median", "photon_transfer_line", "telling_pixels"]
 
 _ENOUGH_PIXELS = 16_000
 """Twice the 200 that count in each of the line's 80 bins: more of them tell nothing that the line would believe."""
@@ -42,6 +42,22 @@ def telling_pixels(mean: FloatArray, usable: NDArray[np.bool_]) -> tuple[NDArray
     levels = np.linspace(sorted_mean[0], sorted_mean[-1], _ENOUGH_PIXELS // 2)
     spread = np.union1d(ranks, np.searchsorted(sorted_mean, levels))
     return pixels[order[ranks]], pixels[order[spread]]
+
+
+def above_median(n_pairs: int, *, n_linked: int) -> float:
+    """Ratio of the mean to the median of a pixel's mean squared fall over pairs of frames.
+
+    The median lies below the mean by a third of the relative variance, as for chi-square. That is 5 / n for half of the
+    squares of n normal numbers; two pairs that share their middle frame seldom both fall, and vary less together.
+
+    Parameters
+    ----------
+    n_pairs : int
+        Pairs of successive frames, at least 1.
+    n_linked : int
+        How many of them share a frame with the next one.
+    """
+    return 1.0 + (5.0 - 1.7 * n_linked / n_pairs) / (3.0 * n_pairs)
 
 
 def photon_transfer_line(mean: FloatArray, variance: FloatArray, *, n_frames: int) -> tuple[float, float, float]:

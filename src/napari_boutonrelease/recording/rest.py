@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from .cubic_convolution import DisplacedPixels
-from .photon_transfer import photon_transfer_line, telling_pixels
+from .photon_transfer import above_median, photon_transfer_line, telling_pixels
 
 if TYPE_CHECKING:
     from .light import Light
@@ -53,14 +53,16 @@ def light_at_rest(movie: Movie, *, light: Light, drift: Drift) -> Light:
     _, pixels = telling_pixels(drift.reference, inside)
     mean, falling = np.zeros(pixels.size), np.zeros(pixels.size)
     expected_at = DisplacedPixels(drift.reference, pixels)
-    for k in firsts[np.linspace(0, len(firsts) - 1, n_pairs).round().astype(int)]:
+    firsts = firsts[np.linspace(0, len(firsts) - 1, n_pairs).round().astype(int)]
+    for k in firsts:
         frames = movie.read(k, k + 2).reshape(2, -1)[:, pixels].astype(np.float64)
         before, after = (expected_at.read(dy=-drift.dy_px[i], dx=-drift.dx_px[i]) for i in (k, k + 1))
         change, expected = frames[1] - frames[0], after - before
         power = float(expected @ expected)
         change -= expected * (float(change @ expected) / power if power > 0 else 0.0)
         mean += frames.mean(axis=0) / n_pairs
-        falling += np.minimum(change, 0.0) ** 2 * ((1.0 + 1.1 / n_pairs) / n_pairs)
+        falling += np.minimum(change, 0.0) ** 2 / n_pairs
+    falling *= above_median(n_pairs, n_linked=int(np.sum(np.diff(firsts) == 1)))
     gain, gain_se, read_variance = photon_transfer_line(mean, falling, n_frames=2 * n_pairs)
     if not np.isfinite(gain):
         return light
