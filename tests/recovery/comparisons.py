@@ -56,6 +56,12 @@ SCENARIOS = {
     "vesicles change, q/noise 2.5": Change(q_ratio=0.8, q=2.5, p_site=(0.2, 0.6)),
 }
 
+# Scenarios in which each test has nothing to find.
+WITHOUT_CHANGE = {
+    "p_changed_p": [name for name, change in SCENARIOS.items() if change.odds_ratio == 1.0],
+    "q_changed_p": [name for name, change in SCENARIOS.items() if change.q_ratio == 1.0],
+}
+
 AXONS = 15
 
 

@@ -6,7 +6,16 @@ requirements themselves.
 
 import numpy as np
 import pytest
-from comparisons import AXONS, CHANGES, SCENARIOS, Change, pool, study_changes, summarise_changes
+from comparisons import (
+    CHANGES,
+    SCENARIOS,
+    WITHOUT_CHANGE,
+    Change,
+    pool,
+    studied_changes,
+    study_changes,
+    summarise_changes,
+)
 from two_conditions import P_SITE, studied_fields, study_field, summarise_fields
 
 
@@ -59,13 +68,13 @@ def test_requirements_of_two_films(tmp_path):
 
 
 @pytest.mark.validation
-def test_requirements_of_changes():
-    rng = np.random.default_rng(12)
-    found = {name: study_changes(change, axons=AXONS, rng=rng) for name, change in SCENARIOS.items()}
+def test_requirements_of_changes(tmp_path):
+    found = {name: studied_changes(name, blocks=(1, 2), folder=tmp_path) for name in SCENARIOS}
     for one in found.values():
         said = summarise_changes(one)
         assert all(0.90 < said[name]["coverage"] < 0.99 for name in CHANGES)
     pooled = summarise_changes(pool(found.values()))
     assert all(0.93 < pooled[name]["coverage"] < 0.97 for name in CHANGES)
-    same = pool(found[name] for name, change in SCENARIOS.items() if change.odds_ratio == 1.0)
-    assert 0.02 < summarise_changes(same)["p_changed_p"]["found"] < 0.08  # 600 boutons: chance is 0.009
+    for test, names in WITHOUT_CHANGE.items():
+        said = summarise_changes(pool(found[name] for name in names))
+        assert 0.02 < said[test]["found"] < 0.08  # 480 boutons or more: the SE is 0.01 at most
