@@ -14,10 +14,11 @@ import numpy as np
 
 from ..checks import check_positive
 from ..errors import InputError
-from .cubic_convolution import shift_frame_block
-from .photon_transfer import photon_transfer_line
+from .cubic_convolution import DisplacedPixels, shift_frame_block
+from .photon_transfer import photon_transfer_line, telling_pixels
 from .random_walk import smooth_random_walk
 from .registration import Fit, Reference
+from .telling_directions import telling_directions
 from .wiener import without_noise
 
 if TYPE_CHECKING:
@@ -33,9 +34,9 @@ if TYPE_CHECKING:
 __all__ = ["Drift", "measure_drift", "no_drift"]
 
 _MATCH = 0.5  # a frame that holds less than half of the structure it should does not show this reference
-_SAMPLE_PIXELS = 40_000_000  # pixels of all frames that the reference is built from
-_PAIR_PIXELS = 3_000_000  # pixels of all pairs of frames that the telling directions are taken from
-_MOST_NOISE_PX = 1.0  # where photon noise leaves more doubt than this, a correction does not help
+_SAMPLE_PIXELS = 25_000_000  # pixels of all frames that the reference is built from
+_FEW_SAMPLES = 40  # frames of the sample that its first, coarse alignment takes
+_ANCHOR_FRAMES = 8  # one frame in so many is looked for all over; the others near where their neighbours are
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -127,7 +128,7 @@ def measure_drift(
         return no_drift(light=light)
     frames = np.concatenate([_numbers(movie.read(int(k), int(k) + 1)) for k in sample])
     _fill_dead(frames, light.dead)
-    directions = _telling_directions(frames, sample, light)
+    directions = telling_directions(frames, sample, light)
     if not directions.any():
         return no_drift(light=light)
     reference = _build_reference(frames, light, directions, max_shift_px)
@@ -155,10 +156,10 @@ def measure_drift(
         raw[good], raw_sd[good] = measured, sd
         smooth = smooth_random_walk(raw, raw_sd, known=used)
         drift.append(smooth - np.median(smooth[used]) if used.any() else smooth)
-    shown = used[sample]
-    if not shown.any():
+    shown = np.flatnonzero(used[sample])
+    if not shown.size:
         return no_drift(light=light)
-    image, _ = _aligned_mean(frames[shown], drift[0][sample][shown], drift[1][sample][shown])
+    image, _ = _aligned_mean(frames, shown, drift[0][sample][shown], drift[1][sample][shown])
     return Drift(
         dy_px=drift[0],
         dx_px=drift[1],
@@ -174,7 +175,7 @@ def _sample_frames(light: Light, n_pixels: int) -> NDArray[np.intp]:
     """Frames for the reference: pairs of successive good frames, spread evenly over the recording."""
     good = ~light.bad_frame
     firsts = np.flatnonzero(good[:-1] & good[1:])
-    n_pairs = int(np.clip(_SAMPLE_PIXELS // n_pixels, 100, 1000)) // 2
+    n_pairs = int(np.clip(_SAMPLE_PIXELS // n_pixels, 60, 1000)) // 2
     if len(firsts) > n_pairs:
         firsts = firsts[np.linspace(0, len(firsts) - 1, n_pairs).round().astype(int)]
     return np.union1d(firsts, firsts + 1)
@@ -196,61 +197,17 @@ def _fill_dead(frames: NDArray[np.generic], dead: NDArray[np.bool_]) -> None:
         frames[:, dead] = frames[:, y[dead], x[dead]]
 
 
-def _telling_directions(frames: NDArray[np.generic], sample: NDArray[np.intp], light: Light) -> FloatArray:
-    """Project on the directions along which the image tells movement: none on a blank, one on a straight axon.
-
-    The information on movement is the weighted square of the image's slopes. Taken as the product of the slopes of two
-    successive frames, it holds no noise, for they share none.
-
-    Returns
-    -------
-    (2, 2) ndarray of float
-        Projection matrix, (y, x).
-    """
-    from scipy.ndimage import gaussian_filter
-
-    usable = ~(light.dead | light.saturated)
-    if not usable.any():
-        return np.zeros((2, 2))
-    weights = np.where(usable, 1.0 / light.variance_at(light.mean_image), 0.0)
-    pairs = np.flatnonzero(np.diff(sample) == 1)
-    n_pairs = min(len(pairs), int(np.clip(_PAIR_PIXELS // usable.size, 24, 200)))
-    pairs = pairs[np.linspace(0, len(pairs) - 1, n_pairs).round().astype(int)]
-
-    # beyond the border there is no image, and a continued one would seem to have structure
-    inside = tuple(slice(min(size // 6, 6), -min(size // 6, 6)) for size in usable.shape)
-
-    def slopes(frame: NDArray[np.generic]) -> FloatArray:
-        values = frame.astype(np.float64)
-        values[~usable] = np.median(values[usable])
-        along_y, along_x = (
-            gaussian_filter(values, 1.2, order=order) - gaussian_filter(values, 6.0, order=order)
-            for order in ((1, 0), (0, 1))
-        )
-        return np.stack([along_y[inside].ravel(), along_x[inside].ravel()])
-
-    information = np.array([(slopes(frames[k]) * weights[inside].ravel()) @ slopes(frames[k + 1]).T for k in pairs])
-    information = 0.5 * (information + information.transpose(0, 2, 1))
-    strengths, directions = np.linalg.eigh(information.mean(axis=0))
-    projection = np.zeros((2, 2))
-    for strength, direction in zip(strengths, directions.T, strict=True):
-        doubt = (direction @ information @ direction).std() / np.sqrt(max(n_pairs - 1, 1))
-        if n_pairs > 2 and strength > max(5.0 * doubt, _MOST_NOISE_PX**-2, 1e-3 * strengths[-1]):
-            projection += np.outer(direction, direction)
-    return projection
-
-
 def _build_reference(
     frames: NDArray[np.generic], light: Light, directions: FloatArray, max_shift_px: float
 ) -> Reference:
     """Align the sampled frames with each other, in three rounds, and average them."""
     middle = len(frames) // 2
     seed = frames[max(0, middle - 4) : middle + 4]
-    image, n_seen = _aligned_mean(seed, np.zeros(len(seed)), np.zeros(len(seed)))
+    image, n_seen = _aligned_mean(seed, np.arange(len(seed)), np.zeros(len(seed)), np.zeros(len(seed)))
     variance_at: Callable[[FloatArray], FloatArray] = light.variance_at
     reach = 2.0 * max_shift_px  # the middle frame may itself lie at one end of the drift
-    few = np.linspace(0, len(frames) - 1, min(len(frames), 100)).round().astype(int)
-    for finely, chosen in ((False, frames[few]), (True, frames[few]), (True, frames)):
+    few = frames[:: max(1, len(frames) // _FEW_SAMPLES)]
+    for finely, chosen in ((False, few), (True, few), (True, frames)):
         reference = _reference(image, n_seen, light, directions, variance_at)
         dy, dx = reference.find(chosen, max_shift_px=reach)
         factor = np.ones(len(chosen))
@@ -258,28 +215,33 @@ def _build_reference(
             fit = reference.locate(chosen, dy=dy, dx=dx, max_shift_px=reach)
             dy, dx, factor = fit.dy_px, fit.dx_px, np.clip(fit.brightness, 0.25, 4.0)
         dy, dx = dy - np.median(dy), dx - np.median(dx)
-        near = np.maximum(np.abs(dy), np.abs(dx)) <= max_shift_px
-        chosen, dy, dx, factor = chosen[near], dy[near], dx[near], factor[near] / np.mean(factor[near])
-        image, n_seen = _aligned_mean(chosen, dy, dx, factor=factor, offset=light.offset_counts)
+        near = np.flatnonzero(np.maximum(np.abs(dy), np.abs(dx)) <= max_shift_px)
+        dy, dx, factor = dy[near], dx[near], factor[near] / np.mean(factor[near])
+        image, n_seen = _aligned_mean(chosen, near, dy, dx, factor=factor, offset=light.offset_counts)
         if finely and variance_at == light.variance_at:
-            variance_at = _noise_at_rest(chosen, dy, dx, factor, image, light)
+            variance_at = _noise_at_rest(chosen, near, dy, dx, factor, image, light)
     return _reference(image, n_seen, light, directions, variance_at)
 
 
 def _noise_at_rest(
-    frames: NDArray[np.generic], dy: FloatArray, dx: FloatArray, factor: FloatArray, image: FloatArray, light: Light
+    frames: NDArray[np.generic],
+    chosen: NDArray[np.intp],
+    dy: FloatArray,
+    dx: FloatArray,
+    factor: FloatArray,
+    image: FloatArray,
+    light: Light,
 ) -> Callable[[FloatArray], FloatArray]:
     """Noise of a pixel with the movement taken out: a sample that trembles looks noisier than its light is."""
-    few = np.linspace(0, len(frames) - 1, min(len(frames), 20)).round().astype(int)
-    expected = shift_frame_block(np.broadcast_to(image, (len(few), *image.shape)), dy=-dy[few], dx=-dx[few])
-    expected = light.offset_counts + (expected - light.offset_counts) * factor[few, None, None].astype(np.float32)
-    error = frames[few] - expected
     inside = np.zeros(image.shape, dtype=np.bool_)
     margin_y, margin_x = (int(np.ceil(np.abs(shift).max())) + 1 for shift in (dy, dx))
     inside[margin_y:-margin_y, margin_x:-margin_x] = True
-    inside &= ~(light.dead | light.saturated)
-    mean, variance = (np.asarray(part[:, inside].mean(axis=0), dtype=np.float64) for part in (expected, error**2))
-    gain, _, intercept = photon_transfer_line(mean, variance, n_frames=len(few))
+    _, pixels = telling_pixels(image, inside & ~(light.dead | light.saturated))
+    few = np.linspace(0, len(chosen) - 1, min(len(chosen), 20)).round().astype(int)
+    image_at = DisplacedPixels(image - light.offset_counts, pixels)
+    expected = np.array([factor[k] * image_at.read(dy=-dy[k], dx=-dx[k]) for k in few]) + light.offset_counts
+    error = np.array([frames[chosen[k]].flat[pixels] for k in few]) - expected
+    gain, _, intercept = photon_transfer_line(expected.mean(axis=0), np.mean(error**2, axis=0), n_frames=len(few))
     if not gain < light.gain:
         return light.variance_at
     return replace(light, gain=gain, read_variance=intercept).variance_at
@@ -306,6 +268,7 @@ def _reference(
 
 def _aligned_mean(
     frames: NDArray[np.generic],
+    chosen: NDArray[np.intp],
     dy: FloatArray,
     dx: FloatArray,
     *,
@@ -313,11 +276,11 @@ def _aligned_mean(
     offset: float = 0.0,
 ) -> tuple[FloatArray, FloatArray]:
     """Mean of frames in reference coordinates at their mean brightness, and how many of them saw each pixel."""
-    n, n_y, n_x = frames.shape
+    n, (n_y, n_x) = len(chosen), frames.shape[1:]
     factor = np.ones(n) if factor is None else factor
     total, seen, filled = np.zeros((n_y, n_x)), np.zeros((n_y, n_x)), np.zeros((n_y, n_x))
     for k in range(n):
-        image = shift_frame_block(frames[k : k + 1], dy=dy[k : k + 1], dx=dx[k : k + 1])[0]
+        image = shift_frame_block(frames[chosen[k]][None], dy=dy[k : k + 1], dx=dx[k : k + 1])[0]
         image *= np.float32(1.0 / factor[k])
         image += np.float32(offset * (1.0 - 1.0 / factor[k]))
         inside = tuple(
@@ -331,18 +294,34 @@ def _aligned_mean(
 
 
 def _locate(reference: Reference, frames: NDArray[np.generic], max_shift_px: float) -> Fit:
-    """Find and locate frames; those that lie apart from their neighbours are tried from there, too."""
+    """Find and locate frames: some of them all over, the others from where these are.
+
+    Frames that hold less of the reference's structure than the others do, because the sample jumped, are looked for all
+    over, too; and those that lie apart from their neighbours are tried from there.
+    """
     from scipy.ndimage import median_filter
 
-    dy, dx = reference.find(frames, max_shift_px=max_shift_px)
+    everywhere = np.arange(len(frames))
+    anchors = everywhere[_ANCHOR_FRAMES // 2 :: _ANCHOR_FRAMES] if len(frames) > _ANCHOR_FRAMES else everywhere
+    found = reference.find(frames[anchors], max_shift_px=max_shift_px)
+    dy, dx = (np.interp(everywhere, anchors, shift) for shift in found)
     fit = reference.locate(frames, dy=dy, dx=dx, max_shift_px=max_shift_px)
+
+    def try_again(which: NDArray[np.intp], dy: FloatArray, dx: FloatArray) -> None:
+        again = reference.locate(frames[which], dy=dy, dx=dx, max_shift_px=max_shift_px)
+        better = again.misfit < fit.misfit[which]
+        for name in Fit.__slots__:
+            getattr(fit, name)[which[better]] = getattr(again, name)[better]
+
+    noise = np.sqrt(fit.misfit / np.maximum(fit.signal, 1e-300))
+    lost = np.flatnonzero(fit.brightness < 0.97 * np.median(fit.brightness) - 1.5 * noise)
+    lost = lost[~np.isin(lost, anchors)]
+    if lost.size:
+        try_again(lost, *reference.find(frames[lost], max_shift_px=max_shift_px))
     usual_y, usual_x = (median_filter(shift, size=9, mode="nearest") for shift in (fit.dy_px, fit.dx_px))
     apart = np.flatnonzero(np.hypot(fit.dy_px - usual_y, fit.dx_px - usual_x) > 1.0)
     if apart.size:
-        again = reference.locate(frames[apart], dy=usual_y[apart], dx=usual_x[apart], max_shift_px=max_shift_px)
-        better = again.misfit < fit.misfit[apart]
-        for name in Fit.__slots__:
-            getattr(fit, name)[apart[better]] = getattr(again, name)[better]
+        try_again(apart, usual_y[apart], usual_x[apart])
     return reference.locate_despite_flashes(frames, fit, max_shift_px=max_shift_px)
 
 

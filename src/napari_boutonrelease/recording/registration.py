@@ -10,11 +10,12 @@ normalised in phase, which fails on noisy images.
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, TypeVar
 
 import numpy as np
 
 from .correlation import correlate, likelihood_template
+from .spline_pixels import SplinePixels
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -22,16 +23,20 @@ if TYPE_CHECKING:
     FloatArray = NDArray[np.float64]
     Single = NDArray[np.float32]
 
+Number = TypeVar("Number", bound=np.generic)
+
 __all__ = ["Fit", "Reference"]
 
 _CELLS_PER_PX = 4
 _MOST_STEPS = 12
 _ENOUGH_INFORMATION = 0.98
+_ABOVE_EMPTY = 1.7
 _FEW_PIXELS = 20_000  # below this every pixel is used
-_MOST_CACHED_NUMBERS = 20_000_000
+_MOST_CACHED_NUMBERS = 4_000_000
 _TILE_PX = 3  # width of the places that are looked at for flashes
 _FLASH_SD = 5.0  # a place this far from the reference flashes, and the places about it are left out, too
 _FLASH_ROUNDS = 6
+_FEW_FRAMES = 4  # frames of a cell that tell how skewed the noise is
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -52,6 +57,8 @@ class Fit:
         Energy of the reference's structure over the pixels used, in units of the noise.
     n_pixels : ndarray of float
         Pixels used.
+    strangest : ndarray of float
+        Largest deviation from the reference among places of a few pixels, in SD.
     """
 
     dy_px: FloatArray
@@ -62,20 +69,29 @@ class Fit:
     misfit: FloatArray
     signal: FloatArray
     n_pixels: FloatArray
+    strangest: FloatArray
 
 
 @dataclass(frozen=True, slots=True)
 class _Cell:
-    """The linear problem of one quarter-pixel cell: which pixels, and the columns that explain them."""
+    """The linear problem of one quarter-pixel cell: which pixels, and the columns that explain them.
+
+    Pixels stand place after place, (_TILE_PX², n_tiles) in a row; those not to trust have a scale of 0.
+    """
 
     pixels: NDArray[np.intp]
-    weights: Single  # (n_pixels,)
-    rows: Single  # (n_columns, n_pixels): columns times weights
+    scale: Single  # (n_pixels,) one over the noise of each
+    rows: Single  # (n_columns, n_pixels) columns in units of the noise
     normal: FloatArray
     inverse: FloatArray  # of the normal matrix
-    tile: NDArray[np.intp]  # (n_pixels,) place of each pixel, ascending
-    tile_starts: NDArray[np.intp]
+    root_in_tile: Single  # (n_tiles,) root of the number of its pixels
+    tile_rows: Single  # (n_columns, n_tiles) as `places` of the rows
+    n_pixels: int  # that count
     signal: float
+
+    def places(self, values: Single) -> Single:
+        """Sum up values over each tile, in SD: (n, n_pixels) -> (n, n_tiles)."""
+        return _sum_tiles(values) / self.root_in_tile
 
 
 class Reference:
@@ -104,35 +120,43 @@ class Reference:
         usable: NDArray[np.bool_],
         directions: FloatArray,
     ) -> None:
-        from scipy.interpolate import RectBivariateSpline
-
         self.image, self._known, self._usable, self._directions = image, known, usable, directions
         self._n_y, self._n_x = image.shape
-        self._spline = RectBivariateSpline(np.arange(self._n_y), np.arange(self._n_x), image, kx=3, ky=3)
         self._weights = 1.0 / variance
         self._level = float(np.mean(image))
-        y, x = self._choose_pixels()
         self._tiles_shape = (-(-self._n_y // _TILE_PX), -(-self._n_x // _TILE_PX))
-        tile = y // _TILE_PX * self._tiles_shape[1] + x // _TILE_PX
-        order = np.argsort(tile, kind="stable")
-        self._informative, self._tile = (y[order], x[order]), tile[order]
-        self._pictures: dict[tuple[int, int], FloatArray] = {}  # slopes and image at the informative pixels
+        self._tile = self._choose_tiles()
+        self._y, self._x = self._pixels_of(self._tile)
+        self._spline = SplinePixels(image - self._level, y=self._y, x=self._x)
+        self._template = likelihood_template(image, self._weights)
         self._cells: dict[tuple[int, int], _Cell] = {}
 
-    def _choose_pixels(self) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
-        """Rows and columns of the pixels that hold nearly all of the information on movement."""
-        from scipy.ndimage import gaussian_filter
+    def _choose_tiles(self) -> NDArray[np.intp]:
+        """Tiles of pixels that hold nearly all of the information on movement."""
+        from scipy.ndimage import gaussian_filter, uniform_filter
 
-        y, x = np.indices(self.image.shape)
+        n_tiles = self._tiles_shape[0] * self._tiles_shape[1]
         if self.image.size <= _FEW_PIXELS:
-            return y.ravel(), x.ravel()
+            return np.arange(n_tiles)
         along_y, along_x = (gaussian_filter(self.image, 1.0, order=order) for order in ((1, 0), (0, 1)))
-        information = ((along_y**2 + along_x**2) * self._weights).ravel()
-        order = np.argsort(information)[::-1]
-        share = np.cumsum(information[order])
+        y, x = self._pixels_of(np.arange(n_tiles))
+        inside = (y < self._n_y - 1) & (x < self._n_x - 1) & self._known[y, x]
+        information = _sum_tiles((inside * ((along_y**2 + along_x**2) * self._weights)[y, x])[None])[0]
+        # Noise has slopes, too. It is everywhere: what all but the emptiest tenth of the image exceeds tells nothing.
+        around = uniform_filter(information.reshape(self._tiles_shape), 3).ravel()
+        telling = np.maximum(around - _ABOVE_EMPTY * np.percentile(around, 10), 0.0)
+        order = np.argsort(telling)[::-1]
+        share = np.cumsum(telling[order])
         n_enough = int(np.searchsorted(share, _ENOUGH_INFORMATION * share[-1]))
-        chosen = np.sort(order[: int(np.clip(n_enough, _FEW_PIXELS // 2, 4 * _FEW_PIXELS))])
-        return y.ravel()[chosen], x.ravel()[chosen]
+        least = _FEW_PIXELS // 2 // _TILE_PX**2
+        return np.sort(order[: int(np.clip(n_enough, least, 8 * least))])
+
+    def _pixels_of(self, tiles: NDArray[np.intp]) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
+        """Rows and columns of the pixels of tiles; what juts out of the image is at the border."""
+        step_y, step_x = np.divmod(np.arange(_TILE_PX**2), _TILE_PX)
+        y, x = np.divmod(tiles, self._tiles_shape[1])
+        y, x = _TILE_PX * y + step_y[:, None], _TILE_PX * x + step_x[:, None]
+        return np.minimum(y, self._n_y - 1).ravel(), np.minimum(x, self._n_x - 1).ravel()
 
     def _cell(self, cell: tuple[int, int]) -> _Cell:
         """Return the linear problem for frames whose drift lies within an eighth of a pixel of `cell` / 4."""
@@ -140,39 +164,32 @@ class Reference:
             return self._cells[cell]
         whole = [int(np.floor(step / _CELLS_PER_PX + 0.5)) for step in cell]
         part = (cell[0] - whole[0] * _CELLS_PER_PX, cell[1] - whole[1] * _CELLS_PER_PX)
-        y, x = self._informative
-        if part not in self._pictures:
-            at_y = np.arange(self._n_y) - part[0] / _CELLS_PER_PX
-            at_x = np.arange(self._n_x) - part[1] / _CELLS_PER_PX
-            self._pictures[part] = np.stack(  # the spline calls its first axis x
-                [
-                    -self._spline(at_y, at_x, dx=1)[y, x],
-                    -self._spline(at_y, at_x, dy=1)[y, x],
-                    self._spline(at_y, at_x)[y, x] - self._level,
-                ]
-            )
+        y, x = self._y, self._x
+        image, along_y, along_x = self._spline.read(dy=-part[0] / _CELLS_PER_PX, dx=-part[1] / _CELLS_PER_PX)
         frame_y, frame_x = y + whole[0], x + whole[1]
         # the outermost reference pixels have no slope to trust
         seen = (frame_y >= 0) & (frame_y < self._n_y) & (frame_x >= 0) & (frame_x < self._n_x)
         seen &= (y >= 1) & (y < self._n_y - 1) & (x >= 1) & (x < self._n_x - 1) & self._known[y, x]
-        seen[seen] = self._usable[frame_y[seen], frame_x[seen]]
-        y, x, frame_y, frame_x = y[seen], x[seen], frame_y[seen], frame_x[seen]
+        frame_y, frame_x = np.where(seen, frame_y, 0), np.where(seen, frame_x, 0)
+        seen &= self._usable[frame_y, frame_x]
         v, u = 2.0 * frame_y / max(self._n_y - 1, 1) - 1.0, 2.0 * frame_x / max(self._n_x - 1, 1) - 1.0
-        smooth = np.stack([np.ones_like(u), v, u, v * v, v * u, u * u])
-        columns = np.concatenate([self._pictures[part][:, seen], smooth])
-        weights = self._weights[y, x]
-        rows = columns * weights
-        normal = rows @ columns.T
+        columns = np.stack([-along_y, -along_x, image, np.ones_like(u), v, u, v * v, v * u, u * u])
+        scale = np.where(seen, np.sqrt(self._weights[y, x]), 0.0)
+        columns *= scale
+        normal = columns @ columns.T
+        rows = columns.astype(np.float32)
         if (len(self._cells) + 1) * rows.size > _MOST_CACHED_NUMBERS:
             self._cells.pop(next(iter(self._cells)), None)
+        root_in_tile = np.sqrt(np.maximum(_sum_tiles(seen[None].astype(np.float32))[0], 1.0))
         self._cells[cell] = _Cell(
             pixels=(frame_y * self._n_x + frame_x).astype(np.intp),
-            weights=weights.astype(np.float32),
-            rows=rows.astype(np.float32),
+            scale=scale.astype(np.float32),
+            rows=rows,
             normal=normal,
             inverse=np.linalg.pinv(normal, hermitian=True, rcond=1e-12),
-            tile=self._tile[seen],
-            tile_starts=np.flatnonzero(np.diff(self._tile[seen], prepend=-1)),
+            root_in_tile=root_in_tile,
+            tile_rows=_sum_tiles(rows) / root_in_tile,
+            n_pixels=int(seen.sum()),
             signal=_signal(normal),
         )
         return self._cells[cell]
@@ -200,49 +217,73 @@ class Reference:
         drift = np.stack([dy, dx], axis=1) @ self._directions
         cells = np.clip(np.rint(drift * _CELLS_PER_PX), -limit, limit).astype(int)
         active = np.arange(n)
-        for _ in range(_MOST_STEPS):
-            if not active.size:
-                break
+        for step in range(_MOST_STEPS):
             moving = []
             for cell, members in _grouped(cells, active):
-                centre = np.asarray(cell) / _CELLS_PER_PX
                 problem = self._cell(cell)
-                move = self._solve(problem, flat, members, found)
-                drift[members] = (centre + move) @ self._directions
+                values = self._values(problem, flat, members)
+                solution = self._solve(problem, values, members, found)
+                move = self._move(solution)
+                drift[members] = (np.asarray(cell) / _CELLS_PER_PX + move) @ self._directions
+                target = np.clip(np.rint(drift[members] * _CELLS_PER_PX), -limit, limit).astype(int)
                 # a little past the cell's edge is as good, and keeps frames from going to and fro
-                far = np.abs(move).max(axis=1) > 0.6 / _CELLS_PER_PX
+                far = (np.abs(move).max(axis=1) > 0.6 / _CELLS_PER_PX) & (target != cells[members]).any(axis=1)
+                far &= step + 1 < _MOST_STEPS
+                settled = members[~far]
+                if settled.size and problem.n_pixels:
+                    here = values if settled.size == members.size else values[~far]
+                    found["strangest"][settled] = self._strangest(problem, here, solution[~far])
+                cells[members] = target
                 moving.append(members[far])
-            active = np.concatenate(moving)
-            target = np.clip(np.rint(drift[active] * _CELLS_PER_PX), -limit, limit).astype(int)
-            stuck = (target == cells[active]).all(axis=1)
-            cells[active] = target
-            active = active[~stuck]
+            active = np.concatenate(moving) if moving else active[:0]
+            if not active.size:
+                break
         found["dy_px"], found["dx_px"] = np.clip(drift, -max_shift_px, max_shift_px).T
         return Fit(**found)
 
+    def _values(self, cell: _Cell, flat: NDArray[np.generic], members: NDArray[np.intp]) -> Single:
+        """Pixels of some frames in units of their noise, (n, n_pixels)."""
+        chosen = flat if members.size == len(flat) else flat[members]
+        values: Single = np.take(chosen, cell.pixels, axis=1).astype(np.float32)
+        values -= np.float32(self._level)
+        values *= cell.scale
+        return values
+
     def _solve(
-        self, cell: _Cell, flat: NDArray[np.generic], members: NDArray[np.intp], found: dict[str, FloatArray]
+        self, cell: _Cell, values: Single, members: NDArray[np.intp], found: dict[str, FloatArray]
     ) -> FloatArray:
-        """Move of each frame from the centre of the cell, (n, 2) px; fills in the rest of the fit."""
-        values = self._values(cell, flat, members)
+        """Least-squares solution of each frame, (n, n_columns); fills in the fit but for the drift."""
         projected = (values @ cell.rows.T).astype(np.float64)
-        solution = projected @ cell.inverse
-        energy = np.einsum("ij,ij,j->i", values, values, cell.weights, optimize=False).astype(np.float64)
+        solution: FloatArray = projected @ cell.inverse
+        energy = np.einsum("ij,ij->i", values, values).astype(np.float64)
         left = np.maximum(energy - np.sum(projected * solution, axis=1), 0.0)
-        n_pixels = len(cell.pixels)
-        misfit = left / max(n_pixels - len(cell.inverse), 1)
-        brightness = solution[:, 2]
-        factor = np.maximum(brightness, 0.2)  # a hardly visible frame must not jump
-        sd = np.sqrt(misfit) / factor
+        misfit = left / max(cell.n_pixels - len(cell.inverse), 1)
+        sd = np.sqrt(misfit) / _steady(solution[:, 2])
         doubt = self._directions @ cell.inverse[:2, :2] @ self._directions
         found["dy_sd_px"][members] = sd * np.sqrt(max(doubt[0, 0], 0.0))
         found["dx_sd_px"][members] = sd * np.sqrt(max(doubt[1, 1], 0.0))
-        found["brightness"][members] = brightness
+        found["brightness"][members] = solution[:, 2]
         found["misfit"][members] = misfit
         found["signal"][members] = cell.signal
-        found["n_pixels"][members] = n_pixels
-        move: FloatArray = np.clip(solution[:, :2] / factor[:, None] @ self._directions, -0.75, 0.75)
-        return move
+        found["n_pixels"][members] = cell.n_pixels
+        return solution
+
+    def _move(self, solution: FloatArray) -> FloatArray:
+        """Move from the centre of the cell that solutions ask for, (n, 2) px."""
+        move: FloatArray = solution[:, :2] / _steady(solution[:, 2])[:, None] @ self._directions
+        return np.clip(move, -0.75, 0.75)
+
+    def _strangest(self, cell: _Cell, values: Single, solution: FloatArray) -> FloatArray:
+        """Largest deviation of any place from the reference in each frame, in SD, (n,)."""
+        few = slice(None, None, max(1, len(values) // _FEW_FRAMES))
+        residual = values[few] - solution[few].astype(np.float32) @ cell.rows
+        skewness = float(np.median(_skewness(residual, cell.n_pixels)))
+        left = np.einsum("ij,ij->i", values, values) - np.sum((solution @ cell.normal) * solution, axis=1)
+        sd = np.sqrt(np.maximum(left, 0.0) / cell.n_pixels) * _further_up(skewness) + 1e-9
+        places = cell.places(values)
+        places -= solution.astype(np.float32) @ cell.tile_rows
+        largest: FloatArray = np.abs(places, out=places).max(axis=1) / sd
+        return largest
 
     def locate_despite_flashes(self, frames: NDArray[np.generic], fit: Fit, *, max_shift_px: float) -> Fit:
         """Locate frames again without the places that differ from the reference: boutons that release.
@@ -265,75 +306,54 @@ class Reference:
         """
         found = {name: getattr(fit, name).copy() for name in Fit.__slots__}
         flat = frames.reshape(len(frames), -1)
-        cells = np.rint(np.stack([fit.dy_px, fit.dx_px], axis=1) * _CELLS_PER_PX).astype(int)
-        for cell, members in _grouped(cells, np.arange(len(frames))):
-            problem = self._cell(cell)
-            if not problem.pixels.size:
-                continue
-            values = self._values(problem, flat, members)
-            worst = np.abs(self._places(problem, values, values @ problem.rows.T @ problem.inverse)).max(axis=1)
-            for k in members[worst > _FLASH_SD]:
-                self._refit(flat[k : k + 1], found, int(k), max_shift_px)
+        for k in np.flatnonzero(fit.strangest > _FLASH_SD):
+            self._refit(flat[k : k + 1], found, int(k), max_shift_px)
         return Fit(**found)
-
-    def _values(self, cell: _Cell, flat: NDArray[np.generic], members: NDArray[np.intp]) -> Single:
-        chosen = flat if members.size == len(flat) else flat[members]
-        values: Single = np.take(chosen, cell.pixels, axis=1).astype(np.float32)
-        values -= np.float32(self._level)
-        return values
-
-    def _places(self, cell: _Cell, values: Single, solution: FloatArray) -> FloatArray:
-        """Sum up what the solution leaves over in each tile that has pixels, in SD, (n_frames, n_tiles).
-
-        A few photons scatter further up than down: what a normal tail calls 5 SD is further out by a share of the
-        skewness (Cornish & Fisher 1938, Rev Inst Int Stat 5:307).
-        """
-        scale = np.sqrt(cell.weights)
-        residual = values * scale
-        residual -= solution.astype(np.float32) @ (cell.rows / scale)
-        square = residual * residual
-        spread = np.sqrt(np.mean(square, axis=1, keepdims=True)) + np.float32(1e-9)
-        skewness = np.einsum("ij,ij->i", square, residual)[:, None] / residual.shape[1] / spread**3
-        spread *= 1.0 + (_FLASH_SD**2 - 1.0) / (6.0 * _FLASH_SD * _TILE_PX) * np.clip(skewness, 0.0, 2.0)
-        n_in_tile = np.diff(cell.tile_starts, append=len(cell.tile))
-        places: FloatArray = np.add.reduceat(residual, cell.tile_starts, axis=1) / np.sqrt(n_in_tile) / spread
-        return places
 
     def _refit(self, frame: NDArray[np.generic], found: dict[str, FloatArray], k: int, max_shift_px: float) -> None:
         """Locate one frame without its flashing places."""
-        from scipy.ndimage import maximum_filter
-
         drift = np.array([found["dy_px"][k], found["dx_px"][k]])
         flashing = np.zeros(self._tiles_shape, dtype=np.bool_)
+        at: tuple[int, int] | None = None
         for round_ in range(_FLASH_ROUNDS):
-            cell = np.rint(drift * _CELLS_PER_PX).astype(int)
-            problem = self._cell((int(cell[0]), int(cell[1])))
-            values = self._values(problem, frame, np.zeros(1, dtype=np.intp))
-            out = flashing.flat[problem.tile]
-            rows = problem.rows[:, out]
-            normal = problem.normal - rows @ (rows / problem.weights[out]).T
+            y, x = np.rint(drift * _CELLS_PER_PX).astype(int).tolist()
+            if at != (y, x):
+                at, problem = (y, x), self._cell((y, x))
+                values = self._values(problem, frame, np.zeros(1, dtype=np.intp))
+                projected_all, energy_all = problem.rows @ values[0], float(values[0] @ values[0])
+                places_seen = problem.places(values)[0]
+                residual = values - (problem.inverse @ projected_all)[None].astype(np.float32) @ problem.rows
+                strangeness = _further_up(float(_skewness(residual, problem.n_pixels)[0]))
+            tiles_out = np.flatnonzero(flashing.flat[self._tile])
+            out = (tiles_out + np.arange(_TILE_PX**2)[:, None] * len(self._tile)).ravel()
+            rows = problem.rows[:, out].astype(np.float64)
+            normal = problem.normal - rows @ rows.T
             inverse = np.linalg.pinv(normal, hermitian=True, rcond=1e-9)
             doubt = self._directions @ inverse[:2, :2] @ self._directions
             usual_doubt = self._directions @ problem.inverse[:2, :2] @ self._directions
-            if np.trace(doubt) > 4.0 * np.trace(usual_doubt) or out.all():
+            n_pixels = problem.n_pixels - int(np.count_nonzero(problem.scale[out]))
+            if np.trace(doubt) > 4.0 * np.trace(usual_doubt) or not n_pixels:
                 return
-            projected = problem.rows @ values[0] - rows @ values[0, out]
+            projected = projected_all - rows @ values[0, out]
             solution = inverse @ projected
-            n_pixels = out.size - int(out.sum())
-            energy = float((values[0] ** 2 * ~out) @ problem.weights) - float(solution @ projected)
+            energy = energy_all - float(values[0, out] @ values[0, out]) - float(solution @ projected)
             misfit = max(energy, 0.0) / max(n_pixels - len(inverse), 1)
-            factor = max(float(solution[2]), 0.2)
-            move = np.clip(solution[:2] / factor @ self._directions, -0.75, 0.75)
-            drift = np.clip(cell / _CELLS_PER_PX @ self._directions + move, -max_shift_px, max_shift_px)
+            drift = np.array(at) / _CELLS_PER_PX @ self._directions + self._move(solution[None])[0]
+            drift = np.clip(drift, -max_shift_px, max_shift_px)
             found["dy_px"][k], found["dx_px"][k] = drift
-            found["dy_sd_px"][k], found["dx_sd_px"][k] = np.sqrt(misfit * np.maximum(np.diag(doubt), 0.0)) / factor
+            sd = np.sqrt(misfit * np.maximum(np.diag(doubt), 0.0)) / _steady(solution[2])
+            found["dy_sd_px"][k], found["dx_sd_px"][k] = sd
             found["brightness"][k], found["misfit"][k] = solution[2], misfit
             found["signal"][k], found["n_pixels"][k] = _signal(normal), n_pixels
-            places = np.zeros(self._tiles_shape)
-            places.flat[problem.tile[problem.tile_starts]] = np.abs(self._places(problem, values, solution[None])[0])
+            left = energy_all - 2.0 * float(solution @ projected_all) + float(solution @ problem.normal @ solution)
+            spread = np.sqrt(max(left, 0.0) / problem.n_pixels) * strangeness + 1e-9
+            places = np.abs(places_seen - solution.astype(np.float32) @ problem.tile_rows) / spread
             # the worst first: they also make the rest of the frame look wrong
             limit = max(_FLASH_SD - 1.0, 0.5 * float(places.max()) * (1.0 - round_ / _FLASH_ROUNDS))
-            before, flashing = flashing, maximum_filter(places, size=3) > limit
+            before, flashing = flashing, np.zeros_like(flashing)
+            rows_, columns_ = np.divmod(self._tile[places > limit], self._tiles_shape[1])
+            for row, column in zip(rows_.tolist(), columns_.tolist(), strict=True):
+                flashing[max(row - 1, 0) : row + 2, max(column - 1, 0) : column + 2] = True
             if (before == flashing).all() and round_ > 1:
                 return
 
@@ -351,10 +371,36 @@ class Reference:
         -------
         dy, dx : (n_frames,) ndarray of float
         """
-        template = likelihood_template(self.image, self._weights)
-        coarse = correlate(frames, template=template, usable=self._usable, max_shift_px=max_shift_px)
+        coarse = correlate(frames, template=self._template, usable=self._usable, max_shift_px=max_shift_px)
         dy, dx = self._directions @ coarse
         return dy, dx
+
+
+def _steady(brightness: FloatArray) -> FloatArray:
+    """Brightness that a shift is divided by: a hardly visible frame must not jump."""
+    return np.maximum(brightness, 0.2)
+
+
+def _sum_tiles(values: NDArray[Number]) -> NDArray[Number]:
+    """Sum over the pixels of each tile, (n, _TILE_PX² * n_tiles) -> (n, n_tiles)."""
+    sums: NDArray[Number] = values.reshape(len(values), _TILE_PX**2, -1).sum(axis=1)
+    return sums
+
+
+def _skewness(residual: Single, n_pixels: int) -> FloatArray:
+    square = residual * residual
+    variance = square.sum(axis=1) / n_pixels + 1e-18
+    skewness: FloatArray = np.einsum("ij,ij->i", square, residual) / n_pixels / variance**1.5
+    return skewness
+
+
+def _further_up(skewness: float) -> float:
+    """How much further out the tail of a place lies than that of normal noise.
+
+    A few photons scatter further up than down: what a normal tail calls 5 SD is further out by a share of the
+    skewness (Cornish & Fisher 1938, Rev Inst Int Stat 5:307).
+    """
+    return 1.0 + (_FLASH_SD**2 - 1.0) / (6.0 * _FLASH_SD * _TILE_PX) * float(np.clip(skewness, 0.0, 2.0))
 
 
 def _signal(normal: FloatArray) -> float:
