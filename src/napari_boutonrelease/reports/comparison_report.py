@@ -160,8 +160,8 @@ def _sections(comparison: Comparison) -> list[_Section]:
             min(matches_mm(comparison), 110.0),
             draw_matches,
             "Mean images with the ids of the first recording: blue where a bouton was found in every recording, grey "
-            "where in some. Crosses are boutons of later recordings without a partner. Check by eye that ids sit on the same "
-            "boutons.",
+            "where in some. Crosses are boutons of later recordings without a partner. Check by eye that ids sit on "
+            "the same boutons.",
         ),
         _Section(
             "Release probability in each recording",
@@ -173,15 +173,16 @@ def _sections(comparison: Comparison) -> list[_Section]:
             "What changed",
             min(changes_mm(comparison), _MOST_CHANGES_MM),
             draw_changes,
-            "95 % intervals, filled where they exclude no change; not corrected for the number of boutons (the p-values "
-            "in changes.csv are). The ratio of q comes from the joint fit of both recordings, with one number of sites.",
+            "95 % intervals, filled where they exclude no change; not corrected for the number of boutons (the "
+            "p-values in changes.csv are). The ratio of q comes from the joint fit of both recordings, with one "
+            "number of sites.",
         ),
         _Section(
             "Number of release sites",
             62.0,
             draw_sites,
-            "Points: most likely number; bars: numbers that the data cannot exclude. Different release probabilities in "
-            "the recordings are what tells the number of sites.",
+            "Points: most likely number; bars: numbers that the data cannot exclude. Different release probabilities "
+            "in the recordings are what tells the number of sites.",
         ),
         _Section(
             "1/CV² against mean",
@@ -194,7 +195,8 @@ def _sections(comparison: Comparison) -> list[_Section]:
             parabolas_mm(comparison),
             draw_parabolas,
             "Each point is a pulse of a recording, noise taken out, ± standard error. The curve is the parabola of "
-            "binomial release with the expected variation of vesicles; it is straight where the number of sites stays open.",
+            "binomial release with the expected variation of vesicles; it is straight where the number of sites stays"
+            " open.",
         ),
     ]
     if len(comparison.recovery):
