@@ -97,6 +97,23 @@ def test_a_worker_that_is_killed_costs_nothing(own_movies, tools, cluster):
     assert not [path for path in own_movies.rglob(".*.release.writing-*") if path.parent.name == "day2"]
 
 
+def test_a_scheduler_that_is_lost_fails_what_is_not_done_and_says_so(own_movies, tools, cluster):
+    manifest = tools.write_manifest(own_movies, *map(tools.row, ("day1/axon1", "day1/axon2", "day2/axon1")))
+    out = own_movies / "out"
+
+    def lose_it(done, total):
+        if done:
+            cluster.processes[0].kill()
+
+    outcome = run_batch(
+        manifest, out=out, scheduler=cluster.address, settings=tools.settings(), report=False, progress=lose_it
+    )
+    assert outcome.names("done")
+    assert outcome.failures
+    assert all(sentence.startswith("The cluster lost it") for sentence in outcome.failures.values())
+    assert set(outcome.names("done")) | set(outcome.failures) == {"day1/axon1", "day1/axon2", "day2/axon1"}
+
+
 def test_a_scheduler_that_does_not_answer_is_one_sentence(own_movies, tools, monkeypatch):
     pytest.importorskip("distributed")
     monkeypatch.setattr("napari_boutonrelease.batch.cluster._CONNECT_S", 1)

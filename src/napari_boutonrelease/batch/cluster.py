@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import logging
 import secrets
 from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
@@ -35,6 +36,19 @@ def connected(address: str) -> Iterator[Any]:
         program or has another version.
     """
     distributed = _distributed()
+    logger = logging.getLogger("distributed.client")
+    level = logger.level
+    logger.setLevel(logging.CRITICAL)  # what matters of a lost connection is said as a sentence, not as its traceback
+    try:
+        with _client(distributed, address) as client:
+            _check_workers(client, address)
+            yield client
+    finally:
+        logger.setLevel(level)
+
+
+@contextmanager
+def _client(distributed: Any, address: str) -> Iterator[Any]:
     try:
         client = distributed.Client(address, timeout=_CONNECT_S, set_as_default=False)
     except (OSError, ValueError, TypeError) as error:
@@ -42,7 +56,6 @@ def connected(address: str) -> Iterator[Any]:
             f"No scheduler answers at {address}; check the address that dask scheduler printed, as tcp://host:8786."
         ) from error
     try:
-        _check_workers(client, address)
         yield client
     finally:
         client.close()

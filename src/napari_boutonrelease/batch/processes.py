@@ -38,8 +38,8 @@ class Ending:
         Why it failed, in a sentence.
     traceback : str
         Where an unexpected error arose.
-    seconds : float
-        Time it took, all tries.
+    seconds : float or None
+        Time it took, all tries; None if that is not known.
     cpu_s : float or None
         Processor time, s.
     peak_memory_mb : float or None
@@ -55,7 +55,7 @@ class Ending:
     status: str
     failure: str = ""
     traceback: str = ""
-    seconds: float = 0.0
+    seconds: float | None = None
     cpu_s: float | None = None
     peak_memory_mb: float | None = None
     tries: int = 0
