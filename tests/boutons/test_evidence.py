@@ -2,7 +2,7 @@ import numpy as np
 import pytest
 
 from napari_boutonrelease.boutons import matched_filter, mixture_evidence, release_posterior, standardise
-from napari_boutonrelease.boutons.evidence import RELEASE_PROBABILITIES, RELEASE_SIZES_SD
+from napari_boutonrelease.boutons.evidence import RELEASE_PROBABILITIES, RELEASE_SIZES_SD, robust_variance
 
 from .conftest import SIGMA_PX, spot
 
@@ -60,6 +60,38 @@ def test_matched_filter_reads_a_spot_in_units_of_its_noise():
     assert noise_sd == pytest.approx(0.95, abs=0.03)  # the local mean takes a twentieth
     assert 0.95 * ideal <= z[-1, 24, 24] / noise_sd <= ideal
     assert np.unravel_index(z[-1].argmax(), shape) == (24, 24)
+
+
+def test_matched_filter_is_a_weighted_sum_above_a_weighted_mean():
+    rng = np.random.default_rng(4)
+    maps = rng.standard_normal((2, 40, 50)).astype(np.float32)
+    inverse_variance = rng.uniform(0.5, 2.0, (40, 50))
+    inverse_variance[10:14, 20:30] = 0.0
+    z = matched_filter(maps, inverse_variance=inverse_variance, spot_sigma_px=SIGMA_PX)
+    rows, columns = np.mgrid[0:40, 0:50]
+    box, reach = round(6 * SIGMA_PX), int(3.5 * SIGMA_PX + 0.5)
+
+    def level(image, y, x):
+        near = (abs(rows - y) <= box) & (abs(columns - x) <= box)
+        return np.sum((image * inverse_variance)[near]) / np.sum(inverse_variance[near])
+
+    for y, x in ((20, 25), (2, 3), (38, 30), (15, 24)):
+        profile = np.exp(-((rows - y) ** 2 + (columns - x) ** 2) / (2 * SIGMA_PX**2))
+        profile[(abs(rows - y) > reach) | (abs(columns - x) > reach)] = 0.0
+        for image, read in zip(maps, z, strict=True):
+            above = image - [[level(image, a, b) if profile[a, b] else 0.0 for b in range(50)] for a in range(40)]
+            weighted = profile * inverse_variance
+            expected = np.sum(weighted * above) / np.sqrt(np.sum(weighted * profile))
+            assert read[y, x] == pytest.approx(expected, rel=0.01, abs=0.003)
+    assert (z[:, 10:14, 20:30] == 0).all()
+
+
+@pytest.mark.parametrize("n_maps", [1, 2, 31, 40])
+def test_robust_variance_is_that_of_the_median(n_maps):
+    rng = np.random.default_rng(5)
+    maps, factor = rng.standard_normal((n_maps, 30, 70)).astype(np.float32), rng.uniform(0.5, 2.0, n_maps)
+    plain = (1.482602 * np.median(np.abs(maps / factor[:, None, None]), axis=0)) ** 2
+    np.testing.assert_allclose(robust_variance(maps, noise_factor=factor), plain, rtol=1e-5)
 
 
 def test_matched_filter_does_not_see_a_flash():

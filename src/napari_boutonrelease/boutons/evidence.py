@@ -11,6 +11,8 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from ..recording.separable import box_sum, convolve, gaussian_kernel
+
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
@@ -19,7 +21,8 @@ RELEASE_SIZES_SD = (2.5, 3.5, 5.0, 7.0, 10.0)
 # No single trial may argue for more than this: one spark, cosmic ray or passing vesicle does not make a bouton.
 MAX_NATS_PER_TRIAL = 10.0
 _POOL_SIGMAS = 8.0  # reach, in spot sigmas, over which noise is pooled
-_GROUP = 8  # likelihood ratios multiplied before one logarithm; e**(8 * 10) still fits float32
+_GROUP = 8  # terms multiplied before one logarithm; (49 + e**10)**8, the largest product, still fits float32
+_BLOCK_NUMBERS = 160_000  # worked on at a time, so that they stay in the processor's cache
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -45,12 +48,19 @@ class MatchedMaps:
 
 def robust_variance(maps: NDArray[np.floating], *, noise_factor: NDArray[np.float64]) -> NDArray[np.float64]:
     """Return the squared MAD-based SD of maps divided by their noise factor, about zero. (n, y, x) -> (y, x)."""
-    rows = max(1, int(1e6 // max(maps.shape[0] * maps.shape[2], 1)))
-    scale = (1.0 / noise_factor)[:, None, None].astype(maps.dtype)
-    blocks = [
-        np.median(np.abs(maps[:, start : start + rows] * scale), axis=0) for start in range(0, maps.shape[1], rows)
-    ]
-    return (np.concatenate(blocks).astype(np.float64) * 1.482602) ** 2
+    n_maps = len(maps)
+    columns = maps.reshape(n_maps, -1)
+    scale = (1.0 / noise_factor)[:, None].astype(maps.dtype)
+    median = np.empty(columns.shape[1])
+    size = max(64, _BLOCK_NUMBERS // max(n_maps, 1))
+    middle = n_maps // 2
+    for start in range(0, columns.shape[1], size):
+        block = np.abs(columns[:, start : start + size] * scale)
+        block.partition(middle, axis=0)
+        upper = block[middle]
+        lower = upper if n_maps % 2 else block[:middle].max(axis=0)
+        median[start : start + size] = 0.5 * (lower + upper)
+    return (median * 1.482602).reshape(maps.shape[1:]) ** 2
 
 
 def pixel_variance(
@@ -145,21 +155,24 @@ def matched_filter(
     (n, y, x) ndarray of float32
         Response in units of its approximate noise SD, for a noise factor of 1.
     """
-    from scipy.ndimage import gaussian_filter, uniform_filter
-
     weight = inverse_variance.astype(np.float32)
-    box = 2 * box_half_px(spot_sigma_px) + 1
-    box_weight = np.maximum(uniform_filter(weight, box, mode="constant"), 1e-12 * max(float(weight.max()), 1e-30))
-    # The spot's square is a Gaussian of sigma / sqrt(2); gaussian_filter is normalised to sum 1, hence the areas.
+    half = box_half_px(spot_sigma_px)
+    spot, square = (gaussian_kernel(sigma, truncate=3.5) for sigma in (spot_sigma_px, spot_sigma_px / np.sqrt(2)))
+    box_weight = box_sum(box_sum(weight, half, axis=0), half, axis=1)
+    per_box_weight = 1.0 / np.maximum(box_weight, 1e-12 * (2 * half + 1) ** 2 * max(float(weight.max()), 1e-30))
+    # The spot's square is a Gaussian of sigma / sqrt(2); the kernels have sum 1, hence the areas.
     spot_area = 2 * np.pi * spot_sigma_px**2
-    energy = gaussian_filter(weight, spot_sigma_px / np.sqrt(2), mode="constant") * spot_area / 2
+    energy = convolve(convolve(weight, square, axis=0), square, axis=1) * (spot_area / 2)
     scale = np.where(energy > 0, spot_area / np.sqrt(np.maximum(energy, 1e-30)), 0.0).astype(np.float32)
     scale[weight == 0] = 0.0
     filtered = np.empty(maps.shape, dtype=np.float32)
     for index, image in enumerate(maps):
-        background = uniform_filter(image * weight, box, mode="constant") / box_weight
-        filtered[index] = gaussian_filter((image - background) * weight, spot_sigma_px, mode="constant", truncate=3.5)
-        filtered[index] *= scale
+        weighted = image * weight
+        background = box_sum(box_sum(weighted, half, axis=0), half, axis=1)
+        background *= per_box_weight
+        background *= weight
+        weighted -= background
+        np.multiply(convolve(convolve(weighted, spot, axis=0), spot, axis=1), scale, out=filtered[index])
     return filtered
 
 
@@ -225,11 +238,13 @@ def local_variance(
     Places with fewer than eight of those say nothing: 0.
     """
     if null_is_silent:
-        rows = null.reshape(len(null), 1, -1)
-        return robust_variance(rows, noise_factor=np.ones(len(null))).reshape(null.shape[1:])
-    below = np.minimum(evoked, 0)
-    n_below = np.count_nonzero(below, axis=0)
-    power = np.sum(below.astype(np.float64) ** 2, axis=0)
+        return robust_variance(null, noise_factor=np.ones(len(null)))
+    n_below = np.zeros(evoked.shape[1:])
+    power = np.zeros(evoked.shape[1:])
+    for one in evoked:
+        below = np.minimum(one, 0)
+        n_below += below < 0
+        power += below * below
     return np.where(n_below >= 8, power / np.maximum(n_below, 1), 0.0)
 
 
@@ -290,31 +305,40 @@ def mixture_evidence(z: NDArray[np.float32]) -> NDArray[np.float32]:
     n_maps = z.shape[0]
     columns = z.reshape(n_maps, -1)
     evidence = np.zeros(columns.shape[1], dtype=np.float32)
-    size = max(256, int(200_000 // max(n_maps, 1)))  # the block and its products stay in cache
+    size = max(64, _BLOCK_NUMBERS // max(n_maps, 1))
     for start in range(0, columns.shape[1], size):
         evidence[start : start + size] = _block_evidence(columns[:, start : start + size])
     return np.asarray(evidence.reshape(z.shape[1:]))
 
 
 def _block_evidence(z: NDArray[np.float32]) -> NDArray[np.float32]:
+    """Evidence of (n_maps, n_pixels) -> (n_pixels,).
+
+    1 - p + p r = p (r + (1 - p) / p): the sum over maps of its logarithm is n log(p) plus the logarithms of products of
+    r + (1 - p) / p, a group of maps at a time.
+    """
     n_maps, n_pixels = z.shape
     ceiling = np.float32(np.sqrt(2 * MAX_NATS_PER_TRIAL))
     mean = np.maximum(np.minimum(z, ceiling).sum(axis=0) / n_maps, 0)
     best: NDArray[np.float32] = (0.5 * n_maps * mean**2).astype(np.float32)
     n_groups = -(-n_maps // _GROUP)
-    ratio = np.ones((n_groups * _GROUP, n_pixels), dtype=np.float32)
-    mixed = np.empty_like(ratio)
+    filled_up = np.ones((_GROUP * n_groups, n_pixels), dtype=np.float32)  # the filling rows have a ratio of 1
+    ratio = filled_up[:n_maps]
+    groups = filled_up.reshape(_GROUP, n_groups, n_pixels)
+    product, term = np.empty((2, n_groups, n_pixels), dtype=np.float32)
     for q in RELEASE_SIZES_SD:
-        filled = ratio[:n_maps]
-        np.multiply(z, np.float32(q), out=filled)
-        filled -= np.float32(q * q / 2)
-        np.minimum(filled, np.float32(MAX_NATS_PER_TRIAL), out=filled)
-        np.exp(filled, out=filled)
+        np.multiply(z, np.float32(q), out=ratio)
+        ratio -= np.float32(q * q / 2)
+        np.minimum(ratio, np.float32(MAX_NATS_PER_TRIAL), out=ratio)
+        np.exp(ratio, out=ratio)
         for p in RELEASE_PROBABILITIES:
-            np.multiply(ratio, np.float32(p), out=mixed)
-            mixed += np.float32(1 - p)  # the filling rows hold 1 and stay 1
-            product = np.multiply.reduce(mixed.reshape(_GROUP, n_groups, n_pixels), axis=0)
-            np.maximum(best, np.log(product).sum(axis=0), out=best)
+            odds_against = np.float32((1 - p) / p)
+            np.add(groups[0], odds_against, out=product)
+            for group in groups[1:]:
+                product *= np.add(group, odds_against, out=term)
+            sums = np.log(product, out=product).sum(axis=0)
+            sums += np.float32(_GROUP * n_groups * np.log(p))
+            np.maximum(best, sums, out=best)
     return best
 
 
