@@ -13,8 +13,8 @@ from napari_boutonrelease.quanta import (
     fit_sites,
     poisson_gaussian_loglikelihood,
 )
-from napari_boutonrelease.quanta.fit_inputs import make_problems, read_bouton_data
-from napari_boutonrelease.quanta.mixture_fit import derivatives, log_likelihood, maximise
+from napari_boutonrelease.quanta.one_bouton.fit_inputs import make_problems, read_bouton_data
+from napari_boutonrelease.quanta.one_bouton.mixture_fit import derivatives, log_likelihood, maximise
 
 # what one bouton alone can be asked: q free, its variation held loosely
 PRIORS = ReleasePriors(q=None, q_cv=LogPrior(centre=0.3, log_sd=0.3), noise=None)

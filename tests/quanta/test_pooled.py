@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 
 from napari_boutonrelease.errors import InputError
-from napari_boutonrelease.quanta.pooled import fit_axon_release
+from napari_boutonrelease.quanta.whole_axon.pooled import fit_axon_release
 
 NOISE = 0.1
 

@@ -9,7 +9,7 @@ from observer import p_release_if_all_else_known, released_if_all_known
 
 from napari_boutonrelease.analysis.settings import Settings
 from napari_boutonrelease.quanta import measure_pulse_pair
-from napari_boutonrelease.quanta.pooled import fit_axon_release
+from napari_boutonrelease.quanta.whole_axon.pooled import fit_axon_release
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -11,7 +11,7 @@ from observer import observe, p_release_if_all_else_known, released_if_all_known
 from napari_boutonrelease.analysis.pipeline import Pipeline
 from napari_boutonrelease.analysis.settings import PairSettings, QuantalSettings, Settings
 from napari_boutonrelease.analysis.tables import bouton_flags
-from napari_boutonrelease.quanta.pooled import fit_axon_release
+from napari_boutonrelease.quanta.whole_axon.pooled import fit_axon_release
 from napari_boutonrelease.recording import movie_from_array
 from napari_boutonrelease.simulation import preset_recipe, simulate_recording
 

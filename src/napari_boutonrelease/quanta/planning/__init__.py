@@ -1,0 +1,1 @@
+"""How many trials a wanted precision takes."""

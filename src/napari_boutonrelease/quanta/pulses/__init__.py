@@ -1,0 +1,1 @@
+"""Pulse pairs, pulse intervals and trains."""

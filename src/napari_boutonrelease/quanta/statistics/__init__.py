@@ -1,0 +1,1 @@
+"""Intervals, ratios, differences and tests that know nothing of release."""
