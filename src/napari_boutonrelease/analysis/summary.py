@@ -11,6 +11,7 @@ from .axon_tables import axon_cautions, summarise_axon
 from .pulse_intervals import interval_cautions, interval_summary
 from .quantal_step import CONFIDENCE
 from .trains import train_cautions, train_summary
+from .variance_mean import fit_pulses
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -22,6 +23,7 @@ if TYPE_CHECKING:
 _COMPRESSED = 0.01
 _METHODS_FROM_AXON = "whole axon, this bouton's amplitudes"
 _ALONE = "this bouton alone"
+_PARABOLA = "variance against mean"
 
 
 def summarise(measured: Measured) -> dict[str, Any]:
@@ -177,7 +179,10 @@ def _number(value: float) -> float | None:
 
 
 def estimates_table(measured: Measured, *, row: int | None = None) -> pd.DataFrame:
-    """Put every estimate of the same quantity side by side, from pulse 1; of all boutons, or of that in one row."""
+    """Put every estimate of the same quantity side by side, of all boutons, or of that in one row.
+
+    They are those of pulse 1; `q` and `n_sites` of variance against mean rest on all pulses, where there are three.
+    """
     import pandas as pd
 
     axon, calls, fit = measured.release.axon, measured.counts.calls, measured.amplitudes
@@ -229,6 +234,11 @@ def estimates_table(measured: Measured, *, row: int | None = None) -> pd.DataFra
             add("m", name, estimate.value, estimate.lo, estimate.hi)
         by_failures = binomial_failures(failures, n_trials, n_sites=int(n), confidence=CONFIDENCE)
         add("p_site", "failures", by_failures.value, by_failures.lo, by_failures.hi)
+        parabola = fit_pulses(measured, b)
+        if parabola is not None and np.isfinite(parabola.q.value):
+            add("q", _PARABOLA, parabola.q.value, parabola.q.lo, parabola.q.hi)
+        if parabola is not None and parabola.n_sites is not None:
+            add("n_sites", _PARABOLA, parabola.n_sites, parabola.n_sites_lo, parabola.n_sites_hi or np.nan)
     return pd.DataFrame(rows, columns=["bouton", "quantity", "method", "value", "lo", "hi"])
 
 
