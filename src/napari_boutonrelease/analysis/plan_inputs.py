@@ -6,9 +6,15 @@ import csv
 import math
 from dataclasses import dataclass
 from pathlib import Path
+from typing import TYPE_CHECKING, Any
 
 from ..errors import InputError, SavedAnalysisError
 from ..quanta import PlannedBouton
+
+if TYPE_CHECKING:
+    from collections.abc import Mapping
+
+    import pandas as pd
 
 _TABLE = "boutons.csv"
 _COLUMNS = ("bouton", "trials", "p_release", "n_sites", "snr", "q_cv", "flags")
@@ -72,7 +78,29 @@ def read_measured_boutons(
     )
 
 
-def _measured(row: dict[str, str], *, where: str, q_over_noise: float | None, q_cv: float | None) -> MeasuredBouton:
+def measured_boutons(
+    boutons: pd.DataFrame, *, q_over_noise: float | None, q_cv: float | None
+) -> tuple[MeasuredBouton, ...]:
+    """Take the boutons of the table `boutons` of an analysis that is at hand.
+
+    Parameters and errors otherwise as in `read_measured_boutons`.
+
+    Raises
+    ------
+    InputError
+        If it holds no bouton.
+    """
+    if not len(boutons):
+        raise InputError("No bouton was found, so there is nothing to plan for.")
+    cells = boutons[list(_COLUMNS)].astype(object)
+    rows = (dict(zip(_COLUMNS, row, strict=True)) for row in cells.where(cells.notna(), None).to_numpy())
+    return tuple(
+        _measured(row, where=f"boutons, row {number}", q_over_noise=q_over_noise, q_cv=q_cv)
+        for number, row in enumerate(rows, start=1)
+    )
+
+
+def _measured(row: Mapping[str, Any], *, where: str, q_over_noise: float | None, q_cv: float | None) -> MeasuredBouton:
     numbers = {name: _number(row, name, where=where) for name in _COLUMNS[:-1]}
     bouton, p_release, n_sites = numbers["bouton"], numbers["p_release"], numbers["n_sites"]
     if not (bouton >= 1 and bouton.is_integer()):
@@ -98,9 +126,9 @@ def _measured(row: dict[str, str], *, where: str, q_over_noise: float | None, q_
     )
 
 
-def _number(row: dict[str, str], name: str, *, where: str) -> float:
+def _number(row: Mapping[str, Any], name: str, *, where: str) -> float:
     cell = row[name]
     try:
-        return float(cell) if cell else math.nan
+        return math.nan if cell in (None, "") else float(cell)
     except ValueError as error:
         raise SavedAnalysisError(f"{where}, column {name}: {cell!r} is not a number.") from error

@@ -3,6 +3,7 @@
 import argparse
 import os
 
+from ..analysis.usual_goals import USUAL_GOALS, USUAL_SIMULATIONS
 from ..errors import InputError
 from .options import add_seed_option
 
@@ -62,9 +63,9 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     goals.add_argument(
         "--width",
         type=_fraction,
-        default=0.2,
+        default=USUAL_GOALS["width"],
         metavar="W",
-        help="full width of the 95 %% interval of p_release (default: 0.2)",
+        help="full width of the 95 %% interval of p_release (default: %(default)s)",
     )
     goals.add_argument(
         "--sites", type=_count(1), metavar="N", help="tell N sites from N + 1 (default: the bouton's own number)"
@@ -72,16 +73,16 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     goals.add_argument(
         "--ppr",
         type=_ratio,
-        default=1.5,
+        default=USUAL_GOALS["ppr"],
         metavar="R",
-        help="tell a paired-pulse ratio R from 1; p_site changes, vesicles do not (default: 1.5)",
+        help="tell a paired-pulse ratio R from 1; p_site changes, vesicles do not (default: %(default)s)",
     )
     goals.add_argument(
         "--p-change",
         type=_change,
-        default=0.2,
+        default=USUAL_GOALS["change"],
         metavar="D",
-        help="see p_release change by D between two conditions; negative for less (default: 0.2)",
+        help="see p_release change by D between two conditions; negative for less (default: %(default)s)",
     )
     goals.add_argument(
         "--boutons",
@@ -92,19 +93,23 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     goals.add_argument(
         "--change-sd",
         type=_not_negative,
-        default=0.1,
+        default=USUAL_GOALS["change_sd"],
         metavar="D",
-        help="SD by which the true change differs between those boutons (default: 0.1)",
+        help="SD by which the true change differs between those boutons (default: %(default)s)",
     )
     goals.add_argument(
-        "--power", type=_fraction, default=0.8, metavar="P", help="chance of telling and of seeing (default: 0.8)"
+        "--power",
+        type=_fraction,
+        default=USUAL_GOALS["power"],
+        metavar="P",
+        help="chance of telling and of seeing (default: %(default)s)",
     )
     parser.add_argument(
         "--simulations",
         type=_count(0),
-        default=1000,
+        default=USUAL_SIMULATIONS,
         metavar="N",
-        help="simulated recordings that check the trials for --ppr; 0 leaves them out (default: 1000)",
+        help="simulated recordings that check the trials for --ppr; 0 leaves them out (default: %(default)s)",
     )
     add_seed_option(parser)
     parser.add_argument("--out", metavar="DIR", help="folder for the tables, their description and the curves")
