@@ -232,3 +232,26 @@ def test_the_right_kinetics_show_most_clearly():
     )
     assert np.argmax(scores) == 1
     assert scores[1] > 1.1 * max(scores[0], scores[2])
+
+
+@pytest.mark.parametrize("heights", [[40.0, 40.0], [40.0, 15.0], [60.0, 50.0, 40.0, 30.0, 20.0, 15.0]])
+def test_pulses_of_a_train_may_differ_in_height(heights):
+    """The true decay wins though pulses overlap and are not alike."""
+    rng = np.random.default_rng(7)
+    size = (40, 40)
+    when = timing(0.5 + np.arange(12.0)[:, None] + 0.05 * np.arange(len(heights)), n_frames=1250)
+    clean = film(when, [heights] * 12, image=spot(20, 20, shape=size, sigma=1.4), size=size).read(0, 1250)
+    movie = movie_from_array(clean + rng.normal(0, 10.0, clean.shape), frame_interval_s=FRAME_S)
+    decays = [0.02, 0.035, 0.05, 0.07, 0.12]
+    scores = scan_shapes(
+        movie,
+        timing=when,
+        drift=still(1250, size=size),
+        candidates=[replace(SHAPE, decay_s=decay) for decay in decays],
+        pre_s=0.1,
+        post_s=0.2,
+        spot_sigma_px=1.4,
+        block_frames=100,
+        progress=None,
+    )
+    assert decays[int(np.argmax(scores))] == SHAPE.decay_s

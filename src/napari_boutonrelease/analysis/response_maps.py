@@ -19,6 +19,7 @@ if TYPE_CHECKING:
 _MAP_BYTES = 500e6
 _CANDIDATE_RATIO = 1.6
 _RISE_OF_DECAY = 0.04
+_LATENCY_S = 0.002  # conduction along the axon and the release itself
 
 
 def guess_shape(recording: Recording, *, spot_sigma_px: float, progress: Progress | None) -> ResponseShape | None:
@@ -32,12 +33,10 @@ def guess_shape(recording: Recording, *, spot_sigma_px: float, progress: Progres
     timing = recording.timing
     room_s = _room_s(timing)
     decay = 1.5 * timing.frame_interval_s
-    candidates: list[ResponseShape] = []
-    while decay <= room_s / 2 or not candidates:
-        candidates.append(
-            ResponseShape(latency_s=0.0, rise_s=max(_RISE_OF_DECAY * decay, 1e-4), decay_s=decay, slow_fraction=0.0)
-        )
-        decay *= _CANDIDATE_RATIO
+    decays = [decay]
+    while decays[-1] * _CANDIDATE_RATIO <= room_s / 2:
+        decays.append(decays[-1] * _CANDIDATE_RATIO)
+    candidates = [_guessed(decay) for decay in decays]
     pre_s, post_s = _window_s(timing, candidates[len(candidates) // 2])
     scores = scan_shapes(
         recording.movie,
@@ -50,7 +49,19 @@ def guess_shape(recording: Recording, *, spot_sigma_px: float, progress: Progres
         block_frames=BLOCK_FRAMES,
         progress=progress,
     )
-    return candidates[int(np.argmax(scores))] if np.max(scores) > 0 else None
+    if np.max(scores) <= 0:
+        return None
+    best = int(np.argmax(scores))
+    between = 0.0
+    if 0 < best < len(scores) - 1:  # a parabola through the best and its neighbours
+        before, here, after = scores[best - 1 : best + 2]
+        between = 0.5 * float((before - after) / (before - 2.0 * here + after)) if 2.0 * here > before + after else 0.0
+    return _guessed(decays[best] * _CANDIDATE_RATIO**between)
+
+
+def _guessed(decay_s: float) -> ResponseShape:
+    rise_s = max(_RISE_OF_DECAY * decay_s, 1e-4)
+    return ResponseShape(latency_s=_LATENCY_S, rise_s=rise_s, decay_s=decay_s, slow_fraction=0.0)
 
 
 def map_responses(recording: Recording, shape: ResponseShape, *, progress: Progress | None) -> ResponseStack:

@@ -27,6 +27,7 @@ _PIXELS_AT_ONCE = 8192
 _MAX_NULL = 2.0  # null maps wanted per evoked map, at most
 _ENOUGH_NULL = 20
 _CLEAR_SD = 5.0
+_SCAN_RESPONSES = 3  # pulses, or groups of them, that may differ in height while the time course is guessed
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -186,40 +187,41 @@ def scan_shapes(
     means: list[Projection] = []
     owner: list[int] = []
     for index, shape in enumerate(candidates):
+        windows = trial_windows(timing, used=drift.used, shape=shape, pre_s=pre_s, post_s=post_s)
         projections = project(
-            trial_windows(timing, used=drift.used, shape=shape, pre_s=pre_s, post_s=post_s),
-            timing=timing,
-            shape=shape,
-            height_px=movie.shape[1],
+            windows, timing=timing, shape=shape, height_px=movie.shape[1], most_responses=_SCAN_RESPONSES
         )
-        means += [_sum_of_pulses(projection) for projection in projections]
-        owner += [index] * len(projections)
+        means += [_independent(projection) for projection in projections]
+        owner += [_SCAN_RESPONSES * index] * len(projections)
     if not means:
         return np.zeros(len(candidates))
-    slot = np.asarray(owner)
     maps, mean_image = _accumulate(
-        movie, drift=drift, projections=means, block_frames=block_frames, progress=progress, slots=slot
+        movie,
+        drift=drift,
+        projections=means,
+        block_frames=block_frames,
+        progress=progress,
+        slots=np.asarray(owner),
+        n_slots=_SCAN_RESPONSES * len(candidates),
     )
-    power = np.zeros(len(candidates))
-    np.add.at(power, slot, [float(one.factor[0] ** 2) for one in means])
     # One frame's noise variance follows the light; its scale drops out of the comparison.
     light = np.maximum(mean_image - np.min(mean_image), 0.02 * np.ptp(mean_image) + 1e-9)
-    z = matched_filter(
-        maps / np.sqrt(np.maximum(power, 1e-30)).astype(np.float32)[:, None, None],
-        inverse_variance=1.0 / light,
-        spot_sigma_px=spot_sigma_px,
-    )
-    z /= np.maximum(1.482602 * np.median(np.abs(z), axis=(1, 2), keepdims=True), 1e-30)
-    highest = z.max(axis=0)
-    places = (highest > _CLEAR_SD) & (highest >= maximum_filter(highest, size=2 * round(2 * spot_sigma_px) + 1))
-    return np.asarray(np.sum(np.maximum(z[:, places], 0.0).astype(np.float64) ** 2, axis=1))
+    z = matched_filter(maps, inverse_variance=1.0 / light, spot_sigma_px=spot_sigma_px)
+    filled = z[z.any(axis=(1, 2))]  # one SD for all: that of each map is too uncertain to compare them by
+    sd = 1.482602 * float(np.median(np.abs(filled))) if len(filled) else 0.0
+    z /= np.float32(sd if sd > 0 else np.inf)
+    power = np.sum(np.maximum(z, 0.0).reshape(len(candidates), _SCAN_RESPONSES, *mean_image.shape) ** 2, axis=1)
+    highest = power.max(axis=0)
+    places = (highest > _CLEAR_SD**2) & (highest >= maximum_filter(highest, size=2 * round(2 * spot_sigma_px) + 1))
+    return np.asarray(np.sum(power[:, places], axis=1, dtype=np.float64))
 
 
-def _sum_of_pulses(projection: Projection) -> Projection:
-    """One map for all pulses of a window: the sum of their amplitudes."""
-    weights = projection.weights.sum(axis=1, keepdims=True)
-    factor = np.sqrt(np.mean(np.sum(weights.astype(np.float64) ** 2, axis=-1), axis=0))
-    return replace(projection, weights=weights, factor=factor, correlation=np.ones((1, 1)))
+def _independent(projection: Projection) -> Projection:
+    """Combine the amplitudes of a window to ones of independent unit noise, each as near to its own as can be."""
+    values, vectors = np.linalg.eigh(projection.correlation)
+    root = (vectors / np.sqrt(np.maximum(values, 1e-6))) @ vectors.T / projection.factor
+    weights = np.matmul(root.astype(np.float32), projection.weights)
+    return replace(projection, weights=weights, factor=np.ones(len(root)), correlation=np.eye(len(root)))
 
 
 def _thin(projections: list[Projection], *, most: int) -> list[Projection]:
@@ -253,11 +255,15 @@ def _accumulate(
     block_frames: int,
     progress: Progress | None,
     slots: NDArray[np.intp] | None = None,
+    n_slots: int = 0,
 ) -> tuple[NDArray[np.float32], NDArray[np.float64]]:
-    """Sum weights times frames: one map a pulse of each projection, or one a slot; and the mean of all frames used."""
+    """Sum weights times frames: one map a pulse of each projection; and the mean of all frames used.
+
+    With `slots`, the first map of each projection, projections share maps: `n_slots` in all.
+    """
     n_frames, height, width = movie.shape
     first_map = np.cumsum([0, *(len(one.factor) for one in projections)]) if slots is None else slots
-    n_maps = int(first_map[-1]) if slots is None else int(slots.max()) + 1
+    n_maps = int(first_map[-1]) if slots is None else n_slots
     maps = np.zeros((n_maps, height, width), dtype=np.float32)
     total = np.zeros((height, width))
     wanted = np.zeros(n_frames, dtype=np.bool_)
@@ -269,19 +275,20 @@ def _accumulate(
         chosen = start + np.flatnonzero(wanted[start : start + block_frames])
         frames = movie.read(int(chosen[0]), int(chosen[-1]) + 1)
         frames = frames if len(frames) == len(chosen) else frames[chosen - chosen[0]]
-        targets = [total]
-        weights = [np.ones((n_rows, 1, len(chosen)), dtype=np.float32)]
+        weights: dict[int, NDArray[np.float32]] = {}
         for index, one in enumerate(projections):
             if one.window.frames[-1] < chosen[0] or one.window.frames[0] > chosen[-1]:
                 continue
-            spread = np.zeros((n_rows, len(one.factor), len(chosen)), dtype=np.float32)
             mine = np.isin(one.window.frames, chosen, assume_unique=True)
-            spread[:, :, np.searchsorted(chosen, one.window.frames[mine])] = one.weights[:, :, mine]
-            weights.append(spread)
-            targets += list(maps[first_map[index] : first_map[index] + len(one.factor)])
-        sums = _aligned_sums(frames, np.concatenate(weights, axis=1), dy=drift.dy_px[chosen], dx=drift.dx_px[chosen])
-        for target, part in zip(targets, sums, strict=True):
-            target += part
+            places = np.searchsorted(chosen, one.window.frames[mine])
+            for response, row in enumerate(one.weights.transpose(1, 0, 2)[:, :, mine], start=int(first_map[index])):
+                spread = weights.setdefault(response, np.zeros((n_rows, len(chosen)), dtype=np.float32))
+                spread[:, places] += row
+        together = np.stack([np.ones((n_rows, len(chosen)), dtype=np.float32), *weights.values()], axis=1)
+        sums = _aligned_sums(frames, together, dy=drift.dy_px[chosen], dx=drift.dx_px[chosen])
+        total += sums[0]
+        for target, part in zip(weights, sums[1:], strict=True):
+            maps[target] += part
         if progress is not None:
             progress(done + 1, len(starts))
     return maps, total / max(int(wanted.sum()), 1)

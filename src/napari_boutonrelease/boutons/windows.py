@@ -136,11 +136,19 @@ def _frames_between(
     return np.asarray(frames[used[first:last] & (timing.segment[first:last] == segment)])
 
 
-def project(windows: Sequence[Window], *, timing: Timing, shape: ResponseShape, height_px: int) -> list[Projection]:
+def project(
+    windows: Sequence[Window],
+    *,
+    timing: Timing,
+    shape: ResponseShape,
+    height_px: int,
+    most_responses: int | None = None,
+) -> list[Projection]:
     """Return the least-squares weights of each window that can tell the response from the offset.
 
     In every window an offset and one amplitude a pulse are fitted together (ordinary least squares), so that the tail
-    of a pulse is not read as a response to the next.
+    of a pulse is not read as a response to the next. Where there are more pulses than `most_responses`, groups of
+    successive ones share an amplitude.
     """
     rows = np.arange(height_px) * timing.row_time_s if timing.row_time_s > 0 else np.zeros(1)
     projections = []
@@ -149,6 +157,9 @@ def project(windows: Sequence[Window], *, timing: Timing, shape: ResponseShape, 
             continue
         since = timing.frame_start_s[window.frames] - window.stimulus_s[:, None]
         heights = shape.frame_average(since + rows[:, None, None], exposure_s=timing.exposure_s)
+        if most_responses is not None and len(window.pulses) > most_responses:
+            groups = np.array_split(np.arange(len(window.pulses)), most_responses)
+            heights = np.stack([heights[:, group].sum(axis=1) for group in groups], axis=1)
         design = np.concatenate([heights, np.ones((len(rows), 1, len(window.frames)))], axis=1)
         normal = design @ design.transpose(0, 2, 1)
         if np.min(np.linalg.eigvalsh(normal)[:, 0]) < 1e-4:
