@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import io
+from dataclasses import replace
+from threading import Event
 
 import numpy as np
 import pandas as pd
@@ -16,13 +18,17 @@ from qtpy.QtWidgets import QApplication, QFileDialog, QLabel, QMessageBox
 from napari_boutonrelease.analysis.columns import BOUTONS, RESPONSES
 from napari_boutonrelease.analysis.hand_edits import HandEdits
 from napari_boutonrelease.analysis.model import AnalysisModel, compute
-from napari_boutonrelease.docks import reopen, worker
+from napari_boutonrelease.analysis.plan import Goals, make_plan, plan_table
+from napari_boutonrelease.analysis.plan_columns import PLAN
+from napari_boutonrelease.analysis.plan_inputs import measured_boutons
+from napari_boutonrelease.docks import plan_part, reopen, worker
 from napari_boutonrelease.docks.layers import add_movie, current_frame, movie_layer, set_movie_layer
 from napari_boutonrelease.docks.results_dock import ResultsDock
 from napari_boutonrelease.docks.table_model import TableModel, cell_text, flags_in_words
 from napari_boutonrelease.errors import OutputError
 from napari_boutonrelease.flags import FLAGS
 from napari_boutonrelease.recording import open_movie
+from napari_boutonrelease.reports import nwb_details
 from napari_boutonrelease.reports.apart import write_result_apart
 
 SPONTANEOUS = 3
@@ -77,8 +83,9 @@ def header_click(tab, name):
 
 
 def test_the_tables_are_those_of_the_analysis(dock):
-    for k, (name, tab) in enumerate(dock.tables.items()):
+    for k, name in enumerate(("boutons", "pulses", "responses", "spontaneous")):
         dock.tabs.setCurrentIndex(k)
+        tab = dock.tables[name]
         pd.testing.assert_frame_equal(tab.rows.frame, dock.model.table(name))
 
 
@@ -255,6 +262,26 @@ def test_export_goes_beside_the_movie_and_asks_before_it_replaces(dock, files, w
     assert shown == [str(folder / "report.pdf")]
 
 
+def test_an_nwb_file_comes_with_the_export_where_it_is_wanted(dock, tmp_path, when_idle):
+    pytest.importorskip("pynwb")
+    dock.folder.setText(str(tmp_path / "axon.release"))
+    click(dock.nwb)
+    click(dock.export_button)
+    when_idle(dock)
+    assert str(tmp_path) in dock.state.text()
+    assert (tmp_path / "axon.release" / "recording.nwb").stat().st_size > 0
+
+
+def test_what_an_nwb_file_lacks_is_said_before_anything_is_written(dock, tmp_path, monkeypatch):
+    monkeypatch.setattr(nwb_details, "find_spec", lambda _name: None)
+    dock.folder.setText(str(tmp_path / "axon.release"))
+    click(dock.nwb)
+    click(dock.export_button)
+    assert not dock.runner.busy
+    assert "needs the package pynwb" in dock.state.text()
+    assert not list(tmp_path.iterdir())
+
+
 def test_a_folder_of_other_things_is_not_replaced(dock, tmp_path, when_idle):
     (tmp_path / "diary.txt").write_text("dear")
     dock.folder.setText(str(tmp_path))
@@ -337,3 +364,119 @@ def test_nothing_measured_is_said(qtbot):
     assert not made.export_button.isEnabled()
     assert made.tables["boutons"].rows.rowCount() == 0
     made.unlink()
+
+
+# planning
+
+
+@pytest.fixture
+def planner(dock, when_idle, monkeypatch):
+    """The tab Plan, with few simulations; a call presses its button and waits."""
+    monkeypatch.setattr(plan_part, "USUAL_SIMULATIONS", 50)
+    dock.tabs.setCurrentIndex(list(dock.tables).index("plan"))
+
+    def press():
+        click(dock.plan.button)
+        when_idle(dock)
+        return dock.tables["plan"].rows.frame
+
+    return press
+
+
+def enter(field, text):
+    QTest.mouseClick(field, Qt.MouseButton.LeftButton)
+    field.selectAll()
+    QTest.keyClicks(field, text)
+
+
+def test_the_plan_is_that_of_the_command_line(dock, planner):
+    assert dock.tables["plan"].rows.rowCount() == 0
+    wanted = make_plan(
+        measured_boutons(dock.model.table("boutons"), q_over_noise=None, q_cv=None),
+        goals=Goals(width=0.2, sites=None, ppr=1.5, change=0.2, change_sd=0.1, power=0.8),
+        n_boutons=None,
+        n_simulations=50,
+        rng=np.random.default_rng(dock.model.settings.seed),
+        progress=None,
+    )
+    pd.testing.assert_frame_equal(planner(), plan_table(wanted))
+
+
+def test_other_goals_need_other_trials(dock, planner, when_idle):
+    before = planner()
+    enter(dock.plan.goals["width"], "0.1")
+    enter(dock.plan.goals["change"], "-0.25")
+    QTest.keyClick(dock.plan.goals["change"], Qt.Key.Key_Return)
+    when_idle(dock)
+    after = dock.tables["plan"].rows.frame
+    needed = [frame.set_index(["bouton", "goal"])["trials_needed"] for frame in (before, after)]
+    assert needed[1][1, "width"] > 2 * needed[0][1, "width"]
+    assert set(after.loc[after["goal"] == "change", "wanted"]) == {-0.25}
+
+
+def test_the_plan_follows_the_selection_both_ways(dock, planner):
+    tab, frame = dock.tables["plan"], planner()
+    dock.model.select(bouton=2)
+    assert [frame["bouton"].iloc[row] for row in selected_rows(tab)] == [2]
+    third = frame["bouton"].tolist().index(3)
+    click_row(tab, third)
+    assert dock.model.selection.bouton == 3
+    together = frame["goal"].tolist().index("paired_change")
+    click_row(tab, together)  # belongs to no bouton
+    assert dock.model.selection.bouton == 3
+    click(dock.only_selected)
+    assert set(tab.rows.frame["bouton"]) == {3}
+
+
+def test_a_plan_is_copied(dock, planner):
+    frame = planner()
+    dock.tables["plan"].view.clearSelection()
+    click(dock.copy_button)
+    pasted = pd.read_csv(io.StringIO(QApplication.clipboard().text()), sep="\t")
+    assert tuple(pasted.columns) == PLAN.names
+    assert len(pasted) == len(frame)
+
+
+@pytest.mark.parametrize(
+    ("goal", "text", "words"),
+    [
+        ("width", "", "width is empty: give a number, for example 0.2"),
+        ("ppr", "much", "PPR must be a number"),
+        ("power", "1.5", "power must lie between 0 and 1"),
+        ("change", "0", "change must lie between -1 and 1 and differ from 0"),
+    ],
+)
+def test_a_goal_that_cannot_be_is_said(dock, planner, monkeypatch, goal, text, words):
+    monkeypatch.setattr(worker.notifications, "show_error", lambda _: None)
+    enter(dock.plan.goals[goal], text or " ")
+    assert planner() is None
+    assert words in dock.state.text()
+
+
+def test_planning_can_be_cancelled(dock, planner, when_idle, monkeypatch, qtbot):
+    begun, go_on = Event(), Event()
+
+    def wait_and_plan(boutons, *, progress, **rest):
+        begun.set()
+        assert go_on.wait(20)
+        return make_plan(boutons, progress=progress, **rest)
+
+    monkeypatch.setattr(plan_part, "make_plan", wait_and_plan)
+    click(dock.plan.button)
+    qtbot.waitUntil(begun.is_set)
+    assert dock.progress.words.text() == "Planning"
+    assert not dock.plan.button.isEnabled()
+    click(dock.progress.button)
+    go_on.set()
+    when_idle(dock)
+    assert dock.plan.frame is None
+    assert dock.plan.button.isEnabled()
+
+
+def test_a_plan_goes_with_the_boutons_it_was_made_for(dock, planner):
+    frame = planner()
+    dock.model.set_threshold(4.0)  # calls change, what a plan rests on does not
+    pd.testing.assert_frame_equal(dock.tables["plan"].rows.frame, frame)
+    measured = dock.model.measured
+    dock.model.accept(dock.model.request(), replace(measured, release=replace(measured.release)))
+    assert dock.tables["plan"].rows.rowCount() == 0

@@ -23,22 +23,27 @@ from qtpy.QtWidgets import (
 )
 
 from ..analysis.columns import TABLES
+from ..analysis.plan_columns import PLAN
 from ..analysis.run import put_together
 from ..analysis.summary import cautions_of
 from ..errors import InputError, OutputError
 from ..reports import check_can_write
 from ..reports.apart import write_result_apart
+from ..reports.nwb_details import NwbDetails, check_can_write_nwb
 from .calm import WhenCalm
 from .layers import show_frame
 from .panel import Panel, sentence_label
+from .plan_part import PlanPart
 from .reopen import ask_and_reopen
-from .table_model import TableModel
+from .table_model import TableModel, cell_text
 from .table_view import select_rows, table_view
 from .worker import ProgressRow
 
 if TYPE_CHECKING:
     import napari
+    import pandas as pd
 
+    from ..analysis.column_types import TableDefinition
     from ..analysis.measured import Measured
     from ..analysis.progress import Progress
     from ..recording import Movie
@@ -50,6 +55,7 @@ _FIRST = {
         *("bouton", "p_release", "p_release_lo", "p_release_hi", "n_sites", "n_set", "p_site", "q", "snr"),
         *("ppr", "ppr_lo", "ppr_hi", "paired_pulse", "found_by", "flags"),
     ),
+    "plan": ("bouton", "goal", "wanted", "trials_needed", "reached", "trials_done", "reached_now", "reason"),
 }
 _KEYS = ("bouton", "trial", "pulse")
 _EXPORT = "Tables, traces, footprints, figures and report are written into the folder."
@@ -81,15 +87,18 @@ class ResultsDock(Panel):
 
     def _build(self) -> None:
         self.tabs = QTabWidget()
-        self.tables = {name: self._make_table(name) for name in _TITLES}
+        self.tables = {name: self._make_table(TABLES[name]) for name in _TITLES}
         for name, tab in self.tables.items():
             self.tabs.addTab(tab.view, _TITLES[name])
+        self.tables["plan"] = self._make_table(PLAN)
+        self.plan = PlanPart(self, self.tables["plan"].view, say=self._say, on_planned=self._show_planned)
+        self.tabs.setTabToolTip(self.tabs.addTab(self.plan, "Plan"), "Trials that each bouton needs for a goal")
         self.tabs.setMinimumHeight(180)
         self.tabs.currentChanged.connect(self._show_tab)
         self.column.addWidget(self.tabs, 1)
         self.only_selected = QCheckBox("Only the selected bouton")
         self.only_selected.setToolTip(
-            "Show the pulses, responses and spontaneous releases of the selected bouton only."
+            "Show the pulses, responses, spontaneous releases and plan of the selected bouton only."
         )
         self.only_selected.clicked.connect(self._show_measured)
         self.copy_button = QPushButton("Copy")
@@ -123,9 +132,13 @@ class ResultsDock(Panel):
         self.reopen_button = QPushButton("Reopen...")
         self.reopen_button.setToolTip("Open the analysis.json of an earlier export, with its movie and choices.")
         self.reopen_button.clicked.connect(self._ask_reopen)
+        self.nwb = QCheckBox("NWB file")
+        self.nwb.setToolTip("Export recording.nwb, too: the results as Neurodata Without Borders.")
         row = QHBoxLayout()
-        for button in (self.export_button, self.report_button, self.reopen_button):
-            row.addWidget(button)
+        row.addWidget(self.export_button, 1)
+        row.addWidget(self.nwb)
+        row.addWidget(self.report_button, 1)
+        row.addWidget(self.reopen_button, 1)
         self.column.addLayout(row)
         self.progress = ProgressRow(self.runner)
         self.column.addWidget(self.progress)
@@ -137,9 +150,9 @@ class ResultsDock(Panel):
         self.runner.changed.connect(self._show_state)
         self.runner.failed.connect(self._say)
 
-    def _make_table(self, name: str) -> TableTab:
-        rows = TableModel(TABLES[name])
-        view = table_view(rows, TABLES[name], first=_FIRST.get(name, ()))
+    def _make_table(self, definition: TableDefinition) -> TableTab:
+        rows = TableModel(definition)
+        view = table_view(rows, definition, first=_FIRST.get(definition.name, ()))
         view.selectionModel().selectionChanged.connect(self._select_from_table)
         rows.modelReset.connect(self._follow_selection)
         return TableTab(view=view, rows=rows)
@@ -171,15 +184,24 @@ class ResultsDock(Panel):
         self._stale_tabs.discard(name)
         tab = self.tables[name]
         fresh = tab.rows.frame is None
-        if self.model.measured is None:
+        frame = self._frame(name)
+        if frame is None:
             tab.rows.show(None)
             return
-        frame = self.model.table(name)
         if name != "boutons" and self.only_selected.isChecked():
             frame = frame[frame["bouton"] == self.model.selection.bouton]
         tab.rows.show(frame)
         if fresh:
             tab.view.resizeColumnsToContents()
+
+    def _frame(self, name: str) -> pd.DataFrame | None:
+        if name == "plan":
+            return self.plan.frame
+        return None if self.model.measured is None else self.model.table(name)
+
+    def _show_planned(self) -> None:
+        self._stale_tabs.add("plan")
+        self._show_tab()
 
     def _follow_selection(self, *_: object) -> None:
         """Select the rows of what is selected elsewhere."""
@@ -212,7 +234,7 @@ class ResultsDock(Panel):
         row = tab.rows.row(index.row())
         self._following = True
         try:
-            self.model.select(**{key: int(row[key]) for key in _KEYS if key in row})
+            self.model.select(**{key: int(row[key]) for key in _KEYS if cell_text(row.get(key))})
         finally:
             self._following = False
         if name == "spontaneous" and self.model.measured is not None:
@@ -238,7 +260,10 @@ class ResultsDock(Panel):
         if not text or measured is None or pipeline is None:
             return
         folder = Path(text).expanduser()
+        nwb = NwbDetails() if self.nwb.isChecked() else None
         try:
+            if nwb is not None:
+                check_can_write_nwb()
             overwrite = self._may_replace(folder)
         except InputError as error:
             self._say(str(error))
@@ -249,7 +274,7 @@ class ResultsDock(Panel):
         def work(progress: Progress) -> Path:
             progress(0, 0)
             result = put_together(measured, pipeline=pipeline)
-            return write_result_apart(result, folder, overwrite=overwrite, progress=progress)
+            return write_result_apart(result, folder, overwrite=overwrite, nwb=nwb, progress=progress)
 
         self.runner.run(work, self._exported, words="Exporting", kind="export")
 
@@ -292,6 +317,7 @@ class ResultsDock(Panel):
         self.export_button.setEnabled(ready and not self.runner.busy)
         self.report_button.setEnabled(chosen and self._report().is_file())
         self.copy_button.setEnabled(measured is not None)
+        self.plan.show_state()
         if measured is None:
             self._say("Nothing was measured yet: choose a movie in the Recording dock and analyse it.")
         elif not ready:
