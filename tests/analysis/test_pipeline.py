@@ -4,6 +4,7 @@ import numpy as np
 import pytest
 
 from napari_boutonrelease.analysis import pipeline as pipeline_module
+from napari_boutonrelease.analysis import trace_step
 from napari_boutonrelease.analysis.hand_edits import HandEdits
 from napari_boutonrelease.analysis.pipeline import Pipeline
 from napari_boutonrelease.analysis.run import put_together
@@ -46,13 +47,14 @@ def ran(monkeypatch):
     """Names of the steps that were computed, in order."""
     names = []
     for name in COUNTED:
-        step = getattr(pipeline_module, name)
+        module = trace_step if name == "extract_traces" else pipeline_module
+        step = getattr(module, name)
 
         def counted(*args, _step=step, _name=name, **kwargs):
             names.append(_name)
             return _step(*args, **kwargs)
 
-        monkeypatch.setattr(pipeline_module, name, counted)
+        monkeypatch.setattr(module, name, counted)
     return names
 
 
@@ -123,13 +125,13 @@ def test_an_excluded_trial_leaves_the_traces_alone(pipeline, ran):
 def test_a_bouton_added_by_hand_is_read_alone(recording, pipeline, ran, monkeypatch):
     before = pipeline.measure(SETTINGS)
     read = []
-    extract = pipeline_module.extract_traces
+    extract = trace_step.extract_traces
 
     def watched(*args, footprints, **kwargs):
         read.append(len(footprints.y_px))
         return extract(*args, footprints=footprints, **kwargs)
 
-    monkeypatch.setattr(pipeline_module, "extract_traces", watched)
+    monkeypatch.setattr(trace_step, "extract_traces", watched)
     after = pipeline.measure(SETTINGS, edits=HandEdits().add(30.0, 40.0))
     assert read[0] < len(after.places.bouton)
     assert after.places.found_by[-1] == "hand"

@@ -7,7 +7,6 @@ others as they are; of the traces, it reads only those of boutons whose weights 
 
 from __future__ import annotations
 
-import hashlib
 import json
 import warnings
 from collections.abc import Callable, Hashable
@@ -19,25 +18,18 @@ import numpy as np
 from ..boutons import read_axon, read_positions
 from ..errors import AnalysisWarning, TooFewResponsesError
 from ..recording import resolve_timing
-from ..responses import (
-    ASSUMED_SHAPE,
-    detect_spontaneous,
-    extract_traces,
-    measure_baseline,
-    measure_responses,
-    plan_trial_windows,
-    rest_s,
-)
+from ..responses import ASSUMED_SHAPE, detect_spontaneous, measure_responses
 from .axon_step import look_for_failed_stimuli, measure_axon, without_stimuli
 from .hand_edits import HandEdits
 from .linear_reporter import LinearTraces, linear_traces
 from .measured import Measured, Traced
-from .places import Places, lay_footprints, take_footprints
+from .places import Places, lay_footprints
 from .progress import StepProgress
 from .quantal_step import count_releases, fit_release
-from .recording_step import BLOCK_FRAMES, Recording, look_at_recording
+from .recording_step import Recording, look_at_recording
 from .response_maps import guess_shape, map_responses
 from .sites import Sites, correct_by_hand, find_sites, given_sites, put_in_order, read_axon_px, spot_sigma_px
+from .trace_step import TraceStore
 
 if TYPE_CHECKING:
     from pathlib import Path
@@ -71,7 +63,6 @@ STEPS = {
 }
 _UP_TO_TRACES = ("light", "drift", "shape", "maps", "sites", "traces", "responses")
 _OTHER_SHAPE = 1.6  # a decay this many times longer or shorter than guessed is worth looking for boutons again
-_MOST_SHAFT = 0.6  # of the baseline: a bouton hardly brighter than its axon is doubtful, not infinitely responsive
 
 
 class Pipeline:
@@ -103,7 +94,7 @@ class Pipeline:
         self.axon = axon
         self._axon = axon
         self._known: dict[str, tuple[Hashable, Any]] = {}
-        self._traces: dict[str, NDArray[np.float64]] = {}
+        self._traces = TraceStore()
 
     def measure(
         self, settings: Settings, *, edits: HandEdits | None = None, progress: Progress | None = None
@@ -356,7 +347,13 @@ class Pipeline:
         f = self._step(
             "traces",
             (self._key("places"), settings.responses.baseline_s),
-            lambda: self._read(places, recording, settings, progress=steps.step("traces")),
+            lambda: self._traces.read(
+                places.footprints,
+                recording,
+                recorded=repr(self._key("recording")),
+                settings=settings.responses,
+                progress=steps.step("traces"),
+            ),
         )
         return places, f
 
@@ -393,48 +390,6 @@ class Pipeline:
             return linear, shown if reporter.max_dff is None else measure(linear.f)
 
         return self._step("responses", (self._key("traces"), _digest(chosen), _digest(reporter)), respond)
-
-    def _read(
-        self, places: Places, recording: Recording, settings: Settings, *, progress: Progress
-    ) -> NDArray[np.float64]:
-        """Brightness of each bouton without background, neighbours and the bare axon under it.
-
-        The axon's light is taken off as a constant share of the baseline: it bleaches as the bouton does.
-        """
-        footprints = places.footprints
-        recorded = repr(self._key("recording"))
-        marks = [
-            hashlib.sha256(f"{recorded}{y0},{x0}{weights.shape}".encode() + weights.tobytes()).hexdigest()
-            for y0, x0, weights in zip(footprints.y0, footprints.x0, footprints.weights, strict=True)
-        ]
-        new = np.array([i for i, mark in enumerate(marks) if mark not in self._traces], dtype=np.intp)
-        if new.size:
-            read = extract_traces(
-                recording.movie,
-                footprints=take_footprints(footprints, new),
-                drift=recording.drift,
-                block_frames=BLOCK_FRAMES,
-                progress=progress,
-            )
-            self._traces |= {marks[i]: trace for i, trace in zip(new, read, strict=True)}
-        self._traces = {mark: self._traces[mark] for mark in marks}
-        f = np.array([self._traces[mark] for mark in marks]).reshape(len(marks), self.movie.shape[0])
-        rough = measure_baseline(
-            f,
-            timing=recording.timing,
-            windows=plan_trial_windows(
-                timing=recording.timing, tail_s=rest_s(ASSUMED_SHAPE), baseline_s=settings.responses.baseline_s
-            ),
-            used=recording.drift.used,
-            method="bleaching",
-            percentile=settings.responses.percentile,
-            running_s=settings.responses.percentile_s,
-        )
-        mean = rough.f0.mean(axis=1)
-        with np.errstate(invalid="ignore", divide="ignore"):
-            share = np.where(mean > 0, footprints.shaft_counts / mean, 0.0)
-        share = np.clip(np.nan_to_num(share), 0.0, _MOST_SHAFT)
-        return np.asarray(f - share[:, None] * rough.f0)
 
     def _step(self, name: str, key: Hashable, compute: Callable[[], Value]) -> Value:
         known = self._known.get(name)
