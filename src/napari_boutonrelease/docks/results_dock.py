@@ -55,7 +55,7 @@ _FIRST = {
         *("bouton", "p_release", "p_release_lo", "p_release_hi", "n_sites", "n_set", "p_site", "q", "snr"),
         *("ppr", "ppr_lo", "ppr_hi", "paired_pulse", "found_by", "flags"),
     ),
-    "plan": ("bouton", "goal", "wanted", "trials_needed", "reached", "trials_done", "reached_now", "reason"),
+    "plan": ("bouton", "goal", "trials_needed", "wanted", "reached", "trials_done", "reached_now", "reason"),
 }
 _KEYS = ("bouton", "trial", "pulse")
 _EXPORT = "Tables, traces, footprints, figures and report are written into the folder."
@@ -216,7 +216,7 @@ class ResultsDock(Panel):
             for name, tab in self.tables.items():
                 keys = {key: getattr(chosen, key) for key in _KEYS}
                 rows = [] if chosen.bouton is None else tab.rows.rows_where(**keys)
-                if name != "boutons" and chosen.trial is None and chosen.pulse is None:
+                if name not in ("boutons", "plan") and chosen.trial is None and chosen.pulse is None:
                     rows = rows[:1]  # the first of many: selecting them all would only colour the table
                 select_rows(tab.view, rows)
         finally:
