@@ -23,7 +23,7 @@ if TYPE_CHECKING:
 Progress = Callable[[int, int], None]
 
 _STILL_PX = 0.02  # movement that is neglected within a sum of frames
-_PIXELS_AT_ONCE = 8192
+_PIXELS_AT_ONCE = 16_384
 _MAX_NULL = 2.0  # null maps wanted per evoked map, at most
 _ENOUGH_NULL = 20
 _CLEAR_SD = 5.0
@@ -285,52 +285,60 @@ def _accumulate(
                 spread = weights.setdefault(response, np.zeros((n_rows, len(chosen)), dtype=np.float32))
                 spread[:, places] += row
         together = np.stack([np.ones((n_rows, len(chosen)), dtype=np.float32), *weights.values()], axis=1)
-        sums = _aligned_sums(frames, together, dy=drift.dy_px[chosen], dx=drift.dx_px[chosen])
-        total += sums[0]
-        for target, part in zip(weights, sums[1:], strict=True):
-            maps[target] += part
+        targets = [total, *(maps[target] for target in weights)]
+        _add_aligned(targets, frames, together, dy=drift.dy_px[chosen], dx=drift.dx_px[chosen])
         if progress is not None:
             progress(done + 1, len(starts))
     return maps, total / max(int(wanted.sum()), 1)
 
 
-def _aligned_sums(
-    frames: NDArray[np.generic], weights: NDArray[np.float32], *, dy: NDArray[np.float64], dx: NDArray[np.float64]
-) -> NDArray[np.float32]:
-    """Weighted sums of frames in reference coordinates: weights (rows or 1, n_sums, n_frames) -> (n_sums, y, x).
+def _add_aligned(
+    targets: Sequence[NDArray[np.floating]],
+    frames: NDArray[np.generic],
+    weights: NDArray[np.float32],
+    *,
+    dy: NDArray[np.float64],
+    dx: NDArray[np.float64],
+) -> None:
+    """Add weighted sums of frames in reference coordinates: weights (rows or 1, n_targets, n_frames).
 
     Summing and resampling may change places. Frames that lie within `_STILL_PX` of each other are summed first and
     resampled together, which is most of the work saved where a sample drifts slowly.
     """
-    n_sums = weights.shape[1]
-    sums = np.zeros((n_sums, *frames.shape[1:]), dtype=np.float32)
     cells = np.round(np.stack([dy, dx]) / (2 * _STILL_PX)).astype(int)
     unique, cell_of = np.unique(cells, axis=1, return_inverse=True)
     for cell in range(unique.shape[1]):
         members = np.flatnonzero(cell_of.ravel() == cell)
         part, mine = frames[members] if len(members) < len(frames) else frames, weights[:, :, members]
+        # a sum to which none of these frames adds need not be resampled
+        adds = np.flatnonzero(mine.any(axis=(0, 2)))
+        mine, here = mine[:, adds], [targets[i] for i in adds.tolist()]
         if not unique[:, cell].any():
-            sums += _sums(part, mine)
-        elif len(members) <= n_sums:
-            sums += _sums(shift_frame_block(part, dy=dy[members], dx=dx[members]), mine)
+            _add_sums(here, part, mine)
+        elif len(members) <= len(here):
+            _add_sums(here, shift_frame_block(part, dy=dy[members], dx=dx[members]), mine)
         else:
-            middle = [np.full(n_sums, shift[members].mean()) for shift in (dy, dx)]
-            sums += shift_frame_block(_sums(part, mine), dy=middle[0], dx=middle[1])
-    return sums
+            middle = [np.full(len(here), shift[members].mean()) for shift in (dy, dx)]
+            sums = np.zeros((len(here), *frames.shape[1:]), dtype=np.float32)
+            _add_sums(list(sums), part, mine)
+            for target, moved in zip(here, shift_frame_block(sums, dy=middle[0], dx=middle[1]), strict=True):
+                target += moved
 
 
-def _sums(frames: NDArray[np.generic], weights: NDArray[np.float32]) -> NDArray[np.float32]:
-    """Multiply weights (rows or 1, n_sums, n_frames) with frames, a stretch of pixels at a time to stay small."""
+def _add_sums(
+    targets: Sequence[NDArray[np.floating]], frames: NDArray[np.generic], weights: NDArray[np.float32]
+) -> None:
+    """Add the products of weights (rows or 1, n_targets, n_frames) and frames, some rows at a time to stay small."""
     n_frames, height, width = frames.shape
-    if len(weights) > 1:
-        by_row = frames.astype(np.float32).transpose(1, 0, 2)
-        return np.asarray(np.matmul(weights, by_row).transpose(1, 0, 2), dtype=np.float32)
-    flat = frames.reshape(n_frames, -1)
-    sums = np.empty((weights.shape[1], height * width), dtype=np.float32)
-    for start in range(0, height * width, _PIXELS_AT_ONCE):
-        stretch = slice(start, start + _PIXELS_AT_ONCE)
-        sums[:, stretch] = weights[0] @ flat[:, stretch].astype(np.float32)
-    return sums.reshape(-1, height, width)
+    rows = max(1, _PIXELS_AT_ONCE // width)
+    for start in range(0, height, rows):
+        strip = frames[:, start : start + rows].astype(np.float32)
+        if len(weights) == 1:
+            sums = (weights[0] @ strip.reshape(n_frames, -1)).reshape(len(targets), -1, width)
+        else:
+            sums = np.matmul(weights[start : start + rows], strip.transpose(1, 0, 2)).transpose(1, 0, 2)
+        for target, part in zip(targets, sums, strict=True):
+            target[start : start + rows] += part
 
 
 def _with_differences(stack: ResponseStack) -> ResponseStack:
