@@ -315,6 +315,7 @@ class Reference:
         drift = np.array([found["dy_px"][k], found["dx_px"][k]])
         flashing = np.zeros(self._tiles_shape, dtype=np.bool_)
         at: tuple[int, int] | None = None
+        used: FloatArray | None = None  # normal matrix of the last solution
         for round_ in range(_FLASH_ROUNDS):
             y, x = np.rint(drift * _CELLS_PER_PX).astype(int).tolist()
             if at != (y, x):
@@ -333,7 +334,7 @@ class Reference:
             usual_doubt = self._directions @ problem.inverse[:2, :2] @ self._directions
             n_pixels = problem.n_pixels - int(np.count_nonzero(problem.scale[out]))
             if np.trace(doubt) > 4.0 * np.trace(usual_doubt) or not n_pixels:
-                return
+                break
             projected = projected_all - rows @ values[0, out]
             solution = inverse @ projected
             energy = energy_all - float(values[0, out] @ values[0, out]) - float(solution @ projected)
@@ -344,7 +345,7 @@ class Reference:
             sd = np.sqrt(misfit * np.maximum(np.diag(doubt), 0.0)) / _steady(solution[2])
             found["dy_sd_px"][k], found["dx_sd_px"][k] = sd
             found["brightness"][k], found["misfit"][k] = solution[2], misfit
-            found["signal"][k], found["n_pixels"][k] = _signal(normal), n_pixels
+            found["n_pixels"][k], used = n_pixels, normal
             left = energy_all - 2.0 * float(solution @ projected_all) + float(solution @ problem.normal @ solution)
             spread = np.sqrt(max(left, 0.0) / problem.n_pixels) * strangeness + 1e-9
             places = np.abs(places_seen - solution.astype(np.float32) @ problem.tile_rows) / spread
@@ -355,7 +356,9 @@ class Reference:
             for row, column in zip(rows_.tolist(), columns_.tolist(), strict=True):
                 flashing[max(row - 1, 0) : row + 2, max(column - 1, 0) : column + 2] = True
             if (before == flashing).all() and round_ > 1:
-                return
+                break
+        if used is not None:
+            found["signal"][k] = _signal(used)
 
     def find(self, frames: NDArray[np.generic], *, max_shift_px: float) -> tuple[FloatArray, FloatArray]:
         """Coarse drift of frames by cross-correlation, to about a pixel.
