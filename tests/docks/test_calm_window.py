@@ -12,7 +12,6 @@ from qtpy.QtWidgets import QDockWidget, QMainWindow
 
 from napari_boutonrelease.analysis.model import AnalysisModel, compute
 from napari_boutonrelease.docks.calm import CALM_MS, WhenCalm
-from napari_boutonrelease.docks.live_plot import LivePlot
 from napari_boutonrelease.docks.panel import Panel
 from napari_boutonrelease.docks.turns import Turns
 
@@ -80,10 +79,6 @@ def test_new_results_show_at_once_and_calls_once_the_threshold_rests(qtbot):
     assert shown == [None, first]
     qtbot.wait(3 * CALM_MS)
     assert shown == [None, first, third]
-
-
-def test_a_plot_must_say_what_it_draws():
-    assert {"make", "fill"} <= LivePlot.__abstractmethods__
 
 
 def test_results_are_never_stale_while_the_threshold_moves(recording, quick):

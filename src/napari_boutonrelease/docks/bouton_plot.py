@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-from abc import abstractmethod
-
 from .live_plot import LivePlot
 from .panel import Panel
 from .shown_bouton import ShownBouton
@@ -16,9 +14,9 @@ class BoutonPlot(LivePlot):
         self._shown: ShownBouton | None = None
         super().__init__(panel, height_px=height_px)
 
-    @abstractmethod
     def same_data(self, before: ShownBouton, now: ShownBouton) -> bool:
-        """Tell whether at most the moving artists differ between two states."""
+        """Tell whether at most the moving artists differ between two states. A subclass has to say how."""
+        raise NotImplementedError
 
     def show_bouton(self, shown: ShownBouton | None) -> None:
         """Show another bouton, or the same with other results or another selection."""

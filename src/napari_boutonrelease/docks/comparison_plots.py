@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from abc import abstractmethod
 from collections.abc import Callable
 from typing import Any
 
@@ -55,13 +54,13 @@ class ComparisonPlot(LivePlot):
         else:
             self.refresh()
 
-    @abstractmethod
     def plot(self, axes: Axes, comparison: Comparison) -> None:
-        """Plot the comparison in the colours of the reports."""
+        """Plot the comparison in the colours of the reports. A subclass has to say how."""
+        raise NotImplementedError
 
-    @abstractmethod
     def handles(self, comparison: Comparison, *, most_letters: int) -> list[Line2D]:
-        """Return the marks of the legend; names end after so many letters."""
+        """Return the marks of the legend; names end after so many letters. A subclass has to say how."""
+        raise NotImplementedError
 
     def make(self, axes: Axes, palette: Palette) -> None:
         """Make the frame of the selected bouton."""

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from abc import ABCMeta, abstractmethod
 from typing import Any
 
 from matplotlib.artist import Artist
@@ -17,11 +16,7 @@ CLICK_PX = 4.0
 """The mouse may move this far between press and release of a click."""
 
 
-class _AbstractWidget(type(Plot), ABCMeta):  # type: ignore[misc]
-    """Lets a class of widgets leave methods to its subclasses."""
-
-
-class LivePlot(Plot, metaclass=_AbstractWidget):
+class LivePlot(Plot):
     """Base of plots that answer at once.
 
     A subclass makes its artists in `make`, gives them data in `fill` and puts those listed in `moving` (made with
@@ -46,13 +41,15 @@ class LivePlot(Plot, metaclass=_AbstractWidget):
         self._sentence: Any = None
         super().__init__(panel, self._build, height_px=height_px)
 
-    @abstractmethod
-    def make(self, axes: Axes, palette: Palette) -> None:
-        """Make the artists; called anew when the theme changes."""
+    # Not abstract by `abc`: its metaclass and that of PySide6's widgets do not go together.
 
-    @abstractmethod
+    def make(self, axes: Axes, palette: Palette) -> None:
+        """Make the artists; called anew when the theme changes. A subclass has to say how."""
+        raise NotImplementedError
+
     def fill(self, axes: Axes) -> None:
-        """Give the artists their data."""
+        """Give the artists their data. A subclass has to say how."""
+        raise NotImplementedError
 
     def place(self) -> None:
         """Put the moving artists in place, where there are any."""
