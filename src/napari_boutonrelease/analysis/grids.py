@@ -29,15 +29,17 @@ def response_grid(
     shape : (int, int), optional
         Trials and pulses; the largest in the table, where left out.
     """
-    row_of = {int(name): row for row, name in enumerate(bouton)}
+    ids = np.fromiter((int(name) for name in bouton), dtype=np.int64)
     names, trial, pulse = (responses[key].to_numpy(dtype=np.int64) for key in ("bouton", "trial", "pulse"))
     if shape is None:
         shape = (int(trial.max(initial=0)), int(pulse.max(initial=0)))
-    grid = np.full((len(row_of), *shape), np.nan)
-    row = np.array([row_of.get(int(name), -1) for name in names], dtype=np.int64)
+    grid = np.full((len(ids), *shape), np.nan)
+    if not len(ids):
+        return grid
+    order = np.argsort(ids)
+    row = order[np.minimum(np.searchsorted(ids, names, sorter=order), len(ids) - 1)]
     counts = responses["used"].to_numpy(dtype=np.float64, na_value=np.nan) == 1
-    kept = counts & (row >= 0) & (trial <= shape[0]) & (pulse <= shape[1])
-    grid[row[kept], trial[kept] - 1, pulse[kept] - 1] = responses[column].to_numpy(dtype=np.float64, na_value=np.nan)[
-        kept
-    ]
+    kept = counts & (ids[row] == names) & (trial <= shape[0]) & (pulse <= shape[1])
+    cells = responses[column].to_numpy(dtype=np.float64, na_value=np.nan)[kept]
+    grid[row[kept], trial[kept] - 1, pulse[kept] - 1] = cells
     return grid
