@@ -6,84 +6,87 @@ This is the one home of the names. Analyses build their tables from it, reports 
 from __future__ import annotations
 
 from ..flags import FLAGS
-from .column_types import DFF, TableDefinition
-from .column_types import choice as _choice
-from .column_types import codes_pattern as _codes_pattern
-from .column_types import column as _column
-from .column_types import count as _count
-from .column_types import number as _number
-from .column_types import probability as _probability
-from .column_types import time_column as _time
-from .column_types import with_limits as _limits
+from .column_types import (
+    DFF,
+    TableDefinition,
+    choice,
+    codes_pattern,
+    column,
+    count,
+    number,
+    probability,
+    time_column,
+    with_limits,
+)
 from .selection_columns import DETECTION, SELECTION_SUMMARY
 from .train_columns import INTERVALS, RECOVERY, TRAIN_SUMMARY, TRAINS
 
-_BOUTON = _count("bouton", "bouton id, from 1", minimum=1, required=True)
-_TRIAL = _count("trial", "trial number, from 1", minimum=1, required=True)
-_PULSE = _count("pulse", "number of the pulse within its trial, from 1", minimum=1, required=True)
+_BOUTON = count("bouton", "bouton id, from 1", minimum=1, required=True)
+_TRIAL = count("trial", "trial number, from 1", minimum=1, required=True)
+_PULSE = count("pulse", "number of the pulse within its trial, from 1", minimum=1, required=True)
 
 BOUTONS = TableDefinition(
     name="boutons",
     meaning="a row a bouton",
     key=("bouton",),
     columns=(
-        _count("bouton", _BOUTON.meaning, minimum=1, required=True, unique=True),
-        _number("y_px", "px", "row position in the mean image, 0 at the centre of the first pixel", required=True),
-        _number("x_px", "px", "column position in the mean image, 0 at the centre of the first pixel", required=True),
-        _number("y_um", "µm", "y_px in µm"),
-        _number("x_um", "µm", "x_px in µm"),
-        _number("axon_um", "µm", "distance along the axon path from its start", minimum=0),
-        _number("axon_offset_um", "µm", "distance from the axon path", minimum=0),
-        _count("footprint_px", "pixels of the footprint"),
-        _choice("found_by", "how the bouton was found", "responses", "shape", "both", "hand", "file"),
-        _number("f0", "counts", "baseline fluorescence above background, mean over the recording"),
-        _number("noise_sd", DFF, "SD of the amplitude estimator where nothing was stimulated", minimum=0),
-        _choice("noise_from", "where noise_sd was measured", "gaps", "residuals"),
-        _number("snr", "", "q divided by noise_sd: one vesicle in units of the noise", minimum=0),
-        _number("threshold", DFF, "amplitude above which a response is called a release"),
-        _count("trials", "usable trials for pulse 1"),
-        *_limits(_probability("p_called", "called fraction of pulse 1")),
-        _number("false_calls_expected", "", "calls of pulse 1 expected from noise alone", minimum=0),
-        *_limits(_probability("p_release", "probability that pulse 1 releases at least one vesicle")),
-        _number("amplitude_mean", DFF, "mean amplitude of pulse 1, failures included"),
-        _number("amplitude_se", DFF, "standard error of amplitude_mean", minimum=0),
-        _number("potency", DFF, "mean amplitude of the first pulses that released"),
-        _probability("p2_release", "probability that pulse 2 releases at least one vesicle"),
-        *_limits(_number("ppr", "", "paired-pulse ratio: mean amplitude of pulse 2 over that of pulse 1")),
-        _number("ppf", "", "paired-pulse facilitation: ppr - 1"),
-        _number("ppr_release", "", "p2_release over p_release", minimum=0),
-        _choice(
+        count("bouton", _BOUTON.meaning, minimum=1, required=True, unique=True),
+        number("y_px", "px", "row position in the mean image, 0 at the centre of the first pixel", required=True),
+        number("x_px", "px", "column position in the mean image, 0 at the centre of the first pixel", required=True),
+        number("y_um", "µm", "y_px in µm"),
+        number("x_um", "µm", "x_px in µm"),
+        number("axon_um", "µm", "distance along the axon path from its start", minimum=0),
+        number("axon_offset_um", "µm", "distance from the axon path", minimum=0),
+        count("footprint_px", "pixels of the footprint"),
+        choice("found_by", "how the bouton was found", "responses", "shape", "both", "hand", "file"),
+        number("f0", "counts", "baseline fluorescence above background, mean over the recording"),
+        number("noise_sd", DFF, "SD of the amplitude estimator where nothing was stimulated", minimum=0),
+        choice("noise_from", "where noise_sd was measured", "gaps", "residuals"),
+        number("snr", "", "q divided by noise_sd: one vesicle in units of the noise", minimum=0),
+        number("threshold", DFF, "amplitude above which a response is called a release"),
+        count("trials", "usable trials for pulse 1"),
+        *with_limits(probability("p_called", "called fraction of pulse 1")),
+        number("false_calls_expected", "", "calls of pulse 1 expected from noise alone", minimum=0),
+        *with_limits(probability("p_release", "probability that pulse 1 releases at least one vesicle")),
+        number("amplitude_mean", DFF, "mean amplitude of pulse 1, failures included"),
+        number("amplitude_se", DFF, "standard error of amplitude_mean", minimum=0),
+        number("potency", DFF, "mean amplitude of the first pulses that released"),
+        probability("p2_release", "probability that pulse 2 releases at least one vesicle"),
+        *with_limits(number("ppr", "", "paired-pulse ratio: mean amplitude of pulse 2 over that of pulse 1")),
+        number("ppf", "", "paired-pulse facilitation: ppr - 1"),
+        number("ppr_release", "", "p2_release over p_release", minimum=0),
+        choice(
             "paired_pulse",
             "verdict on ppr over all boutons",
             "facilitation",
             "depression",
             "unresolved",
         ),
-        _probability("p2_given_release", "called fraction of pulse 2 after a called pulse 1"),
-        _probability("p2_given_failure", "called fraction of pulse 2 after a failed pulse 1"),
-        _probability("history_p", "Fisher's exact p that pulse 2 does not depend on the outcome of pulse 1"),
-        *_limits(_count("n_sites", "most likely number of release sites", minimum=1)),
-        *_limits(_probability("p_site", "release probability of one site at pulse 1")),
-        *_limits(
-            _number("q", DFF, "response to one vesicle; of a silent bouton, as the axon's others have it", minimum=0)
+        probability("p2_given_release", "called fraction of pulse 2 after a called pulse 1"),
+        probability("p2_given_failure", "called fraction of pulse 2 after a failed pulse 1"),
+        probability("history_p", "Fisher's exact p that pulse 2 does not depend on the outcome of pulse 1"),
+        *with_limits(count("n_sites", "most likely number of release sites", minimum=1)),
+        *with_limits(probability("p_site", "release probability of one site at pulse 1")),
+        *with_limits(
+            number("q", DFF, "response to one vesicle; of a silent bouton, as the axon's others have it", minimum=0)
         ),
-        _choice("q_from", "whether q rests on the bouton's own amplitudes or on the axon's", "own", "axon"),
-        _number("q_cv", "", "coefficient of variation of one vesicle's response", minimum=0),
-        _choice("quantal_model", "release model of the fit", "binomial", "poisson", "none"),
-        _probability("fit_p", "goodness-of-fit p of the release model"),
-        _number("spontaneous_per_min", "1/min", "releases without stimulus a minute", minimum=0),
-        _number("crosstalk", "", "share of the amplitude explained by releases of neighbours", minimum=0),
-        *_limits(
-            _probability("p_corrected", "called fraction freed of false calls and misses (Rogan and Gladen 1978)")
+        choice("q_from", "whether q rests on the bouton's own amplitudes or on the axon's", "own", "axon"),
+        number("q_cv", "", "coefficient of variation of one vesicle's response", minimum=0),
+        choice("quantal_model", "release model of the fit", "binomial", "poisson", "none"),
+        probability("fit_p", "goodness-of-fit p of the release model"),
+        number("spontaneous_per_min", "1/min", "releases without stimulus a minute", minimum=0),
+        number("crosstalk", "", "share of the amplitude explained by releases of neighbours", minimum=0),
+        *with_limits(
+            probability("p_corrected", "called fraction freed of false calls and misses (Rogan and Gladen 1978)")
         ),
-        _number("noise_photon_limit_sd", DFF, "noise_sd that photon and read noise alone would give", minimum=0),
-        _number("noise_excess", "", "noise_sd over noise_photon_limit_sd", minimum=0),
-        _number("noise_n", "", "independent null amplitudes that noise_sd is worth: its SE is noise_sd / √(2 noise_n)"),
-        _column("n_set", "string", "", "numbers of release sites that the data cannot exclude", pattern=r"\d+(;\d+)*"),
-        _number("q_own", DFF, "q of the bouton fitted alone", minimum=0),
-        _probability("p_release_own", "p_release of the bouton fitted alone"),
-        *_limits(_probability("p_release_shrunk", "p_release given what the axon's other boutons tell about it")),
-        _column("flags", "string", "", "reasons for doubt, codes joined by ;", pattern=_codes_pattern(FLAGS)),
+        number("noise_photon_limit_sd", DFF, "noise_sd that photon and read noise alone would give", minimum=0),
+        number("noise_excess", "", "noise_sd over noise_photon_limit_sd", minimum=0),
+        number("noise_n", "", "independent null amplitudes that noise_sd is worth: its SE is noise_sd / √(2 noise_n)"),
+        column("n_set", "string", "", "numbers of release sites that the data cannot exclude", pattern=r"\d+(;\d+)*"),
+        number("q_own", DFF, "q of the bouton fitted alone", minimum=0),
+        probability("p_release_own", "p_release of the bouton fitted alone"),
+        *with_limits(probability("p_release_shrunk", "p_release given what the axon's other boutons tell about it")),
+        column("flags", "string", "", "reasons for doubt, codes joined by ;", pattern=codes_pattern(FLAGS)),
     ),
 )
 
@@ -94,16 +97,16 @@ PULSES = TableDefinition(
     columns=(
         _BOUTON,
         _PULSE,
-        _count("trials", "usable trials for this pulse"),
-        _count("called", "trials in which this pulse was called a release"),
-        *_limits(_probability("p_called", "called fraction")),
-        *_limits(_probability("p_release", "probability that this pulse releases at least one vesicle")),
-        _number("amplitude_mean", DFF, "mean amplitude, failures included"),
-        _number("amplitude_se", DFF, "standard error of amplitude_mean", minimum=0),
-        _number("amplitude_sd", DFF, "SD of the amplitudes over the trials", minimum=0),
-        _number("potency", DFF, "mean amplitude of the pulses that released"),
-        _number("cumulative_mean", DFF, "mean of the amplitudes summed from pulse 1 up to this one"),
-        _number("cumulative_se", DFF, "standard error of cumulative_mean", minimum=0),
+        count("trials", "usable trials for this pulse"),
+        count("called", "trials in which this pulse was called a release"),
+        *with_limits(probability("p_called", "called fraction")),
+        *with_limits(probability("p_release", "probability that this pulse releases at least one vesicle")),
+        number("amplitude_mean", DFF, "mean amplitude, failures included"),
+        number("amplitude_se", DFF, "standard error of amplitude_mean", minimum=0),
+        number("amplitude_sd", DFF, "SD of the amplitudes over the trials", minimum=0),
+        number("potency", DFF, "mean amplitude of the pulses that released"),
+        number("cumulative_mean", DFF, "mean of the amplitudes summed from pulse 1 up to this one"),
+        number("cumulative_se", DFF, "standard error of cumulative_mean", minimum=0),
     ),
 )
 
@@ -115,13 +118,13 @@ RESPONSES = TableDefinition(
         _BOUTON,
         _TRIAL,
         _PULSE,
-        _time("stimulus_s", "time of the stimulus on the recording's clock"),
-        _number("amplitude", DFF, "fitted height of the response"),
-        _number("amplitude_se", DFF, "standard error of the amplitude", minimum=0),
-        _choice("called", "1 where the amplitude exceeds the threshold, else 0", 0, 1),
-        _probability("p_released", "posterior probability that the pulse released"),
-        _choice("used", "1 where the response counts in every estimate, else 0", 0, 1),
-        _column("reason", "string", "", "why the response was left out"),
+        time_column("stimulus_s", "time of the stimulus on the recording's clock"),
+        number("amplitude", DFF, "fitted height of the response"),
+        number("amplitude_se", DFF, "standard error of the amplitude", minimum=0),
+        choice("called", "1 where the amplitude exceeds the threshold, else 0", 0, 1),
+        probability("p_released", "posterior probability that the pulse released"),
+        choice("used", "1 where the response counts in every estimate, else 0", 0, 1),
+        column("reason", "string", "", "why the response was left out"),
     ),
 )
 
@@ -131,10 +134,10 @@ SPONTANEOUS = TableDefinition(
     key=(),
     columns=(
         _BOUTON,
-        _time("time_s", "time of the release on the recording's clock"),
-        _number("amplitude", DFF, "fitted height"),
-        _number("amplitude_se", DFF, "standard error of the amplitude", minimum=0),
-        _number("score", "", "amplitude over its standard error under noise alone"),
+        time_column("time_s", "time of the release on the recording's clock"),
+        number("amplitude", DFF, "fitted height"),
+        number("amplitude_se", DFF, "standard error of the amplitude", minimum=0),
+        number("score", "", "amplitude over its standard error under noise alone"),
     ),
 )
 
@@ -143,12 +146,12 @@ DRIFT = TableDefinition(
     meaning="a row a frame",
     key=("frame",),
     columns=(
-        _count("frame", "frame number, from 0", required=True, unique=True),
-        _time("time_s", "start of the frame on the recording's clock"),
-        _number("dy_px", "px", "movement in y: a thing at y in the reference lies at y + dy in this frame"),
-        _number("dx_px", "px", "movement in x: a thing at x in the reference lies at x + dx in this frame"),
-        _number("match", "", "agreement with the reference, 1 is perfect"),
-        _choice("used", "1 where the frame counts in every fit, else 0", 0, 1),
+        count("frame", "frame number, from 0", required=True, unique=True),
+        time_column("time_s", "start of the frame on the recording's clock"),
+        number("dy_px", "px", "movement in y: a thing at y in the reference lies at y + dy in this frame"),
+        number("dx_px", "px", "movement in x: a thing at x in the reference lies at x + dx in this frame"),
+        number("match", "", "agreement with the reference, 1 is perfect"),
+        choice("used", "1 where the frame counts in every fit, else 0", 0, 1),
     ),
 )
 
@@ -159,13 +162,13 @@ TRIALS = TableDefinition(
     columns=(
         _TRIAL,
         _PULSE,
-        _time("stimulus_s", "time of the stimulus on the recording's clock"),
-        _count("boutons", "boutons that were measured"),
-        _number("released", "", "expected number of boutons that released, sum of p_released", minimum=0),
-        _number("released_expected", "", "sum over the same boutons of their p_release", minimum=0),
-        _probability("stimulus_failure_p", "posterior probability that the stimulus reached no bouton"),
-        _choice("used", "1 where the stimulus counts in every estimate, else 0", 0, 1),
-        _column("reason", "string", "", "why the stimulus was left out"),
+        time_column("stimulus_s", "time of the stimulus on the recording's clock"),
+        count("boutons", "boutons that were measured"),
+        number("released", "", "expected number of boutons that released, sum of p_released", minimum=0),
+        number("released_expected", "", "sum over the same boutons of their p_release", minimum=0),
+        probability("stimulus_failure_p", "posterior probability that the stimulus reached no bouton"),
+        choice("used", "1 where the stimulus counts in every estimate, else 0", 0, 1),
+        column("reason", "string", "", "why the stimulus was left out"),
     ),
 )
 
@@ -175,15 +178,13 @@ CO_RELEASE = TableDefinition(
     key=("bouton", "other_bouton"),
     columns=(
         _BOUTON,
-        _count("other_bouton", "id of the other bouton", minimum=1, required=True),
-        _number(
-            "correlation", "", "correlation of release over stimuli, slow changes taken out", minimum=-1, maximum=1
-        ),
-        _probability("p", "two-sided permutation p that the two release independently"),
-        _probability("p_adjusted", "p adjusted for the number of pairs (Benjamini and Hochberg 1995)"),
-        _number("together", "", "expected number of stimuli at which both released", minimum=0),
-        _number("together_expected", "", "the same if the two released independently", minimum=0),
-        _number("distance_um", "µm", "distance between the two along the axon path", minimum=0),
+        count("other_bouton", "id of the other bouton", minimum=1, required=True),
+        number("correlation", "", "correlation of release over stimuli, slow changes taken out", minimum=-1, maximum=1),
+        probability("p", "two-sided permutation p that the two release independently"),
+        probability("p_adjusted", "p adjusted for the number of pairs (Benjamini and Hochberg 1995)"),
+        number("together", "", "expected number of stimuli at which both released", minimum=0),
+        number("together_expected", "", "the same if the two released independently", minimum=0),
+        number("distance_um", "µm", "distance between the two along the axon path", minimum=0),
     ),
 )
 

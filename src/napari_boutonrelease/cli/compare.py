@@ -41,6 +41,12 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         "--q-cv", type=float, metavar="X", help="expected variation of one vesicle's size (CV) (default: 0.3)"
     )
     parser.add_argument(
+        "--same-interval-s",
+        type=float,
+        metavar="X",
+        help="pulse intervals that differ by no more count as the same, s (default: 0.001)",
+    )
+    parser.add_argument(
         "--bootstrap",
         type=int,
         metavar="N",
@@ -116,7 +122,7 @@ def _settings(args: argparse.Namespace) -> "CompareSettings":
 
     given = {
         name: getattr(args, name)
-        for name in ("match_um", "n_max", "q_cv", "bootstrap", "seed")
+        for name in ("match_um", "n_max", "q_cv", "same_interval_s", "bootstrap", "seed")
         if getattr(args, name) is not None
     }
     try:

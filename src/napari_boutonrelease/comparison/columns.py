@@ -1,4 +1,4 @@
-"""The data dictionary of a comparison: its tables' columns and the keys of its summary."""
+"""The data dictionary of a comparison: every column of its tables."""
 
 from __future__ import annotations
 
@@ -28,7 +28,14 @@ JOINT = TableDefinition(
         *with_limits(count("n_sites", "most likely number of release sites, the same in all recordings", minimum=1)),
         *with_limits(number("q", DFF, "response to one vesicle, the same in all recordings", minimum=0)),
         number("q_cv", "", "coefficient of variation of one vesicle's response", minimum=0),
-        choice("changed", "what differs between recordings", "none", "p", "q", "both"),
+        choice(
+            "changed",
+            "what differs between recordings, not corrected for the number of boutons",
+            "none",
+            "p",
+            "q",
+            "both",
+        ),
         probability("changed_p", "likelihood-ratio p that nothing differs"),
         probability("p_changed_p", "likelihood-ratio p that p_site is the same in all recordings"),
         probability("q_changed_p", "likelihood-ratio p that q is the same in all recordings"),

@@ -273,27 +273,36 @@ def _draw_pairs(area: Area, result: AnalysisResult) -> float:
     return area.paragraph(0.0, 90.0, area.width, words + missing, size=SMALL, color=MUTED)
 
 
-@styled
 def trains_page(result: AnalysisResult) -> Figure:
     """Draw what the trains say of all boutons together, and of each."""
-    figure, area = _new_page("Trains: depletion and facilitation")
-    y = area.paragraph(0.0, 10.0, area.width, TRAINS_CAPTION, size=SMALL, color=MUTED)
-    draw_trains(area.part(0.0, y + 3.0, area.width, TRAINS_MM), result)
-    note = fact(result, "train.note")
-    if note:
-        area.paragraph(0.0, y + 6.0 + TRAINS_MM, area.width, f"All boutons together: {note}.", color=INK)
-    return figure
+    title = "Trains: depletion and facilitation"
+    return _page_with_note(result, title, TRAINS_CAPTION, draw_trains, TRAINS_MM, note="train.note")
+
+
+def intervals_page(result: AnalysisResult) -> Figure:
+    """Draw the paired-pulse ratio against the pulse interval."""
+    return _page_with_note(
+        result, "Pulse intervals", INTERVALS_CAPTION, draw_pulse_intervals, INTERVALS_MM, note="pulse_intervals.note"
+    )
 
 
 @styled
-def intervals_page(result: AnalysisResult) -> Figure:
-    """Draw the paired-pulse ratio against the pulse interval."""
-    figure, area = _new_page("Pulse intervals")
-    y = area.paragraph(0.0, 10.0, area.width, INTERVALS_CAPTION, size=SMALL, color=MUTED)
-    draw_pulse_intervals(area.part(0.0, y + 3.0, area.width, INTERVALS_MM), result)
-    note = fact(result, "pulse_intervals.note")
-    if note:
-        area.paragraph(0.0, y + 6.0 + INTERVALS_MM, area.width, f"All boutons together: {note}.", color=INK)
+def _page_with_note(
+    result: AnalysisResult,
+    title: str,
+    caption: str,
+    draw: Callable[[Area, AnalysisResult], None],
+    height_mm: float,
+    *,
+    note: str,
+) -> Figure:
+    """Draw a figure below its caption, and below it what the summary notes on all boutons together."""
+    figure, area = _new_page(title)
+    y = area.paragraph(0.0, 10.0, area.width, caption, size=SMALL, color=MUTED)
+    draw(area.part(0.0, y + 3.0, area.width, height_mm), result)
+    words = fact(result, note)
+    if words:
+        area.paragraph(0.0, y + 6.0 + height_mm, area.width, f"All boutons together: {words}.", color=INK)
     return figure
 
 
