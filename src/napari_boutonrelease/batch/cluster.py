@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import logging
 import secrets
-from collections.abc import Iterator, Sequence
+from collections.abc import Generator, Iterator, Sequence
 from contextlib import contextmanager
 from importlib import import_module, metadata
 from typing import Any
@@ -61,7 +61,7 @@ def _client(distributed: Any, address: str) -> Iterator[Any]:
         client.close()
 
 
-def analyse_on_cluster(jobs: Sequence[tuple[int, dict[str, Any]]], *, client: Any) -> Iterator[Ending]:
+def analyse_on_cluster(jobs: Sequence[tuple[int, dict[str, Any]]], *, client: Any) -> Generator[Ending, None, None]:
     """Analyse recordings on the cluster's workers, each in a process of its own there.
 
     Parameters

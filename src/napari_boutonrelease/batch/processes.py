@@ -12,7 +12,7 @@ import sys
 import tempfile
 import threading
 import time
-from collections.abc import Iterator, Sequence
+from collections.abc import Generator, Sequence
 from concurrent.futures import ThreadPoolExecutor, as_completed
 from dataclasses import dataclass
 from typing import Any
@@ -69,7 +69,7 @@ def available_cores() -> int:
     return os.cpu_count() or 1
 
 
-def analyse_here(jobs: Sequence[tuple[int, dict[str, Any]]], *, workers: int) -> Iterator[Ending]:
+def analyse_here(jobs: Sequence[tuple[int, dict[str, Any]]], *, workers: int) -> Generator[Ending, None, None]:
     """Analyse recordings on this machine, `workers` at a time.
 
     Parameters

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import dataclasses
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Generator, Iterator, Sequence
 from contextlib import closing, contextmanager, nullcontext
 from dataclasses import dataclass
 from datetime import UTC, datetime
@@ -166,19 +166,19 @@ def run_batch(
 @contextmanager
 def _running(
     jobs: Sequence[tuple[int, dict[str, Any]]], *, scheduler: str | None, workers: int
-) -> Iterator[Iterator[Ending]]:
+) -> Iterator[Generator[Ending, None, None]]:
     """Have the jobs run; what is still running at the end is stopped."""
     with nullcontext() if scheduler is None or not jobs else connected(scheduler) as client:
         if client is None:
             endings = analyse_here(jobs, workers=max(1, workers))
         else:
             endings = analyse_on_cluster(jobs, client=client)
-        with closing(endings):  # type: ignore[type-var]
+        with closing(endings):
             yield endings
 
 
 def _collect(
-    running: Iterator[Ending],
+    running: Generator[Ending, None, None],
     recordings: Sequence[Recording],
     todo: Sequence[int],
     *,
@@ -203,7 +203,7 @@ def _collect(
             if progress is not None:
                 progress(before + len(endings), len(recordings))
     except KeyboardInterrupt:
-        running.close()  # type: ignore[attr-defined]
+        running.close()
         return endings, True
     return endings, False
 
